@@ -1,0 +1,1 @@
+"""Links and instruments: bytes, ports and settings. Imports nothing of harness."""

@@ -1,0 +1,1 @@
+"""bitassay: a hardware-in-the-loop bit error ratio test harness."""
