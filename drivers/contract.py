@@ -106,6 +106,9 @@ class Traits:
     half_duplex: bool = False
     finite: bool = False  # ends by itself, as a file does
     whole_bytes: bool = True  # bits are lost and invented in whole bytes only
+    holds_back: bool = (
+        True  # what we do not read waits at the sender; False: it is lost (a port without flow control)
+    )
 
 
 @dataclass(frozen=True, slots=True)
@@ -183,25 +186,25 @@ class Link(_Opened, ABC):
         """
         raise EndOfStream("this link only sends")
 
-    def drain(self, timeout: float) -> bool:  # noqa: ARG002
+    def drain(self, timeout: float) -> bool:
         """Wait until the last bit has left the port; False at time-out."""
         return True
 
-    def finish_sending(self) -> None:  # noqa: B027
+    def finish_sending(self) -> None:
         """Say that nothing more will be sent (half-close)."""
 
-    def turn(self, to: Literal["send", "receive"]) -> None:  # noqa: B027
+    def turn(self, to: Literal["send", "receive"]) -> None:
         """Half-duplex links: change direction."""
 
     def health(self) -> Mapping[str, int]:
-        """Counts since `open`: framing, parity, overrun, break; changes of CTS, DCD. Keys only where known."""
+        """Counts since `open`: framing, parity, overrun, break; changes of CTS, DCD; keys only where known."""
         return {}
 
     @abstractmethod
     def interrupt(self) -> None:
         """From any thread: `send` and `receive` raise `Interrupted` until the next `open`."""
 
-    def park(self) -> None:  # noqa: B027
+    def park(self) -> None:
         """Stop transmitting: unkey, drop RTS. May be called twice, also on a closed link."""
 
     def describe(self) -> Mapping[str, str]:
