@@ -1,0 +1,191 @@
+"""What must hold between a profile's sections, beyond each key's own type and range."""
+
+from __future__ import annotations
+
+import math
+from typing import Any
+
+from .links import InstrumentSettings, LinkSettings
+from .problems import ProfileError, nearest
+from .profile import Profile
+from .requirement import PatternChoice
+
+# Quantities of the bench and the units that they may have; dB is a ratio, dBm a power.
+UNITS = {
+    "attenuation": ("dB",),
+    "gain": ("dB",),
+    "loss": ("dB",),
+    "level": ("dBm", "dBW", "dBV", "dBuV", "V", "W", "mW"),
+    "power": ("dBm", "dBW", "W", "mW"),
+    "temperature": ("°C", "degC", "C", "K", "°F", "degF"),
+}
+
+
+def check(profile: Profile) -> None:
+    """Check the profile as a whole.
+
+    Raises
+    ------
+    ProfileError
+        The first thing that does not fit.
+    """
+    _one_source(profile)
+    patterns = [_pattern(profile.pattern, "pattern")]
+    if profile.pattern.reverse is not None:
+        patterns.append(_pattern(profile.pattern.reverse, "pattern.reverse"))
+    if profile.link is not None:
+        _ports(profile.link, profile)
+        for section, name in ((profile.link, "link"), (profile.link.receive, "link.receive")):
+            flow = getattr(getattr(section, "options", None), "flow", None)
+            if str(flow).lower().replace("/", "") == "xonxoff":
+                _no_transparent(patterns, name)
+    for name, instrument in profile.instruments.items():
+        _instrument(name, instrument)
+    _conditions(profile)
+
+
+def _one_source(profile: Profile) -> None:
+    if profile.link is None and profile.counter is None:
+        raise ProfileError(
+            "the profile has no [link]", 'add one, for example driver = "loopback" with [link.channel]'
+        )
+    if profile.link is not None and profile.counter is not None:
+        raise ProfileError(
+            "the profile has a [link] and a [counter]", "keep the one that carries or counts the bits"
+        )
+
+
+def _pattern(choice: PatternChoice, path: str) -> Any:
+    from harness.signal.patterns import PatternError, parse_pattern
+
+    try:
+        return parse_pattern(choice.name)
+    except PatternError as error:
+        raise ProfileError(f"{path}.name: {error.what}", error.advice) from None
+
+
+def _no_transparent(patterns: list[Any], section: str) -> None:
+    for pattern in patterns:
+        if pattern.transparent:
+            raise ProfileError(
+                f"{pattern.name} sends every byte value, and XON/XOFF flow control on [{section}] eats two",
+                "use flow control rtscts or none, or a word pattern without 0x11 and 0x13",
+            )
+
+
+def _ports(link: LinkSettings, profile: Profile) -> None:
+    if link.topology == "two-port" and link.receive is None:
+        raise ProfileError(
+            "a two-port topology needs its second port", "add [link.receive] with a driver of its own"
+        )
+    if link.topology != "two-port" and link.receive is not None:
+        raise ProfileError(
+            f"[link.receive] is a second port, and the topology is {link.topology}",
+            'set topology = "two-port", or leave [link.receive] out',
+        )
+    if link.duplex and link.topology != "two-port":
+        raise ProfileError(
+            "duplex needs two ports", 'set topology = "two-port" and add [link.receive], or duplex = false'
+        )
+    other = profile.pattern.reverse
+    if link.duplex and (other is None or other.name.lower() == profile.pattern.name.lower()):
+        raise ProfileError(
+            "duplex needs another pattern for the other direction, or an echo would pass for the far end",
+            'add [pattern.reverse] with another name, for example "PRBS15-reversed"',
+        )
+    if other is not None and not link.duplex:
+        raise ProfileError(
+            "pattern.reverse is for both directions at once", "set link.duplex = true, or leave it out"
+        )
+
+
+def _instrument(name: str, instrument: InstrumentSettings) -> None:
+    options, path = instrument.options, f"instruments.{name}"
+    quantity, unit = getattr(options, "quantity", None), getattr(options, "unit", None)
+    if quantity and not unit:
+        raise ProfileError(f"{path} has a quantity and no unit", f'add unit = "…" to [{path}]')
+    allowed = UNITS.get(str(quantity).lower()) if quantity else None
+    if allowed and unit not in allowed:
+        raise ProfileError(
+            f'{path}: {quantity} cannot be in "{unit}"',
+            f"use {' or '.join(allowed)}: dB is a ratio, dBm a power",
+        )
+    limits, safe = getattr(options, "limits", None), getattr(options, "safe", None)
+    if limits is None:
+        return
+    low, high = (float(v) for v in limits)
+    if math.isnan(low) or math.isnan(high) or low > high:
+        raise ProfileError(
+            f"{path}.limits must rise, not {low:g} to {high:g}", "write limits = [lowest, highest]"
+        )
+    for key, value in (("safe", safe), ("value", instrument.value)):
+        if value is not None and not low <= float(value) <= high:
+            raise ProfileError(
+                f"{path}.{key} is {float(value):g} and lies outside the limits {low:g} to {high:g}",
+                "choose a value within the limits",
+            )
+
+
+def _known_instrument(profile: Profile, name: str, path: str) -> InstrumentSettings:
+    if name in profile.instruments:
+        return profile.instruments[name]
+    near = nearest(name, profile.instruments)
+    advice = f"add [instruments.{name}]" + (f", or use {near}" if near else "")
+    raise ProfileError(f'{path} names the instrument "{name}", which the profile does not have', advice)
+
+
+def _within(profile: Profile, name: str, values: tuple[float, ...], path: str) -> None:
+    options = _known_instrument(profile, name, path).options
+    limits = getattr(options, "limits", None)
+    if limits is None:
+        return
+    low, high = (float(v) for v in limits)
+    for value in values:
+        if not low <= value <= high:
+            raise ProfileError(
+                f"{path} goes to {value:g}, outside the limits {low:g} to {high:g} of instruments.{name}",
+                "stay within the instrument's limits",
+            )
+
+
+def _conditions(profile: Profile) -> None:
+    sweep, search, requirement = profile.sweep, profile.search, profile.requirement
+    if sweep is not None and search is not None:
+        raise ProfileError("the profile has a [sweep] and a [search]", "keep one of them")
+    if sweep is not None:
+        for axis in sweep.all_axes():
+            _within(profile, axis.instrument, axis.listed(), "sweep.values")
+        if sweep.reference is not None:
+            _within(profile, sweep.all_axes()[0].instrument, (sweep.reference,), "sweep.reference")
+    if search is not None:
+        _within(profile, search.instrument, (search.low, search.high), "search")
+    if profile.level is not None and profile.level.instrument is not None:
+        _known_instrument(profile, profile.level.instrument, "level.instrument")
+    if profile.correction is not None:
+        for name in profile.correction.tables:
+            _known_instrument(profile, name, "correction.tables")
+    if requirement is None:
+        return
+    for name, value in requirement.at.items():
+        _within(profile, name, (value,), "requirement.at")
+    if requirement.at and sweep is not None:
+        visited = [{**point} for point in sweep.visits()]
+        if not any(all(point.get(n) == v for n, v in requirement.at.items()) for point in visited):
+            names = ", ".join(f"{n} = {v:g}" for n, v in requirement.at.items())
+            raise ProfileError(
+                f"requirement.at names {names}, which the sweep never visits",
+                "add the value to the sweep, or correct requirement.at",
+            )
+    if requirement.at and sweep is None:
+        raise ProfileError(
+            "requirement.at picks a point of a sweep, and there is no [sweep]",
+            "leave it out: a plain run's requirement applies to the run",
+        )
+    if requirement.sensitivity_at_least is not None and sweep is None and search is None:
+        raise ProfileError(
+            "requirement.sensitivity_at_least needs a [sweep] or a [search]", "add one, or leave it out"
+        )
+    if requirement.sensitivity_at_least is not None and sweep is not None and sweep.sensitivity_ber is None:
+        raise ProfileError(
+            "requirement.sensitivity_at_least needs to know at which BER", "add sensitivity_ber to [sweep]"
+        )
