@@ -22,7 +22,7 @@ from __future__ import annotations
 
 import math
 from abc import ABC, abstractmethod
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from threading import Event
 from types import TracebackType
@@ -197,7 +197,7 @@ class Link(_Opened, ABC):
         """Half-duplex links: change direction."""
 
     def health(self) -> Mapping[str, int]:
-        """Counts since `open`: framing, parity, overrun, break; changes of CTS, DCD; keys only where known."""
+        """Counts since `open`: framing, parity, overrun, break, changes of CTS and DCD, where known."""
         return {}
 
     @abstractmethod
@@ -241,9 +241,21 @@ class Instrument(_Opened, ABC):
     Section: ClassVar[type[BaseModel]]
     settable: bool = True
     readable: bool = False
+    unattended: bool = True  # works without a person beside it
 
     def __init__(self, section: Any) -> None:
         self.section = section
+
+    def attach(self, link: Link | None, others: Sequence[Instrument]) -> None:
+        """Meet the bench, once, before `open`.
+
+        Parameters
+        ----------
+        link
+            The link of the run: a simulated instrument turns one of its knobs.
+        others
+            The other instruments of the run: those on one resource share a session.
+        """
 
     @abstractmethod
     def open(self) -> None:
