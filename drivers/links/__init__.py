@@ -1,0 +1,1 @@
+"""Link drivers: one file for each way that bytes can travel to the device and back."""
