@@ -1,0 +1,1 @@
+"""Bits, registers, patterns, alignment, counting: numpy only, no I/O, no clock."""
