@@ -106,6 +106,7 @@ class Traits:
     half_duplex: bool = False
     finite: bool = False  # ends by itself, as a file does
     whole_bytes: bool = True  # bits are lost and invented in whole bytes only
+    transparent: bool = True  # every byte value goes through; False: XON and XOFF do not
     holds_back: bool = (
         True  # what we do not read waits at the sender; False: it is lost (a port without flow control)
     )
@@ -195,6 +196,10 @@ class Link(_Opened, ABC):
 
     def turn(self, to: Literal["send", "receive"]) -> None:
         """Half-duplex links: change direction."""
+
+    def lines(self) -> Mapping[str, bool]:
+        """Modem lines as they are now, where known: ``CTS``, ``DCD``, ``DSR``, ``RI``."""
+        return {}
 
     def health(self) -> Mapping[str, int]:
         """Counts since `open`: framing, parity, overrun, break, changes of CTS and DCD, where known."""

@@ -55,7 +55,7 @@ WORDS: Mapping[Kind, str] = MappingProxyType(
 )
 
 
-class RegistryError(Exception):
+class UnknownDriver(Exception):
     """No driver can be had by that name: the profile or the installation is wrong, not the device."""
 
     def __init__(self, what: str, advice: str) -> None:
@@ -64,12 +64,8 @@ class RegistryError(Exception):
         self.advice = advice
 
 
-class UnknownDriver(RegistryError):
-    """No driver has that name."""
-
-
-class BrokenPlugin(RegistryError):
-    """An installed plug-in cannot be used."""
+class BrokenPlugin(UnknownDriver):
+    """An installed plug-in has that name, and cannot be used."""
 
 
 @dataclass(frozen=True, slots=True)
