@@ -1,0 +1,1 @@
+"""What counts prove: bounds, plans, clustering, availability, theory and curves; no input or output."""
