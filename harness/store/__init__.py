@@ -1,0 +1,25 @@
+"""The store: records in and out of SQLite or PostgreSQL, and between stores."""
+
+from .canonical import digest_of
+from .connect import default_url
+from .errors import AmbiguousRun, NoSuchRun, StoreError, StoreLost, WrongRevision
+from .keys import new_key
+from .liveness import this_host
+from .reading import RunLine, Tail
+from .store import Store, open_store
+
+__all__ = [
+    "AmbiguousRun",
+    "NoSuchRun",
+    "RunLine",
+    "Store",
+    "StoreError",
+    "StoreLost",
+    "Tail",
+    "WrongRevision",
+    "default_url",
+    "digest_of",
+    "new_key",
+    "open_store",
+    "this_host",
+]

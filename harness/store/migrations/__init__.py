@@ -1,0 +1,1 @@
+"""How the store's tables came about, revision by revision."""
