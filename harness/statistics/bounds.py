@@ -57,7 +57,8 @@ def _solve_logit(a: int, b: int, risk: float) -> float:
     return u
 
 
-def _lower(errors: int, bits: int, risk: float) -> float:
+def lower_at_risk(errors: int, bits: int, risk: float) -> float:
+    """The ratio at which as many errors or more have the probability `risk`; counts are not checked."""
     if errors == 0:
         return 0.0
     if errors == bits:
@@ -65,7 +66,8 @@ def _lower(errors: int, bits: int, risk: float) -> float:
     return float(split_logit(_solve_logit(errors, bits - errors + 1, risk))[0])
 
 
-def _upper(errors: int, bits: int, risk: float) -> float:
+def upper_at_risk(errors: int, bits: int, risk: float) -> float:
+    """The ratio at which as many errors or fewer have the probability `risk`; counts are not checked."""
     if errors == bits:
         return 1.0
     if errors == 0:
@@ -99,7 +101,7 @@ def lower_bound(errors: int, bits: int, confidence: float) -> float:
     """
     _check_count(errors, bits)
     _check_confidence(confidence)
-    return _lower(int(errors), int(bits), risk_of(confidence))
+    return lower_at_risk(int(errors), int(bits), risk_of(confidence))
 
 
 def upper_bound(errors: int, bits: int, confidence: float) -> float:
@@ -118,7 +120,7 @@ def upper_bound(errors: int, bits: int, confidence: float) -> float:
     """
     _check_count(errors, bits)
     _check_confidence(confidence)
-    return _upper(int(errors), int(bits), risk_of(confidence))
+    return upper_at_risk(int(errors), int(bits), risk_of(confidence))
 
 
 def clopper_pearson(errors: int, bits: int, confidence: float) -> Interval:
@@ -133,7 +135,7 @@ def clopper_pearson(errors: int, bits: int, confidence: float) -> Interval:
     _check_count(errors, bits)
     _check_confidence(confidence)
     half = float((1 - as_written(confidence)) / 2)
-    return Interval(_lower(int(errors), int(bits), half), _upper(int(errors), int(bits), half))
+    return Interval(lower_at_risk(int(errors), int(bits), half), upper_at_risk(int(errors), int(bits), half))
 
 
 def garwood(errors: int, bits: int, confidence: float) -> Interval:
