@@ -6,20 +6,12 @@ from typing import Annotated, Any, Literal
 
 from pydantic import BaseModel, Field, InstanceOf, SerializeAsAny
 
-from .basics import Count, CountOrZero, FromList, NotNegative, Positive, ProfileSection
+from drivers.dialogue import Step
+
+from .basics import Count, FromList, NotNegative, Positive, ProfileSection
 
 Topology = Literal["far-end-loop", "two-port", "one-way"]
 Options = Annotated[SerializeAsAny[InstanceOf[BaseModel]], Field(description="the driver's own keys")]
-
-
-class Step(ProfileSection):
-    """One step of a set-up dialogue."""
-
-    send: str | None = None
-    expect: str | None = None
-    timeout_s: Positive = 2.0
-    retries: CountOrZero = 0
-    wait_for: Literal["DCD", "CTS"] | None = None
 
 
 class DrivenSection(ProfileSection):
@@ -56,7 +48,10 @@ class LinkSettings(DrivenSection):
     """[link]: the path that carries bytes to the device and back."""
 
     topology: Topology = "far-end-loop"
-    """What the path is: far-end-loop (both directions in series), two-port, or one-way."""
+    """What the path is: far-end-loop (both directions in series), two-port, or one-way.
+
+    Left out: two-port with [link.receive], one-way where the driver only sends or only receives.
+    """
     rate_bps: Positive | None = None
     """Nominal payload rate, bit/s: for times, availability and forecasts; it does not pace."""
     pace_bps: Positive | None = None

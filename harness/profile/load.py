@@ -160,6 +160,19 @@ def _section_of(kind: type[DrivenSection], raw: Any) -> type[BaseModel] | None:
         return None
 
 
+def _topology(raw: dict[str, Any]) -> str:
+    """Give the topology of a link that does not state one."""
+    from drivers.registry import UnknownDriver, link_class
+
+    if "receive" in raw:
+        return "two-port"
+    try:
+        traits = link_class(raw["driver"]).traits
+    except UnknownDriver:
+        return "far-end-loop"
+    return "far-end-loop" if traits.sends and traits.receives else "one-way"
+
+
 class _Reader:
     """Reads one profile's raw content and gathers what is wrong with it."""
 
@@ -212,6 +225,8 @@ class _Reader:
         if "receive" in ours:
             ours["receive"] = self._driven(ReceiveSettings, ours["receive"], (*path, "receive"))
         theirs = {k: v for k, v in raw.items() if k not in own}
+        if kind is LinkSettings and "topology" not in ours:
+            ours["topology"] = _topology(raw)
         try:
             ours["options"] = driver_section(kind, raw["driver"]).model_validate(theirs)
         except UnknownDriver as error:

@@ -9,15 +9,14 @@ from .load import driver_section
 from .profile import Profile
 
 
-def _driver_names() -> dict[type[DrivenSection], list[str]]:
+def _driver_names() -> dict[type[DrivenSection], tuple[str, ...]]:
     from drivers import registry
 
-    links = sorted(registry.link_names())
     return {
-        LinkSettings: links,
-        ReceiveSettings: links,
-        InstrumentSettings: sorted(registry.instrument_names()),
-        CounterSettings: sorted(registry.counter_names()),
+        LinkSettings: registry.names("links"),
+        ReceiveSettings: registry.names("links"),
+        InstrumentSettings: registry.names("instruments"),
+        CounterSettings: registry.names("counters"),
     }
 
 
@@ -35,10 +34,11 @@ def profile_schema() -> dict[str, Any]:
         if general is None:
             continue
         general["properties"].pop("options", None)
-        shared[kind.__name__] = {
-            "description": general.get("description", ""),
-            "oneOf": [_alternative(general, kind, name, shared) for name in names],
-        }
+        if names:
+            shared[kind.__name__] = {
+                "description": general.get("description", ""),
+                "oneOf": [_alternative(general, kind, name, shared) for name in names],
+            }
     return schema
 
 
