@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
+from drivers.channel.packing import delay_bits
 from drivers.channel.stage import BitOrder, Bytes
 
 
@@ -28,7 +29,8 @@ class BitDelay:
     def apply(self, data: Bytes) -> Bytes:
         """Put bytes in, take as many out."""
         if self._shift and len(data):
-            data = self._shifted(data)
+            before, self._last = self._last, int(data[-1])
+            data = delay_bits(data, before, self._shift, self._order)
         if not len(self._held) or not len(data):
             return data
         if len(data) >= len(self._held):
@@ -50,13 +52,3 @@ class BitDelay:
     def rest(self) -> Bytes:
         """Give the whole bytes that are still held; fewer than eight bits stay behind."""
         return np.concatenate([self._held[self._place :], self._held[: self._place]])
-
-    def _shifted(self, data: Bytes) -> Bytes:
-        before = np.empty_like(data)
-        before[0] = self._last
-        before[1:] = data[:-1]
-        self._last = int(data[-1])
-        up, down = np.uint8(self._shift), np.uint8(8 - self._shift)
-        if self._order == "lsb":
-            return (data << up) | (before >> down)
-        return (data >> up) | (before << down)

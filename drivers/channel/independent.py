@@ -9,6 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 from pydantic import Field
 
+from drivers.channel.packing import flip
 from drivers.channel.stage import BitOrder, Bytes, ChannelSection, Line, Stage
 from drivers.contract import Knob
 
@@ -67,21 +68,6 @@ class Gaps:
         self._places = (self._drawn_to - 1 + steps)[real]
         self._drawn_to += int(steps[-1])
         self._used = 0
-
-
-def flip(data: Bytes, bits: NDArray[np.int64], order: BitOrder) -> None:
-    """Flip single bits of `data` in place; `bits` are distinct and counted from its first bit."""
-    if not len(bits):
-        return
-    if len(bits) * 4 > len(data):  # many: a mask of the whole stretch costs less than single flips
-        mask = np.zeros(len(data) * 8, dtype=np.uint8)
-        mask[bits] = 1
-        data ^= np.packbits(mask, bitorder="little" if order == "lsb" else "big")
-        return
-    within = (bits & 7).astype(np.uint8)
-    if order == "msb":
-        within = np.uint8(7) - within
-    np.bitwise_xor.at(data, bits >> 3, np.left_shift(np.uint8(1), within))
 
 
 class IndependentSection(ChannelSection):

@@ -4,14 +4,31 @@ from __future__ import annotations
 
 import secrets
 from collections.abc import Mapping, Sequence
+from typing import Annotated
 
 import numpy as np
+from pydantic import Field
 
+from drivers.channel.burst import BurstSection
 from drivers.channel.independent import IndependentSection
+from drivers.channel.noise import AwgnSection, RayleighSection, RicianSection
+from drivers.channel.outage import DropoutSection, InversionSection
+from drivers.channel.slips import ByteLossSection, SlipSection
 from drivers.channel.stage import MAX_STEP_BYTES, Bytes, ChannelSection, Line
 from drivers.contract import Knob
 
-AnyChannel = IndependentSection
+AnyChannel = Annotated[
+    IndependentSection
+    | BurstSection
+    | SlipSection
+    | ByteLossSection
+    | DropoutSection
+    | InversionSection
+    | AwgnSection
+    | RayleighSection
+    | RicianSection,
+    Field(discriminator="model"),
+]
 
 
 class Chain:

@@ -138,6 +138,45 @@ def test_memory_is_bounded_and_a_full_buffer_says_so() -> None:
         assert link.send(data, 0.0) == 300
 
 
+def test_a_channel_that_makes_more_bytes_than_there_is_room_for_loses_none() -> None:
+    data = random_bytes(60_000)
+    channel = {"model": "byte_loss", "kind": "repeat", "count": 700, "every_bytes": 1000, "seed": 1}
+    pieces = [data[:1000]]
+    for at in range(1000, len(data), 1000):
+        pieces += [data[at - 700 : at], data[at : at + 1000]]
+    got = pass_through(loopback(channel=channel, buffer_bytes=1111), data, np.random.default_rng(4))
+    np.testing.assert_array_equal(got, np.concatenate(pieces))
+
+
+def test_bits_held_back_by_the_channel_come_at_the_end_and_on_drain() -> None:
+    data = random_bytes(100)
+    channel = {"model": "awgn", "modulation": "64qam", "ebn0_db": 90}
+    np.testing.assert_array_equal(pass_through(loopback(channel=channel), data), data)
+    with loopback(channel=channel) as link:
+        buffer = np.empty(200, dtype=np.uint8)
+        link.send(memoryview(data), 0.0)
+        assert link.receive(memoryview(buffer), 0.0) == 99  # 800 bits are 133 symbols and 2 bits
+        assert link.drain(1.0)
+        assert link.receive(memoryview(buffer[99:]), 0.0) == 1
+        np.testing.assert_array_equal(buffer[:100], data)
+
+
+def test_a_device_that_swallows_everything_takes_bytes_for_ever_and_gives_none() -> None:
+    with loopback(channel={"model": "dropout", "at_bits": [0]}, buffer_bytes=100) as link:
+        for _ in range(50):
+            assert link.send(memoryview(bytes(100)), 0.0) == 100
+        assert link.receive(memoryview(bytearray(10)), 0.0) == 0
+
+
+def test_the_link_tells_its_channel_and_the_seed_that_was_drawn() -> None:
+    link = loopback(channel=[{"model": "independent", "ber": 1e-3}])
+    told = link.describe()["channel 1"]
+    assert told.startswith("independent: ber 0.001, seed ")
+    data = random_bytes(20_000)
+    again = loopback(channel={"model": "independent", "ber": 1e-3, "seed": int(told.split()[-1])})
+    np.testing.assert_array_equal(pass_through(link, data), pass_through(again, data))
+
+
 def test_interrupt_wakes_a_sender_and_a_receiver_until_the_next_open() -> None:
     link = loopback(buffer_bytes=10)
     link.open()
