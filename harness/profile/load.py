@@ -170,7 +170,9 @@ def _topology(raw: dict[str, Any]) -> str:
         traits = link_class(raw["driver"]).traits
     except UnknownDriver:
         return "far-end-loop"
-    return "far-end-loop" if traits.sends and traits.receives else "one-way"
+    # A plug-in may only know when it is made; then it is taken to carry both ways.
+    both = getattr(traits, "sends", True) and getattr(traits, "receives", True)
+    return "far-end-loop" if both else "one-way"
 
 
 class _Reader:
