@@ -1,0 +1,217 @@
+"""From the sums of one point to its assessment: bounds, clustering, verdict, remarks."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field
+from typing import Any
+
+from harness.assess.accumulate import Accumulator, Sums
+from harness.assess.assessment import Bounds, Clustered, PointAssessment
+from harness.assess.requirement import Requirement
+from harness.assess.verdict import Evidence, judge, unaligned_ratio
+from harness.assess.words import count
+from harness.record import EndedBy, Event, Status, Tally, Verdict
+from harness.statistics.bounds import clopper_pearson, upper_bound
+
+DEFAULT_CONFIDENCE = 0.95
+CLUSTERED_SHARE = 0.01  # independent errors are called clustered in this share of runs
+
+
+@dataclass(frozen=True, slots=True)
+class Facts:
+    """What a point's numbers do not say by themselves."""
+
+    values: Mapping[str, float]
+    status: Status
+    ended_by: EndedBy | None
+    started: int
+    ended: int | None
+    after_decision: Tally
+    pattern: str
+    bit_order: str
+    rate_bps: float | None
+    requirement: Requirement | None
+    facts: Mapping[str, Any] = field(default_factory=dict)
+
+
+def assess_point(acc: Accumulator, about: Facts, *, quick: bool = False) -> PointAssessment:
+    """Assess what has been accumulated; `quick` leaves out what takes long (clustering), for the screen."""
+    sums = acc.sums
+    never_returned = sum(int(e.data.get("bits", 0)) for e in acc.events if e.kind == "never_returned")
+    bits_lost = sums.bits_lost + never_returned
+    links_lost = sum(1 for e in acc.events if e.kind == "link_lost")
+    clustering = None if quick else _clustering(acc, about.requirement)
+    availability = acc.availability() if sums.duration_ns and not about.facts.get("untimed") else ()
+    verdict: Verdict | None = None
+    reasons: list[str] = []
+    requirement, plan = about.requirement, acc.plan
+    if requirement is not None and plan is not None and about.status != "running":
+        evidence = Evidence(
+            sums,
+            bits_lost,
+            links_lost,
+            clustering is not None and clustering.clustered,
+            clustering is not None and clustering.too_few_events,
+            availability[0].objectives_met if availability else None,
+        )
+        verdict, reasons = judge(requirement, plan, acc.decision, evidence)
+    bounds = _bounds(acc, about, quick)
+    aligned = next((e for e in acc.events if e.kind == "aligned"), None)
+    tally = sums.tally
+    seconds = sums.duration_ns / 1e9
+    return PointAssessment(
+        values=about.values,
+        status=about.status,
+        ended_by=about.ended_by,
+        started=about.started,
+        ended=about.ended,
+        seconds=seconds,
+        rate_bps=about.rate_bps,
+        measured_bps=tally.received / seconds if seconds > 0 else None,
+        pattern=about.pattern,
+        alternatives=tuple(about.facts.get("alternatives", ())),
+        inverted=_inverted(about, aligned),
+        bit_order=about.bit_order,
+        bits_sent=sums.sent,
+        tally=tally,
+        ber=tally.errors / tally.compared if tally.compared else None,
+        ber_half_wrong=_half_wrong(sums, bits_lost),
+        bounds=bounds,
+        slips=tuple(_slip(e) for e in acc.events if e.kind == "slip"),
+        slip_count=sums.slips,
+        bits_lost=bits_lost,
+        bits_inserted=sums.bits_inserted,
+        delay=next((dict(e.data) for e in acc.events if e.kind == "delay"), None),
+        events=tuple(acc.events),
+        verdict=verdict,
+        plan=_plan(acc),
+        reasons=tuple(reasons),
+        after_decision=about.after_decision,
+        availability=availability,
+        clustering=clustering,
+        unaligned_ratio=unaligned_ratio(sums, bits_lost),
+        links_lost=links_lost,
+        remarks=(*bounds.remarks, *_remarks(acc, sums, bits_lost, clustering)),
+        recent=tuple(acc.recent),
+        facts=about.facts,
+    )
+
+
+def _half_wrong(sums: Sums, bits_lost: int) -> float | None:
+    tally = sums.tally
+    whole = tally.received + bits_lost
+    return (tally.errors + 0.5 * (tally.unaligned + bits_lost)) / whole if whole else None
+
+
+def _inverted(about: Facts, aligned: Event | None) -> bool | None:
+    """Against the pattern as its table row sends it."""
+    if aligned is None:
+        return None
+    own = bool(about.facts.get("pattern_inverted", False))
+    return own != bool(aligned.data.get("inverted", False))
+
+
+def _slip(event: Event) -> dict[str, Any]:
+    return {"bit": event.bit, "bits": int(event.data["bits"]), "modulo": event.data.get("modulo")}
+
+
+def _bounds(acc: Accumulator, about: Facts, quick: bool) -> Bounds:
+    """Give the bounds that go with the way the run was stopped; while it goes on, those of the count."""
+    tally = acc.sums.tally
+    confidence = about.requirement.confidence if about.requirement else DEFAULT_CONFIDENCE
+    upper = upper_bound(tally.errors, tally.compared, confidence)
+    if acc.plan is not None and tally.compared and not quick:
+        stop = acc.plan.bounds(confidence, "operator" if about.ended_by == "interrupted" else "limit")
+        side, sure, value = "upper", confidence, upper
+        if stop.deciding is not None:
+            side, sure, value = stop.deciding.side, stop.deciding.confidence, stop.deciding.value
+        return Bounds(
+            stop.method, stop.confidence, stop.lower, stop.upper, side, sure, value, tuple(stop.remarks)
+        )
+    interval = clopper_pearson(tally.errors, tally.compared, confidence)
+    return Bounds("Clopper-Pearson", confidence, interval.lower, interval.upper, "upper", confidence, upper)
+
+
+def _plan(acc: Accumulator) -> dict[str, Any] | None:
+    plan, decision = acc.plan, acc.decision
+    if plan is None:
+        return None
+    return {
+        "kind": plan.kind,
+        "ber": plan.ber,
+        "confidence": plan.confidence,
+        "margin": plan.margin,
+        "consumer_risk": plan.consumer_risk,
+        "producer_risk": plan.producer_risk,
+        "bits": plan.bits,
+        "accept_errors": plan.accept_errors,
+        "decided_at_bit": decision.compared_bits if decision else None,
+        "longest_bits": plan.longest_bits,
+    }
+
+
+def _clustering(acc: Accumulator, requirement: Requirement | None) -> Clustered | None:
+    positions = acc.positions()
+    if len(positions) < 2 or not acc.sums.positions_complete:
+        return None
+    from harness.statistics.clustering import assess_clustering
+
+    confidence = requirement.confidence if requirement else DEFAULT_CONFIDENCE
+    found = assess_clustering(
+        positions, acc.sums.tally.compared, share=CLUSTERED_SHARE, confidence=confidence
+    )
+    bounds = None
+    if found.bounds is not None:
+        bounds = {
+            "method": "Fay-Feuer on error events",
+            "confidence": confidence,
+            "lower": found.bounds.lower,
+            "upper": found.bounds.upper,
+        }
+    more = {
+        "trend": found.trend,
+        "event_gap_bits": found.event_gap_bits,
+        "mean_burst_bits": found.mean_burst_bits,
+        "ber_inside": found.ber_inside,
+        "ber_outside": found.ber_outside,
+    }
+    return Clustered(
+        found.clustered,
+        found.dispersion,
+        found.p_value,
+        found.events,
+        bounds,
+        found.too_few_events,
+        found.words,
+        more,
+    )
+
+
+def _remarks(acc: Accumulator, sums: Sums, bits_lost: int, clustering: Clustered | None) -> Sequence[str]:
+    remarks = []
+    overruns = [e for e in acc.events if e.kind == "host_overrun"]
+    if overruns:
+        lost = sum(int(e.data.get("bits", 0)) for e in overruns)
+        remarks.append(
+            f"this computer could not keep up {len(overruns)} times: {count(lost, 'bit')} counted as "
+            "unaligned, not the device's fault"
+        )
+    if sums.tally.unaligned or bits_lost:
+        half = _half_wrong(sums, bits_lost)
+        remarks.append(
+            f"{count(sums.tally.unaligned, 'bit')} unaligned and {count(bits_lost, 'bit')} lost are in no "
+            "BER; "
+            f"taken as half wrong they would make it {half:.3g}. A stretch without evidence of under 8 192 "
+            "bits after which the same place holds is a burst and is counted; a longer one is an outage, "
+            "unaligned"
+        )
+    if clustering is not None and clustering.clustered and clustering.words:
+        remarks.append(clustering.words)
+    if not sums.positions_complete:
+        remarks.append("not every error position was kept: counts are exact, clustering is not judged")
+    if acc.events_cut:
+        remarks.append(f"{count(acc.events_cut, 'further event')} not listed; counts are exact")
+    if acc.plan is not None:
+        remarks.extend(acc.plan.remarks)
+    return remarks

@@ -1,0 +1,59 @@
+"""What was required, read from a record's settings, and the plan that decides it."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from typing import Any, Literal
+
+from harness.statistics.objectives import Objectives
+from harness.statistics.plans import Plan, make_plan
+
+
+@dataclass(frozen=True, slots=True)
+class Requirement:
+    """The profile's ``[requirement]``."""
+
+    ber: float
+    confidence: float = 0.95
+    plan: str = "fixed"
+    accept_errors: int = 0
+    margin: float = 2.0
+    producer_risk: float = 0.05
+    max_slips: int = 0
+    max_unaligned_ratio: float = 0.001
+    lost_link: Literal["fail", "undecided"] = "fail"
+    clustered: Literal["pass", "undecided"] = "pass"
+    count: Literal["bits", "events"] = "bits"
+    event_gap_bits: int = 64
+    objectives: Objectives | None = None
+    standard: Literal["G.821", "G.826"] = "G.821"
+    block_bits: int | None = None
+
+    def make_plan(self) -> Plan:
+        """Build the plan afresh; it holds what it has seen."""
+        return make_plan(
+            self.plan,
+            self.ber,
+            confidence=self.confidence,
+            accept_errors=self.accept_errors,
+            margin=self.margin,
+            producer_risk=self.producer_risk,
+        )
+
+
+def requirement_of(settings: Mapping[str, Any]) -> Requirement | None:
+    """Read the requirement of a run's resolved settings; None where nothing was required."""
+    section = settings.get("requirement")
+    if not section or section.get("ber") is None:
+        return None
+    known = set(Requirement.__dataclass_fields__)
+    values = {key: value for key, value in section.items() if key in known and value is not None}
+    asked = section.get("availability")
+    if asked:
+        names = {"esr": "esr", "sesr": "sesr", "bber": "bber", "availability": "available"}
+        ratios = {ours: asked[key] for ours, key in names.items() if asked.get(key) is not None}
+        values["objectives"] = Objectives(**ratios)
+        values["standard"] = asked.get("standard", "G.821")
+        values["block_bits"] = asked.get("block_bits")
+    return Requirement(**values)

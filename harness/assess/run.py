@@ -1,0 +1,78 @@
+"""From a record to its assessment: every point accumulated again, second by second."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any
+
+from harness.assess.accumulate import Accumulator
+from harness.assess.assessment import Assessment, PointAssessment
+from harness.assess.point import Facts, assess_point
+from harness.assess.requirement import Requirement, requirement_of
+from harness.record import Event, Point, Run
+
+
+def assess(run: Run) -> Assessment:
+    """Assess a record; pure, and the same for a run that goes on and one that has ended."""
+    requirement = requirement_of(run.settings)
+    points = [_assess_one(run, point, requirement) for point in run.points]
+    sweep = run.command != "measure" and run.command != "examine"
+    whole = points[0] if points else _nothing(run, requirement)
+    return Assessment(
+        run=run.key,
+        title=run.title,
+        command=run.command,
+        status=run.status,
+        ended_by=run.ended_by,
+        started=run.started,
+        ended=run.ended,
+        device=run.device,
+        verdict=whole.verdict,
+        reasons=whole.reasons,
+        whole=whole,
+        points=points,
+        sweep=sweep,
+    )
+
+
+def accumulate(run: Run, point: Point, requirement: Requirement | None) -> Accumulator:
+    """Run a point's seconds and events through an accumulator."""
+    acc = Accumulator(requirement, point.facts.get("rate_bps"))
+    for event in point.events:
+        acc.note(event)
+    if run.status == "cut" and run.sittings and point.index == run.points[-1].index:
+        undecided = run.sittings[-1].undecided_bits
+        if undecided:
+            text = f"{undecided} bits had come and were not decided when the run was cut"
+            acc.note(Event("undecided", None, text, data={"bits": undecided}))
+    for second in sorted(point.seconds, key=lambda s: s.index):
+        acc.add(second)
+    acc.flush()
+    return acc
+
+
+def facts_of(run: Run, point: Point, requirement: Requirement | None) -> Facts:
+    """Collect what a record says about a point beside its numbers."""
+    pattern: Mapping[str, Any] = run.settings.get("pattern") or {}
+    return Facts(
+        values=point.values,
+        status="completed" if point.ended_by not in (None, "interrupted", "fault") else run.status,
+        ended_by=point.ended_by,
+        started=point.started,
+        ended=point.ended,
+        after_decision=point.after_decision,
+        pattern=str(point.facts.get("pattern", pattern.get("name", ""))),
+        bit_order=str(point.facts.get("bit_order", pattern.get("bit_order", "lsb"))),
+        rate_bps=point.facts.get("rate_bps"),
+        requirement=requirement,
+        facts=point.facts,
+    )
+
+
+def _assess_one(run: Run, point: Point, requirement: Requirement | None) -> PointAssessment:
+    return assess_point(accumulate(run, point, requirement), facts_of(run, point, requirement))
+
+
+def _nothing(run: Run, requirement: Requirement | None) -> PointAssessment:
+    empty = Point(0, {}, run.started, run.ended, run.ended_by, (), ())
+    return _assess_one(run, empty, requirement)

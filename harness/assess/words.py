@@ -1,0 +1,84 @@
+"""Numbers and times in words, the same on the screen and on paper."""
+
+from __future__ import annotations
+
+import math
+from datetime import UTC, datetime
+
+
+def count(number: int, noun: str) -> str:
+    """Write a count with its noun: ``1 error``, ``2 995 732 bits``."""
+    digits = f"{number:,}".replace(",", "\u202f")
+    return f"{digits} {noun}{'' if number == 1 else 's'}"
+
+
+def ratio(value: float | None) -> str:
+    """Write a ratio such as a BER: ``1e-06`` becomes ``1e-6``, 1.234e-6 keeps three digits."""
+    if value is None:
+        return "none"
+    if value == 0:
+        return "0"
+    if value >= 0.01:
+        return f"{value:.3g}"
+    mantissa, exponent = f"{value:.2e}".split("e")
+    mantissa = mantissa.rstrip("0").rstrip(".")
+    return f"{mantissa}e{int(exponent)}"
+
+
+def percent(value: float) -> str:
+    """Write a share as a percentage that never rounds to 0 or 100 what is not."""
+    share = 100 * value
+    if share in (0, 100):
+        return f"{share:.0f} %"
+    for digits in range(1, 9):
+        text = f"{share:.{digits}f}"
+        if float(text) not in (0.0, 100.0):
+            return f"{float(text):g} %" if digits < 3 else f"{text.rstrip('0')} %"
+    return f"{share:.3g} %"
+
+
+def duration(seconds: float) -> str:
+    """Write a duration: ``0.25 s``, ``12.3 s``, ``4 min 05 s``, ``11 h 02 min``."""
+    if seconds < 60:
+        return f"{seconds:.3g} s"
+    whole = round(seconds)
+    if whole < 3600:
+        return f"{whole // 60} min {whole % 60:02d} s"
+    if whole < 48 * 3600:
+        return f"{whole // 3600} h {whole % 3600 // 60:02d} min"
+    days = whole / 86_400
+    return f"{days:.1f} days" if days < 1_000 else f"{days / 365.25:.3g} years"
+
+
+def rate(bits_per_second: float | None) -> str:
+    """Write a bit rate: ``48 kbit/s``."""
+    if bits_per_second is None:
+        return "unknown rate"
+    if bits_per_second <= 0 or not math.isfinite(bits_per_second):
+        return f"{bits_per_second:g} bit/s"
+    for unit, scale in (("Gbit/s", 1e9), ("Mbit/s", 1e6), ("kbit/s", 1e3)):
+        if bits_per_second >= scale:
+            return f"{bits_per_second / scale:.4g} {unit}"
+    return f"{bits_per_second:.4g} bit/s"
+
+
+def iso(at_ns: int | None) -> str | None:
+    """Write a UTC time in ns as ISO 8601 with milliseconds."""
+    if at_ns is None:
+        return None
+    moment = datetime.fromtimestamp(at_ns // 1_000_000 / 1000, tz=UTC)
+    return moment.strftime("%Y-%m-%dT%H:%M:%S.") + f"{moment.microsecond // 1000:03d}Z"
+
+
+def local_time(at_ns: int | None) -> str:
+    """Write the local time of day, to the second."""
+    if at_ns is None:
+        return ""
+    return datetime.fromtimestamp(at_ns / 1e9).astimezone().strftime("%H:%M:%S")
+
+
+def local_date(at_ns: int | None) -> str:
+    """Write the local date and time, to the second, with its offset."""
+    if at_ns is None:
+        return ""
+    return datetime.fromtimestamp(at_ns / 1e9).astimezone().strftime("%Y-%m-%d %H:%M:%S %z")

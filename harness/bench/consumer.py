@@ -1,0 +1,366 @@
+"""The consumer's thread: bytes from the ring through the counter into seconds, plan and recorder."""
+
+from __future__ import annotations
+
+import threading
+import time
+from collections import deque
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, replace
+
+from harness.assess.accumulate import EVENTS_KEPT
+from harness.assess.words import count
+from harness.bench.book import Book
+from harness.bench.places import Places
+from harness.bench.ring import Piece, Ring
+from harness.bench.traffic import Traffic
+from harness.bench.watch import LinkWatch
+from harness.record import Event, Second, Segment, Tally
+from harness.signal.counter import Counter
+from harness.statistics.plans import Decision, Plan
+
+SECOND_NS = 1_000_000_000
+WAIT_S = 0.05
+ARRIVALS_KEPT = 65_536
+
+
+@dataclass(slots=True)
+class Rules:
+    """What ends a point, as far as the consumer sees it."""
+
+    plan: Plan | None = None
+    errors: int | None = None
+    received_bits: int | None = None  # where nothing is sent
+
+
+class Consumer(threading.Thread):
+    """Counts what arrives until the ring is drained.
+
+    `commit` is called once a second with complete seconds and new events; `stop` when a rule ends the point.
+    """
+
+    def __init__(
+        self,
+        *,
+        ring: Ring,
+        counter: Counter,
+        traffic: Traffic,
+        book: Book,
+        places: Places | None,
+        watch: LinkWatch | None,
+        rules: Rules,
+        started_ns: int,
+        wall_ns: int,
+        drain_ns: int,
+        sending: Callable[[], bool],
+        commit: Callable[[list[Second], list[Event], int], None],
+        stop: Callable[[str], None],
+        each_second: Callable[[], list[Event]] = list,
+    ) -> None:
+        super().__init__(name="consumer", daemon=True)
+        self._ring = ring
+        self._counter = counter
+        self._traffic = traffic
+        self._book = book
+        self._places = places
+        self._watch = watch
+        self._rules = rules
+        self._boundary_ns = started_ns + SECOND_NS
+        self._wall_ns = wall_ns
+        self._drain_ns = drain_ns
+        self._sending = sending
+        self._commit = commit
+        self._stop = stop
+        self._each_second = each_second
+        self._arrivals: deque[tuple[int, int]] = deque([(0, started_ns)], maxlen=ARRIVALS_KEPT)
+        self._events: list[Event] = []
+        self._event_count = 0
+        self._sent_before = 0
+        self._held: list[Segment] = []  # of a second whose positions were cut: one look at its end
+        self._mark_bits: deque[int] = deque()
+        self._unexplained = 0  # bits given up in silence that no slip has explained so far
+        self.tally = Tally()
+        self.after = Tally()
+        self.decision: Decision | None = None
+        self.defect: BaseException | None = None
+        self.last_aligned_ns: int | None = None
+
+    # -- the thread
+
+    def run(self) -> None:
+        """Consume until nothing more will come."""
+        try:
+            while not self._ring.drained:
+                piece = self._ring.next_piece(WAIT_S)
+                if piece is None:
+                    self._pass_time(time.monotonic_ns(), idle=True)
+                else:
+                    self._pass_time(piece.arrived_ns, idle=False)
+                    self._take(piece)
+            self._finish()
+        except BaseException as error:
+            self.defect = error
+            self._stop("defect")
+
+    def _take(self, piece: Piece) -> None:
+        if piece.lost_bytes:
+            bits = 8 * piece.lost_bytes
+            text = f"this computer could not keep up: {count(bits, 'bit')} were not counted"
+            self._happened("host_overrun", text, piece.arrived_ns, {"bits": bits})
+            segments = self._counter.skip(bits)
+        else:
+            segments = self._counter.feed(piece.data)
+            self._ring.give_back(piece)
+        self._arrivals.append((self._counter.received, piece.arrived_ns))
+        self._absorb(segments)
+        limit = self._rules.received_bits
+        if limit is not None and self._counter.received >= limit:
+            self._stop("bits")
+
+    def _finish(self) -> None:
+        self._absorb(self._counter.finish())
+        self._look(whole_second=True)
+        now = max(time.monotonic_ns(), self._boundary_ns - SECOND_NS)
+        if self.decision is None:
+            self._never_returned(self._traffic.in_flight() if self._sends else 0, now)
+            sent = self._traffic.sent_bits - self._sent_before
+            self._book.end(ends_ns=now, received_bits=self._counter.received, sent=sent, due=self._due(now))
+        self._flush()
+
+    @property
+    def _sends(self) -> bool:
+        return self._traffic.first_sent_ns is not None
+
+    # -- time
+
+    def _due(self, now_ns: int) -> bool:
+        if self._watch is None:
+            return True
+        came = self._traffic.last_received_ns is not None
+        return self._watch.due(self._sending(), now_ns, self._traffic.first_sent_ns, came)
+
+    def _pass_time(self, now_ns: int, *, idle: bool) -> None:
+        """Close the seconds that end before `now_ns`; when idle, look after what is overdue."""
+        due = self._due(now_ns)
+        while now_ns >= self._boundary_ns:
+            self._close_second(due)
+        if not idle:
+            return
+        if self._watch is not None and self._nothing_aligned_pending() and self._watch.silent_until(now_ns):
+            self._link_lost(now_ns)
+        self._write_off(now_ns)
+
+    def _nothing_aligned_pending(self) -> bool:
+        """Whether what is undecided came long ago: it cannot be news of the link."""
+        last = self._traffic.last_received_ns
+        return (
+            self._counter.received == self._counter.decided
+            or last is None
+            or (time.monotonic_ns() - last >= 3 * SECOND_NS)
+        )
+
+    def _close_second(self, due: bool) -> None:
+        if self.decision is None:
+            self._counter.mark()
+            sent = self._traffic.sent_by(self._boundary_ns) - self._sent_before
+            self._sent_before += sent
+            self._book.close_second(
+                ends_ns=self._boundary_ns, received_bits=self._counter.received, sent=sent, due=due
+            )
+            self._mark_bits.append(self._counter.received)
+            self._look(whole_second=self._counter.decided >= self._counter.received)
+            for event in self._each_second():
+                self._keep(event)
+            self._flush()
+        self._boundary_ns += SECOND_NS
+
+    def _write_off(self, now_ns: int) -> None:
+        """Give up what is out when nothing has come for the time that the profile allows."""
+        if not self._sends or self._traffic.in_flight() == 0:
+            return
+        first = self._traffic.first_sent_ns or now_ns
+        quiet_since = max(self._traffic.last_received_ns or first, first)
+        if now_ns - quiet_since >= self._drain_ns and self._sending():
+            bits = self._traffic.write_off()
+            if bits and self.decision is None:
+                self._unexplained += bits
+
+    def _link_lost(self, now_ns: int) -> None:
+        self._happened(
+            "link_lost", "the link was lost: for 3 s bits were due and none was aligned", now_ns, {}
+        )
+
+    # -- segments
+
+    def _absorb(self, segments: list[Segment]) -> None:
+        for segment in segments:
+            self._absorb_one(segment)
+
+    def _absorb_one(self, segment: Segment) -> None:
+        if self.decision is not None:
+            self.after += segment.tally
+            return
+        while self._mark_bits and segment.start >= self._mark_bits[0]:
+            self._mark_bits.popleft()
+            self._look(whole_second=True)
+            if self.decision is not None:
+                self.after += segment.tally
+                return
+        segment = self._stamp(segment)
+        if segment.aligned and segment.tally.compared:
+            self._follow(segment)
+        plan = self._rules.plan
+        if plan is not None and (self._held or not segment.positions_complete):
+            self._held.append(segment)
+        elif plan is not None:
+            compared = self.tally.compared
+            decision = plan.advance(segment)
+            if decision is not None:
+                self._decided(decision, segment, compared)
+                return
+        self._enter(segment)
+
+    def _enter(self, segment: Segment) -> None:
+        self.tally += segment.tally
+        self._book.add(segment)
+        if self._rules.errors is not None and self.tally.errors >= self._rules.errors:
+            self._stop("errors")
+
+    def _look(self, *, whole_second: bool) -> None:
+        """Let the plan look at a second whose error positions were cut, once, at its end."""
+        if not whole_second or not self._held or self._rules.plan is None or self.decision is not None:
+            return
+        held, self._held = self._held, []
+        total = Tally()
+        for segment in held:
+            total += segment.tally
+        joined = replace(
+            held[0],
+            tally=replace(total, received=total.compared, unaligned=0),
+            aligned=True,
+            positions_complete=False,
+        )
+        decision = self._rules.plan.advance(joined)
+        if decision is not None:
+            self._close_book(decision, held[-1].end)
+
+    def _decided(self, decision: Decision, segment: Segment, compared_before: int) -> None:
+        head, tail = segment.split(decision.compared_bits - compared_before)
+        self._enter(head)
+        self.after += tail.tally
+        self._close_book(decision, head.end)
+
+    def _close_book(self, decision: Decision, bit: int) -> None:
+        self.decision = decision
+        at = self._arrived(bit)
+        self._never_returned(0, at)
+        verb = "accepted" if decision.accepted else "rejected"
+        text = (
+            f"the plan {verb} at compared bit {decision.compared_bits} with {count(decision.errors, 'error')}"
+        )
+        self._happened("decided", text, at, {"bits": decision.compared_bits}, bit=bit)
+        self._book.cut(bit=bit, ends_ns=at, sent=max(0, self._traffic.sent_bits - self._sent_before))
+        self._flush()
+        self._stop("plan")
+
+    def _never_returned(self, left: int, at: int) -> None:
+        """Say what was sent and never came back, as far as no slip says it already."""
+        bits = left + min(self._unexplained, self._traffic.written_off_bits)
+        if bits:
+            self._happened(
+                "never_returned", f"{count(bits, 'bit')} were sent and never came back", at, {"bits": bits}
+            )
+
+    # -- events
+
+    def _stamp(self, segment: Segment) -> Segment:
+        """Give a segment's events their time, and slips their true size."""
+        if not segment.events:
+            return segment
+        stamped = []
+        for event in segment.events:
+            bit = segment.start if event.bit is None else event.bit
+            at = self._arrived(bit)
+            if event.kind == "slip":
+                event = self._resolve(event, bit, at)
+            event = replace(event, at=at + self._wall_ns)
+            stamped.append(event)
+            self._keep(event)
+            if event.kind == "aligned" and self._places is not None and "place" in event.data:
+                self._delay(bit, int(event.data["place"]), at)
+        return replace(segment, events=tuple(stamped))
+
+    def _resolve(self, event: Event, bit: int, at: int) -> Event:
+        size, modulo = int(event.data["bits"]), event.data.get("modulo")
+        if self._places is not None:
+            size, modulo = self._places.slipped(bit, size, modulo, at)
+        if size < 0:
+            explained = min(-size, self._unexplained)
+            self._unexplained -= explained
+            self._traffic.lose(-size - explained)
+        data = {**event.data, "bits": size, "modulo": modulo}
+        text = event.text if size == event.data["bits"] else slip_words(size)
+        return replace(event, data=data, text=text)
+
+    def _delay(self, bit: int, place: int, at: int) -> None:
+        assert self._places is not None
+        delay = self._places.aligned(bit, place, at)
+        if delay is None:
+            return
+        seconds = "" if delay.seconds is None else f", {delay.seconds:.3g} s"
+        data = {"bits": delay.bits, "seconds": delay.seconds, "modulo": delay.modulo}
+        text = f"loop delay {count(delay.bits, 'bit')}{seconds}"
+        self._happened("delay", text, at, data, bit=bit)
+
+    def _follow(self, segment: Segment) -> None:
+        first, last = self._arrived(segment.start), self._arrived(segment.end - 1)
+        self.last_aligned_ns = last
+        if self._watch is None:
+            return
+        lost, back = self._watch.aligned(first, last)
+        if lost:
+            self._link_lost(first)
+        if back:
+            self._happened("link_back", "the link is back", first, {}, bit=segment.start)
+
+    def _arrived(self, bit: int) -> int:
+        """Monotonic time at which a received bit came."""
+        while len(self._arrivals) > 1 and self._arrivals[0][0] <= min(bit, self._counter.decided):
+            self._arrivals.popleft()
+        for end, at in self._arrivals:
+            if bit < end:
+                return at
+        return self._arrivals[-1][1]
+
+    def _happened(
+        self, kind: str, text: str, at_ns: int, data: Mapping[str, object], bit: int | None = None
+    ) -> None:
+        where = self._counter.received if bit is None else bit
+        self._keep(Event(kind, where, text, at_ns + self._wall_ns, data))
+
+    def _keep(self, event: Event) -> None:
+        self._event_count += 1
+        if self._event_count <= EVENTS_KEPT or event.kind not in (
+            "slip",
+            "aligned",
+            "alignment_lost",
+            "delay",
+        ):
+            self._events.append(event)
+        if self._event_count == EVENTS_KEPT + 1:
+            text = f"more than {EVENTS_KEPT} events: slips are still counted, no longer listed"
+            self._events.append(replace(event, kind="events_cut", text=text, data={}))
+
+    def _flush(self) -> None:
+        events, self._events = self._events, []
+        self._commit(self._book.take_complete(), events, self._counter.received - self._counter.decided)
+
+
+def slip_words(bits: int) -> str:
+    """Say a slip in words: ``one byte lost``, ``3 bits inserted``."""
+    verb = "lost" if bits < 0 else "inserted"
+    size = abs(bits)
+    number, noun = (size // 8, "byte") if size % 8 == 0 else (size, "bit")
+    if number == 1:
+        return f"one {noun} {verb}"
+    return f"{count(number, noun)} {verb}"

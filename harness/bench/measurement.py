@@ -1,0 +1,364 @@
+"""One point on open links: starts the threads, waits for what ends it, and closes it properly."""
+
+from __future__ import annotations
+
+import contextlib
+import threading
+import time
+from collections.abc import Callable
+from dataclasses import dataclass
+
+from drivers.contract import DriverError, Link
+from harness.bench.book import Book
+from harness.bench.consumer import Consumer, Rules
+from harness.bench.places import Places
+from harness.bench.receiver import Receiver
+from harness.bench.ring import Ring
+from harness.bench.sender import Sender
+from harness.bench.traffic import Traffic
+from harness.bench.watch import LinkWatch
+from harness.record import BitOrder, EndedBy, Event, Second, Tally
+from harness.signal.counter import Counter
+from harness.signal.patterns import Pattern
+from harness.statistics.plans import Decision, Plan
+
+POLL_S = 0.05
+LINE_COUNTS = {"framing": "framing error", "parity": "parity error", "overrun": "overrun", "break": "break"}
+HOPELESS_S = 60.0  # without a stop rule: nothing aligned for so long ends the point
+
+
+@dataclass(frozen=True, slots=True)
+class StopRules:
+    """Whichever comes first."""
+
+    bits: int | None = None  # sent; received where nothing is sent
+    seconds: float | None = None
+    errors: int | None = None
+
+    @property
+    def any(self) -> bool:
+        """Whether there is one at all."""
+        return (self.bits, self.seconds, self.errors) != (None, None, None)
+
+
+@dataclass(frozen=True, slots=True)
+class Setup:
+    """What a point is measured with."""
+
+    pattern: Pattern
+    bit_order: BitOrder
+    plan: Plan | None
+    stop: StopRules
+    pace_bps: float | None = None
+    max_in_flight_bits: int | None = None
+    drain_s: float = 5.0
+    positions_per_second: int = 4096
+    first_place: int = 0
+    point: int = 0
+    sitting: int = 0
+    first_index: int = 0
+
+
+@dataclass(frozen=True, slots=True)
+class Outcome:
+    """What came of a point."""
+
+    ended_by: EndedBy
+    decision: Decision | None
+    tally: Tally
+    after: Tally
+    sent_bits: int
+    received_bits: int
+    next_index: int
+    next_place: int  # of the bit that would have been sent next
+    fault: DriverError | None
+
+
+class Defect(Exception):
+    """A thread of ours failed: a defect in bitassay itself."""
+
+
+class Measurement:
+    """Measures one point.
+
+    Parameters
+    ----------
+    sending, receiving
+        Open links, the same one for a far-end loop; None where the computer does not send or receive.
+    commit
+        Called once a second, from the consumer's thread, with complete seconds, new events and the number of
+        received bits that are not yet decided.
+    interrupted
+        Set from outside to end the point.
+    broken
+        Asked whether the store has failed, which ends the point.
+    tick
+        Called several times a second while the point goes on, from the calling thread.
+    """
+
+    def __init__(
+        self,
+        sending: Link | None,
+        receiving: Link | None,
+        setup: Setup,
+        *,
+        commit: Callable[[list[Second], list[Event], int], None],
+        interrupted: threading.Event,
+        broken: Callable[[], bool] = bool,
+        tick: Callable[[], None] = lambda: None,
+    ) -> None:
+        self._sending = sending
+        self._receiving = receiving
+        self._setup = setup
+        self._interrupted = interrupted
+        self._broken = broken
+        self._tick = tick
+        self._wake = threading.Event()
+        self._asked: str | None = None
+        self._lock = threading.Lock()
+        self._healthy = {id(link): dict(link.health()) for link in (sending, receiving) if link is not None}
+        self.traffic = Traffic()
+        self._ring = Ring()
+        self._started_ns = time.monotonic_ns()
+        self._wall_ns = time.time_ns() - self._started_ns
+        self._draining = False
+        self._sender = self._make_sender()
+        self._receiver = Receiver(receiving, self._ring, self.traffic) if receiving is not None else None
+        self._book = Book(
+            point=setup.point,
+            sitting=setup.sitting,
+            first_index=setup.first_index,
+            started_ns=self._started_ns,
+            wall_ns=self._wall_ns,
+            keep_positions=setup.positions_per_second,
+        )
+        self._consumer = self._make_consumer(commit)
+
+    def _make_sender(self) -> Sender | None:
+        if self._sending is None:
+            return None
+        setup = self._setup
+        return Sender(
+            self._sending,
+            setup.pattern.reader(setup.first_place, setup.bit_order),
+            self.traffic,
+            pace_bps=setup.pace_bps,
+            most_in_flight=setup.max_in_flight_bits,
+            limit_bits=setup.stop.bits,
+            on_end=self._wake.set,
+        )
+
+    def _make_consumer(self, commit: Callable[[list[Second], list[Event], int], None]) -> Consumer:
+        setup = self._setup
+        receiving = self._receiving
+        unit = 8 if receiving is None or receiving.traits.whole_bytes else 1
+        finite = receiving is not None and receiving.traits.finite
+        drain_ns = int(setup.drain_s * 1e9)
+        counter = Counter(
+            setup.pattern,
+            bit_order=setup.bit_order,
+            slip_unit=unit,
+            position_limit=max(setup.positions_per_second, setup.plan.positions_needed if setup.plan else 0),
+            cut_compared=setup.plan.cut_compared if setup.plan else None,
+        )
+        places = None
+        if self._sender is not None:
+            places = Places(
+                self.traffic,
+                period=setup.pattern.period,
+                unit=unit,
+                most_in_flight=setup.max_in_flight_bits,
+                first_place=setup.first_place,
+            )
+        return Consumer(
+            ring=self._ring,
+            counter=counter,
+            traffic=self.traffic,
+            book=self._book,
+            places=places,
+            watch=None if finite else LinkWatch(drain_ns),
+            rules=Rules(
+                plan=setup.plan,
+                errors=setup.stop.errors,
+                received_bits=setup.stop.bits if self._sender is None else None,
+            ),
+            started_ns=self._started_ns,
+            wall_ns=self._wall_ns,
+            drain_ns=drain_ns,
+            sending=self._is_sending,
+            commit=commit,
+            stop=self._ask_stop,
+            each_second=self._line_events,
+        )
+
+    # -- what the consumer asks
+
+    def _is_sending(self) -> bool:
+        """Whether bits are being sent, or ought to arrive though we do not send."""
+        if self._draining:
+            return False
+        return self._sender is None or (self._sender.is_alive() and not self._sender.done)
+
+    def _ask_stop(self, why: str) -> None:
+        with self._lock:
+            self._asked = self._asked or why
+        self._wake.set()
+
+    def _line_events(self) -> list[Event]:
+        """Turn what the operating system counted on the line since the last look into events."""
+        events = []
+        for link in {id(x): x for x in (self._sending, self._receiving) if x is not None}.values():
+            try:
+                now = dict(link.health())
+            except DriverError:
+                continue
+            before = self._healthy[id(link)]
+            for key, number in now.items():
+                more = number - before.get(key, 0)
+                if more > 0:
+                    name = LINE_COUNTS.get(key, f"change of {key}")
+                    text = f"{more} {name}{'' if more == 1 else 's'} on the line"
+                    at = time.monotonic_ns() + self._wall_ns
+                    events.append(Event("line", None, text, at, {"count": key, "more": more}))
+            self._healthy[id(link)] = now
+        return events
+
+    # -- the point
+
+    def run(self) -> Outcome:
+        """Measure until something ends the point."""
+        for thread in (self._consumer, self._receiver, self._sender):
+            if thread is not None:
+                thread.start()
+        ended_by, fault = self._wait()
+        self._draining = True
+        self._stop_sending(ended_by)
+        if ended_by in ("bits", "seconds", "errors", "plan"):
+            self._wait_for_the_rest()
+        if self._receiver is not None:
+            self._receiver.halt()
+            self._receiver.join()
+        else:
+            self._ring.close()
+        self._consumer.join()
+        for thread in (self._consumer, self._sender, self._receiver):
+            if thread is not None and thread.defect is not None:
+                raise Defect(str(thread.defect)) from thread.defect
+        decision = self._consumer.decision
+        if decision is not None and ended_by not in ("interrupted", "plan"):
+            ended_by, fault = "plan", None
+        return Outcome(
+            ended_by=ended_by,
+            decision=decision,
+            tally=self._consumer.tally,
+            after=self._consumer.after,
+            sent_bits=self.traffic.sent_bits,
+            received_bits=self.traffic.received_bits,
+            next_index=self._book.next_index,
+            next_place=self._setup.first_place + self.traffic.sent_bits,
+            fault=fault,
+        )
+
+    def _wait(self) -> tuple[EndedBy, DriverError | None]:
+        """Wait for what ends the point, and say what it was."""
+        limit = self._setup.stop.seconds
+        while True:
+            self._wake.wait(POLL_S)
+            self._wake.clear()
+            self._tick()
+            if self._asked == "defect":
+                return "fault", None
+            if self._asked == "plan":
+                return "plan", None
+            if self._interrupted.is_set():
+                return "interrupted", None
+            if self._broken():
+                return "fault", None
+            ended = self._link_ended()
+            if ended is not None:
+                return ended
+            if self._asked is not None:
+                return ("bits" if self._asked == "bits" else "errors"), None
+            if self._sender is not None and self._sender.done:
+                return "bits", None
+            now = time.monotonic_ns()
+            if limit is not None and now - self._started_ns >= limit * 1e9:
+                return "seconds", None
+            hopeless = self._hopeless(now)
+            if hopeless is not None:
+                return "fault", hopeless
+
+    def _link_ended(self) -> tuple[EndedBy, DriverError | None] | None:
+        for thread in (self._receiver, self._sender):
+            if thread is not None and thread.fault is not None:
+                return "fault", thread.fault
+        if self._receiver is not None and self._receiver.ended:
+            assert self._receiving is not None
+            if self._sender is None:
+                return "end_of_data", None
+            if self._sender.done and self.traffic.in_flight() == 0:
+                return "bits", None
+            peer = (
+                self._receiving.describe().get("peer") or self._receiving.describe().get("port") or "the link"
+            )
+            return "fault", DriverError(
+                f"{peer} closed the connection in the middle of the run",
+                "look why the device closed it (power, time-out, a second client); what was measured is kept",
+            )
+        return None
+
+    def _hopeless(self, now_ns: int) -> DriverError | None:
+        """Say why waiting longer makes no sense, or None."""
+        first_sent = self.traffic.first_sent_ns
+        patience_s = max(3 * self._setup.drain_s, 10.0)
+        if self._receiver is None:
+            return None
+        if self.traffic.last_received_ns is None:
+            since = first_sent if self._sender is not None else self._started_ns
+            if since is not None and now_ns - since >= patience_s * 1e9:
+                return DriverError(
+                    f"nothing came back in {patience_s:.0f} s: not a single bit was received",
+                    "check power, cable and that the device is in its data mode; `bitassay check` helps",
+                )
+            return None
+        if self._setup.stop.seconds is None:
+            last = self._consumer.last_aligned_ns or self._started_ns
+            if now_ns - last >= HOPELESS_S * 1e9 and self._consumer.is_alive():
+                return DriverError(
+                    f"nothing was aligned for {HOPELESS_S:.0f} s, and the profile has no stop.seconds",
+                    "check the link and the pattern's name; set stop.seconds to wait longer",
+                )
+        return None
+
+    def _stop_sending(self, ended_by: EndedBy) -> None:
+        if self._sender is None or self._sending is None:
+            return
+        self._sender.halt()
+        self._sender.join()
+        if self._sender.fault is None and ended_by != "fault":
+            with contextlib.suppress(DriverError):
+                self._sending.drain(self._setup.drain_s if ended_by != "interrupted" else 0.2)
+
+    def _wait_for_the_rest(self) -> None:
+        """Wait for what is on its way: until nothing has come for `drain_s`."""
+        if self._sender is None or self._receiver is None:
+            return
+        begun = time.monotonic_ns()
+        while not self.traffic.wait_for_quiet(POLL_S):
+            quiet_since = max(begun, self.traffic.last_received_ns or begun)
+            if time.monotonic_ns() - quiet_since >= self._setup.drain_s * 1e9:
+                return
+            if not self._receiver.is_alive() or self._interrupted.is_set():
+                return
+
+    # -- for the screen
+
+    @property
+    def tally(self) -> Tally:
+        """Counts so far."""
+        return self._consumer.tally
+
+    @property
+    def started_ns(self) -> int:
+        """Monotonic time of the start."""
+        return self._started_ns

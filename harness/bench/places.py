@@ -1,0 +1,101 @@
+"""Loop delay and the true size of slips: from places in the pattern to bits that were sent.
+
+The counter knows a place in the pattern only modulo its period. Which of the bits sent it was is decided,
+where anything decides it, by causality: it was sent before it came, and it was not sent before the first;
+and by ``max_in_flight_bits``: no more than that can have been on its way.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+from harness.bench.traffic import Traffic
+
+
+@dataclass(frozen=True, slots=True)
+class Delay:
+    """Between sending a place in the pattern and receiving it."""
+
+    bits: int
+    seconds: float | None
+    modulo: int | None  # None: nothing else was possible
+
+
+class Places:
+    """Follows which bit sent each bit received was.
+
+    Parameters
+    ----------
+    period
+        Bits of the pattern; None where it does not repeat.
+    unit
+        Slips come in multiples of so many bits.
+    most_in_flight
+        Bits that can have been on their way, None where nothing limits them.
+    """
+
+    def __init__(
+        self,
+        traffic: Traffic,
+        *,
+        period: int | None,
+        unit: int,
+        most_in_flight: int | None,
+        first_place: int = 0,
+    ) -> None:
+        self._traffic = traffic
+        self._period = period
+        self._modulo = None if period is None else math.lcm(period, unit)
+        self._most = most_in_flight
+        self._first_place = first_place
+        self.ahead: int | None = None  # sent bit minus received bit, for the stretch that is aligned
+
+    def _window(self, received_bit: int, arrived_ns: int) -> tuple[int, int]:
+        """Sent bits that the received bit can have been, [low, high)."""
+        high = self._traffic.sent_by(arrived_ns)
+        low = 0
+        if self._most is not None:
+            low = max(0, high - self._most - 1)
+        return low, max(high, received_bit + 1 if high == 0 else high)
+
+    def aligned(self, bit: int, place: int, arrived_ns: int) -> Delay | None:
+        """Take the place of a received bit where a stretch becomes aligned; gives the loop delay."""
+        sent_by = self._traffic.sent_by(arrived_ns)
+        offset = place - self._first_place
+        if self._period is None or self._modulo is None:
+            sent_bit, modulo = offset, None
+        else:
+            low, high = self._window(bit, arrived_ns)
+            step = (
+                self._modulo
+                if (offset - bit) % self._period == 0 or self._modulo == self._period
+                else self._period
+            )
+            near = bit + (offset - bit) % step
+            options = [near + k * step for k in (-2, -1, 0, 1)]
+            inside = [o for o in options if low <= o < high] or [o for o in options if o >= 0]
+            sent_bit = min(inside, key=lambda o: (abs(o - bit), o))
+            alone = low > sent_bit - step and sent_bit + step >= high
+            modulo = None if alone or sent_bit == bit else step
+        self.ahead = sent_bit - bit
+        sent_at = self._traffic.when_sent(sent_bit)
+        seconds = None if sent_at is None else max(0.0, (arrived_ns - sent_at) / 1e9)
+        if sent_by <= sent_bit:
+            return None
+        return Delay(sent_by - sent_bit, seconds, modulo)
+
+    def slipped(self, bit: int, size: int, modulo: int | None, arrived_ns: int) -> tuple[int, int | None]:
+        """Resolve a slip's size where bits sent and received decide it; returns (size, modulus or None)."""
+        if modulo is None or self.ahead is None:
+            self.ahead = None if self.ahead is None else self.ahead - size
+            return size, modulo
+        low, high = self._window(bit, arrived_ns)
+        options = [size + k * modulo for k in range(-3, 4)]
+        inside = [s for s in options if low <= bit + self.ahead - s < high]
+        if inside:
+            size = min(inside, key=abs)
+            if len(inside) == 1:
+                modulo = None
+        self.ahead -= size
+        return size, modulo

@@ -1,0 +1,169 @@
+"""A sitting at the bench: the store's recorder, the links with their dialogues, and every way out of them."""
+
+from __future__ import annotations
+
+import contextlib
+import getpass
+import os
+import platform
+import socket
+import sys
+import threading
+import time
+from collections.abc import Iterator, Mapping
+from importlib import metadata
+from pathlib import Path
+from typing import Any
+
+from drivers.contract import DriverError, Link
+from drivers.dialogue import run_dialogue
+from drivers.registry import link_class
+from harness.profile import LinkSettings, Profile
+from harness.record import Event, Status
+from harness.signal.patterns import Pattern, parse_pattern
+
+PARK_NOTE = "stopped transmitting"
+
+
+def bench_host() -> dict[str, Any]:
+    """Say who measures: host, process, person, platform."""
+    try:
+        person = getpass.getuser()
+    except (KeyError, OSError):
+        person = ""
+    return {
+        "name": socket.gethostname(),
+        "pid": os.getpid(),
+        "user": person,
+        "python": platform.python_version(),
+        "platform": platform.platform(),
+    }
+
+
+def bench_versions() -> dict[str, str]:
+    """Say with what: versions of bitassay and of the libraries that numbers pass through."""
+    versions = {}
+    for name in ("bitassay", "numpy", "scipy", "pyserial", "PyVISA", "PyVISA-py", "SQLAlchemy"):
+        with contextlib.suppress(metadata.PackageNotFoundError):
+            versions[name] = metadata.version(name)
+    versions["python"] = sys.version.split()[0]
+    return versions
+
+
+def open_pattern(profile: Profile) -> Pattern:
+    """Make the profile's pattern; raises `PatternError`, or `OSError` for a file."""
+    chosen = profile.pattern
+    return parse_pattern(chosen.name, bit_order=chosen.bit_order, read=lambda path: Path(path).read_bytes())
+
+
+class Links:
+    """The links of a profile: the one that sends and the one that receives, often the same.
+
+    Parameters
+    ----------
+    settings
+        The profile's ``[link]``.
+    said
+        Called with events in words: dialogues, parking.
+    """
+
+    def __init__(self, settings: LinkSettings, cancel: threading.Event) -> None:
+        self.settings = settings
+        self._cancel = cancel
+        self.main = link_class(settings.driver)(settings.options, settings.rate_bps)
+        self.other: Link | None = None
+        if settings.receive is not None:
+            there = settings.receive
+            self.other = link_class(there.driver)(there.options, there.rate_bps or settings.rate_bps)
+        self._dialogue_due = False
+        self.events: list[Event] = []
+
+    @property
+    def all(self) -> list[Link]:
+        """Every link, once."""
+        return [link for link in (self.main, self.other) if link is not None]
+
+    @property
+    def sending(self) -> Link | None:
+        """The link that the pattern is sent on."""
+        if self.other is not None and self.settings.direction == "reverse":
+            return self.other
+        if self.settings.topology == "one-way" and self.other is None and self.main.traits.receives:
+            return None if not self.main.traits.sends or self.settings.direction == "forward" else self.main
+        return self.main if self.main.traits.sends else None
+
+    @property
+    def receiving(self) -> Link | None:
+        """The link that is counted."""
+        if self.other is not None:
+            return self.main if self.settings.direction == "reverse" else self.other
+        if self.settings.topology == "one-way" and self.sending is not None:
+            return None
+        return self.main if self.main.traits.receives else None
+
+    @property
+    def rate_bps(self) -> float | None:
+        """Payload rate, bit/s, as the receiving link knows it."""
+        link = self.receiving or self.main
+        return link.rate_bps
+
+    def describe(self) -> dict[str, Any]:
+        """Say what a report should: driver, peer, topology."""
+        about: dict[str, Any] = {"topology": self.settings.topology, "driver": self.settings.driver}
+        about.update(self.main.describe())
+        if self.other is not None:
+            about["receive"] = dict(self.other.describe())
+        return about
+
+    @contextlib.contextmanager
+    def opened(self) -> Iterator[None]:
+        """Open all, hold the set-up dialogue; on every way out the closing dialogue, park and close."""
+        try:
+            for link in self.all:
+                link.open()
+            if self.settings.before:
+                self._dialogue_due = True
+                self._talk(self.settings.before, self._cancel)
+            elif self.settings.after:
+                self._dialogue_due = True
+            yield
+        finally:
+            self._leave()
+
+    def _talk(self, steps: Any, cancel: threading.Event) -> None:
+        for exchange in run_dialogue(self.main, steps, cancel):
+            self.events.append(Event("dialogue", None, str(exchange), time.time_ns()))
+
+    def _leave(self) -> None:
+        """Never raises: a failing way out must not hide why it was taken."""
+        if self._dialogue_due and self.settings.after:
+            try:
+                self._talk(self.settings.after, threading.Event())
+            except DriverError as error:
+                self.events.append(Event("dialogue", None, f"closing dialogue: {error.what}", time.time_ns()))
+        for link in self.all:
+            for step in (link.park, link.close):
+                try:
+                    step()
+                except DriverError as error:
+                    self.events.append(Event("link", None, f"on the way out: {error.what}", time.time_ns()))
+
+
+def status_of(ended_by: str) -> Status:
+    """Give a run's status for what ended it."""
+    if ended_by == "interrupted":
+        return "interrupted"
+    return "failed" if ended_by == "fault" else "completed"
+
+
+def point_facts(profile: Profile, pattern: Pattern, links: Links | None) -> Mapping[str, Any]:
+    """Collect what a point's assessment needs beside numbers."""
+    facts: dict[str, Any] = {
+        "pattern": pattern.name,
+        "pattern_inverted": pattern.inverted,
+        "bit_order": profile.pattern.bit_order,
+    }
+    if links is not None:
+        facts["rate_bps"] = links.rate_bps
+        facts["link"] = links.describe()
+    return facts

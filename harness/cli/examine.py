@@ -1,0 +1,175 @@
+"""`bitassay examine` and `emit`: bytes in a file, counted or made."""
+
+from __future__ import annotations
+
+import sys
+from dataclasses import replace
+from pathlib import Path
+from typing import TYPE_CHECKING, Any, BinaryIO
+
+from harness.cli.failure import FAULT, PASS, UNDECIDED, UserError, warn
+from harness.cli.output import open_writing, print_json, store_url
+
+if TYPE_CHECKING:
+    import numpy as np
+    from numpy.typing import NDArray
+
+    from harness.bench.examine import Capture
+    from harness.record import BitOrder, Run
+
+ORDERS = ("lsb", "msb")
+EMIT_BYTES = 1 << 20
+
+
+def examine(
+    file: Path,
+    pattern: str,
+    bit_order: str,
+    rate_bps: float | None,
+    confidence: float,
+    store: str | None,
+    *,
+    as_json: bool,
+) -> int:
+    """Count errors in a capture."""
+    from harness.assess.run import assess
+    from harness.bench.examine import Examination, map_file
+    from harness.cli.page import page
+
+    _check(bit_order, rate_bps, confidence)
+    if not file.is_file():
+        raise UserError(f"{file}: no such file", "name a file of captured bytes")
+    try:
+        data = map_file(file)
+    except OSError as error:
+        raise UserError(f"{file}: {error.strerror}", "check the file and its permissions") from error
+    if not len(data):
+        raise UserError(
+            f"{file} is empty: not a single bit came", "capture again; nothing was counted", FAULT
+        )
+    capture, words = _identified(data, pattern, bit_order, rate_bps)
+    if capture is None:
+        raise UserError(
+            f"{file}: {words}", "name the pattern with --pattern if you know what was sent", UNDECIDED
+        )
+    examination = Examination(capture)
+    examination.run()
+    settings: dict[str, Any] = {
+        "pattern": {"name": capture.pattern.name, "bit_order": capture.bit_order},
+        "confidence": confidence,
+        "file": str(file),
+    }
+    record = examination.record(title=f"capture {file.name}", settings=settings)
+    if store is not None:
+        record = _keep(record, store)
+    assessment = assess(record)
+    document = assessment.to_json()
+    document["identification"] = words
+    if not record.key:
+        document["run"] = None
+        assessment = replace(assessment, run=None)
+    if as_json:
+        print_json(document)
+    else:
+        print("\n".join(page(assessment, store_url(store) if store is not None else "")))
+        if words:
+            print(f"identified  {words}")
+    if assessment.whole.tally.compared == 0:
+        warn(f"{file} was never aligned to {capture.pattern.name}")
+        print("  try --pattern auto, the other --bit-order, or a longer capture", file=sys.stderr)
+        return UNDECIDED
+    return PASS
+
+
+def _check(bit_order: str, rate_bps: float | None, confidence: float) -> None:
+    if bit_order not in (*ORDERS, "auto"):
+        raise UserError(f"there is no bit order {bit_order!r}", "choose lsb, msb or auto")
+    if rate_bps is not None and not 8 <= rate_bps < float("inf"):
+        raise UserError(
+            f"a rate of {rate_bps:g} bit/s makes no sense", "give --rate in bit/s, for example 48000"
+        )
+    if not 0 < confidence < 1:
+        raise UserError(f"a confidence of {confidence:g} is outside 0 to 1", "give 0.95 for 95 %")
+
+
+def _identified(
+    data: NDArray[np.uint8], pattern: str, bit_order: str, rate_bps: float | None
+) -> tuple[Capture | None, str]:
+    """Find out pattern and order where they are not told."""
+    from harness.bench.examine import Capture
+    from harness.signal.patterns import parse_pattern
+
+    if pattern.lower() != "auto" and bit_order != "auto":
+        order: BitOrder = "lsb" if bit_order == "lsb" else "msb"
+        named = parse_pattern(pattern, bit_order=order, read=_read)
+        return Capture(data, named, order, rate_bps), ""
+    from harness.bench.identification import identify_capture
+
+    return identify_capture(data, pattern, bit_order, rate_bps, _read)
+
+
+def _read(path: str) -> bytes:
+    try:
+        return Path(path).read_bytes()
+    except OSError as error:
+        raise UserError(f"{path}: {error.strerror}", "name a pattern file that can be read") from error
+
+
+def _keep(record: Run, store: str) -> Run:
+    from harness.assess.run import assess
+    from harness.bench.session import bench_host, bench_versions
+    from harness.record import Sitting
+
+    point = record.points[0]
+    with open_writing(store) as opened:
+        key: str = opened.begin_run(
+            title=record.title,
+            command=record.command,
+            started=record.started,
+            profile_text="",
+            overrides=(),
+            settings=record.settings,
+            device={},
+        )
+        opened.begin_sitting(key, Sitting(0, record.started, None, bench_host(), bench_versions()))
+        opened.begin_point(key, 0, {}, point.started, point.facts)
+        opened.commit(key, point.seconds, [(0, event) for event in point.events], 0)
+        assert record.ended is not None
+        opened.end_point(key, 0, record.ended, "end_of_data", point.after_decision, {})
+        opened.end_sitting(key, 0, record.ended, "completed")
+        kept = replace(opened.load(key), status="completed", ended=record.ended, ended_by="end_of_data")
+        stated = assess(kept).to_json()
+        opened.end_run(key, record.ended, "completed", "end_of_data", None, stated)
+    return kept
+
+
+def emit(pattern: str, number: int, bit_order: str, output: Path | None) -> int:
+    """Write a pattern's bytes."""
+    import numpy as np
+
+    from harness.signal.patterns import parse_pattern
+
+    if bit_order not in ORDERS:
+        raise UserError(f"there is no bit order {bit_order!r}", "choose lsb or msb")
+    order: BitOrder = "lsb" if bit_order == "lsb" else "msb"
+    reader = parse_pattern(pattern, bit_order=order, read=_read).reader(0, order)
+    buffer = np.empty(min(number, EMIT_BYTES), dtype=np.uint8)
+
+    def write(target: BinaryIO) -> None:
+        left = number
+        while left:
+            chunk = buffer[: min(left, len(buffer))]
+            reader.read_into(chunk)
+            target.write(chunk.data)
+            left -= len(chunk)
+        target.flush()
+
+    if output is None:
+        write(sys.stdout.buffer)
+        return 0
+    try:
+        with output.open("wb") as file:
+            write(file)
+    except OSError as error:
+        raise UserError(f"{output}: {error.strerror}", "choose a file that can be written") from error
+    return 0

@@ -1,0 +1,40 @@
+"""What every command shares when it prints: JSON, the store that is meant, numbers on lines."""
+
+from __future__ import annotations
+
+import json
+import os
+import sys
+from collections.abc import Mapping
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+if TYPE_CHECKING:
+    from harness.store import Store
+
+
+def print_json(document: Mapping[str, Any]) -> None:
+    """Print one JSON object on standard output; NaN is a defect, not a value."""
+    json.dump(document, sys.stdout, allow_nan=False, indent=1, ensure_ascii=False)
+    sys.stdout.write("\n")
+
+
+def store_url(option: str | None) -> str:
+    """Say which store is meant: the option, else BITASSAY_STORE, else results/runs.sqlite here."""
+    from harness.store import default_url
+
+    return default_url(option, os.environ, Path.cwd())
+
+
+def open_reading(option: str | None) -> Store:
+    """Open the store to read; it is not made where there is none."""
+    from harness.store import open_store
+
+    return open_store(store_url(option), create=False)
+
+
+def open_writing(option: str | None) -> Store:
+    """Open the store to write, made if need be."""
+    from harness.store import open_store
+
+    return open_store(store_url(option), create=True)

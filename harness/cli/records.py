@@ -1,0 +1,100 @@
+"""`bitassay runs`, `show`, `verify` and `store`: what the store holds."""
+
+from __future__ import annotations
+
+from harness.assess.words import count, local_date
+from harness.cli.failure import FAULT
+from harness.cli.output import open_reading, print_json, store_url
+
+
+def runs(store: str | None, limit: int | None, *, as_json: bool) -> int:
+    """List runs, newest first."""
+    from harness.assess.words import iso
+
+    with open_reading(store) as opened:
+        lines = opened.runs(limit)
+    if as_json:
+        listing = [
+            {
+                "run": r.run,
+                "title": r.title,
+                "started": iso(r.started),
+                "status": r.status,
+                "verdict": r.verdict,
+                "serial_number": r.serial_number,
+            }
+            for r in lines
+        ]
+        print_json({"schema": 1, "runs": listing})
+        return 0
+    if not lines:
+        print(f"no runs yet in {store_url(store)}")
+        return 0
+    print(f"{'run':<36}  {'started':<25}  {'status':<11} {'verdict':<9}  {'unit':<10}  title")
+    for r in lines:
+        print(
+            f"{r.run:<36}  {local_date(r.started):<25}  {r.status:<11} {r.verdict or '-':<9}  "
+            f"{r.serial_number or '-':<10}  {r.title}"
+        )
+    return 0
+
+
+def show(run: str, store: str | None, *, as_json: bool) -> int:
+    """Show a run."""
+    from harness.assess.run import assess
+    from harness.cli.page import page
+
+    with open_reading(store) as opened:
+        record = opened.load(opened.find(run))
+    assessment = assess(record)
+    if as_json:
+        print_json(assessment.to_json())
+    else:
+        print("\n".join(page(assessment, store_url(store))))
+    return 0
+
+
+def verify(run: str, store: str | None, *, as_json: bool) -> int:
+    """Derive every number again and compare."""
+    from harness.assess.verify import differences
+    from harness.store import digest_of
+
+    with open_reading(store) as opened:
+        key = opened.find(run)
+        record = opened.load(key)
+        digest = opened.digest(key)
+    found = differences(record)
+    if digest is not None and digest_of(record) != digest:
+        found.append("the record's SHA-256 digest is not the one that was kept when the run ended")
+    if as_json:
+        print_json({"schema": 1, "run": key, "holds": not found, "differences": found, "digest": digest})
+    elif found:
+        print(f"run {key} does NOT hold: {count(len(found), 'difference')}")
+        for line in found:
+            print(f"  {line}")
+        print("do not use this record; look for another copy of the store (`bitassay store copy`, backups)")
+    else:
+        seconds = sum(len(point.seconds) for point in record.points)
+        print(f"run {key} holds: every number follows from its {count(seconds, 'second')}")
+        if digest is not None:
+            print(f"digest {digest}")
+    return FAULT if found else 0
+
+
+def upgrade(store: str | None) -> int:
+    """Upgrade a store."""
+    from harness.store import upgrade as carry_out
+
+    url = store_url(store)
+    backup = carry_out(url)
+    print(f"{url} has this version's layout" + (f"; the backup is {backup}" if backup else ""))
+    return 0
+
+
+def copy(source: str, target: str) -> int:
+    """Copy records between stores."""
+    from harness.store import copy as carry_out
+
+    done = carry_out(source, target)
+    print(f"{target}: {done}")
+    return 0
