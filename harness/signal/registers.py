@@ -98,20 +98,14 @@ class Register:
 
     def window_at(self, place: int) -> int:
         """The window at a place, by x^place modulo the polynomial: cost grows with log(place) only."""
-        return self._apply(self._jumps.power(place % self.period))
-
-    def window_before(self, window: int, bits: int) -> int:
-        """The window that stands `bits` bits before a given one."""
-        back = polynomials.power(2, -bits % self._order, self.polynomial)
-        ahead = self.run(window, 2 * self.stages)
-        return self._combine(back, ahead)
+        return self.combine(self._jumps.power(place % self.period), self._start)
 
     def place_of(self, window: int) -> int | None:
         """The place of a window, or None where it is not on the cycle of n ONEs (the zero state never is)."""
         return self._logarithm.place_of(window)
 
     @cached_property
-    def _order(self) -> int:
+    def order(self) -> int:
         """Bits after which any state has returned."""
         return polynomials.order_of_x(self.polynomial)
 
@@ -127,11 +121,11 @@ class Register:
     def _start(self) -> int:
         return self.run((1 << self.stages) - 1, 2 * self.stages)
 
-    def _apply(self, jump: int) -> int:
-        return self._combine(jump, self._start)
+    def combine(self, jump: int, sequence: int) -> int:
+        """The window x^k further on, from its first 2n bits and ``jump`` = x^k modulo the polynomial.
 
-    def _combine(self, jump: int, sequence: int) -> int:
-        """With jump = Σ x^j over a set of j, the window is the sum of those that begin at these j."""
+        With jump = Σ x^j over a set of j, it is the sum of the windows that begin at these j.
+        """
         window = 0
         while jump:
             lowest = jump & -jump
@@ -212,17 +206,27 @@ def _moved_back(register: Register, step: int, count: int) -> NDArray[np.uint32]
     n = register.stages
     columns = np.zeros((n, count), dtype=np.uint32)
     columns[:, 0] = np.uint32(1) << np.arange(n, dtype=np.uint32)
+    ahead = [register.run(1 << b, 2 * n) for b in range(n)]
+    back = polynomials.power(2, -step % register.order, register.polynomial)  # x^(-step·known)
     known = 1
     while known < count:
         new = min(known, count - known)
-        shifted = [register.window_before(1 << b, step * known) for b in range(n)]
-        block = columns[:, :new]
-        moved = np.zeros_like(block)
-        for b, image in enumerate(shifted):
-            moved ^= ((block >> np.uint32(b)) & np.uint32(1)) * np.uint32(image)
-        columns[:, known : known + new] = moved
+        images = [register.combine(back, sequence) for sequence in ahead]
+        columns[:, known : known + new] = _map_windows(columns[:, :new], images)
         known += new
+        back = polynomials.remainder(polynomials.multiply(back, back), register.polynomial)
     return columns
+
+
+def _map_windows(windows: NDArray[np.uint32], images: list[int]) -> NDArray[np.uint32]:
+    """Apply a linear map, given by the images of the single bits, to many windows, a byte at a time."""
+    mapped = np.zeros_like(windows)
+    for start in range(0, len(images), 8):
+        table = np.zeros(1, dtype=np.uint32)
+        for image in images[start : start + 8]:
+            table = np.concatenate([table, table ^ np.uint32(image)])
+        mapped ^= table[(windows >> np.uint32(start)) & np.uint32(len(table) - 1)]
+    return mapped
 
 
 def shortest_recurrence(bits: NDArray[np.uint8]) -> tuple[int, int]:
