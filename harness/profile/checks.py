@@ -5,20 +5,12 @@ from __future__ import annotations
 import math
 from typing import Any
 
+from drivers.instruments.condition import QUANTITIES
+
 from .links import InstrumentSettings, LinkSettings
 from .problems import ProfileError, nearest
 from .profile import Profile
 from .requirement import PatternChoice
-
-# Quantities of the bench and the units that they may have; dB is a ratio, dBm a power.
-UNITS = {
-    "attenuation": ("dB",),
-    "gain": ("dB",),
-    "loss": ("dB",),
-    "level": ("dBm", "dBW", "dBV", "dBuV", "V", "W", "mW"),
-    "power": ("dBm", "dBW", "W", "mW"),
-    "temperature": ("°C", "degC", "C", "K", "°F", "degF"),
-}
 
 
 def check(profile: Profile) -> None:
@@ -100,15 +92,16 @@ def _ports(link: LinkSettings, profile: Profile) -> None:
 
 
 def _instrument(name: str, instrument: InstrumentSettings) -> None:
+    # The built-in drivers check this themselves; a plug-in may not.
     options, path = instrument.options, f"instruments.{name}"
     quantity, unit = getattr(options, "quantity", None), getattr(options, "unit", None)
     if quantity and not unit:
         raise ProfileError(f"{path} has a quantity and no unit", f'add unit = "…" to [{path}]')
-    allowed = UNITS.get(str(quantity).lower()) if quantity else None
+    allowed = QUANTITIES.get(str(quantity).casefold(), ())
     if allowed and unit not in allowed:
         raise ProfileError(
             f'{path}: {quantity} cannot be in "{unit}"',
-            f"use {' or '.join(allowed)}: dB is a ratio, dBm a power",
+            f"use {', '.join(allowed)}: dB is a ratio, dBm a power",
         )
     limits, safe = getattr(options, "limits", None), getattr(options, "safe", None)
     if limits is None:

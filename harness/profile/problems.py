@@ -90,6 +90,8 @@ def real_path(loc: Sequence[str | int], raw: Any, kind: str) -> Path:
             if isinstance(node, list) and part < len(node):
                 path.append(part)
                 node = node[part]
+            elif isinstance(node, list) and kind == "missing":
+                path.append(part)
         elif isinstance(node, dict) and part in node:
             path.append(part)
             node = node[part]
@@ -124,6 +126,8 @@ def describe(error: Mapping[str, Any], path: Path) -> tuple[str, str]:
     key = dotted(path) or "the profile"
     section = dotted(path[:-1])
     within = f" to [{section}]" if section else ""
+    if kind == "missing" and isinstance(path[-1], int):
+        return f"{section} has too few values", f"correct {section}"
     if kind == "missing":
         return f"{key} is missing", f"add `{path[-1]} = …`{within}"
     if kind in _KINDS:

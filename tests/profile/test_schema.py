@@ -1,4 +1,4 @@
-"""The JSON schema holds every key that the reader knows, the drivers' own among them, and nothing dangling."""
+"""The JSON schema holds every key that the reader knows, the drivers' own too, and nothing dangling."""
 
 from __future__ import annotations
 
@@ -12,7 +12,7 @@ from drivers import registry
 from harness.profile import Profile, parse_profile, profile_schema
 
 
-@pytest.fixture(scope="module")
+@pytest.fixture
 def schema() -> dict[str, Any]:
     return profile_schema()
 
