@@ -220,7 +220,7 @@ class _Talk:
                 return
             if monotonic() >= deadline:
                 break
-            # Listening meanwhile keeps the port's buffer from filling up, and hears what a later step expects.
+            # Listening meanwhile empties the port's buffer, and hears what the next step expects.
             self._listen(min(deadline, monotonic() + _SLICE_S))
         raise DialogueFailed(
             f"set-up step {number}: {line} did not come on within {step.timeout_s:g} s",

@@ -4,9 +4,13 @@ from __future__ import annotations
 
 import selectors
 import socket
+import struct
+import sys
 from abc import abstractmethod
+from collections.abc import Callable
 from contextlib import suppress
 from time import monotonic
+from typing import Protocol
 
 from drivers.contract import Interrupted, Link, LinkError, LinkLost
 
@@ -40,6 +44,16 @@ class Waker:
         self._writer.close()
 
 
+class Waits(Protocol):
+    """Waits until a link is ready in one direction."""
+
+    def wait(self, seconds: float) -> bool:
+        """Return whether it became ready within `seconds`; raises `Interrupted`."""
+
+    def close(self) -> None:
+        """Give back what it holds."""
+
+
 class Waiter:
     """Waits until a descriptor is ready in one direction, or until the waker wakes; for one thread."""
 
@@ -70,8 +84,9 @@ class DescriptorLink(Link):
     def __init__(self, section: object, nominal_bps: float | None = None) -> None:
         super().__init__(section, nominal_bps)
         self._waker: Waker | None = None
-        self._reading: Waiter | None = None
-        self._writing: Waiter | None = None
+        self._interrupted = False
+        self._reading: Waits | None = None
+        self._writing: Waits | None = None
 
     @property
     @abstractmethod
@@ -96,6 +111,7 @@ class DescriptorLink(Link):
 
     def _begin(self) -> Waker:
         """Forget an old interruption: the first thing that `open` does."""
+        self._interrupted = False
         self._waker = Waker()
         return self._waker
 
@@ -116,9 +132,9 @@ class DescriptorLink(Link):
         if self._waker is not None:
             self._waker.close()
 
-    def _ready(self, waiter: Waiter | None) -> Waiter:
-        if self._waker is not None:
-            self._waker.check()
+    def _ready(self, waiter: Waits | None) -> Waits:
+        if self._interrupted:
+            raise Interrupted
         if waiter is None:
             raise LinkLost(f"{self.label} is not open", "open the link before using it")
         return waiter
@@ -162,14 +178,41 @@ class DescriptorLink(Link):
 
     def interrupt(self) -> None:
         """From any thread: `send`, `receive`, a waiting `open` raise `Interrupted` until the next `open`."""
+        self._interrupted = True
         if self._waker is not None:
             self._waker.wake()
 
-    def _pause(self, seconds: float) -> None:
-        """Sleep, unless interrupted: `drain` polls with it."""
+    def _wait_until(self, done: Callable[[], bool], timeout: float) -> bool:
+        """Ask again and again, for `timeout` seconds at most; raises `Interrupted`."""
         waker = self._waker
-        assert waker is not None
-        with selectors.DefaultSelector() as selector:
-            selector.register(waker.fileno(), selectors.EVENT_READ)
-            selector.select(seconds)
+        if waker is None:
+            return done()
+        deadline = monotonic() + timeout
         waker.check()
+        while not done():
+            left = deadline - monotonic()
+            if left <= 0:
+                return False
+            pause(waker, min(left, 0.005))
+        return True
+
+
+def pause(waker: Waker, seconds: float) -> None:
+    """Sleep, unless woken; raises `Interrupted`."""
+    with selectors.DefaultSelector() as selector:
+        selector.register(waker.fileno(), selectors.EVENT_READ)
+        selector.select(seconds)
+    waker.check()
+
+
+def unsent_bytes(fd: int) -> int:
+    """Bytes that the system still holds for sending, unacknowledged ones too; 0 if it cannot say."""
+    if sys.platform == "win32":
+        return 0
+    import fcntl
+    import termios
+
+    with suppress(OSError):
+        count: int = struct.unpack("i", fcntl.ioctl(fd, termios.TIOCOUTQ, bytes(4)))[0]
+        return count
+    return 0

@@ -58,7 +58,7 @@ class ProcessLink(DescriptorLink):
     @property
     def label(self) -> str:
         """The command line."""
-        words = shlex.join(self.section.command)
+        words = " ".join(shlex.join(self.section.command).split())
         return words if len(words) <= 80 else words[:77] + "..."
 
     def open(self) -> None:
@@ -157,13 +157,8 @@ class ProcessLink(DescriptorLink):
 
     def drain(self, timeout: float) -> bool:
         """Wait until the program has read every byte; False at time-out."""
-        deadline = monotonic() + timeout
-        while self._input is not None and _unread_bytes(self._input):
-            left = deadline - monotonic()
-            if left <= 0:
-                return False
-            self._pause(min(left, 0.005))
-        return True
+        pipe = self._input
+        return pipe is None or self._wait_until(lambda: not _unread_bytes(pipe), timeout)
 
     def finish_sending(self) -> None:
         """Close the program's standard input."""

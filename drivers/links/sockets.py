@@ -6,9 +6,6 @@ import errno
 import os
 import selectors
 import socket
-import struct
-import sys
-from contextlib import suppress
 from time import monotonic
 
 from drivers.contract import LinkError, LinkLost, OpenFailed
@@ -66,19 +63,6 @@ def tune(connection: socket.socket) -> None:
     for name, value in (("TCP_KEEPIDLE", 10), ("TCP_KEEPINTVL", 5), ("TCP_KEEPCNT", 3)):
         if hasattr(socket, name):
             connection.setsockopt(socket.IPPROTO_TCP, getattr(socket, name), value)
-
-
-def unsent_bytes(connection: socket.socket) -> int:
-    """Bytes that the system still holds for sending, unacknowledged ones too; 0 where it cannot say."""
-    if sys.platform != "linux":
-        return 0
-    import fcntl
-    import termios
-
-    with suppress(OSError):
-        count: int = struct.unpack("i", fcntl.ioctl(connection.fileno(), termios.TIOCOUTQ, bytes(4)))[0]
-        return count
-    return 0
 
 
 def failed_to_connect(label: str, error: OSError, seconds: float) -> OpenFailed:

@@ -10,7 +10,7 @@ from time import monotonic
 from pydantic import Field
 
 from drivers.contract import EndOfStream, LinkError, OpenFailed, Section, SendRefused
-from drivers.links.descriptor import DescriptorLink, Waiter, Waker
+from drivers.links.descriptor import DescriptorLink, Waiter, Waker, unsent_bytes
 from drivers.links.sockets import (
     broken,
     connect,
@@ -19,7 +19,6 @@ from drivers.links.sockets import (
     in_words,
     resolve,
     tune,
-    unsent_bytes,
 )
 
 
@@ -122,13 +121,8 @@ class TcpLink(DescriptorLink):
 
     def drain(self, timeout: float) -> bool:
         """Wait until the peer's system has acknowledged every byte; False at time-out."""
-        deadline = monotonic() + timeout
-        while self._connection is not None and unsent_bytes(self._connection):
-            left = deadline - monotonic()
-            if left <= 0:
-                return False
-            self._pause(min(left, 0.005))
-        return True
+        connection = self._connection
+        return connection is None or self._wait_until(lambda: not unsent_bytes(connection.fileno()), timeout)
 
     def finish_sending(self) -> None:
         """Close the sending side; the device may still send."""

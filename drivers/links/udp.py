@@ -7,13 +7,12 @@ import socket
 import struct
 import sys
 from collections.abc import Mapping
-from time import monotonic
 
 from pydantic import Field, model_validator
 
 from drivers.contract import LinkError, LinkLost, OpenFailed, Section, SendRefused, Traits
-from drivers.links.descriptor import DescriptorLink
-from drivers.links.sockets import broken, failed_to_bind, failed_to_connect, in_words, resolve, unsent_bytes
+from drivers.links.descriptor import DescriptorLink, unsent_bytes
+from drivers.links.sockets import broken, failed_to_bind, failed_to_connect, in_words, resolve
 
 _RECEIVE_BUFFER_BYTES = 4 << 20  # asked for; the system may give less
 _LARGEST_DATAGRAM_BYTES = 65_507
@@ -161,13 +160,8 @@ class UdpLink(DescriptorLink):
 
     def drain(self, timeout: float) -> bool:
         """Wait until this computer has sent every datagram; False at time-out."""
-        deadline = monotonic() + timeout
-        while self._socket is not None and unsent_bytes(self._socket):
-            left = deadline - monotonic()
-            if left <= 0:
-                return False
-            self._pause(min(left, 0.005))
-        return True
+        made = self._socket
+        return made is None or self._wait_until(lambda: not unsent_bytes(made.fileno()), timeout)
 
     def health(self) -> Mapping[str, int]:
         """``buffer_overrun``: datagrams that this computer dropped; known once another one comes (Linux)."""
