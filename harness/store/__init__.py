@@ -5,21 +5,26 @@ from .connect import default_url
 from .errors import AmbiguousRun, NoSuchRun, StoreError, StoreLost, WrongRevision
 from .keys import new_key
 from .liveness import this_host
+from .moving import Copied, Upgraded, copy, upgrade
 from .reading import RunLine, Tail
 from .store import Store, open_store
 
 __all__ = [
     "AmbiguousRun",
+    "Copied",
     "NoSuchRun",
     "RunLine",
     "Store",
     "StoreError",
     "StoreLost",
     "Tail",
+    "Upgraded",
     "WrongRevision",
+    "copy",
     "default_url",
     "digest_of",
     "new_key",
     "open_store",
     "this_host",
+    "upgrade",
 ]

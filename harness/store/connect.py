@@ -15,7 +15,7 @@ from . import schema
 from .errors import StoreError, WrongRevision, explain
 
 REVISION_TABLE = "bitassay_revision"
-_LOCK = 0x62697461  # PostgreSQL: the advisory lock under which tables are made
+TABLE_LOCK = 0x62697461  # PostgreSQL: the advisory lock under which tables are made
 
 
 def default_url(option: str | None, environ: Mapping[str, str], cwd: Path) -> str:
@@ -223,7 +223,7 @@ def create_tables(engine: Engine, place: str) -> None:
     """Make the tables of a fresh store; two programs may do it at once."""
     with writing(engine) as connection:
         if engine.dialect.name == "postgresql":
-            connection.execute(text(f"SELECT pg_advisory_xact_lock({_LOCK})"))
+            connection.execute(text(f"SELECT pg_advisory_xact_lock({TABLE_LOCK})"))
         if revision_of(connection, place) is None:
             migrate(connection)
 

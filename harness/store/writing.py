@@ -14,12 +14,13 @@ from sqlalchemy import Connection, insert, select, update
 from harness.record import EndedBy, Event, Note, Second, Sitting, Status, Tally, Verdict
 
 from . import schema as t
-from .coding import clean, pack_kinds, pack_positions, pack_stretches, to_json
+from .coding import clean, to_json
 from .connect import DATABASE_ERRORS, writing
 from .errors import StoreError, explain
 from .keys import new_key
 from .liveness import gone
-from .reading import Reading, id_of, last_numbers, stream_digest
+from .reading import Reading
+from .rows import event_row, id_of, last_numbers, second_row, stream_digest
 
 _ENDINGS = ("ended", "status", "ended_by", "verdict", "stated", "digest")
 
@@ -382,46 +383,3 @@ def _close_last_sitting(connection: Connection, run: Any, now: int) -> None:
         connection.execute(
             update(t.sitting).where(c.run_id == run.id, c.number == last.number).values(values)
         )
-
-
-def second_row(run_id: int, second: Second) -> dict[str, Any]:
-    """Give a second as its row."""
-    tally = second.tally
-    return {
-        "run_id": run_id,
-        "number": second.index,
-        "point": second.point,
-        "sitting": second.sitting,
-        "at": second.at,
-        "duration_ns": second.duration_ns,
-        "sent": second.sent,
-        "received": tally.received,
-        "compared": tally.compared,
-        "unaligned": tally.unaligned,
-        "errors": tally.errors,
-        "ones_as_zeros": tally.ones_as_zeros,
-        "zeros_as_ones": tally.zeros_as_ones,
-        "due": second.due,
-        "slips": second.slips,
-        "bits_lost": second.bits_lost,
-        "bits_inserted": second.bits_inserted,
-        "first_bit": second.first_bit,
-        "positions": pack_positions(second.positions, second.first_bit),
-        "kinds": pack_kinds(second.ones_lost),
-        "positions_complete": second.positions_complete,
-        "stretches": pack_stretches(second.stretches, tally.received),
-    }
-
-
-def event_row(run_id: int, number: int, point: int | None, event: Event) -> dict[str, Any]:
-    """Give an event as its row."""
-    return {
-        "run_id": run_id,
-        "number": number,
-        "point": point,
-        "kind": event.kind,
-        "bit": event.bit,
-        "at": event.at,
-        "text": clean(event.text),
-        "data": to_json(event.data),
-    }
