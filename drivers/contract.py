@@ -273,7 +273,7 @@ class Instrument(_Opened, ABC):
     @property
     def limits(self) -> tuple[float, float]:
         """Lowest and highest value that may ever be set."""
-        low, high = getattr(self.section, "limits", (-math.inf, math.inf))
+        low, high = getattr(self.section, "limits", None) or (-math.inf, math.inf)
         return float(low), float(high)
 
     def apply(self, value: float, cancel: Event) -> Applied:

@@ -1,0 +1,1 @@
+"""Instrument drivers: what sets or reads a condition such as attenuation, level or temperature."""
