@@ -1,0 +1,375 @@
+"""The counter: compares a received stream with the pattern, bit by bit, wherever in the pattern it is.
+
+It gives back final segments, whatever the size of the chunks that come in. The rules that it follows (what
+is a burst, what an outage, where a slip is cut) stand in `rules` and `slips`.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+from harness.record import BitOrder, Segment
+from harness.signal import rules
+from harness.signal.acquire import Acquirer
+from harness.signal.bits import as_bytes, pack
+from harness.signal.ledger import Ledger
+from harness.signal.patterns import Pattern
+from harness.signal.places import Place, Reference
+from harness.signal.resolve import Resolver, Stretch, evidence_walk, gap
+from harness.signal.search import Hit, Search
+from harness.signal.stream import Undecided
+from harness.signal.track import SLAB_BYTES, Scratch, Track, Trouble
+
+_LOSS_AFTER = rules.OUTAGE_BITS + 2 * rules.LONGEST_WINDOW  # bits without evidence until loss is stated
+_PORTION_BYTES = 4096  # bytes kept at a time while a place is searched for
+
+
+class Counter:
+    """Counts errors in a received stream.
+
+    Parameters
+    ----------
+    pattern
+        What is expected; not a constant one.
+    bit_order
+        Which bit of a byte comes first.
+    slip_unit
+        Bits in which the link loses and invents: 8 on byte links, else 1.
+    position_limit
+        Error positions listed at most between two marks. Counts are exact beyond it.
+    cut_compared
+        No segment straddles this count of compared bits.
+
+    Raises
+    ------
+    PatternError
+        For a constant pattern.
+    """
+
+    def __init__(
+        self,
+        pattern: Pattern,
+        *,
+        bit_order: BitOrder = "lsb",
+        slip_unit: int = 1,
+        position_limit: int = 65536,
+        cut_compared: int | None = None,
+    ) -> None:
+        self.pattern = pattern
+        self._order: BitOrder = bit_order
+        self._unit = slip_unit
+        self._reference = Reference(pattern, bit_order)
+        self._acquirer = Acquirer(pattern)
+        self._weights = rules.weights_of(pattern)
+        self._resolver = Resolver(self._reference, slip_unit)
+        self._ledger = Ledger(bit_order, pattern.period, position_limit, cut_compared)
+        self._scratch = Scratch()
+        self.received = 0
+        self._track: Track | None = None
+        self._run_on: Place | None = None  # the last place held, also while it is lost
+        self._begin_stretch(None)
+
+    @property
+    def decided(self) -> int:
+        """Bits in segments that have been handed out or will be by the next call."""
+        return self._ledger.at
+
+    def feed(self, data: bytes | bytearray | memoryview | NDArray[np.uint8]) -> list[Segment]:
+        """Count the bytes that have come; what is decided is given back.
+
+        Parameters
+        ----------
+        data
+            Any number of bytes.
+
+        Returns
+        -------
+        list[Segment]
+            Contiguous and final, following on those of the last call. While the stream is aligned and clean
+            fewer than 256 bits stay undecided; in trouble at most about `_LOSS_AFTER`.
+        """
+        rest = as_bytes(data)
+        self.received += 8 * len(rest)
+        while len(rest):
+            rest = rest[self._take(rest) :]
+        return self._ledger.take()
+
+    def skip(self, bits: int) -> list[Segment]:
+        """Pass over bits that the host lost: unaligned, and the place is assumed to have run on.
+
+        Everything before them is decided. What follows is looked at like a stream that goes on.
+        """
+        self._decide_all()
+        self._ledger.event("skipped", f"{bits} bits were lost on the host's side")
+        self._ledger.unaligned(bits)
+        self.received += bits
+        place = self._run_on
+        if place is not None:
+            place = self._reference.normal(Place(place.anchor + self._stream.end + bits, place.inverted))
+        self._begin_stretch(place)
+        return self._ledger.take()
+
+    def mark(self) -> None:
+        """Let no segment straddle the count of bits received so far."""
+        self._ledger.mark(self.received)
+
+    def finish(self) -> list[Segment]:
+        """Decide everything that is still undecided; the stream has ended."""
+        self._decide_all()
+        self._begin_stretch(None)
+        return self._ledger.take()
+
+    # ---- the stretch of stream since the start or the last skip
+
+    def _begin_stretch(self, place: Place | None) -> None:
+        """Begin to count bits from 0 again, at a place that is assumed or at none."""
+        self._stream = Undecided(self._order)
+        self._written = 0  # bits before it are in the ledger
+        self._lost_at: int | None = None
+        self._search: Search | None = None
+        self._track = None
+        self._run_on = place
+        if place is None:
+            self._search = self._new_search(None, 0)
+        else:
+            self._track = self._new_track(place, 0, 0, 0)
+
+    def _new_search(self, old: Place | None, begin: int) -> Search:
+        return Search(self._reference, self._acquirer, old, begin, self._unit, self._weights)
+
+    def _new_track(self, place: Place, start: int, watch_from: int, level: int) -> Track:
+        return Track(self._reference, place, start, watch_from, level, self._weights, self._scratch)
+
+    def _take(self, data: NDArray[np.uint8]) -> int:
+        """Take in some bytes at the front of `data` and go as far as they allow: how many."""
+        if self._track is None:
+            assert self._search is not None
+            need = (self._search.next_end + 7) // 8 - self._stream.end // 8
+            taken = min(len(data), max(need, 1))
+            self._stream.append(data[:taken])
+            self._go_on(final=False)
+            return taken
+        waiting = len(self._stream)
+        if waiting:
+            taken = min(len(data), 8 - waiting % 8 if waiting % 8 else SLAB_BYTES)
+            self._stream.append(data[:taken])
+            self._go_on(final=False)
+            return taken
+        if len(data) < 8:
+            self._stream.append(data)
+            return len(data)
+        words, trouble = self._track.scan(data[:SLAB_BYTES], self._ledger)
+        self._stream.first += 8 * words
+        if trouble is not None:
+            self._meet(trouble)
+            self._go_on(final=False)
+        return 8 * words
+
+    def _go_on(self, final: bool) -> None:
+        """Follow and search in turn through what is at hand."""
+        while True:
+            if self._track is not None:
+                words, trouble = self._track.scan(self._stream.data[:SLAB_BYTES], self._ledger)
+                self._stream.drop_until(self._stream.first * 8 + 64 * words)
+                if trouble is not None:
+                    self._meet(trouble)
+                elif not words:
+                    return
+            elif not self._look(final):
+                return
+
+    def _meet(self, trouble: Trouble) -> None:
+        """Stop following and search; the bits that are not sure come back into play."""
+        track, self._track = self._track, None
+        assert track is not None
+        first_bit, held = track.held()
+        self._stream.restart(first_bit // 8, held)
+        self._written = track.written
+        self._trouble = trouble
+        self._search = self._new_search(track.place, trouble.begins)
+
+    # ---- searching
+
+    def _look(self, final: bool) -> bool:
+        """Take one look for a place, if the bits for it are there; whether there was one to take."""
+        search = self._search
+        assert search is not None
+        end = search.next_end
+        if end > self._stream.end:
+            if not final or self._stream.end <= search.last_end:
+                return False
+            end = self._stream.end
+        hit = search.look(self._stream, end)
+        if hit is not None:
+            self._found(search, hit)
+        elif not final:
+            self._consider_loss(search, end)
+        return True
+
+    def _consider_loss(self, search: Search, end: int) -> None:
+        """State that alignment is lost, once no place can come any more that makes a burst of it."""
+        if self._lost_at is None:
+            lost_at = self._evidence_end(search.old, end)
+            if end - lost_at < _LOSS_AFTER:
+                return
+            self._lose(search.old, lost_at)
+        keep = end - search.spacing - 2 * rules.LONGEST_WINDOW
+        if keep > self._written:
+            self._write_unaligned(keep)
+
+    def _evidence_end(self, old: Place | None, end: int) -> int:
+        """Where the old place's evidence ends; the beginning where there is none."""
+        if old is None:
+            return self._written
+        walk = evidence_walk(self._reference, old, self._stretch(end), self._weights)
+        return self._written + int(np.argmin(walk))
+
+    def _lose(self, old: Place | None, at: int) -> None:
+        if old is not None:
+            self._write_compared(old, at)
+            self._ledger.event("alignment_lost", "the pattern is no longer found in the stream")
+        self._lost_at = at
+
+    def _stretch(self, end: int) -> Stretch:
+        return Stretch(self._written, self._stream.bits(self._written, end))
+
+    def _found(self, search: Search, hit: Hit) -> None:
+        """Judge what lies between the old place and the new one, and follow the new one."""
+        stretch = self._stretch(hit.end)
+        old = search.old if self._lost_at is None else None
+        empty = gap(self._reference, old, hit.place, stretch, self._weights)
+        evidence = empty.end
+        level = self._level(hit, evidence, stretch)
+        outage = self._lost_at is not None or empty.bits >= rules.OUTAGE_BITS
+        if outage:
+            if self._lost_at is None:
+                self._lose(old, empty.begin)
+            self._write_unaligned(evidence)
+            self._announce(hit, stretch)
+            self._turn(search.old, hit.place, after_outage=True)
+            start = evidence
+        else:
+            path, cuts = self._resolver.path([p for p in (old, hit.place) if p], stretch, level)
+            if old is None:
+                self._announce(Hit(path[0], hit.begin, hit.end), stretch)
+            for index, cut in enumerate(cuts):
+                self._write_compared(path[index], cut)
+                self._turn(path[index], path[index + 1], after_outage=False)
+            start = self._written
+        if search.old == hit.place and not outage:
+            evidence = max(evidence, self._trouble.noticed)
+        watch_from = max(evidence, search.begin + rules.WORD_BITS if search.old else 0)
+        self._follow(hit.place, start, watch_from, level)
+
+    def _level(self, hit: Hit, evidence: int, stretch: Stretch) -> int:
+        """The level of errors that is usual from where evidence begins."""
+        bits = stretch.bits[evidence - stretch.first :]
+        wrong = bits ^ self._reference.bits(hit.place, evidence, len(bits))
+        return rules.level_of(int(wrong.sum()), len(bits))
+
+    def _announce(self, hit: Hit, stretch: Stretch) -> None:
+        place = self._reference.normal(Place(hit.place.anchor + self._written, hit.place.inverted))
+        bits = stretch.bits[hit.begin - stretch.first :] if hit.begin >= stretch.first else stretch.bits
+        wrong = bits ^ self._reference.bits(hit.place, stretch.end - len(bits), len(bits))
+        text = "the pattern was found, inverted" if place.inverted else "the pattern was found"
+        self._ledger.event(
+            "aligned",
+            text,
+            place=place.anchor,
+            inverted=place.inverted,
+            bits=len(bits),
+            mismatches=int(wrong.sum()),
+        )
+
+    def _turn(self, old: Place | None, new: Place, after_outage: bool) -> None:
+        """Note how the stream went from one place to another, at the next bit to be written."""
+        if old is None:
+            return
+        bits, modulus = rules.nearest_slip(old.anchor - new.anchor, self.pattern.period, self._unit)
+        if bits:
+            text = _slip_text(bits, self._unit) + (" over an outage" if after_outage else "")
+            more = {"after_outage": True} if after_outage else {}
+            self._ledger.event("slip", text, bits=bits, modulo=modulus, **more)
+        if old.inverted != new.inverted:
+            self._ledger.event("inversion", "polarity turned over", inverted=new.inverted)
+
+    def _follow(self, place: Place, start: int, watch_from: int, level: int) -> None:
+        self._search = None
+        self._lost_at = None
+        self._run_on = place
+        self._track = self._new_track(place, start, watch_from, level)
+        self._stream.drop_until(start // rules.WORD_BITS * rules.WORD_BITS)
+
+    # ---- the ledger
+
+    def _write_compared(self, place: Place, until: int) -> None:
+        """Write down bits up to `until` as compared with a place."""
+        if until <= self._written:
+            return
+        received = self._stream.bytes(self._written, until)
+        first = self._written // 8 * 8
+        differs = np.empty_like(received)
+        self._reference.reader(place, first).xor_into(received, differs)
+        self._ledger.compare(
+            received,
+            differs,
+            self._written - first,
+            until - self._written,
+            place.anchor + self._written,
+            place.inverted,
+        )
+        self._written = until
+
+    def _write_unaligned(self, until: int) -> None:
+        self._ledger.unaligned(until - self._written)
+        self._written = until
+        self._stream.drop_until(until)
+
+    # ---- the end
+
+    def _decide_all(self) -> None:
+        self._go_on(final=True)
+        while self._track is not None:
+            trouble = self._scan_last_word(self._track)
+            if trouble is None:
+                self._track.decide_all(self._ledger, self._stream.end)
+                return
+            self._meet(trouble)
+            self._go_on(final=True)
+        self._end_in_trouble()
+
+    def _scan_last_word(self, track: Track) -> Trouble | None:
+        """Follow the place through what is left of a word, filled up with what is expected."""
+        left = self._stream.data
+        end = self._stream.end
+        fill = self._reference.bits(track.place, end, rules.WORD_BITS - 8 * len(left))
+        word = np.concatenate([left, pack(fill, self._order)])
+        _, trouble = track.scan(word, self._ledger)
+        return trouble
+
+    def _end_in_trouble(self) -> None:
+        """The stream ends with no place found: what is short enough counts at the old one."""
+        search, end = self._search, self._stream.end
+        assert search is not None
+        old = search.old if self._lost_at is None else None
+        if old is not None:
+            level = self._trouble.level
+            stretch = self._stretch(end)
+            path, cuts = self._resolver.path([old], stretch, level)
+            for index, cut in enumerate(cuts):
+                self._write_compared(path[index], cut)
+                self._turn(path[index], path[index + 1], after_outage=False)
+            last = path[-1]
+            self._run_on = last
+            lost_at = self._evidence_end(last, end)
+            if end - lost_at < rules.OUTAGE_BITS:
+                self._write_compared(last, end)
+                return
+            self._lose(last, lost_at)
+        self._write_unaligned(end)
+
+
+def _slip_text(bits: int, unit: int) -> str:
+    count, noun = (abs(bits) // 8, "byte") if unit == 8 and bits % 8 == 0 else (abs(bits), "bit")
+    return f"{count or 'no'} {noun}{'' if count == 1 else 's'} {'lost' if bits < 0 else 'inserted'}"
