@@ -15,7 +15,7 @@ from harness.record import EndedBy, Run, Status, Verdict
 from . import schema as t
 from .connect import DATABASE_ERRORS, reading
 from .errors import AmbiguousRun, NoSuchRun, StoreError, explain
-from .rows import events_of, head, id_of, seconds_of, status_of, with_events
+from .rows import events_of, head, id_of, seconds_of, spans_of, status_of, with_events
 
 
 @dataclass(frozen=True, slots=True)
@@ -171,7 +171,7 @@ class Reading:
         ------
         NoSuchRun, StoreError
         """
-        return self._load(key, None, 0)[0]
+        return self._load(key, -1, 0)[0]
 
     def load_tail(self, key: str, after_second: int, after_events: int = 0) -> Tail:
         """Give what came since: seconds numbered over `after_second`, events beyond the first `after_events`.
@@ -190,14 +190,15 @@ class Reading:
             raise NoSuchRun(f'no run is named "{key}"', "`bitassay runs` lists them")
         return cast("str | None", row[0])
 
-    def _load(self, key: str, after_second: int | None, after_events: int) -> tuple[Run, int]:
+    def _load(self, key: str, after_second: int, after_events: int) -> tuple[Run, int]:
         now = time.time_ns()
         with self._reading() as connection:
             run = head(connection, key, now)
             run_id = id_of(connection, key)
+            spans = spans_of(connection, run_id, after_second)
             points = []
             for point in run.points:
-                seconds = tuple(seconds_of(connection, run_id, point.index, after_second))
+                seconds = tuple(seconds_of(connection, run_id, point.index, spans.get(point.index)))
                 points.append(replace(point, seconds=seconds))
             events, seen = events_of(connection, run_id, after_events)
         return replace(run, points=with_events(run, points, events)), seen

@@ -126,14 +126,37 @@ def _point(row: Row[Any]) -> Point:
     )
 
 
-def seconds_of(connection: Connection, run_id: int, point: int, after: int | None = None) -> Iterator[Second]:
-    """Give a point's seconds in order; memory stays flat where they are not kept."""
+def spans_of(connection: Connection, run_id: int, after: int = -1) -> dict[int, tuple[int, int]]:
+    """Give the numbers of each point's first and last second, among those numbered over `after`."""
     c = t.second.c
-    query = select(t.second).where(c.run_id == run_id, c.point == point).order_by(c.number)
-    if after is not None:
-        query = query.where(c.number > after)
-    result = connection.execution_options(yield_per=_CHUNK).execute(query)
-    for rows in result.partitions(_CHUNK):
+    query = (
+        select(c.point, func.min(c.number), func.max(c.number))
+        .where(c.run_id == run_id, c.number > after)
+        .group_by(c.point)
+    )
+    return {point: (first, last) for point, first, last in connection.execute(query)}
+
+
+def seconds_of(
+    connection: Connection, run_id: int, point: int, span: tuple[int, int] | None
+) -> Iterator[Second]:
+    """Give a point's seconds in order; memory stays flat where they are not kept.
+
+    Parameters
+    ----------
+    span
+        From `spans_of`, so that a point of a long sweep does not look through all the others' seconds.
+    """
+    if span is None:
+        return
+    c = t.second.c
+    query = (
+        select(t.second)
+        .where(c.run_id == run_id, c.number >= span[0], c.number <= span[1], c.point == point)
+        .order_by(c.number)
+        .execution_options(yield_per=_CHUNK)
+    )
+    for rows in connection.execute(query).partitions(_CHUNK):
         yield from _decode(rows)
 
 
@@ -164,6 +187,7 @@ def _decode(rows: Sequence[Row[Any]]) -> Iterator[Second]:
 
 
 def events_of(connection: Connection, run_id: int, skip: int) -> tuple[list[tuple[int | None, Event]], int]:
+    """Give a run's events beyond the first `skip`, each with its point, and how many there are in all."""
     c = t.event.c
     rows = connection.execute(
         select(t.event).where(c.run_id == run_id, c.number >= skip).order_by(c.number)
@@ -193,13 +217,14 @@ def stream_digest(connection: Connection, key: str) -> str:
     run = head(connection, key, time.time_ns())
     run_id = id_of(connection, key)
     events, _ = events_of(connection, run_id, 0)
+    spans = spans_of(connection, run_id)
     digest = Digest()
     digest.head(run)
     for sitting in run.sittings:
         digest.sitting(sitting)
     for point in with_events(run, run.points, events):
         digest.point(point)
-        for second in seconds_of(connection, run_id, point.index):
+        for second in seconds_of(connection, run_id, point.index, spans.get(point.index)):
             digest.second(second)
         for event in point.events:
             digest.event(event)

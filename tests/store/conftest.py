@@ -1,0 +1,161 @@
+"""Real stores: a SQLite file always, PostgreSQL where BITASSAY_TEST_POSTGRES names a server."""
+
+from __future__ import annotations
+
+import os
+import uuid
+from collections.abc import Callable, Iterator
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import pytest
+
+from harness.record import Event, Second, Sitting, Tally
+from harness.store import Store, open_store, this_host
+
+T0 = 1_780_000_000_000_000_000  # ns, some day
+SERVER = os.environ.get("BITASSAY_TEST_POSTGRES", "")
+
+
+@pytest.fixture
+def postgres() -> Iterator[str]:
+    """Give the address of an empty PostgreSQL store: a schema of its own, dropped afterwards."""
+    if not SERVER:
+        pytest.skip(
+            "BITASSAY_TEST_POSTGRES names no PostgreSQL server, for example postgresql://postgres@host/db"
+        )
+    import psycopg
+
+    name = f"bitassay_test_{uuid.uuid4().hex}"
+    with psycopg.connect(SERVER.replace("+psycopg", ""), autocommit=True) as connection:
+        connection.execute(f'CREATE SCHEMA "{name}"')
+        yield f"{SERVER}{'&' if '?' in SERVER else '?'}options=-csearch_path%3D{name}"
+        connection.execute(f'DROP SCHEMA "{name}" CASCADE')
+
+
+@pytest.fixture(params=["sqlite", "postgres"])
+def address(request: pytest.FixtureRequest, tmp_path: Path) -> str:
+    """Give the address of a store that does not exist yet, on each kind of database."""
+    if request.param == "postgres":
+        return str(request.getfixturevalue("postgres"))
+    return str(tmp_path / "results" / "runs.sqlite")
+
+
+@pytest.fixture
+def store(address: str) -> Iterator[Store]:
+    with open_store(address) as store:
+        yield store
+
+
+@pytest.fixture
+def sqlite(tmp_path: Path) -> str:
+    return str(tmp_path / "runs.sqlite")
+
+
+@pytest.fixture
+def make_second() -> Callable[..., Second]:
+    """Make a second with random errors at known places."""
+
+    def make(index: int, point: int = 0, sitting: int = 0, errors: int = 3, bits: int = 48_000) -> Second:
+        rng = np.random.default_rng(1000 + index)
+        first = index * bits
+        positions = np.sort(rng.choice(bits, errors, replace=False)).astype(np.int64) + first
+        ones = rng.random(errors) < 0.5
+        lost = int(ones.sum())
+        return Second(
+            point=point,
+            sitting=sitting,
+            index=index,
+            at=T0 + index * 10**9,
+            duration_ns=10**9,
+            sent=bits,
+            tally=Tally(bits, bits, 0, errors, lost, errors - lost),
+            first_bit=first,
+            positions=positions,
+            ones_lost=ones,
+            stretches=((bits, True),),
+        )
+
+    return make
+
+
+@pytest.fixture
+def begin() -> Callable[..., str]:
+    """Begin a run with its first sitting and point."""
+
+    def begin(store: Store, *, key: str | None = None, started: int = T0, **changes: Any) -> str:
+        head: dict[str, Any] = {
+            "title": "Wader-9 acceptance",
+            "command": "measure",
+            "profile_text": "title = 'Wader-9 acceptance'\n",
+            "overrides": ["stop.seconds=60"],
+            "settings": {"requirement": {"ber": 1e-6, "confidence": 0.95}},
+            "device": {"model": "Wader-9", "serial_number": "0031"},
+        }
+        key = store.begin_run(key=key, started=started, **(head | changes))
+        store.begin_sitting(key, Sitting(0, started, None, this_host(), {"bitassay": "0.1.0"}))
+        store.begin_point(key, 0, {}, started)
+        return key
+
+    return begin
+
+
+@pytest.fixture
+def finish() -> Callable[..., str]:
+    """End a run, its point and its sitting; gives the digest."""
+
+    def finish(
+        store: Store,
+        key: str,
+        *,
+        status: Any = "completed",
+        verdict: Any = "PASS",
+        point: int = 0,
+        sitting: int = 0,
+    ) -> str:
+        by: Any = {"completed": "plan", "interrupted": "interrupted", "failed": "fault"}[status]
+        store.end_point(key, point, T0 + 10**11, by)
+        store.end_sitting(key, sitting, T0 + 10**11, status)
+        return store.end_run(key, T0 + 10**11, status, by, verdict, {"errors": 9, "ber": 1e-6})
+
+    return finish
+
+
+@pytest.fixture
+def filled(
+    begin: Callable[..., str], finish: Callable[..., str], make_second: Callable[..., Second]
+) -> Callable[..., str]:
+    """Make a whole run with seconds and events; gives its key."""
+
+    def filled(store: Store, *, seconds: int = 5, end: bool = True, **changes: Any) -> str:
+        key = begin(store, **changes)
+        for k in range(seconds):
+            store.commit(key, [make_second(k)], [(0, Event("line", k, f"event {k}", T0 + k, {"n": k}))], k)
+        if end:
+            finish(store, key)
+        return key
+
+    return filled
+
+
+def same_second(a: Second, b: Second) -> bool:
+    return (
+        np.array_equal(a.positions, b.positions)
+        and np.array_equal(a.ones_lost, b.ones_lost)
+        and all(
+            getattr(a, name) == getattr(b, name)
+            for name in Second.__dataclass_fields__
+            if name not in ("positions", "ones_lost")
+        )
+    )
+
+
+@pytest.fixture
+def equal_seconds() -> Callable[..., bool]:
+    """Tell whether two lists of seconds are the same, arrays included."""
+
+    def equal(left: Any, right: Any) -> bool:
+        return len(left) == len(right) and all(map(same_second, left, right))
+
+    return equal
