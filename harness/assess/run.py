@@ -9,15 +9,18 @@ from harness.assess.accumulate import Accumulator
 from harness.assess.assessment import Assessment, PointAssessment
 from harness.assess.point import Facts, assess_point
 from harness.assess.requirement import Requirement, requirement_of
-from harness.record import Event, Point, Run
+from harness.record import Event, Point, Run, Verdict
 
 
 def assess(run: Run) -> Assessment:
     """Assess a record; pure, and the same for a run that goes on and one that has ended."""
     requirement = requirement_of(run.settings)
     points = [_assess_one(run, point, requirement) for point in run.points]
-    sweep = run.command != "measure" and run.command != "examine"
+    several = run.command == "sweep" or len(points) > 1
     whole = points[0] if points else _nothing(run, requirement)
+    verdict, reasons = whole.verdict, whole.reasons
+    if several:
+        verdict, reasons = _together(points)
     return Assessment(
         run=run.key,
         title=run.title,
@@ -27,11 +30,11 @@ def assess(run: Run) -> Assessment:
         started=run.started,
         ended=run.ended,
         device=run.device,
-        verdict=whole.verdict,
-        reasons=whole.reasons,
+        verdict=verdict,
+        reasons=reasons,
         whole=whole,
         points=points,
-        sweep=sweep,
+        sweep=several,
     )
 
 
@@ -67,6 +70,24 @@ def facts_of(run: Run, point: Point, requirement: Requirement | None) -> Facts:
         requirement=requirement,
         facts=point.facts,
     )
+
+
+def _together(points: list[PointAssessment]) -> tuple[Verdict | None, list[str]]:
+    """Join the verdicts of points that carry one: all must pass."""
+    judged = [p for p in points if p.verdict is not None]
+    if not judged:
+        return None, []
+    ranks: list[Verdict] = ["FAIL", "UNDECIDED", "PASS"]
+    worst = next(rank for rank in ranks if any(p.verdict == rank for p in judged))
+    reasons = [f"{_name(p)}: {reason}" for p in judged if p.verdict == worst for reason in p.reasons]
+    return worst, reasons
+
+
+def _name(point: PointAssessment) -> str:
+    direction = point.facts.get("direction")
+    if direction:
+        return f"{direction} direction"
+    return ", ".join(f"{name} {value:g}" for name, value in point.values.items()) or "point"
 
 
 def _assess_one(run: Run, point: Point, requirement: Requirement | None) -> PointAssessment:

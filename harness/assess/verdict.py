@@ -5,7 +5,7 @@ A PASS needs everything; a FAIL needs one thing that the requirement rules out; 
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from harness.assess.accumulate import Sums
 from harness.assess.requirement import Requirement
@@ -49,6 +49,17 @@ def judge(
         return "UNDECIDED", doubts
     assert decision is not None
     return "PASS", [_accepted(plan, decision)]
+
+
+def ruled_out(
+    requirement: Requirement, plan: Plan, decision: Decision | None, evidence: Evidence
+) -> list[str]:
+    """Say what already rules a PASS out while a run goes on.
+
+    The share of unaligned and lost bits is left out: it can still come down.
+    """
+    settled = replace(requirement, max_unaligned_ratio=1.0)
+    return _failures(settled, plan, decision, evidence)
 
 
 def _failures(

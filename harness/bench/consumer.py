@@ -70,7 +70,7 @@ class Consumer(threading.Thread):
         self._drain_ns = drain_ns
         self._sending = sending
         self._commit = commit
-        self._stop = stop
+        self._ask_stop = stop
         self._each_second = each_second
         self._arrivals: deque[tuple[int, int]] = deque([(0, started_ns)], maxlen=ARRIVALS_KEPT)
         self._events: list[Event] = []
@@ -79,11 +79,21 @@ class Consumer(threading.Thread):
         self._held: list[Segment] = []  # of a second whose positions were cut: one look at its end
         self._mark_bits: deque[int] = deque()
         self._unexplained = 0  # bits given up in silence that no slip has explained so far
+        self._posted: deque[Event] = deque()
+        self._given_up: deque[int] = deque()
         self.tally = Tally()
         self.after = Tally()
         self.decision: Decision | None = None
         self.defect: BaseException | None = None
         self.last_aligned_ns: int | None = None
+
+    def post(self, event: Event) -> None:
+        """Take an event from another thread."""
+        self._posted.append(event)
+
+    def gave_up(self, bits: int) -> None:
+        """Take from another thread that bits on their way were given up: the link went away."""
+        self._given_up.append(bits)
 
     # -- the thread
 
@@ -100,7 +110,7 @@ class Consumer(threading.Thread):
             self._finish()
         except BaseException as error:
             self.defect = error
-            self._stop("defect")
+            self._ask_stop("defect")
 
     def _take(self, piece: Piece) -> None:
         if piece.lost_bytes:
@@ -115,11 +125,13 @@ class Consumer(threading.Thread):
         self._absorb(segments)
         limit = self._rules.received_bits
         if limit is not None and self._counter.received >= limit:
-            self._stop("bits")
+            self._ask_stop("bits")
 
     def _finish(self) -> None:
         self._absorb(self._counter.finish())
         self._look(whole_second=True)
+        while self._given_up:
+            self._unexplained += self._given_up.popleft()
         now = max(time.monotonic_ns(), self._boundary_ns - SECOND_NS)
         if self.decision is None:
             self._never_returned(self._traffic.in_flight() if self._sends else 0, now)
@@ -224,7 +236,7 @@ class Consumer(threading.Thread):
         self.tally += segment.tally
         self._book.add(segment)
         if self._rules.errors is not None and self.tally.errors >= self._rules.errors:
-            self._stop("errors")
+            self._ask_stop("errors")
 
     def _look(self, *, whole_second: bool) -> None:
         """Let the plan look at a second whose error positions were cut, once, at its end."""
@@ -261,7 +273,7 @@ class Consumer(threading.Thread):
         self._happened("decided", text, at, {"bits": decision.compared_bits}, bit=bit)
         self._book.cut(bit=bit, ends_ns=at, sent=max(0, self._traffic.sent_bits - self._sent_before))
         self._flush()
-        self._stop("plan")
+        self._ask_stop("plan")
 
     def _never_returned(self, left: int, at: int) -> None:
         """Say what was sent and never came back, as far as no slip says it already."""
@@ -304,7 +316,7 @@ class Consumer(threading.Thread):
 
     def _delay(self, bit: int, place: int, at: int) -> None:
         assert self._places is not None
-        delay = self._places.aligned(bit, place, at)
+        delay = self._places.aligned(bit, place, at, self._came_with(bit))
         if delay is None:
             return
         seconds = "" if delay.seconds is None else f", {delay.seconds:.3g} s"
@@ -332,6 +344,10 @@ class Consumer(threading.Thread):
                 return at
         return self._arrivals[-1][1]
 
+    def _came_with(self, bit: int) -> int:
+        """Received bits up to the end of the piece in which a bit came."""
+        return next((end for end, _ in self._arrivals if bit < end), bit + 1)
+
     def _happened(
         self, kind: str, text: str, at_ns: int, data: Mapping[str, object], bit: int | None = None
     ) -> None:
@@ -352,6 +368,10 @@ class Consumer(threading.Thread):
             self._events.append(replace(event, kind="events_cut", text=text, data={}))
 
     def _flush(self) -> None:
+        while self._posted:
+            self._events.append(self._posted.popleft())
+        while self._given_up and self.decision is None:
+            self._unexplained += self._given_up.popleft()
         events, self._events = self._events, []
         self._commit(self._book.take_complete(), events, self._counter.received - self._counter.decided)
 

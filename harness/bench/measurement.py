@@ -24,6 +24,7 @@ from harness.statistics.plans import Decision, Plan
 
 POLL_S = 0.05
 LINE_COUNTS = {"framing": "framing error", "parity": "parity error", "overrun": "overrun", "break": "break"}
+RETRY_S = 0.5
 HOPELESS_S = 60.0  # without a stop rule: nothing aligned for so long ends the point
 
 
@@ -53,6 +54,7 @@ class Setup:
     max_in_flight_bits: int | None = None
     drain_s: float = 5.0
     positions_per_second: int = 4096
+    reconnect_s: float = 0.0
     first_place: int = 0
     point: int = 0
     sitting: int = 0
@@ -94,6 +96,8 @@ class Measurement:
         Asked whether the store has failed, which ends the point.
     tick
         Called several times a second while the point goes on, from the calling thread.
+    reopen
+        Opens the links again after one went away, set-up dialogue included; raises while it cannot.
     """
 
     def __init__(
@@ -106,6 +110,7 @@ class Measurement:
         interrupted: threading.Event,
         broken: Callable[[], bool] = bool,
         tick: Callable[[], None] = lambda: None,
+        reopen: Callable[[], None] | None = None,
     ) -> None:
         self._sending = sending
         self._receiving = receiving
@@ -113,17 +118,18 @@ class Measurement:
         self._interrupted = interrupted
         self._broken = broken
         self._tick = tick
+        self._reopen = reopen
         self._wake = threading.Event()
         self._asked: str | None = None
         self._lock = threading.Lock()
-        self._healthy = {id(link): dict(link.health()) for link in (sending, receiving) if link is not None}
+        self._healthy = self._health()
         self.traffic = Traffic()
         self._ring = Ring()
         self._started_ns = time.monotonic_ns()
         self._wall_ns = time.time_ns() - self._started_ns
         self._draining = False
         self._sender = self._make_sender()
-        self._receiver = Receiver(receiving, self._ring, self.traffic) if receiving is not None else None
+        self._receiver = self._make_receiver()
         self._book = Book(
             point=setup.point,
             sitting=setup.sitting,
@@ -138,15 +144,21 @@ class Measurement:
         if self._sending is None:
             return None
         setup = self._setup
+        sent = self.traffic.sent_bits
         return Sender(
             self._sending,
-            setup.pattern.reader(setup.first_place, setup.bit_order),
+            setup.pattern.reader(setup.first_place + sent, setup.bit_order),
             self.traffic,
             pace_bps=setup.pace_bps,
             most_in_flight=setup.max_in_flight_bits,
-            limit_bits=setup.stop.bits,
+            limit_bits=None if setup.stop.bits is None else max(0, setup.stop.bits - sent),
             on_end=self._wake.set,
         )
+
+    def _make_receiver(self) -> Receiver | None:
+        if self._receiving is None:
+            return None
+        return Receiver(self._receiving, self._ring, self.traffic, on_end=self._wake.set)
 
     def _make_consumer(self, commit: Callable[[list[Second], list[Event], int], None]) -> Consumer:
         setup = self._setup
@@ -238,8 +250,7 @@ class Measurement:
         if self._receiver is not None:
             self._receiver.halt()
             self._receiver.join()
-        else:
-            self._ring.close()
+        self._ring.close()
         self._consumer.join()
         for thread in (self._consumer, self._sender, self._receiver):
             if thread is not None and thread.defect is not None:
@@ -275,7 +286,7 @@ class Measurement:
             if self._broken():
                 return "fault", None
             ended = self._link_ended()
-            if ended is not None:
+            if ended is not None and not (ended[0] == "fault" and self._reconnect(ended[1])):
                 return ended
             if self._asked is not None:
                 return ("bits" if self._asked == "bits" else "errors"), None
@@ -306,6 +317,44 @@ class Measurement:
                 "look why the device closed it (power, time-out, a second client); what was measured is kept",
             )
         return None
+
+    def _reconnect(self, fault: DriverError | None) -> bool:
+        """Wait for a link that went away to come back, if the profile says so; False where it did not."""
+        patience_s = self._setup.reconnect_s
+        if not patience_s or self._reopen is None or fault is None:
+            return False
+        gone_ns = time.monotonic_ns()
+        self._tell("link_gone", f"{fault.what}; waiting up to {patience_s:g} s for it to come back", gone_ns)
+        for thread in (self._sender, self._receiver):
+            if thread is not None:
+                thread.halt()
+                thread.join()
+        while time.monotonic_ns() - gone_ns < patience_s * 1e9 and not self._interrupted.is_set():
+            self._tick()
+            try:
+                self._reopen()
+            except DriverError:
+                self._interrupted.wait(RETRY_S)
+                continue
+            back_ns = time.monotonic_ns()
+            self._tell(
+                "link_returned", f"the link came back after {(back_ns - gone_ns) / 1e9:.1f} s", back_ns
+            )
+            self._consumer.gave_up(self.traffic.write_off())
+            self._healthy = self._health()
+            self._sender, self._receiver = self._make_sender(), self._make_receiver()
+            for thread in (self._receiver, self._sender):
+                if thread is not None:
+                    thread.start()
+            return True
+        return False
+
+    def _tell(self, kind: str, text: str, at_ns: int) -> None:
+        self._consumer.post(Event(kind, None, text, at_ns + self._wall_ns))
+
+    def _health(self) -> dict[int, dict[str, int]]:
+        links = (self._sending, self._receiving)
+        return {id(link): dict(link.health()) for link in links if link is not None}
 
     def _hopeless(self, now_ns: int) -> DriverError | None:
         """Say why waiting longer makes no sense, or None."""

@@ -59,8 +59,12 @@ class Places:
             low = max(0, high - self._most - 1)
         return low, max(high, received_bit + 1 if high == 0 else high)
 
-    def aligned(self, bit: int, place: int, arrived_ns: int) -> Delay | None:
-        """Take the place of a received bit where a stretch becomes aligned; gives the loop delay."""
+    def aligned(self, bit: int, place: int, arrived_ns: int, came_with: int) -> Delay | None:
+        """Take the place of a received bit where a stretch becomes aligned; gives the loop delay.
+
+        `came_with` counts the received bits up to the end of the piece that the bit came in: bits travel in
+        pieces, and the last of a piece says best how many were on their way.
+        """
         sent_by = self._traffic.sent_by(arrived_ns)
         offset = place - self._first_place
         if self._period is None or self._modulo is None:
@@ -83,7 +87,7 @@ class Places:
         seconds = None if sent_at is None else max(0.0, (arrived_ns - sent_at) / 1e9)
         if sent_by <= sent_bit:
             return None
-        return Delay(sent_by - sent_bit, seconds, modulo)
+        return Delay(max(0, sent_by - self.ahead - max(came_with, bit + 1)), seconds, modulo)
 
     def slipped(self, bit: int, size: int, modulo: int | None, arrived_ns: int) -> tuple[int, int | None]:
         """Resolve a slip's size where bits sent and received decide it; returns (size, modulus or None)."""

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import threading
 import time
+from collections.abc import Callable
 
 from drivers.contract import DriverError, EndOfStream, Interrupted, Link
 from harness.bench.ring import PIECE_BYTES, Ring
@@ -19,11 +20,12 @@ class Receiver(threading.Thread):
     what finds no room is counted as lost by the host.
     """
 
-    def __init__(self, link: Link, ring: Ring, traffic: Traffic) -> None:
+    def __init__(self, link: Link, ring: Ring, traffic: Traffic, on_end: Callable[[], None]) -> None:
         super().__init__(name="receiver", daemon=True)
         self._link = link
         self._ring = ring
         self._traffic = traffic
+        self._on_end = on_end
         self._halt = threading.Event()
         self._scratch = memoryview(bytearray(PIECE_BYTES))
         self.fault: DriverError | None = None
@@ -48,7 +50,7 @@ class Receiver(threading.Thread):
         except BaseException as error:
             self.defect = error
         finally:
-            self._ring.close()
+            self._on_end()
 
     def _receive_once(self) -> None:
         room = self._ring.room()
@@ -62,8 +64,32 @@ class Receiver(threading.Thread):
                 self._ring.lost(count, now)
                 self._traffic.received(8 * count, now)
             return
+        message = self._link.traits.message_bytes
+        if message is not None and len(room) < message:
+            self._receive_message(room)
+            return
         count = self._link.receive(room, WAIT_S)
         if count:
-            now = time.monotonic_ns()
-            self._traffic.received(8 * count, now)
-            self._ring.written(count, now)
+            self._arrived(count)
+
+    def _receive_message(self, room: memoryview) -> None:
+        """Take a message that may not fit before the ring's turn, by way of the scratch buffer."""
+        count = self._link.receive(self._scratch, WAIT_S)
+        left = self._scratch[:count]
+        while len(left):
+            part = min(len(left), len(room))
+            if part:
+                room[:part] = left[:part]
+                self._arrived(part)
+            else:
+                now = time.monotonic_ns()
+                self._ring.lost(len(left), now)
+                self._traffic.received(8 * len(left), now)
+                return
+            left = left[part:]
+            room = self._ring.room()
+
+    def _arrived(self, count: int) -> None:
+        now = time.monotonic_ns()
+        self._traffic.received(8 * count, now)
+        self._ring.written(count, now)

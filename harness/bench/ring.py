@@ -34,6 +34,7 @@ class Ring:
         self._size = size
         self._write = 0  # bytes written since the beginning
         self._read = 0  # bytes given back since the beginning
+        self._taken = 0  # bytes handed to the reader since the beginning
         self._pieces: deque[tuple[int, int, int]] = deque()  # (arrived_ns, bytes, lost bytes)
         self._changed = threading.Condition()
         self._closed = False
@@ -88,7 +89,8 @@ class Ring:
             if not self._pieces:
                 return None
             arrived_ns, count, lost = self._pieces.popleft()
-        at = self._read % self._size
+            at = self._taken % self._size
+            self._taken += count
         return Piece(arrived_ns, self._buffer[at : at + count], lost)
 
     def give_back(self, piece: Piece) -> None:

@@ -6,20 +6,22 @@ import threading
 import time
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field, replace
-from typing import Any
 
 from drivers.contract import DriverError, Interrupted
 from harness.assess.accumulate import Accumulator
 from harness.assess.assessment import Assessment, PointAssessment
 from harness.assess.point import Facts, assess_point
-from harness.assess.requirement import requirement_of
+from harness.assess.requirement import Requirement, requirement_of
 from harness.assess.run import assess
 from harness.bench.measurement import Defect, Measurement, Outcome, Setup, StopRules
 from harness.bench.recorder import Recorder
-from harness.bench.session import Links, bench_host, bench_versions, open_pattern, point_facts, status_of
+from harness.bench.session import Links, Way, bench_host, bench_versions, status_of, ways_of
 from harness.profile import Profile
-from harness.record import EndedBy, Event, Run, Second, Sitting, Tally, Verdict
+from harness.record import EndedBy, Event, Run, Second, Sitting, Tally
 from harness.store import Store
+
+TICK_S = 0.2
+Commit = Callable[[list[Second], list[Event], int], None]
 
 
 @dataclass(frozen=True, slots=True)
@@ -55,16 +57,17 @@ class RunResult:
     fault: tuple[str, str] | None  # what, advice
 
 
-class _Live:
+class Live:
     """The accumulator that the screen is fed from, shared between the consumer and the main thread."""
 
-    def __init__(self, requirement: Any, about: Facts) -> None:
+    def __init__(self, requirement: Requirement | None, about: Facts) -> None:
         self._lock = threading.Lock()
         self._acc = Accumulator(requirement, about.rate_bps)
         self._about = about
         self.plan = self._acc.plan
 
     def take(self, seconds: list[Second], events: list[Event]) -> None:
+        """Take what has just been committed."""
         with self._lock:
             for event in events:
                 self._acc.note(event)
@@ -72,40 +75,47 @@ class _Live:
                 self._acc.add(second)
 
     def point(self) -> PointAssessment:
+        """Assess what is known so far."""
         with self._lock:
             return assess_point(self._acc, self._about, quick=True)
 
 
 class MeasureRun:
-    """Carries out one profile with one point."""
+    """Carries out one profile with one point, or with two where both directions are measured at once."""
 
     def __init__(self, profile: Profile, store: Store, hooks: Hooks) -> None:
         self._profile = profile
-        self._store = store
         self._hooks = hooks
         self._settings = profile.resolved()
         self._requirement = requirement_of(self._settings)
-        self._pattern = open_pattern(profile)
         self._links = Links(profile.need_link(), hooks.interrupted)
+        self._ways = ways_of(profile, self._links)
+        self._stop = StopRules(profile.stop.bits, profile.stop.seconds, profile.stop.errors)
+        self._recorder = Recorder(store)
         self._started = time.time_ns()
+        self._next_tick = 0.0
+        self._undecided: dict[int, int] = {}
         self._key = ""
 
     def run(self) -> RunResult:
         """Measure; whatever goes wrong on the bench ends in the record and in `fault`."""
-        recorder = Recorder(self._store)
-        recorder.start()
+        self._recorder.start()
         try:
-            self._begin(recorder)
-            outcome, fault, ended_by = self._measure(recorder)
-            return self._end(recorder, outcome, fault, ended_by)
+            self._begin()
+            lives = [Live(self._requirement, self._about(way)) for way in self._ways]
+            outcomes, fault, ended_by = self._measure(lives)
+            return self._end(outcomes, fault, ended_by)
+        except BaseException:
+            self._abandon()
+            raise
         finally:
-            recorder.finish()
+            self._recorder.finish()
 
     # -- the record
 
-    def _begin(self, recorder: Recorder) -> None:
+    def _begin(self) -> None:
         profile, started = self._profile, self._started
-        facts = point_facts(profile, self._pattern, self._links)
+        facts = [way.facts(self._links) for way in self._ways]
 
         def job(store: Store) -> str:
             key = store.begin_run(
@@ -118,121 +128,172 @@ class MeasureRun:
                 device=profile.device,
             )
             store.begin_sitting(key, Sitting(0, started, None, bench_host(), bench_versions()))
-            store.begin_point(key, 0, {}, started, facts)
+            for number, about in enumerate(facts):
+                store.begin_point(key, number, {}, started, about)
             return key
 
-        self._key = recorder.ask(job)
+        self._key = self._recorder.ask(job)
         self._hooks.started(self._key)
 
-    def _commit(self, recorder: Recorder, live: _Live) -> Callable[[list[Second], list[Event], int], None]:
+    def _commit(self, number: int, live: Live) -> Commit:
         key = self._key
 
         def commit(seconds: list[Second], events: list[Event], undecided: int) -> None:
             for event in events:
                 self._hooks.log(event.text)
-            recorder.put(lambda store: store.commit(key, seconds, [(0, e) for e in events], undecided))
+            self._undecided[number] = undecided
+            waiting = sum(self._undecided.values())
+            placed = [(number, event) for event in events]
+            self._recorder.put(lambda store: store.commit(key, seconds, placed, waiting))
             live.take(seconds, events)
 
         return commit
 
-    # -- the bench
-
-    def _measure(self, recorder: Recorder) -> tuple[Outcome | None, tuple[str, str] | None, EndedBy]:
-        profile, links = self._profile, self._links
-        stop = StopRules(profile.stop.bits, profile.stop.seconds, profile.stop.errors)
-        about = Facts(
+    def _about(self, way: Way) -> Facts:
+        facts = way.facts(self._links)
+        return Facts(
             values={},
             status="running",
             ended_by=None,
             started=self._started,
             ended=None,
             after_decision=Tally(),
-            pattern=self._pattern.name,
-            bit_order=profile.pattern.bit_order,
-            rate_bps=links.rate_bps,
+            pattern=way.pattern.name,
+            bit_order=way.bit_order,
+            rate_bps=facts["rate_bps"],
             requirement=self._requirement,
-            facts=point_facts(profile, self._pattern, links),
+            facts=facts,
         )
-        live = _Live(self._requirement, about)
-        commit = self._commit(recorder, live)
-        outcome: Outcome | None = None
+
+    # -- the bench
+
+    def _measure(self, lives: list[Live]) -> tuple[list[Outcome], tuple[str, str] | None, EndedBy]:
+        outcomes: list[Outcome] = []
         fault: tuple[str, str] | None = None
         ended_by: EndedBy = "fault"
         try:
-            with links.opened():
-                measurement = Measurement(
-                    links.sending,
-                    links.receiving,
-                    self._setup(stop),
-                    commit=commit,
-                    interrupted=self._hooks.interrupted,
-                    broken=lambda: recorder.failed,
-                    tick=lambda: self._tick(live, stop, recorder),
-                )
-                outcome = measurement.run()
-                ended_by = outcome.ended_by
-                if outcome.fault is not None:
-                    fault = (outcome.fault.what, outcome.fault.advice)
+            with self._links.opened():
+                outcomes = self._both([self._measurement(n, live, lives) for n, live in enumerate(lives)])
+                ended_by = _worst(outcomes)
+                failed = next((o.fault for o in outcomes if o.fault is not None), None)
+                if failed is not None:
+                    fault = (failed.what, failed.advice)
         except Interrupted:
             ended_by = "interrupted"
         except DriverError as error:
-            fault = (error.what, error.advice)
-            ended_by = "fault"
-        extra = list(links.events)
+            fault, ended_by = (error.what, error.advice), "fault"
+        extra = list(self._links.events)
         if fault is not None:
             extra.append(Event("fault", None, fault[0], time.time_ns()))
-        commit([], extra, 0)
-        return outcome, fault, ended_by
+        if extra:
+            self._commit(0, lives[0])([], extra, 0)
+        return outcomes, fault, ended_by
 
-    def _setup(self, stop: StopRules) -> Setup:
-        profile, link = self._profile, self._profile.need_link()
-        return Setup(
-            pattern=self._pattern,
-            bit_order=profile.pattern.bit_order,
+    def _measurement(self, number: int, live: Live, lives: list[Live]) -> Measurement:
+        way, link = self._ways[number], self._profile.need_link()
+        setup = Setup(
+            pattern=way.pattern,
+            bit_order=way.bit_order,
             plan=self._requirement.make_plan() if self._requirement else None,
-            stop=stop,
+            stop=self._stop,
             pace_bps=link.pace_bps,
             max_in_flight_bits=link.max_in_flight_bits,
             drain_s=link.drain_s,
+            reconnect_s=link.reconnect_s,
+            point=number,
+        )
+        return Measurement(
+            way.sending,
+            way.receiving,
+            setup,
+            commit=self._commit(number, live),
+            interrupted=self._hooks.interrupted,
+            broken=lambda: self._recorder.failed,
+            tick=(lambda: self._tick(lives)) if number == 0 else (lambda: None),
+            reopen=self._links.reopen if len(self._ways) == 1 else None,
         )
 
-    def _tick(self, live: _Live, stop: StopRules, recorder: Recorder) -> None:
-        point = live.point()
+    def _both(self, measurements: list[Measurement]) -> list[Outcome]:
+        """Measure; a second direction has a thread of its own, beside this one."""
+        answers: dict[int, Outcome | BaseException] = {}
+
+        def beside(number: int) -> None:
+            try:
+                answers[number] = measurements[number].run()
+            except BaseException as error:
+                answers[number] = error
+
+        threads = [
+            threading.Thread(target=beside, args=(number,), name=f"direction {number}", daemon=True)
+            for number in range(1, len(measurements))
+        ]
+        for thread in threads:
+            thread.start()
+        beside(0)
+        for thread in threads:
+            thread.join()
+        outcomes = []
+        for number in range(len(measurements)):
+            answer = answers[number]
+            if isinstance(answer, BaseException):
+                raise answer
+            outcomes.append(answer)
+        return outcomes
+
+    def _tick(self, lives: list[Live]) -> None:
+        now = time.monotonic()
+        if now < self._next_tick:
+            return
+        self._next_tick = now + TICK_S
         self._hooks.tick(
             Progress(
                 run=self._key,
                 title=self._profile.title,
                 device=self._profile.device,
-                point=point,
-                longest_bits=live.plan.longest_bits if live.plan else None,
-                stop=stop,
+                point=lives[0].point(),
+                longest_bits=lives[0].plan.longest_bits if lives[0].plan else None,
+                stop=self._stop,
                 elapsed_s=(time.time_ns() - self._started) / 1e9,
-                waiting_writes=recorder.waiting,
+                waiting_writes=self._recorder.waiting,
             )
         )
 
-    def _end(
-        self,
-        recorder: Recorder,
-        outcome: Outcome | None,
-        fault: tuple[str, str] | None,
-        ended_by: EndedBy,
-    ) -> RunResult:
+    def _abandon(self) -> None:
+        """After a defect: close the record as failed, as far as that goes; what was committed stays."""
+        if not self._key:
+            return
+        key, now = self._key, time.time_ns()
+        self._recorder.put(lambda store: store.end_run(key, now, "failed", "fault", None, None))
+
+    def _end(self, outcomes: list[Outcome], fault: tuple[str, str] | None, ended_by: EndedBy) -> RunResult:
         ended = time.time_ns()
         status = status_of(ended_by)
-        after = outcome.after if outcome else Tally()
         key = self._key
 
         def close(store: Store) -> Run:
-            store.end_point(key, 0, ended, ended_by, after, {})
+            for number in range(len(self._ways)):
+                outcome = outcomes[number] if outcomes else None
+                why = outcome.ended_by if outcome else ended_by
+                store.end_point(key, number, ended, why, outcome.after if outcome else Tally(), {})
             store.end_sitting(key, 0, ended, status)
             return store.load(key)
 
-        run = replace(recorder.ask(close), status=status, ended=ended, ended_by=ended_by)
+        run = replace(self._recorder.ask(close), status=status, ended=ended, ended_by=ended_by)
         assessment = assess(run)
-        verdict: Verdict | None = assessment.verdict
-        recorder.ask(lambda store: store.end_run(key, ended, status, ended_by, verdict, assessment.to_json()))
+        stated = assessment.to_json()
+        self._recorder.ask(
+            lambda store: store.end_run(key, ended, status, ended_by, assessment.verdict, stated)
+        )
         return RunResult(key, assessment, fault)
 
 
-__all__ = ["Defect", "Hooks", "MeasureRun", "Progress", "RunResult"]
+def _worst(outcomes: list[Outcome]) -> EndedBy:
+    """What ended a run: a fault or an interruption in either direction, else what ended the first."""
+    reasons: list[EndedBy] = [outcome.ended_by for outcome in outcomes]
+    for bad in ("interrupted", "fault"):
+        if bad in reasons:
+            return bad
+    return reasons[0]
+
+
+__all__ = ["Defect", "Hooks", "Live", "MeasureRun", "Progress", "RunResult"]

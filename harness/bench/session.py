@@ -11,6 +11,7 @@ import sys
 import threading
 import time
 from collections.abc import Iterator, Mapping
+from dataclasses import dataclass
 from importlib import metadata
 from pathlib import Path
 from typing import Any
@@ -19,7 +20,7 @@ from drivers.contract import DriverError, Link
 from drivers.dialogue import run_dialogue
 from drivers.registry import link_class
 from harness.profile import LinkSettings, Profile
-from harness.record import Event, Status
+from harness.record import BitOrder, Event, Status
 from harness.signal.patterns import Pattern, parse_pattern
 
 PARK_NOTE = "stopped transmitting"
@@ -50,10 +51,9 @@ def bench_versions() -> dict[str, str]:
     return versions
 
 
-def open_pattern(profile: Profile) -> Pattern:
-    """Make the profile's pattern; raises `PatternError`, or `OSError` for a file."""
-    chosen = profile.pattern
-    return parse_pattern(chosen.name, bit_order=chosen.bit_order, read=lambda path: Path(path).read_bytes())
+def open_pattern(name: str, bit_order: BitOrder) -> Pattern:
+    """Make a pattern; raises `PatternError`, or `OSError` for a file."""
+    return parse_pattern(name, bit_order=bit_order, read=lambda path: Path(path).read_bytes())
 
 
 class Links:
@@ -63,8 +63,8 @@ class Links:
     ----------
     settings
         The profile's ``[link]``.
-    said
-        Called with events in words: dialogues, parking.
+    cancel
+        Cuts a dialogue short when set.
     """
 
     def __init__(self, settings: LinkSettings, cancel: threading.Event) -> None:
@@ -130,9 +130,25 @@ class Links:
         finally:
             self._leave()
 
+    def reopen(self) -> None:
+        """Close and open again, set-up dialogue included; raises while that fails."""
+        for link in self.all:
+            link.close()
+        for link in self.all:
+            link.open()
+        if self.settings.before:
+            self._talk(self.settings.before, self._cancel)
+
     def _talk(self, steps: Any, cancel: threading.Event) -> None:
         for exchange in run_dialogue(self.main, steps, cancel):
-            self.events.append(Event("dialogue", None, str(exchange), time.time_ns()))
+            parts = []
+            if exchange.sent:
+                parts.append(f'sent "{exchange.sent}"')
+            if exchange.received:
+                parts.append(f'heard "{exchange.received}"')
+            again = f" in {exchange.attempts} attempts" if exchange.attempts > 1 else ""
+            text = f"dialogue: {', '.join(parts) or 'waited'} ({exchange.seconds:.2f} s{again})"
+            self.events.append(Event("dialogue", None, text, time.time_ns()))
 
     def _leave(self) -> None:
         """Never raises: a failing way out must not hide why it was taken."""
@@ -156,14 +172,42 @@ def status_of(ended_by: str) -> Status:
     return "failed" if ended_by == "fault" else "completed"
 
 
-def point_facts(profile: Profile, pattern: Pattern, links: Links | None) -> Mapping[str, Any]:
-    """Collect what a point's assessment needs beside numbers."""
-    facts: dict[str, Any] = {
-        "pattern": pattern.name,
-        "pattern_inverted": pattern.inverted,
-        "bit_order": profile.pattern.bit_order,
-    }
-    if links is not None:
-        facts["rate_bps"] = links.rate_bps
-        facts["link"] = links.describe()
-    return facts
+@dataclass(frozen=True, slots=True)
+class Way:
+    """One direction that is measured: what is sent where, and where it is counted."""
+
+    name: str  # of the direction where both are measured at once, otherwise empty
+    sending: Link | None
+    receiving: Link | None
+    pattern: Pattern
+    bit_order: BitOrder
+
+    def facts(self, links: Links) -> Mapping[str, Any]:
+        """Collect what a point's assessment needs beside numbers."""
+        counted = self.receiving or links.main
+        facts: dict[str, Any] = {
+            "pattern": self.pattern.name,
+            "pattern_inverted": self.pattern.inverted,
+            "bit_order": self.bit_order,
+            "rate_bps": counted.rate_bps,
+            "link": links.describe(),
+        }
+        facts["link"]["sends"] = self.sending is not None
+        facts["link"]["receives"] = self.receiving is not None
+        if self.name:
+            facts["direction"] = self.name
+        return facts
+
+
+def ways_of(profile: Profile, links: Links) -> list[Way]:
+    """List the directions that a profile measures: one, or both at once where ``duplex`` is on."""
+    chosen = profile.pattern
+    pattern = open_pattern(chosen.name, chosen.bit_order)
+    if not links.settings.duplex or links.other is None or chosen.reverse is None:
+        return [Way("", links.sending, links.receiving, pattern, chosen.bit_order)]
+    other = chosen.reverse
+    back = open_pattern(other.name, other.bit_order)
+    return [
+        Way("forward", links.main, links.other, pattern, chosen.bit_order),
+        Way("reverse", links.other, links.main, back, other.bit_order),
+    ]

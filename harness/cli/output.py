@@ -38,3 +38,10 @@ def open_writing(option: str | None) -> Store:
     from harness.store import open_store
 
     return open_store(store_url(option), create=True)
+
+
+def missing_default(option: str | None) -> bool:
+    """Whether the store in its default place is meant, and none is there yet."""
+    if option is not None or os.environ.get("BITASSAY_STORE"):
+        return False
+    return not (Path.cwd() / "results" / "runs.sqlite").exists()

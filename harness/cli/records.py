@@ -4,15 +4,17 @@ from __future__ import annotations
 
 from harness.assess.words import count, local_date
 from harness.cli.failure import FAULT
-from harness.cli.output import open_reading, print_json, store_url
+from harness.cli.output import missing_default, open_reading, print_json, store_url
 
 
 def runs(store: str | None, limit: int | None, *, as_json: bool) -> int:
     """List runs, newest first."""
     from harness.assess.words import iso
 
-    with open_reading(store) as opened:
-        lines = opened.runs(limit)
+    lines = []
+    if not missing_default(store):  # nothing was measured here yet: that is no fault
+        with open_reading(store) as opened:
+            lines = opened.runs(limit)
     if as_json:
         listing = [
             {

@@ -1,0 +1,142 @@
+"""What is still to do and until when: the plan's bits and the profile's limits, at the rate of the last minute."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+from datetime import datetime
+from typing import TYPE_CHECKING
+
+from harness.assess.words import count, duration, rate, ratio
+from harness.record import Tally
+
+if TYPE_CHECKING:
+    from harness.bench.run import Progress
+
+STALLED_S = 3  # so many last seconds without a compared bit: no forecast
+_FAR_S = 10 * 365.25 * 86_400  # beyond it a time of day makes no sense
+
+
+@dataclass(frozen=True, slots=True)
+class Rates:
+    """Rates of the last minute, bit/s and errors/s; None where they are not known."""
+
+    compared_bps: float | None
+    received_bps: float | None
+    errors_per_s: float | None
+    stalled: bool = False
+
+
+def rates(recent: Sequence[tuple[int, Tally]], nominal_bps: float | None) -> Rates:
+    """Measure the rates; before a second is complete the nominal one stands in."""
+    if not recent:
+        return Rates(nominal_bps, nominal_bps, None)
+    span = recent[-1][0] - recent[0][0] + 1
+    compared = sum(t.compared for _index, t in recent)
+    received = sum(t.received for _index, t in recent)
+    errors = sum(t.errors for _index, t in recent)
+    last = [t for _index, t in recent[-STALLED_S:]]
+    stalled = not any(t.compared for t in last) and (len(last) == STALLED_S or not compared)
+    return Rates(compared / span or None, received / span or None, errors / span or None, stalled)
+
+
+def moment(at_ns: float, now_ns: int) -> str:
+    """Write a local time of day, with its day where it is not today, and without seconds when far off."""
+    at = datetime.fromtimestamp(at_ns / 1e9).astimezone()
+    now = datetime.fromtimestamp(now_ns / 1e9).astimezone()
+    away = abs(at_ns - now_ns) / 1e9
+    time = f"{at:%H:%M:%S}" if away < 3600 else f"{at:%H:%M}"
+    if at.date() == now.date():
+        return time
+    year = f" {at:%Y}" if at.year != now.year else ""
+    return f"{time} on {at:%a} {at.day} {at:%b}{year}"
+
+
+def until(seconds: float, now_ns: int) -> str:
+    """Write how long something takes, and until when: ``about 43 s, until 10:42:50``."""
+    words = f"about {duration(seconds if seconds < 10 else round(seconds))}"
+    if seconds > _FAR_S:
+        return f"{words}: too long for one run"
+    return f"{words}, until {moment(now_ns + seconds * 1e9, now_ns)}"
+
+
+def still_to_do(progress: Progress, now_ns: int) -> list[str]:
+    """Say what is still to do and until when, the plan first."""
+    p = progress.point
+    pace = rates(p.recent, p.rate_bps)
+    lines = list(_of_the_plan(progress, pace, now_ns))
+    limits = sorted(_limits(progress, pace, now_ns), key=lambda limit: limit.seconds)
+    if not lines and not limits:
+        return ["nothing ends this run by itself: end it with Ctrl-C"]
+    plan_s = _plan_seconds(progress, pace)
+    if limits and lines and not progress.outlook.decided:
+        first = limits[0]
+        if plan_s is not None and first.seconds < plan_s:
+            lines.append(f"{first.words}: that may come before the plan decides")
+        else:
+            lines.append(f"{first.words} at the latest")
+    elif limits and not lines:
+        lines = [f"{limit.words}" for limit in limits[:2]]
+    return lines
+
+
+def _of_the_plan(progress: Progress, pace: Rates, now_ns: int) -> Iterator[str]:
+    plan, outlook = progress.point.plan, progress.outlook
+    if plan is None:
+        return
+    if outlook.decided:
+        yield "the plan has decided; what is still on its way is taken in, then the record is closed"
+        return
+    compared = progress.point.tally.compared
+    aim = outlook.accept_at or int(plan["longest_bits"])
+    left = max(0, aim - compared)
+    if outlook.accept_at is None:
+        what = f"{count(left, 'bit')} to the plan's end"
+    elif plan["kind"] == "sequential":
+        what = f"{count(left, 'bit')} to a PASS if no more errors come"
+    else:
+        what = f"{count(left, 'bit')} until the plan decides"
+    done = f" ({int(100 * compared / aim)} % done)" if compared else ""
+    if pace.stalled or pace.compared_bps is None:
+        yield f"{what}{done}; no telling when while nothing can be compared"
+    else:
+        yield f"{what}{done}: {until(left / pace.compared_bps, now_ns)}"
+    if outlook.on_average is not None and outlook.accept_at is not None:
+        yield (
+            f"a good unit takes {count(round(outlook.on_average), 'bit')} on average, "
+            f"none more than {count(int(plan['longest_bits']), 'bit')}"
+        )
+
+
+def _plan_seconds(progress: Progress, pace: Rates) -> float | None:
+    """How long the plan may still take at most."""
+    plan = progress.point.plan
+    if plan is None or pace.stalled or pace.compared_bps is None:
+        return None
+    return max(0, int(plan["longest_bits"]) - progress.point.tally.compared) / pace.compared_bps
+
+
+@dataclass(frozen=True, slots=True)
+class _Limit:
+    seconds: float  # from now
+    words: str
+
+
+def _limits(progress: Progress, pace: Rates, now_ns: int) -> Iterator[_Limit]:
+    """Give the profile's limits that can be told in time."""
+    stop, p = progress.stop, progress.point
+    if stop.seconds is not None:
+        left = max(0.0, stop.seconds - progress.elapsed_s)
+        words = f"the profile's limit of {duration(stop.seconds)} ends it at {moment(now_ns + left * 1e9, now_ns)}"
+        if left <= _FAR_S:
+            yield _Limit(left, words)
+    if stop.bits is not None and pace.received_bps:
+        done = p.bits_sent or p.tally.received
+        left = max(0, stop.bits - done) / pace.received_bps
+        yield _Limit(left, f"the profile's limit of {count(stop.bits, 'bit')} ends it: {until(left, now_ns)}")
+    if stop.errors is not None and pace.errors_per_s:
+        left = max(0, stop.errors - p.tally.errors) / pace.errors_per_s
+        yield _Limit(left, f"the profile's limit of {count(stop.errors, 'error')} ends it: {until(left, now_ns)}")
+
+
+__all__ = ["Rates", "moment", "rate", "rates", "ratio", "still_to_do", "until"]
