@@ -152,8 +152,10 @@ class DescriptorLink(Link):
                 pass
             except OSError as error:
                 raise self._broken(error) from None
-            deadline = monotonic() + timeout if deadline is None else deadline
-            if not waiter.wait(deadline - monotonic()):
+            now = monotonic()
+            deadline = now + timeout if deadline is None else deadline
+            # Time may be up though the descriptor is called ready: for a moment, or for another reader.
+            if now > deadline or not waiter.wait(deadline - now):
                 return 0
 
     def receive(self, buffer: memoryview, timeout: float) -> int:
@@ -172,8 +174,10 @@ class DescriptorLink(Link):
                 pass
             except OSError as error:
                 raise self._broken(error) from None
-            deadline = monotonic() + timeout if deadline is None else deadline
-            if not waiter.wait(deadline - monotonic()):
+            now = monotonic()
+            deadline = now + timeout if deadline is None else deadline
+            # Time may be up though the descriptor is called ready: for a moment, or for another reader.
+            if now > deadline or not waiter.wait(deadline - now):
                 return 0
 
     def interrupt(self) -> None:

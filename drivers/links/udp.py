@@ -156,6 +156,9 @@ class UdpLink(DescriptorLink):
                 f"{data.nbytes} bytes do not fit into one datagram of {self.section.message_bytes}",
                 "send at most `message_bytes` at a time",
             )
+        if not self._connected and self._writing is not None:
+            self._wait_until(lambda: self._connected, timeout)  # there is nobody to send to yet
+            timeout = 0.0
         return super().send(data, timeout)
 
     def drain(self, timeout: float) -> bool:
@@ -208,7 +211,7 @@ class UdpLink(DescriptorLink):
     def _write(self, data: memoryview) -> int:
         assert self._socket is not None
         if not self._connected:
-            raise BlockingIOError  # nobody to send to yet
+            raise BlockingIOError
         try:
             return self._socket.send(data)
         except OSError as error:
