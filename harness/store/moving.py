@@ -9,7 +9,7 @@ from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
-from sqlalchemy import Connection, Row, Table, delete, func, insert, select, text, update
+from sqlalchemy import Connection, Row, Table, delete, insert, select, text, update
 
 from . import schema as t
 from .connect import (
@@ -130,7 +130,7 @@ def copy_runs(source: Store, target: Store) -> Copied:
     lists: dict[str, list[str]] = {name: [] for name in ("new", "continued", "behind", "diverged", "unsound")}
     counts: Counter[str] = Counter()
     for key, state in sorted(_overview(source).items()):
-        if there.get(key) == state and state.digest is not None:
+        if _nothing_new(state, there.get(key)):
             counts["unchanged"] += 1
             continue
         outcome = _copy_one(source, target, key)
@@ -155,19 +155,32 @@ def copy_runs(source: Store, target: Store) -> Copied:
 
 @dataclass(frozen=True, slots=True)
 class _State:
-    """Enough of a run to see that nothing has changed."""
+    """Enough of a run to see that nothing has come since."""
 
     digest: str | None
-    notes: int
+    notes: frozenset[tuple[Any, ...]]
+
+
+_NO_NOTES: frozenset[tuple[Any, ...]] = frozenset()
 
 
 def _overview(store: Store) -> dict[str, _State]:
-    notes = select(t.note.c.run_id, func.count().label("notes")).group_by(t.note.c.run_id).subquery()
-    query = select(t.run.c.key, t.run.c.digest, func.coalesce(notes.c.notes, 0)).outerjoin(
-        notes, notes.c.run_id == t.run.c.id
-    )
+    n = t.note.c
+    notes: dict[int, set[tuple[Any, ...]]] = {}
     with store._reading() as connection:
-        return {key: _State(digest, count) for key, digest, count in connection.execute(query)}
+        for run_id, *words in connection.execute(select(n.run_id, n.at, n.who, n.text, n.void)):
+            notes.setdefault(run_id, set()).add(tuple(words))
+        runs = connection.execute(select(t.run.c.id, t.run.c.key, t.run.c.digest)).all()
+    return {row.key: _State(row.digest, frozenset(notes.get(row.id, _NO_NOTES))) for row in runs}
+
+
+def _nothing_new(source: _State, target: _State | None) -> bool:
+    return (
+        target is not None
+        and source.digest is not None
+        and source.digest == target.digest
+        and source.notes <= target.notes
+    )
 
 
 @dataclass
@@ -295,11 +308,11 @@ def _append(source: _Side, target: _Side, table: Table, after: int) -> int:
         .execution_options(yield_per=_CHUNK)
     )
     count = 0
-    for rows in source.connection.execute(query).partitions(_CHUNK):
-        target.connection.execute(
-            insert(table), [dict(row._mapping) | {"run_id": target.row.id} for row in rows]
-        )
-        count += len(rows)
+    with source.connection.execute(query) as result:
+        for rows in result.partitions(_CHUNK):
+            copies = [dict(row._mapping) | {"run_id": target.row.id} for row in rows]
+            target.connection.execute(insert(table), copies)
+            count += len(rows)
     return count
 
 

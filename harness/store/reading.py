@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import re
 import time
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
+from contextlib import contextmanager
 from dataclasses import dataclass, replace
 from typing import Any, cast
 
@@ -203,33 +204,19 @@ class Reading:
             events, seen = events_of(connection, run_id, after_events)
         return replace(run, points=with_events(run, points, events)), seen
 
-    def _reading(self) -> _Explained:
-        return _Explained(self._engine, self.place)
-
-
-class _Explained:
-    """A reading transaction whose errors are put into our words, also those of a damaged record."""
-
-    def __init__(self, engine: Engine, place: str) -> None:
-        self._transaction = reading(engine)
-        self._place = place
-
-    def __enter__(self) -> Connection:
+    @contextmanager
+    def _reading(self) -> Iterator[Connection]:
+        """Give a reading transaction whose errors are put into our words, a damaged record's too."""
         try:
-            return self._transaction.__enter__()
+            with reading(self._engine) as connection:
+                yield connection
         except DATABASE_ERRORS as error:
-            raise explain(error, self._place) from error
-
-    def __exit__(self, kind: Any, error: BaseException | None, trace: Any) -> None:
-        try:
-            self._transaction.__exit__(kind, error, trace)
-        except DATABASE_ERRORS as failure:
-            raise explain(failure, self._place) from failure
-        except (ValueError, TypeError, KeyError) as failure:
+            raise explain(error, self.place) from error
+        except (ValueError, TypeError, KeyError) as error:
             raise StoreError(
-                f"a record in the store {self._place} cannot be read: {failure}",
-                "the file was changed by something else; restore a backup",
-            ) from failure
+                f"a record in the store {self.place} cannot be read: {' '.join(str(error).split())}",
+                "something else has changed it; restore a backup",
+            ) from error
 
 
 def _lines() -> Select[Any]:

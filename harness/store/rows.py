@@ -156,8 +156,9 @@ def seconds_of(
         .order_by(c.number)
         .execution_options(yield_per=_CHUNK)
     )
-    for rows in connection.execute(query).partitions(_CHUNK):
-        yield from _decode(rows)
+    with connection.execute(query) as result:
+        for rows in result.partitions(_CHUNK):
+            yield from _decode(rows)
 
 
 def _decode(rows: Sequence[Row[Any]]) -> Iterator[Second]:
