@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+import shutil
 import uuid
 from collections.abc import Callable, Iterator
 from pathlib import Path
@@ -42,8 +43,19 @@ def address(request: pytest.FixtureRequest, tmp_path: Path) -> str:
     return str(tmp_path / "results" / "runs.sqlite")
 
 
+@pytest.fixture(scope="session")
+def empty(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """Give an empty SQLite store to copy: making the tables takes longer than most tests."""
+    path = tmp_path_factory.mktemp("empty") / "empty.sqlite"
+    open_store(path).close()
+    return path
+
+
 @pytest.fixture
-def store(address: str) -> Iterator[Store]:
+def store(address: str, empty: Path) -> Iterator[Store]:
+    if address.endswith(".sqlite"):
+        Path(address).parent.mkdir()
+        shutil.copy(empty, address)
     with open_store(address) as store:
         yield store
 

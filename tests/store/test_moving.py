@@ -43,8 +43,8 @@ def old(address: str) -> str:
     with writing(engine) as connection:
         migrate(connection, "0001")
         for statement in (
-            "INSERT INTO run (id, key, title, command, started, ended, status, ended_by, verdict, profile_text,"
-            " overrides, settings, device, stated) VALUES (1, '01900000-0000-7000-8000-00000000abcd', 'old',"
+            "INSERT INTO run (id, key, title, command, started, ended, status, ended_by, verdict,"
+            " profile_text, overrides, settings, device, stated) VALUES (1, '01900000-0000-7000-8000-00000000abcd', 'old',"
             " 'measure', 5, 9, 'completed', 'plan', 'PASS', 'x', '[]', '{\"requirement\":{\"ber\":1e-06}}',"
             ' \'{"serial_number":"0031","model":"Wader-9"}\', NULL)',
             "INSERT INTO sitting VALUES (1, 0, 5, 9, 'completed', '{}', '{}', 0, 9)",
@@ -94,8 +94,10 @@ def test_sqlite_is_backed_up_beforehand(old: str) -> None:
 
 
 def test_an_upgrade_that_fails_leaves_the_store_as_it_was(old: str) -> None:
-    with writing(make_engine(parse_url(old), 5.0)) as connection:
+    engine = make_engine(parse_url(old), 5.0)
+    with writing(engine) as connection:
         connection.execute(text("UPDATE run SET device = 'no json'"))
+    engine.dispose()
     with pytest.raises(ValueError, match="Expecting value"):
         upgrade(old)
     with pytest.raises(WrongRevision, match=r"older revision \(0001;"):
@@ -244,7 +246,8 @@ def test_a_record_that_does_not_match_its_digest_is_copied_and_named(
     with source._writing() as connection:
         connection.execute(
             text(
-                "UPDATE second SET errors = errors + 1 WHERE number = 2 AND run_id = (SELECT id FROM run WHERE key = :key)"
+                "UPDATE second SET errors = errors + 1 "
+                "WHERE number = 2 AND run_id = (SELECT id FROM run WHERE key = :key)"
             ),
             {"key": key},
         )
