@@ -16,13 +16,13 @@ from harness.signal.bits import as_bytes, pack
 from harness.signal.ledger import Ledger
 from harness.signal.patterns import Pattern
 from harness.signal.places import Place, Reference
-from harness.signal.resolve import Resolver, Stretch, evidence_walk, gap
+from harness.signal.resolve import Path, Resolver, Stretch, differing, evidence_walk, gap
 from harness.signal.search import Hit, Search
 from harness.signal.stream import Undecided
 from harness.signal.track import SLAB_BYTES, Scratch, Track, Trouble
 
 _LOSS_AFTER = rules.OUTAGE_BITS + 2 * rules.LONGEST_WINDOW  # bits without evidence until loss is stated
-_PORTION_BYTES = 4096  # bytes kept at a time while a place is searched for
+_LONGEST_PUZZLE = 4 * rules.LONGEST_WINDOW  # bits in which places between two are looked for
 
 
 class Counter:
@@ -201,6 +201,8 @@ class Counter:
                 return False
             end = self._stream.end
         hit = search.look(self._stream, end)
+        if hit is None and final and end == self._stream.end and search.old is None:
+            hit = search.last_look(self._stream)
         if hit is not None:
             self._found(search, hit)
         elif not final:
@@ -235,51 +237,76 @@ class Counter:
         return Stretch(self._written, self._stream.bits(self._written, end))
 
     def _found(self, search: Search, hit: Hit) -> None:
-        """Judge what lies between the old place and the new one, and follow the new one."""
-        stretch = self._stretch(hit.end)
+        """Judge what lies between the old place and the new one, and follow the last one."""
         old = search.old if self._lost_at is None else None
-        empty = gap(self._reference, old, hit.place, stretch, self._weights)
-        evidence = empty.end
-        level = self._level(hit, evidence, stretch)
-        outage = self._lost_at is not None or empty.bits >= rules.OUTAGE_BITS
+        stretch = self._stretch(hit.end)
+        path = self._path(old, hit, stretch)
+        edges = [stretch.first, *path.cuts, stretch.end]
+        if old is None:
+            evidence = self._begin(search.old, path.places[0], edges[1])
+        elif len(path.places) == 1:
+            evidence = self._pass_over(old, old, stretch.first, stretch.end)
+        for before, after, cut, end in zip(
+            path.places[:-1], path.places[1:], edges[1:-1], edges[2:], strict=True
+        ):
+            evidence = self._pass_over(before, after, cut, end)
+        place = path.places[-1]
+        level = self._level(place, Stretch(evidence, stretch.bits[evidence - stretch.first :]))
+        if search.old is not None:
+            # Trouble that was judged is not met again, so every search is further on than the last.
+            evidence = max(evidence, self._trouble.noticed if old == place else search.begin + 64)
+        self._follow(place, self._written, max(evidence, self._written), level)
+
+    def _path(self, old: Place | None, hit: Hit, stretch: Stretch) -> Path:
+        """The places from the old one to the one that was hit upon."""
+        if self._lost_at is not None or len(stretch.bits) > _LONGEST_PUZZLE:
+            return self._resolver.shortest([p for p in (old, hit.place) if p], stretch)
+        begins = gap(self._reference, None, hit.place, stretch, self._weights).end
+        level = self._level(hit.place, Stretch(begins, stretch.bits[begins - stretch.first :]))
+        if old is None:
+            return self._resolver.path([hit.place], stretch, level, sure=False)
+        ends = [old] if old == hit.place else [old, hit.place]
+        return self._resolver.path(ends, stretch, min(level, self._trouble.level), sure=True)
+
+    def _begin(self, run_on: Place | None, place: Place, end: int) -> int:
+        """Begin to compare where the evidence of a first place begins, or before; where it begins."""
+        evidence = gap(self._reference, None, place, self._stretch(end), self._weights).end
+        outage = self._lost_at is not None or evidence - self._written >= rules.OUTAGE_BITS
         if outage:
-            if self._lost_at is None:
-                self._lose(old, empty.begin)
             self._write_unaligned(evidence)
-            self._announce(hit, stretch)
-            self._turn(search.old, hit.place, after_outage=True)
-            start = evidence
-        else:
-            path, cuts = self._resolver.path([p for p in (old, hit.place) if p], stretch, level)
-            if old is None:
-                self._announce(Hit(path[0], hit.begin, hit.end), stretch)
-            for index, cut in enumerate(cuts):
-                self._write_compared(path[index], cut)
-                self._turn(path[index], path[index + 1], after_outage=False)
-            start = self._written
-        if search.old == hit.place and not outage:
-            evidence = max(evidence, self._trouble.noticed)
-        watch_from = max(evidence, search.begin + rules.WORD_BITS if search.old else 0)
-        self._follow(hit.place, start, watch_from, level)
+        self._announce(place, self._stretch(end))
+        if outage:
+            self._turn(run_on, place, after_outage=True)
+        return evidence
 
-    def _level(self, hit: Hit, evidence: int, stretch: Stretch) -> int:
-        """The level of errors that is usual from where evidence begins."""
-        bits = stretch.bits[evidence - stretch.first :]
-        wrong = bits ^ self._reference.bits(hit.place, evidence, len(bits))
-        return rules.level_of(int(wrong.sum()), len(bits))
+    def _pass_over(self, before: Place, after: Place, cut: int, end: int) -> int:
+        """Go over from one place to the next, by a cut or an outage; where the next one's evidence begins."""
+        empty = gap(self._reference, before, after, self._stretch(end), self._weights)
+        if empty.bits < rules.OUTAGE_BITS:
+            if before != after:
+                self._write_compared(before, cut)
+                self._turn(before, after, after_outage=False)
+            return empty.end
+        self._lose(before, empty.begin)
+        self._write_unaligned(empty.end)
+        self._announce(after, self._stretch(end))
+        self._turn(before, after, after_outage=True)
+        return empty.end
 
-    def _announce(self, hit: Hit, stretch: Stretch) -> None:
-        place = self._reference.normal(Place(hit.place.anchor + self._written, hit.place.inverted))
-        bits = stretch.bits[hit.begin - stretch.first :] if hit.begin >= stretch.first else stretch.bits
-        wrong = bits ^ self._reference.bits(hit.place, stretch.end - len(bits), len(bits))
-        text = "the pattern was found, inverted" if place.inverted else "the pattern was found"
+    def _level(self, place: Place, stretch: Stretch) -> int:
+        """The level of errors that is usual in a stretch."""
+        wrong = differing(self._reference, place, stretch)
+        return rules.level_of(int(wrong.sum()), len(wrong))
+
+    def _announce(self, place: Place, stretch: Stretch) -> None:
+        here = self._reference.normal(Place(place.anchor + self._written, place.inverted))
         self._ledger.event(
             "aligned",
-            text,
-            place=place.anchor,
+            "the pattern was found, inverted" if place.inverted else "the pattern was found",
+            place=here.anchor,
             inverted=place.inverted,
-            bits=len(bits),
-            mismatches=int(wrong.sum()),
+            bits=len(stretch.bits),
+            mismatches=int(differing(self._reference, place, stretch).sum()),
         )
 
     def _turn(self, old: Place | None, new: Place, after_outage: bool) -> None:
@@ -354,13 +381,15 @@ class Counter:
         assert search is not None
         old = search.old if self._lost_at is None else None
         if old is not None:
-            level = self._trouble.level
-            stretch = self._stretch(end)
-            path, cuts = self._resolver.path([old], stretch, level)
-            for index, cut in enumerate(cuts):
-                self._write_compared(path[index], cut)
-                self._turn(path[index], path[index + 1], after_outage=False)
-            last = path[-1]
+            path = Path([old], [])
+            if end - self._written <= _LONGEST_PUZZLE:
+                path = self._resolver.path([old], self._stretch(end), self._trouble.level, sure=True)
+            edges = [*path.cuts, end]
+            for before, after, cut, until in zip(
+                path.places[:-1], path.places[1:], edges[:-1], edges[1:], strict=True
+            ):
+                self._pass_over(before, after, cut, until)
+            last = path.places[-1]
             self._run_on = last
             lost_at = self._evidence_end(last, end)
             if end - lost_at < rules.OUTAGE_BITS:

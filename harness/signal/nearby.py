@@ -13,7 +13,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from harness.signal import rules
-from harness.signal.evidence import log_chance, log_chance_of_agreement, repeats_as_the_pattern
+from harness.signal.evidence import log_chance_of_agreement, repeats_as_the_pattern
+from harness.signal.patterns import Pattern
 from harness.signal.places import Place, Reference
 
 
@@ -45,12 +46,7 @@ class Nearby:
         self._centre = centre
         self._unit = unit
         self._first = first
-        radius = rules.RADIUS_BITS
-        period = reference.pattern.period
-        if period is not None:
-            # Half of what can be told apart on either side is all there is.
-            radius = min(radius, unit * (math.lcm(unit, period) // unit // 2))
-        self._radius = radius
+        radius = self._radius = radius_bits(reference.pattern, unit)
         bits = reference.bits(centre, first - radius, 2 * radius + length + 128)
         self._words = _words_at(bits, unit)
         self.shifts = 2 * radius // unit + 1
@@ -87,9 +83,30 @@ class Nearby:
         shift = int(shifts[np.argmin(np.abs(shifts - middle))])
         return Candidate(self.place_of(shift, inverted), bits - high if inverted else low)
 
-    def log_candidates(self) -> float:
-        """Logarithm of how many candidates there are."""
-        return math.log(2 * self.shifts)
+
+def radius_bits(pattern: Pattern, unit: int) -> int:
+    """How far to either side places are tried: half of what can be told apart, if that is less."""
+    if pattern.period is None:
+        return rules.RADIUS_BITS
+    return min(rules.RADIUS_BITS, unit * (math.lcm(unit, pattern.period) // unit // 2))
+
+
+def log_candidates(pattern: Pattern, unit: int) -> float:
+    """Logarithm of how many places nearby are tried, in both polarities."""
+    return math.log(2 * (2 * radius_bits(pattern, unit) // unit + 1))
+
+
+def log_tail(bits: int, mismatches: int) -> float:
+    """Upper bound on ln P(so few mismatches or fewer among so many chance bits), near the true value.
+
+    The tail of the binomial is at most its last term times (n-m+1)/(n-2m+1), as each term before is smaller
+    than the next by more than m/(n-m+1).
+    """
+    n, m = bits, mismatches
+    if 2 * m >= n:
+        return 0.0
+    term = math.lgamma(n + 1) - math.lgamma(m + 1) - math.lgamma(n - m + 1) - n * math.log(2)
+    return min(0.0, term + math.log((n - m + 1) / (n - 2 * m + 1)))
 
 
 def _words_at(bits: NDArray[np.uint8], unit: int) -> NDArray[np.uint64]:
@@ -112,7 +129,7 @@ def agrees(reference: Reference, place: Place, bits: NDArray[np.uint8], first: i
         Logarithm of the chance that unrelated bits may have.
     """
     expected = reference.bits(place, first, len(bits))
-    if log_chance(len(bits), int(np.count_nonzero(expected != bits))) > limit:
+    if log_tail(len(bits), int(np.count_nonzero(expected != bits))) > limit:
         return False
     if log_chance_of_agreement(reference.pattern, expected, bits) > limit:
         return False

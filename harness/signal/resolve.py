@@ -13,12 +13,16 @@ import numpy as np
 from numpy.typing import NDArray
 
 from harness.signal import rules
-from harness.signal.evidence import log_chance
-from harness.signal.nearby import Candidate, Nearby, agrees
+from harness.signal.nearby import Nearby, agrees, log_candidates, log_tail
 from harness.signal.places import Place, Reference
 from harness.signal.slips import Gap, gap_between, split_path, worst_stretch
 
 _MOST_PLACES = 24  # in one stretch of trouble
+_CAREFUL = 0.7  # of the alarm: once there is trouble, less of it is looked into
+_FILLS = 0.75  # a place that holds for so much of the trouble was not picked out of many stretches
+_GUARD = 0.75  # of the evidence must remain when the shares of ONEs are taken into account
+_BETTER = 1 / 3  # of the evidence must come from bits that were not explained before
+_LOG_FALSE_BETWEEN = math.log(rules.FALSE_BETWEEN)
 
 
 @dataclass(frozen=True, slots=True)
@@ -35,12 +39,34 @@ class Stretch:
 
 
 @dataclass(frozen=True, slots=True)
-class Verdict:
-    """Places in order and where they are cut (stream bits); `evidence` is where the last one's begins."""
+class Path:
+    """Places in order, each different from its neighbours, and where one goes over into the next."""
 
-    path: list[Place]
+    places: list[Place]
     cuts: list[int]
-    evidence: int
+
+    def edges(self, end: int) -> list[int]:
+        """Where each place begins, and where the last one ends."""
+        return [0, *self.cuts, end]
+
+
+class _Differing(dict[Place, NDArray[np.uint8]]):
+    """1 where a stretch differs from a place, for every place that is asked for."""
+
+    def __init__(self, reference: Reference, stretch: Stretch) -> None:
+        self._reference = reference
+        self.stretch = stretch
+
+    def __missing__(self, place: Place) -> NDArray[np.uint8]:
+        self[place] = differing(self._reference, place, self.stretch)
+        return self[place]
+
+    def along(self, path: Path) -> NDArray[np.uint8]:
+        """Mismatches along a path."""
+        edges = path.edges(len(self.stretch.bits))
+        return np.concatenate(
+            [self[p][a:b] for p, a, b in zip(path.places, edges[:-1], edges[1:], strict=True)]
+        )
 
 
 def differing(reference: Reference, place: Place, stretch: Stretch) -> NDArray[np.uint8]:
@@ -78,8 +104,14 @@ class Resolver:
     def __init__(self, reference: Reference, unit: int) -> None:
         self._reference = reference
         self._unit = unit
+        self._limit = _LOG_FALSE_BETWEEN - log_candidates(reference.pattern, unit)
 
-    def path(self, ends: list[Place], stretch: Stretch, level: int) -> tuple[list[Place], list[int]]:
+    def shortest(self, ends: list[Place], stretch: Stretch) -> Path:
+        """The path through these places only."""
+        path = _cut(list(dict.fromkeys(ends)), _Differing(self._reference, stretch))
+        return Path(path.places, [stretch.first + cut for cut in path.cuts])
+
+    def path(self, ends: list[Place], stretch: Stretch, level: int, sure: bool) -> Path:
         """The places that a stretch runs through, and the cuts between them.
 
         Parameters
@@ -90,90 +122,77 @@ class Resolver:
             What is to be explained.
         level
             Index of the level of errors that is usual.
-
-        Returns
-        -------
-        tuple[list[Place], list[int]]
-            Places, each different from its neighbours, and cuts as stream bits.
+        sure
+            Whether the first of `ends` is known to hold where the stretch begins.
         """
-        path = list(ends)
-        wrong = {place: differing(self._reference, place, stretch) for place in path}
-        cuts, _ = split_path([wrong[place] for place in path])
+        wrong = _Differing(self._reference, stretch)
+        path = _cut(list(ends), wrong)
         settled = np.zeros(len(stretch.bits), dtype=np.bool_)  # stretches in which no place was found
+        rule = rules.LEVELS[level]
         for _ in range(_MOST_PLACES):
-            left = _along([wrong[place] for place in path], cuts)
+            left = wrong.along(path)
             left[settled] = 0
-            begin, end, excess = worst_stretch(left, rules.LEVELS[level].share)
-            if excess < rules.LEVELS[level].alarm:
+            begin, end, excess = worst_stretch(left, rule.share)
+            if excess < _CAREFUL * rule.alarm:
                 break
-            longer = self._with_another(path, cuts, wrong, stretch, begin, end, level)
+            longer = self._with_another(path, wrong, begin, end, rule.share)
             if longer is None:
                 settled[begin:end] = True
-                continue
-            path, cuts = longer
-        return path, [stretch.first + cut for cut in cuts]
+            else:
+                path = self._without_unproven(longer, wrong, sure)
+        return Path(path.places, [stretch.first + cut for cut in path.cuts])
 
-    def _with_another(
-        self,
-        path: list[Place],
-        cuts: list[int],
-        wrong: dict[Place, NDArray[np.uint8]],
-        stretch: Stretch,
-        begin: int,
-        end: int,
-        level: int,
-    ) -> tuple[list[Place], list[int]] | None:
+    def _with_another(self, path: Path, wrong: _Differing, begin: int, end: int, share: float) -> Path | None:
         """The path with one more place in the stretch from `begin` to `end`, if it is proven there."""
-        before = path[int(np.searchsorted(cuts, begin, side="right"))]
-        after = path[int(np.searchsorted(cuts, end, side="left"))]
-        at = int(np.searchsorted(cuts, begin, side="right"))
-        old = _along([wrong[place] for place in path], cuts)
+        at = int(np.searchsorted(path.cuts, begin, side="right"))
+        before, after = path.places[at], path.places[int(np.searchsorted(path.cuts, end, side="left"))]
+        old = wrong.along(path)
         for centre in dict.fromkeys([before, after]):
-            candidate, log_candidates = self._best_between(centre, stretch, begin, end, level)
-            place = self._reference.normal(candidate.place)
+            place = self._best_between(centre, wrong.stretch, begin, end, share)
             if place in (before, after):
                 continue
-            wrong.setdefault(place, differing(self._reference, place, stretch))
-            longer = (
-                [*path[: at + 1], place, *path[at:]]
-                if before == after
-                else [*path[: at + 1], place, *path[at + 1 :]]
-            )
-            new_cuts, _ = split_path([wrong[p] for p in longer])
-            first, last = new_cuts[at] if at < len(new_cuts) else 0, 0
-            first = ([0, *new_cuts, len(stretch.bits)])[at + 1]
-            last = ([0, *new_cuts, len(stretch.bits)])[at + 2]
-            limit = math.log(rules.FALSE_BETWEEN) - log_candidates
-            if last - first < 0.75 * (end - begin):
+            rest = path.places[at:] if before == after else path.places[at + 1 :]
+            longer = [*path.places[: at + 1], place, *rest]
+            cuts, _ = split_path([wrong[p] for p in longer])
+            first, last = Path(longer, cuts).edges(len(old))[at + 1 : at + 3]
+            limit = self._limit
+            if last - first < _FILLS * (end - begin):
                 limit -= math.log(end - begin)
-            if self._proven(place, stretch, first, last, old, wrong[place], limit):
-                return _without_empty(longer, new_cuts, len(stretch.bits))
+            other = old[first:last] != wrong[place][first:last]
+            better = log_tail(int(np.count_nonzero(other)), int(wrong[place][first:last][other].sum()))
+            if better <= _BETTER * limit and self._proven(place, wrong, first, last, limit):
+                return _cut(longer, wrong)
         return None
 
-    def _proven(
-        self,
-        place: Place,
-        stretch: Stretch,
-        first: int,
-        last: int,
-        old: NDArray[np.uint8],
-        new: NDArray[np.uint8],
-        limit: float,
-    ) -> bool:
-        """Whether a place holds between two cuts, against chance and against what explained it before."""
-        if last <= first:
-            return False
-        other = old[first:last] != new[first:last]
-        if log_chance(int(np.count_nonzero(other)), int(new[first:last][other].sum())) > limit / 2:
-            return False
-        return agrees(self._reference, place, stretch.bits[first:last], stretch.first + first, limit)
+    def _without_unproven(self, path: Path, wrong: _Differing, sure: bool) -> Path:
+        """Leave out places that, beside the others, no longer explain enough to be believed."""
+        while True:
+            edges = path.edges(len(wrong.stretch.bits))
+            last = len(path.places) - 1
+            doubtful = [
+                index
+                for index, place in enumerate(path.places)
+                if (index or not sure)
+                and not (last == 1 and sure)
+                and not self._proven(place, wrong, edges[index], edges[index + 1], self._limit)
+            ]
+            if not doubtful or not last:
+                return path
+            shortest = min(doubtful, key=lambda index: edges[index + 1] - edges[index])
+            places = path.places[:shortest] + path.places[shortest + 1 :]
+            path = _cut([p for i, p in enumerate(places) if not i or places[i - 1] != p], wrong)
 
-    def _best_between(
-        self, centre: Place, stretch: Stretch, begin: int, end: int, level: int
-    ) -> tuple[Candidate, float]:
+    def _proven(self, place: Place, wrong: _Differing, first: int, last: int, limit: float) -> bool:
+        """Whether a place holds between two cuts better than chance lets it."""
+        if last <= first or log_tail(last - first, int(wrong[place][first:last].sum())) > limit:
+            return False
+        bits = wrong.stretch.bits[first:last]
+        return agrees(self._reference, place, bits, wrong.stretch.first + first, _GUARD * limit)
+
+    def _best_between(self, centre: Place, stretch: Stretch, begin: int, end: int, share: float) -> Place:
         """The place near another one that explains some part of a stretch best."""
         length = end - begin
-        size = 16 if length <= 1024 else 32 if length <= 4096 else 64
+        size = 8 if length <= 128 else 16 if length <= 1024 else 32 if length <= 4096 else 64
         begin = max(0, begin - size // 2)
         bits = stretch.bits[begin : min(len(stretch.bits), end + size // 2)]
         bits = bits[: max(len(bits) // size, 1) * size]
@@ -182,14 +201,13 @@ class Resolver:
         first = stretch.first + begin
         near = Nearby(self._reference, centre, self._unit, first, len(bits))
         cells = near.cells(bits, first, size)
-        share = rules.LEVELS[level].share
         same = _highest_sum(np.float32(share * size) - cells)
         turned = _highest_sum(np.float32(share * size) - (size - cells.astype(np.float32)))
         inverted = bool(turned.max() > same.max())
         scores = turned if inverted else same
         best = np.flatnonzero(scores == scores.max())
         shift = int(best[np.argmin(np.abs(best - near.shifts // 2))])
-        return Candidate(near.place_of(shift, inverted), 0), near.log_candidates()
+        return self._reference.normal(near.place_of(shift, inverted))
 
 
 def _highest_sum(scores: NDArray[np.float32]) -> NDArray[np.float32]:
@@ -203,19 +221,13 @@ def _highest_sum(scores: NDArray[np.float32]) -> NDArray[np.float32]:
     return highest
 
 
-def _along(wrong: list[NDArray[np.uint8]], cuts: list[int]) -> NDArray[np.uint8]:
-    """Mismatches along a path."""
-    edges = [0, *cuts, len(wrong[0])]
-    return np.concatenate([w[a:b] for w, a, b in zip(wrong, edges, edges[1:], strict=False)])
-
-
-def _without_empty(path: list[Place], cuts: list[int], length: int) -> tuple[list[Place], list[int]]:
-    """Leave out places that hold nowhere, and join neighbours that are the same."""
-    edges = [0, *cuts, length]
-    places: list[Place] = []
+def _cut(places: list[Place], wrong: _Differing) -> Path:
+    """Cut where the total of mismatches is least; places that hold nowhere are left out."""
+    cuts, _ = split_path([wrong[place] for place in places])
+    kept: list[Place] = []
     begins: list[int] = []
-    for place, begin, end in zip(path, edges, edges[1:], strict=False):
-        if end > begin and (not places or places[-1] != place):
-            places.append(place)
+    for place, begin, end in zip(places, [0, *cuts], [*cuts, len(wrong.stretch.bits)], strict=True):
+        if end > begin and (not kept or kept[-1] != place):
+            kept.append(place)
             begins.append(begin)
-    return places, begins[1:]
+    return Path(kept, begins[1:])

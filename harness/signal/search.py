@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 from harness.signal import rules
 from harness.signal.acquire import Acquirer
 from harness.signal.evidence import repeats_as_the_pattern
-from harness.signal.nearby import Nearby, agrees
+from harness.signal.nearby import Nearby, agrees, log_candidates
 from harness.signal.places import Place, Reference
 from harness.signal.stream import Undecided
 
@@ -106,6 +106,17 @@ class Search:
                 return hit
         return None
 
+    def last_look(self, stream: Undecided) -> Hit | None:
+        """Look for a place in any part of a stream that ends without one."""
+        size = min(stream.end - self.begin, rules.LONGEST_WINDOW)
+        while size >= 2 * _LEAST_BLIND:
+            size //= 2
+            for end in range(stream.end, self.begin + size - 1, -(size // 2)):
+                hit = self._anywhere(stream, end - size, end)
+                if hit is not None:
+                    return hit
+        return None
+
     def _resumed(self, stream: Undecided, old: Place, before: int, end: int) -> Hit | None:
         """Whether the old place gathers evidence again in what is new since the last look."""
         begin = max(self.begin, before - 2 * _FIRST_NEARBY)
@@ -146,7 +157,7 @@ class Search:
         stretch = words * rules.WORD_BITS
         cells = near.cells(stream.bits(first, first + stretch), first, rules.WORD_BITS)
         new = cells.sum(axis=0, dtype=np.uint16)
-        limit = math.log(rules.FALSE_ALARM) - near.log_candidates()
+        limit = math.log(rules.FALSE_ALARM) - log_candidates(self._reference.pattern, self._unit)
         previous, previous_bits = self._half, self._half_bits
         self._half, self._half_bits = new, stretch
         tries = [(new, stretch, first)]
