@@ -10,6 +10,7 @@ import sys
 from collections.abc import Iterator
 from contextlib import suppress
 from pathlib import Path
+from urllib.parse import urlsplit
 
 from drivers.contract import LinkLost, OpenFailed
 
@@ -119,7 +120,7 @@ def _url_failed(port: str, code: int | None, error: Exception) -> OpenFailed:
             return OpenFailed(f"no permission to use {port}", "ask for the right to use serial ports")
     if code == errno.ECONNREFUSED:
         return OpenFailed(f"{port} refused the connection", "start the server, and check host and port")
-    if "expected a string in the form" in text:
+    if "expected a string in the form" in text or (scheme in ("socket", "rfc2217") and not _is_whole(port)):
         return OpenFailed(f"{port} is no complete address", f"write it as {scheme}://HOST:PORT")
     if "does not seem to support" in text:
         return OpenFailed(
@@ -128,6 +129,15 @@ def _url_failed(port: str, code: int | None, error: Exception) -> OpenFailed:
     return OpenFailed(
         f"{port} could not be opened ({_reason(code, text)})", "check host, port and the server's settings"
     )
+
+
+def _is_whole(url: str) -> bool:
+    """Whether an address names a host and a port."""
+    try:
+        parts = urlsplit(url)
+        return bool(parts.hostname) and parts.port is not None
+    except ValueError:
+        return False
 
 
 def _code(error: BaseException) -> int | None:
