@@ -8,57 +8,88 @@ from abc import ABC, abstractmethod
 import numpy as np
 from numpy.typing import NDArray
 
-VIEW_BYTES = 65536  # a view of up to so many bytes is never a copy where the pattern lies in a table
-_RING_PIECE_BYTES = 24576  # what one step of a ring should make, so that calls cost little beside the work
+VIEW_BYTES = 1 << 18  # up to so many bytes lie in one piece where the pattern lies in a table
+_STEP_BYTES = 65536  # what one step of a recurrence should make, so that calls cost little beside the work
 
 
 class Reader(ABC):
     """The bytes of a pattern from a place on.
 
-    A subclass gives pieces; everything else is made of them. Pieces are views of memory that the reader owns
-    and that is valid until its next piece is asked for.
+    A subclass gives pieces, views of memory that it owns and that is valid until it is asked for the next.
+
+    Parameters
+    ----------
+    place
+        Where in the pattern it begins.
+    complemented
+        The subclass's pieces are the complement of what is sent; it is put right where it costs least.
     """
 
-    def __init__(self, place: int) -> None:
+    def __init__(self, place: int, complemented: bool = False) -> None:
         self.place = place
+        self._complemented = complemented
 
     @abstractmethod
     def _next(self, limit: int) -> NDArray[np.uint8]:
         """From 1 to `limit` bytes that follow."""
-
-    def piece(self, limit: int) -> NDArray[np.uint8]:
-        """The next bytes, at least 1 and at most `limit`, read-only, valid until the next call."""
-        piece = self._next(limit)
-        self.place += 8 * len(piece)
-        return piece
 
     def read_into(self, out: NDArray[np.uint8]) -> None:
         """Fill `out` with the bytes that follow."""
         at, end = 0, len(out)
         while at < end:
             piece = self._next(end - at)
-            out[at : at + len(piece)] = piece
-            at += len(piece)
-        self.place += 8 * end
-
-    def xor_into(self, data: NDArray[np.uint8], out: NDArray[np.uint8]) -> None:
-        """Compare: write `data` XOR the bytes that follow to `out`, of the same length; they may be one."""
-        at, end = 0, len(data)
-        while at < end:
-            piece = self._next(end - at)
             to = at + len(piece)
-            np.bitwise_xor(data[at:to], piece, out=out[at:to])
+            if self._complemented:
+                np.invert(piece, out=out[at:to])
+            else:
+                out[at:to] = piece
             at = to
         self.place += 8 * end
 
+    def compare(self, data: NDArray[np.uint8], out: NDArray[np.uint8]) -> bool:
+        """Write `data` XOR the bytes that follow to `out`, of the same length; say whether they differ.
+
+        Where it returns False nothing differs, and what stands in `out` means nothing: that spares a pass
+        over memory. `data` and `out` may be one.
+        """
+        at, end = 0, len(data)
+        differs = False
+        while at < end:
+            piece = self._next(end - at)
+            to = at + len(piece)
+            part = out[at:to]
+            np.bitwise_xor(data[at:to], piece, out=part)
+            same = part.min() == 255 if self._complemented else not part.max()
+            if not (same or differs):
+                out[:at] = 0
+                differs = True
+            if differs and same:
+                part.fill(0)
+            elif differs and self._complemented:
+                np.invert(part, out=part)
+            at = to
+        self.place += 8 * end
+        return differs
+
+    def xor_into(self, data: NDArray[np.uint8], out: NDArray[np.uint8]) -> None:
+        """Write `data` XOR the bytes that follow to `out`, of the same length; they may be one."""
+        if not self.compare(data, out):
+            out.fill(0)
+
     def view(self, count: int) -> NDArray[np.uint8]:
-        """The next `count` bytes: a read-only view where they lie in one piece, else a copy."""
-        piece = self.piece(count)
-        if len(piece) == count:
-            return piece
+        """The next `count` bytes, not to be written to, valid until more is read; a copy where need be."""
+        if not self._complemented:
+            piece = self._next(count)
+            if len(piece) == count:
+                self.place += 8 * count
+                return piece
+            out = np.empty(count, dtype=np.uint8)
+            out[: len(piece)] = piece
+            self.place += 8 * len(piece)
+            self.read_into(out[len(piece) :])
+            return out
         out = np.empty(count, dtype=np.uint8)
-        out[: len(piece)] = piece
-        self.read_into(out[len(piece) :])
+        self.read_into(out)
         return out
 
 
@@ -90,7 +121,7 @@ class TableReader(Reader):
         return self._table[start:end]
 
 
-class RingReader(Reader):
+class RecurrenceReader(Reader):
     """Runs a recurrence on 64-bit words: w[i] is the sum of w[i - tap·u], u a power of two.
 
     Over GF(2) a polynomial squared six times or more is a recurrence on whole words. The words known so far
@@ -105,75 +136,66 @@ class RingReader(Reader):
         Stages that are added, ascending; the last one is n.
     words
         The register's first words from there on, n times a power of two of them.
-    inverted
+    complemented
         Whether the register's bits are sent inverted.
     """
 
-    def __init__(self, place: int, taps: tuple[int, ...], words: NDArray[np.uint64], inverted: bool) -> None:
-        super().__init__(place)
+    def __init__(
+        self, place: int, taps: tuple[int, ...], words: NDArray[np.uint64], complemented: bool
+    ) -> None:
+        super().__init__(place, complemented)
         self._taps = taps
         self._gap = min([taps[0], *(b - a for a, b in itertools.pairwise(taps))])
         n = taps[-1]
         scale = len(words) // n
-        while self._gap * scale * 8 < _RING_PIECE_BYTES:
+        while self._gap * scale * 8 < _STEP_BYTES:
             scale *= 2
         self._scale = scale
-        self._ring = np.empty(n * scale, dtype=np.uint64)
-        self._ring[: len(words)] = words
-        self._known = len(words)  # words in the stretch while it grows
-        self._inverted = inverted
-        self._turned = np.empty(0, dtype=np.uint64)  # holds a piece in the other polarity
+        self._words = np.empty(n * scale, dtype=np.uint64)
+        self._words[: len(words)] = words
+        self._bytes = self._words.view(np.uint8)
+        self._known = len(words)  # while the stretch grows; then all of it
+        self._read = 0  # bytes handed out in this round
         self._steps: list[tuple[NDArray[np.uint64], list[NDArray[np.uint64]]]] = []
-        self._step = 0
-        self._piece = self._as_sent(self._ring[: self._known])
-        self._read = 0  # bytes of the piece that have been handed out
 
     def _next(self, limit: int) -> NDArray[np.uint8]:
-        if self._read == len(self._piece):
-            self._piece = self._as_sent(self._grow() if self._known < len(self._ring) else self._renew())
-            self._read = 0
+        if self._read == 8 * self._known:
+            if self._known < len(self._words):
+                self._grow()
+            else:
+                self._renew()
         start = self._read
-        self._read = min(start + limit, len(self._piece))
-        return self._piece[start : self._read]
+        self._read = min(start + limit, 8 * self._known)
+        return self._bytes[start : self._read]
 
-    def _as_sent(self, words: NDArray[np.uint64]) -> NDArray[np.uint8]:
-        if not self._inverted:
-            return words.view(np.uint8)
-        if len(self._turned) < len(words):
-            self._turned = np.empty(len(words), dtype=np.uint64)
-        return np.invert(words, out=self._turned[: len(words)]).view(np.uint8)
-
-    def _grow(self) -> NDArray[np.uint64]:
+    def _grow(self) -> None:
         """Add as many words as the recurrence gives in one step from those at hand."""
         known = self._known
         scale = 1 << ((known // self._taps[-1]).bit_length() - 1)
-        new = min(self._taps[0] * scale, len(self._ring) - known)
-        out = self._ring[known : known + new]
-        first, second, *others = (self._ring[known - tap * scale :][:new] for tap in self._taps)
+        new = min(self._taps[0] * scale, len(self._words) - known)
+        out = self._words[known : known + new]
+        first, second, *others = (self._words[known - tap * scale :][:new] for tap in self._taps)
         np.bitwise_xor(first, second, out=out)
         for other in others:
             np.bitwise_xor(out, other, out=out)
         self._known += new
-        return out
 
-    def _renew(self) -> NDArray[np.uint64]:
-        """Replace the oldest words by the newest."""
+    def _renew(self) -> None:
+        """Replace all words by those that follow, the oldest first."""
         if not self._steps:
             self._steps = self._plan()
-        oldest, others = self._steps[self._step]
-        for other in others:
-            np.bitwise_xor(oldest, other, out=oldest)
-        self._step = (self._step + 1) % len(self._steps)
-        return oldest
+        for oldest, others in self._steps:
+            for other in others:
+                np.bitwise_xor(oldest, other, out=oldest)
+        self._read = 0
 
     def _plan(self) -> list[tuple[NDArray[np.uint64], list[NDArray[np.uint64]]]]:
         """Cut a round into steps whose sources neither wrap round nor overlap what is written."""
-        size, unit = len(self._ring), self._scale
-        cuts = set(range(0, size, self._gap * unit)) | {tap * unit for tap in self._taps}
-        edges = sorted(cuts)
+        size, unit = len(self._words), self._scale
+        edges = sorted({*range(0, size, self._gap * unit), *(tap * unit for tap in self._taps)})
         steps = []
         for start, end in itertools.pairwise(edges):
             sources = [(start - tap * unit) % size for tap in self._taps[:-1]]
-            others = [self._ring[source : source + end - start] for source in sources]
-            steps.append((self._ring[start:end], others))
+            others = [self._words[source : source + end - start] for source in sources]
+            steps.append((self._words[start:end], others))
         return steps

@@ -1,4 +1,4 @@
-"""Patterns that a shift register makes: short ones from a table of one period, long ones word-parallel."""
+"""Patterns that a shift register makes: from a table of one period, or word-parallel where it is long."""
 
 from __future__ import annotations
 
@@ -11,10 +11,11 @@ from harness.record import BitOrder
 from harness.signal.bits import bits_of_int, swap_order, unpack
 from harness.signal.patterns.base import Pattern
 from harness.signal.patterns.periodic import LONGEST_CYCLE, PeriodicPattern, toggled
-from harness.signal.patterns.readers import RingReader
+from harness.signal.patterns.readers import VIEW_BYTES, Reader, RecurrenceReader, TableReader
 from harness.signal.registers import Register
 
 _FIRST_SCALE = 16  # a long register's reader starts from n·16 words, which come from small tables
+_LONGEST_TABLE = 1 << 23  # bytes: a table from the processor's outer cache still beats a recurrence
 _FEW_BITS = 4096  # up to here Python's own ints make bits faster than a reader does
 
 
@@ -97,7 +98,7 @@ class ShortRegisterPattern(RegisterPattern, PeriodicPattern):
 
 
 class LongRegisterPattern(RegisterPattern):
-    """A register whose period is too long for a table: its recurrence runs on machine words."""
+    """A register whose period is too long to be kept as bits: its recurrence runs on machine words."""
 
     def bits(self, place: int, count: int) -> NDArray[np.uint8]:
         """`count` bits from a place on."""
@@ -108,13 +109,32 @@ class LongRegisterPattern(RegisterPattern):
             np.bitwise_xor(bits, 1, out=bits)
         return bits
 
-    def reader(self, place: int, order: BitOrder) -> RingReader:
+    def reader(self, place: int, order: BitOrder) -> Reader:
         """Packed bytes from a place on."""
+        if self.period <= _LONGEST_TABLE:
+            offset = place * pow(8, -1, self.period) % self.period
+            return TableReader(place, self._table(order), self.period, offset)
+        return self._run_from(place, order)
+
+    def _table(self, order: BitOrder) -> NDArray[np.uint8]:
+        """One cycle of bytes and a little more, as sent."""
+        if order not in self._tables:
+            table = np.empty(self.period + VIEW_BYTES, dtype=np.uint8)
+            self._run_from(0, order).read_into(table)
+            table.flags.writeable = False
+            self._tables[order] = table
+        return self._tables[order]
+
+    @cached_property
+    def _tables(self) -> dict[BitOrder, NDArray[np.uint8]]:
+        return {}
+
+    def _run_from(self, place: int, order: BitOrder) -> RecurrenceReader:
         window = self.register.window_at(place)
         words = np.bitwise_xor.reduce(
             [table[window >> (8 * i) & 255] for i, table in enumerate(self._first_words[order])], axis=0
         )
-        return RingReader(place, self.register.taps, words, self.sent_inverted)
+        return RecurrenceReader(place, self.register.taps, words, self.sent_inverted)
 
     @cached_property
     def _first_words(self) -> dict[BitOrder, list[NDArray[np.uint64]]]:
