@@ -5,6 +5,7 @@ from __future__ import annotations
 from harness.statistics.plans.curtailed import CurtailedPlan
 from harness.statistics.plans.fixed import FixedPlan
 from harness.statistics.plans.plan import Plan, PlanError, check_requirement
+from harness.statistics.plans.sequential import SequentialPlan
 
 KINDS = ("fixed", "curtailed", "sequential")
 
@@ -49,4 +50,6 @@ def make_plan(
         return FixedPlan(ber, confidence, margin, producer_risk, accept_errors)
     if kind == "curtailed":
         return CurtailedPlan(ber, confidence, margin, producer_risk, accept_errors)
+    if kind == "sequential":
+        return SequentialPlan(ber, confidence, margin, producer_risk)
     raise PlanError(f"there is no plan named {kind!r}", f"choose one of {', '.join(KINDS)}")

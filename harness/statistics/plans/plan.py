@@ -139,6 +139,7 @@ class Plan(ABC):
         self.compared_bits = 0  # up to the decision, where there is one
         self.errors = 0
         self._decision: Decision | None = None
+        self._looks: list[int] = []  # compared bits at which counts showed without places
 
     # -- what it promises --------------------------------------------------------------------------
 
@@ -192,6 +193,18 @@ class Plan(ABC):
     def risks_for_looks(self, looks: Sequence[int]) -> Risks:
         """The risks if the counts are seen at these compared bits only, ascending."""
 
+    def risks_as_run(self) -> Risks | None:
+        """The risks of the looks that this run has taken; None where every bit was seen.
+
+        Looks not taken yet, up to the plan's end, are thought to go on at the mean length of those taken.
+        """
+        if not self._looks:
+            return None
+        looks, step = list(self._looks), max(1, self._looks[-1] // len(self._looks))
+        while looks[-1] < self.longest_bits:
+            looks.append(looks[-1] + step)
+        return self.risks_for_looks(looks)
+
     @property
     @abstractmethod
     def boundaries(self) -> tuple[Boundary, ...]:
@@ -213,7 +226,7 @@ class Plan(ABC):
         if not segment.aligned:
             return None
         tally = segment.tally
-        if not segment.positions_complete and tally.errors != len(segment.positions):
+        if not segment.positions_complete:
             return self.advance_count(tally.compared, tally.errors)
         at = np.asarray(segment.positions, dtype=np.int64) - segment.start + 1
         if len(at) != tally.errors or (len(at) and not 1 <= at[0] <= at[-1] <= tally.compared):
@@ -224,12 +237,14 @@ class Plan(ABC):
         """Take in a reading of an error counter: so many more bits and errors, places unknown."""
         if not 0 <= errors <= bits:
             raise ValueError(f"a reading of {bits} bits cannot hold {errors} errors")
-        return self._take(bits, errors, None if errors else np.empty(0, dtype=np.int64))
+        return self._take(bits, errors, None)
 
     def _take(self, bits: int, errors: int, at: NDArray[np.int64] | None) -> Decision | None:
         if self._decision is not None or bits == 0:
             return None
         end, total = self.compared_bits + bits, self.errors + errors
+        if at is None:
+            self._looks.append(end)
         decision = self._look(end, total) if at is None else self._see(at, end)
         self._decision = decision
         self.compared_bits = end if decision is None else decision.compared_bits
