@@ -67,14 +67,15 @@ def event_gap_bits(positions: NDArray[np.int64], bits: int) -> int:
     while gap > 1 and 8 * gap * errors > bits:
         gap //= 2
     while True:
-        beyond = errors - 1 - int(np.searchsorted(spacings, gap, side="right"))
-        events = beyond + 1
-        if beyond == 0 or 8 * gap * events > bits:
+        beyond = spacings[int(np.searchsorted(spacings, gap, side="right")) :]
+        if len(beyond) == 0 or 8 * gap * (len(beyond) + 1) > bits:
             return gap
-        near = int(np.searchsorted(spacings, 4 * gap, side="right")) - (errors - 1 - beyond)
-        # Between independent events spacings have no memory: past g, the next 3g bits hold one so often.
-        share = -math.expm1(3 * gap * math.log1p(-min(events / bits, 0.5)))
-        if near == 0 or float(bdtrc(near - 1, beyond, share)) >= _CHANCE:
+        near = int(np.searchsorted(beyond, 4 * gap, side="right"))
+        # Between independent events spacings have no memory: what goes beyond g is as long as any, and
+        # gives their rate without a bias from events that g has joined.
+        rate = len(beyond) / float(np.sum(beyond - gap))
+        share = -math.expm1(3 * gap * math.log1p(-min(rate, 0.999)))
+        if near == 0 or float(bdtrc(near - 1, len(beyond), share)) >= _CHANCE:
             return gap
         gap *= 2
 
