@@ -13,7 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from harness.assess.requirement import Requirement
-from harness.record import Event, Second, Segment, Tally
+from harness.record import Event, Point, Second, Segment, Tally
 from harness.statistics.availability import Availability, AvailabilityResult
 from harness.statistics.plans import Decision
 
@@ -39,7 +39,9 @@ class Sums:
 class Accumulator:
     """Sums, the plan's progress and availability over the seconds of one point, in order."""
 
-    def __init__(self, requirement: Requirement | None, rate_bps: float | None = None) -> None:
+    def __init__(
+        self, requirement: Requirement | None, rate_bps: float | None = None, *, step: int = 1
+    ) -> None:
         self.requirement = requirement
         self.plan = requirement.make_plan() if requirement else None
         self.decision: Decision | None = None
@@ -52,6 +54,7 @@ class Accumulator:
         self._positions: list[NDArray[np.int64]] = []
         self._kept = 0
         self._complete = True
+        self._step = step
         self._next: int | None = None
         self._early: list[tuple[int, Second]] = []
         self._availability = _standards(requirement, rate_bps)
@@ -63,14 +66,14 @@ class Accumulator:
         heapq.heappush(self._early, (second.index, second))
         while self._early and self._early[0][0] <= self._next:
             index, ready = heapq.heappop(self._early)
-            self._next = index + 1
+            self._next = index + self._step
             self._take(ready)
 
     def flush(self) -> None:
         """Take what still waits: a cut or resumed run has gaps in its numbering."""
         while self._early:
             index, ready = heapq.heappop(self._early)
-            self._next = index + 1
+            self._next = index + self._step
             self._take(ready)
 
     def note(self, event: Event) -> None:
@@ -115,7 +118,7 @@ class Accumulator:
         self._inserted += second.bits_inserted
         for standard in self._availability:
             standard.advance(second)
-        self.recent = [*self.recent[-59:], (second.index, second.tally)]
+        self.recent = [*self.recent[-59:], (second.index // self._step, second.tally)]
         self._keep_positions(second, compared_before)
         self._advance_plan(second)
 
@@ -144,6 +147,11 @@ class Accumulator:
             if decision is not None:
                 self.decision = decision
                 return
+
+
+def accumulator_for(point: Point, requirement: Requirement | None) -> Accumulator:
+    """Make the accumulator for a stored point."""
+    return Accumulator(requirement, point.facts.get("rate_bps"), step=int(point.facts.get("index_step", 1)))
 
 
 def _standards(requirement: Requirement | None, rate_bps: float | None) -> list[Availability]:

@@ -42,6 +42,17 @@ class Requirement:
         )
 
 
+def requirement_at(
+    requirement: Requirement | None, settings: Mapping[str, Any], values: Mapping[str, float]
+) -> Requirement | None:
+    """Give the requirement where it holds at a point: in a plain run always, in a sweep where it is named."""
+    if requirement is None or not settings.get("sweep"):
+        return requirement
+    at = (settings.get("requirement") or {}).get("at") or {}
+    named = bool(at) and all(values.get(name) == value for name, value in at.items())
+    return requirement if named else None
+
+
 def requirement_of(settings: Mapping[str, Any]) -> Requirement | None:
     """Read the requirement of a run's resolved settings; None where nothing was required."""
     section = settings.get("requirement")

@@ -5,17 +5,20 @@ from __future__ import annotations
 from collections.abc import Mapping
 from typing import Any
 
-from harness.assess.accumulate import Accumulator
+from harness.assess.accumulate import Accumulator, accumulator_for
 from harness.assess.assessment import Assessment, PointAssessment
 from harness.assess.point import Facts, assess_point
-from harness.assess.requirement import Requirement, requirement_of
+from harness.assess.requirement import Requirement, requirement_at, requirement_of
 from harness.record import Event, Point, Run, Verdict
 
 
 def assess(run: Run) -> Assessment:
     """Assess a record; pure, and the same for a run that goes on and one that has ended."""
     requirement = requirement_of(run.settings)
-    points = [_assess_one(run, point, requirement) for point in run.points]
+    points = [
+        _assess_one(run, point, requirement_at(requirement, run.settings, point.values))
+        for point in run.points
+    ]
     several = run.command == "sweep" or len(points) > 1
     whole = points[0] if points else _nothing(run, requirement)
     verdict, reasons = whole.verdict, whole.reasons
@@ -40,7 +43,7 @@ def assess(run: Run) -> Assessment:
 
 def accumulate(run: Run, point: Point, requirement: Requirement | None) -> Accumulator:
     """Run a point's seconds and events through an accumulator."""
-    acc = Accumulator(requirement, point.facts.get("rate_bps"))
+    acc = accumulator_for(point, requirement)
     for event in point.events:
         acc.note(event)
     if run.status == "cut" and run.sittings and point.index == run.points[-1].index:

@@ -29,7 +29,7 @@ def _point(point: Point) -> Iterator[str]:
     seconds = sorted(point.seconds, key=lambda s: s.index)
     for second in seconds:
         yield from _second(point.index, second)
-    yield from _joints(point.index, seconds)
+    yield from _joints(point.index, seconds, int(point.facts.get("index_step", 1)))
     if not point.after_decision.holds:
         yield f"point {point.index}: the bits after the decision do not add up"
     slips = sum(s.slips for s in seconds)
@@ -79,13 +79,13 @@ def _why(tally: Tally) -> str:
     )
 
 
-def _joints(point: int, seconds: Sequence[Second]) -> Iterator[str]:
+def _joints(point: int, seconds: Sequence[Second], step: int) -> Iterator[str]:
     for before, after in pairwise(seconds):
         if after.index == before.index:
             yield f"point {point}: second {after.index} is there twice"
         elif after.sitting == before.sitting:
-            if after.index != before.index + 1:
-                yield f"point {point}: seconds {before.index + 1} to {after.index - 1} are missing"
+            if after.index != before.index + step:
+                yield f"point {point}: seconds {before.index + step} to {after.index - step} are missing"
             if after.first_bit != before.first_bit + before.tally.received:
                 yield f"point {point}: second {after.index} does not begin where second {before.index} ends"
 

@@ -64,6 +64,10 @@ class Book:
         UTC minus monotonic time, ns.
     keep_positions
         Error positions kept a second, at most.
+    base_bit
+        Received bits that the point had in earlier sittings.
+    step
+        From one number to the next: 2 where two directions are measured at once and take turns.
     """
 
     def __init__(
@@ -75,24 +79,30 @@ class Book:
         started_ns: int,
         wall_ns: int,
         keep_positions: int,
+        base_bit: int = 0,
+        step: int = 1,
     ) -> None:
         self._point = point
         self._sitting = sitting
         self._wall_ns = wall_ns
         self._keep = keep_positions
+        self._base_bit = base_bit
+        self._step = step
+        self._next_index = first_index + step
         self._pages: deque[_Page] = deque([_Page(first_index, started_ns, 0)])
         self._complete: list[Second] = []
 
     @property
     def next_index(self) -> int:
-        """Number of the second that is open for new bits."""
-        return self._pages[-1].index if self._pages else 0
+        """Number that the second after the last one has."""
+        return self._next_index
 
     def close_second(self, *, ends_ns: int, received_bits: int, sent: int, due: bool) -> None:
         """End the second that takes new bits, at `received_bits`, and begin the next."""
         page = self._pages[-1]
         page.end_bit, page.ends_ns, page.sent, page.due = received_bits, ends_ns, sent, due
-        self._pages.append(_Page(page.index + 1, ends_ns, received_bits))
+        self._pages.append(_Page(page.index + self._step, ends_ns, received_bits))
+        self._next_index = page.index + 2 * self._step
         self._turn_pages()
 
     def add(self, segment: Segment) -> None:
@@ -162,8 +172,8 @@ class Book:
             slips=page.slips,
             bits_lost=page.lost,
             bits_inserted=page.inserted,
-            first_bit=page.first_bit,
-            positions=positions,
+            first_bit=page.first_bit + self._base_bit,
+            positions=positions + self._base_bit,
             ones_lost=ones_lost,
             positions_complete=complete,
             stretches=tuple(page.stretches),

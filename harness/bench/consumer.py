@@ -56,6 +56,8 @@ class Consumer(threading.Thread):
         commit: Callable[[list[Second], list[Event], int], None],
         stop: Callable[[str], None],
         each_second: Callable[[], list[Event]] = list,
+        base_bit: int = 0,
+        base_compared: int = 0,
     ) -> None:
         super().__init__(name="consumer", daemon=True)
         self._ring = ring
@@ -72,6 +74,8 @@ class Consumer(threading.Thread):
         self._commit = commit
         self._ask_stop = stop
         self._each_second = each_second
+        self._base_bit = base_bit  # what the point had in earlier sittings
+        self._base_compared = base_compared
         self._arrivals: deque[tuple[int, int]] = deque([(0, started_ns)], maxlen=ARRIVALS_KEPT)
         self._events: list[Event] = []
         self._event_count = 0
@@ -225,7 +229,7 @@ class Consumer(threading.Thread):
         if plan is not None and (self._held or not segment.positions_complete):
             self._held.append(segment)
         elif plan is not None:
-            compared = self.tally.compared
+            compared = self._base_compared + self.tally.compared
             decision = plan.advance(segment)
             if decision is not None:
                 self._decided(decision, segment, compared)
@@ -355,6 +359,8 @@ class Consumer(threading.Thread):
         self._keep(Event(kind, where, text, at_ns + self._wall_ns, data))
 
     def _keep(self, event: Event) -> None:
+        if event.bit is not None and self._base_bit:
+            event = replace(event, bit=event.bit + self._base_bit)
         self._event_count += 1
         if self._event_count <= EVENTS_KEPT or event.kind not in (
             "slip",

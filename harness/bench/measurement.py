@@ -59,6 +59,10 @@ class Setup:
     point: int = 0
     sitting: int = 0
     first_index: int = 0
+    base_bit: int = 0  # received bits that the point had in earlier sittings
+    base_compared: int = 0
+    index_step: int = 1  # two directions at once number their seconds in turns
+    silence_is_a_result: bool = False  # a sweep's point without a bit: a result, not a fault
 
 
 @dataclass(frozen=True, slots=True)
@@ -137,6 +141,8 @@ class Measurement:
             started_ns=self._started_ns,
             wall_ns=self._wall_ns,
             keep_positions=setup.positions_per_second,
+            base_bit=setup.base_bit,
+            step=setup.index_step,
         )
         self._consumer = self._make_consumer(commit)
 
@@ -171,7 +177,7 @@ class Measurement:
             bit_order=setup.bit_order,
             slip_unit=unit,
             position_limit=max(setup.positions_per_second, setup.plan.positions_needed if setup.plan else 0),
-            cut_compared=setup.plan.cut_compared if setup.plan else None,
+            cut_compared=self._cut_compared(),
         )
         places = None
         if self._sender is not None:
@@ -201,7 +207,15 @@ class Measurement:
             commit=commit,
             stop=self._ask_stop,
             each_second=self._line_events,
+            base_bit=setup.base_bit,
+            base_compared=setup.base_compared,
         )
+
+    def _cut_compared(self) -> int | None:
+        plan = self._setup.plan
+        if plan is None or plan.cut_compared is None:
+            return None
+        return max(0, plan.cut_compared - self._setup.base_compared)
 
     # -- what the consumer asks
 
@@ -296,6 +310,8 @@ class Measurement:
             if limit is not None and now - self._started_ns >= limit * 1e9:
                 return "seconds", None
             hopeless = self._hopeless(now)
+            if hopeless is not None and self._setup.silence_is_a_result:
+                return "seconds", None
             if hopeless is not None:
                 return "fault", hopeless
 

@@ -1,21 +1,28 @@
-"""One run: from the profile to the record, whatever happens in between."""
+"""One run: from the profile to the record, point by point, whatever happens in between."""
 
 from __future__ import annotations
 
+import datetime
 import threading
 import time
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field, replace
+from pathlib import Path
+from typing import Any
 
 from drivers.contract import DriverError, Interrupted
 from harness.assess.accumulate import Accumulator
 from harness.assess.assessment import Assessment, PointAssessment
 from harness.assess.point import Facts, assess_point
-from harness.assess.requirement import Requirement, requirement_of
+from harness.assess.requirement import Requirement, requirement_at, requirement_of
 from harness.assess.run import assess
+from harness.bench.conditions import Conditions
 from harness.bench.measurement import Defect, Measurement, Outcome, Setup, StopRules
+from harness.bench.outlook import Outlook, outlook_of
 from harness.bench.recorder import Recorder
-from harness.bench.session import Links, Way, bench_host, bench_versions, status_of, ways_of
+from harness.bench.schedule import Schedule
+from harness.bench.session import Links, bench_host, bench_versions, flush, status_of, ways_of
+from harness.bench.visits import Had, Visit, had_by, visits_of
 from harness.profile import Profile
 from harness.record import EndedBy, Event, Run, Second, Sitting, Tally
 from harness.store import Store
@@ -36,6 +43,13 @@ class Progress:
     stop: StopRules
     elapsed_s: float
     waiting_writes: int = 0
+    outlook: Outlook = field(default_factory=Outlook)
+    number: int = 0  # of the visit under way
+    visits: int = 1
+    units: Mapping[str, str] = field(default_factory=dict)  # instrument -> unit
+    done: tuple[PointAssessment, ...] = ()  # a sweep's points so far
+    sensitivity_ber: float | None = None
+    until: float | None = None  # forecast of the end, seconds since the epoch
 
 
 @dataclass(frozen=True, slots=True)
@@ -62,7 +76,7 @@ class Live:
 
     def __init__(self, requirement: Requirement | None, about: Facts) -> None:
         self._lock = threading.Lock()
-        self._acc = Accumulator(requirement, about.rate_bps)
+        self._acc = Accumulator(requirement, about.rate_bps, step=int(about.facts.get("index_step", 1)))
         self._about = about
         self.plan = self._acc.plan
 
@@ -74,37 +88,73 @@ class Live:
             for second in seconds:
                 self._acc.add(second)
 
+    def outlook(self) -> Outlook:
+        """Say what is ahead of the plan, and what speaks against a PASS already."""
+        with self._lock:
+            return outlook_of(self._acc, self._about.requirement)
+
     def point(self) -> PointAssessment:
         """Assess what is known so far."""
         with self._lock:
             return assess_point(self._acc, self._about, quick=True)
 
 
-class MeasureRun:
-    """Carries out one profile with one point, or with two where both directions are measured at once."""
+class BenchRun:
+    """Carries out a profile: one point, or those of a sweep; each in one direction, or in both at once.
 
-    def __init__(self, profile: Profile, store: Store, hooks: Hooks) -> None:
+    Parameters
+    ----------
+    lock
+        Folder for the guardian's files.
+    cut
+        The record of a cut run that goes on; None: a new run.
+    """
+
+    def __init__(
+        self,
+        profile: Profile,
+        store: Store,
+        hooks: Hooks,
+        *,
+        lock: Path,
+        command: str,
+        cut: Run | None = None,
+    ) -> None:
         self._profile = profile
         self._hooks = hooks
+        self._command = command
+        self._cut = cut
+        self._lock = lock
         self._settings = profile.resolved()
         self._requirement = requirement_of(self._settings)
         self._links = Links(profile.need_link(), hooks.interrupted)
         self._ways = ways_of(profile, self._links)
-        self._stop = StopRules(profile.stop.bits, profile.stop.seconds, profile.stop.errors)
+        self._visits = visits_of(profile)
         self._recorder = Recorder(store)
         self._started = time.time_ns()
         self._next_tick = 0.0
-        self._undecided: dict[int, int] = {}
-        self._key = ""
+        self._undecided: dict[int, int] = {}  # point -> bits received and not decided
+        self._begun: set[int] = set()
+        self._ended: set[int] = set()
+        self._done: list[PointAssessment] = []
+        self._next_index = 1 + max((s.index for p in cut.points for s in p.seconds), default=-1) if cut else 0
+        self._next_place = 0
+        self._sitting = len(cut.sittings) if cut else 0
+        self._key = cut.key if cut else ""
+        self._now: Visit = self._visits[0]
+        self._schedule = Schedule(profile, len(self._visits))
 
     def run(self) -> RunResult:
         """Measure; whatever goes wrong on the bench ends in the record and in `fault`."""
         self._recorder.start()
         try:
             self._begin()
-            lives = [Live(self._requirement, self._about(way)) for way in self._ways]
-            outcomes, fault, ended_by = self._measure(lives)
-            return self._end(outcomes, fault, ended_by)
+            fault, ended_by = self._carry_out()
+            if self._recorder.defect is not None:
+                raise Defect(str(self._recorder.defect)) from self._recorder.defect
+            if self._recorder.fault is not None:
+                raise self._recorder.fault
+            return self._end(fault, ended_by)
         except BaseException:
             self._abandon()
             raise
@@ -114,28 +164,48 @@ class MeasureRun:
     # -- the record
 
     def _begin(self) -> None:
-        profile, started = self._profile, self._started
-        facts = [way.facts(self._links) for way in self._ways]
+        profile = self._profile
+        sitting = Sitting(self._sitting, self._started, None, bench_host(), bench_versions())
 
         def job(store: Store) -> str:
-            key = store.begin_run(
+            key = self._key or store.begin_run(
                 title=profile.title,
-                command="measure",
-                started=started,
+                command=self._command,
+                started=self._started,
                 profile_text=profile.text,
                 overrides=profile.overrides,
                 settings=self._settings,
                 device=profile.device,
             )
-            store.begin_sitting(key, Sitting(0, started, None, bench_host(), bench_versions()))
-            for number, about in enumerate(facts):
-                store.begin_point(key, number, {}, started, about)
+            store.begin_sitting(key, sitting)
             return key
 
         self._key = self._recorder.ask(job)
+        self._conditions = Conditions(
+            profile, self._links.main, self._lock / f"guardian-{self._key}.log", self._hooks.interrupted
+        )
         self._hooks.started(self._key)
 
-    def _commit(self, number: int, live: Live) -> Commit:
+    def _point(self, visit: Visit, way: int) -> int:
+        return visit.number * len(self._ways) + way
+
+    def _had(self, number: int) -> Had | None:
+        """What an earlier sitting left of a point; None where it was never begun."""
+        if self._cut is None:
+            return None
+        point = next((p for p in self._cut.points if p.index == number), None)
+        if point is None:
+            return None
+        return had_by(point, requirement_at(self._requirement, self._settings, point.values))
+
+    def _is_done(self, visit: Visit) -> bool:
+        if self._cut is None:
+            return False
+        numbers = [self._point(visit, way) for way in range(len(self._ways))]
+        ended = {p.index for p in self._cut.points if p.ended_by not in (None, "interrupted", "fault")}
+        return all(number in ended for number in numbers)
+
+    def _commit(self, number: int, live: Live | None) -> Commit:
         key = self._key
 
         def commit(seconds: list[Second], events: list[Event], undecided: int) -> None:
@@ -145,106 +215,210 @@ class MeasureRun:
             waiting = sum(self._undecided.values())
             placed = [(number, event) for event in events]
             self._recorder.put(lambda store: store.commit(key, seconds, placed, waiting))
-            live.take(seconds, events)
+            if live is not None:
+                live.take(seconds, events)
 
         return commit
 
-    def _about(self, way: Way) -> Facts:
-        facts = way.facts(self._links)
-        return Facts(
-            values={},
-            status="running",
-            ended_by=None,
-            started=self._started,
-            ended=None,
-            after_decision=Tally(),
-            pattern=way.pattern.name,
-            bit_order=way.bit_order,
-            rate_bps=facts["rate_bps"],
-            requirement=self._requirement,
-            facts=facts,
-        )
+    def _note(self, number: int, events: list[Event]) -> None:
+        if events:
+            self._commit(number, None)([], events, self._undecided.get(number, 0))
 
     # -- the bench
 
-    def _measure(self, lives: list[Live]) -> tuple[list[Outcome], tuple[str, str] | None, EndedBy]:
-        outcomes: list[Outcome] = []
+    def _carry_out(self) -> tuple[tuple[str, str] | None, EndedBy]:
+        """Visit all points; gives the fault that ended it, and what ended it."""
         fault: tuple[str, str] | None = None
-        ended_by: EndedBy = "fault"
+        ended_by: EndedBy = "bits"
+        last = 0
         try:
-            with self._links.opened():
-                outcomes = self._both([self._measurement(n, live, lives) for n, live in enumerate(lives)])
-                ended_by = _worst(outcomes)
-                failed = next((o.fault for o in outcomes if o.fault is not None), None)
-                if failed is not None:
-                    fault = (failed.what, failed.advice)
+            with self._conditions.opened():
+                left = [visit for visit in self._visits if not self._is_done(visit)]
+                if not left:
+                    return None, "bits"
+                facts = self._set(left[0])
+                with self._links.opened():
+                    ended_by, failed = self._visit_all(left, facts)
+                    if failed is not None:
+                        fault = (failed.what, failed.advice)
         except Interrupted:
             ended_by = "interrupted"
         except DriverError as error:
             fault, ended_by = (error.what, error.advice), "fault"
-        extra = list(self._links.events)
+        last = self._point(self._now, 0)
+        extra = [*self._conditions.take_events(), *self._links.take_events()]
         if fault is not None:
             extra.append(Event("fault", None, fault[0], time.time_ns()))
-        if extra:
-            self._commit(0, lives[0])([], extra, 0)
-        return outcomes, fault, ended_by
+        self._make_sure_of(last, extra)
+        return fault, ended_by
 
-    def _measurement(self, number: int, live: Live, lives: list[Live]) -> Measurement:
-        way, link = self._ways[number], self._profile.need_link()
+    def _make_sure_of(self, number: int, events: list[Event]) -> None:
+        """Enter events that came outside of a point's measurement, beginning the point where need be."""
+        if number not in self._begun:
+            self._begin_point(self._now, 0, {})
+        self._note(number, events)
+
+    def _set(self, visit: Visit) -> dict[str, Any]:
+        """Set a point's conditions; nothing is being sent meanwhile."""
+        self._now = visit
+        values = {**self._conditions.fixed(), **visit.values}
+        if not self._conditions.instruments:
+            return {}
+        facts = self._conditions.apply(values)
+        facts["instruments"] = self._conditions.identities()
+        facts["units"] = self._conditions.units()
+        facts["calibration"] = self._conditions.level.facts()
+        overdue = self._conditions.level.overdue(datetime.date.today())
+        if overdue:
+            facts["overdue"] = overdue
+        return facts
+
+    def _visit_all(self, left: list[Visit], facts: dict[str, Any]) -> tuple[EndedBy, DriverError | None]:
+        sweep = self._profile.sweep
+        self._pause(sweep.warm_up_s if sweep else 0.0)
+        hopeless = 0
+        ended_by: EndedBy = "bits"
+        for place, visit in enumerate(left):
+            if self._hooks.interrupted.is_set():
+                return "interrupted", None
+            if place:
+                facts = self._set(visit)
+            self._pause(sweep.settle_s if sweep else 0.0)
+            outcomes = self._measure(visit, facts, left_points=len(left) - place)
+            ended_by, fault = _worst(outcomes), next((o.fault for o in outcomes if o.fault), None)
+            if ended_by in ("interrupted", "fault"):
+                return ended_by, fault
+            hopeless = 0 if any(o.tally.compared for o in outcomes) else hopeless + 1
+            if sweep and sweep.guard and hopeless >= sweep.guard and place + 1 < len(left):
+                text = (
+                    f"{hopeless} points in a row were never aligned: the climb ends here, "
+                    f"{len(left) - place - 1} points are left out"
+                )
+                self._note(self._point(visit, 0), [Event("guard", None, text, time.time_ns())])
+                break
+        return ended_by, None
+
+    def _pause(self, seconds: float) -> None:
+        if seconds:
+            self._hooks.interrupted.wait(seconds)
+
+    def _begin_point(self, visit: Visit, way: int, facts: Mapping[str, Any]) -> None:
+        number, key = self._point(visit, way), self._key
+        self._begun.add(number)
+        if self._cut is not None and any(p.index == number for p in self._cut.points):
+            return
+        about = {**self._ways[way].facts(self._links), **facts}
+        values = dict(visit.values)
+        if visit.reference:
+            about["reference"] = True
+        if len(self._ways) > 1:
+            about["index_step"] = len(self._ways)
+        now = time.time_ns()
+        self._recorder.ask(lambda store: store.begin_point(key, number, values, now, about))
+
+    def _measure(self, visit: Visit, facts: dict[str, Any], left_points: int) -> list[Outcome]:
+        """Measure one point in all its directions."""
+        for link in self._links.all:
+            flush(link, self._profile.need_link().drain_s)
+        lives: list[Live] = []
+        measurements: list[Measurement] = []
+        for way in range(len(self._ways)):
+            number = self._point(visit, way)
+            self._begin_point(visit, way, facts)
+            had = self._had(number)
+            live = Live(
+                requirement_at(self._requirement, self._settings, visit.values), self._about(visit, way)
+            )
+            lives.append(live)
+            measurements.append(self._measurement(visit, way, had, lives, left_points))
+            self._note(number, self._resumed(had))
+        self._note(self._point(visit, 0), [*self._conditions.take_events(), *self._links.take_events()])
+        outcomes = side_by_side(measurements)
+        self._next_index = max(o.next_index for o in outcomes)
+        self._next_place = outcomes[0].next_place
+        for way, outcome in enumerate(outcomes):
+            self._close_point(self._point(visit, way), outcome)
+            self._done.append(replace(lives[way].point(), values=visit.values, ended_by=outcome.ended_by))
+        return outcomes
+
+    def _resumed(self, had: Had | None) -> list[Event]:
+        if had is None:
+            return []
+        missing = max(0, had.sent - had.received - had.lost)
+        text = f"the run goes on after it was cut; {missing} bits were on their way then and are not counted"
+        return [Event("resumed", had.received, text, time.time_ns(), {"bits": missing})]
+
+    def _close_point(self, number: int, outcome: Outcome) -> None:
+        key, now = self._key, time.time_ns()
+        if outcome.ended_by in ("interrupted", "fault"):
+            return  # `_end` closes it, with how the run ended
+        self._recorder.put(
+            lambda store: store.end_point(key, number, now, outcome.ended_by, outcome.after, {})
+        )
+        self._undecided.pop(number, None)
+        self._ended.add(number)
+
+    def _about(self, visit: Visit, way: int) -> Facts:
+        facts = {**self._ways[way].facts(self._links), "index_step": len(self._ways)}
+        return Facts(
+            values=visit.values,
+            status="running",
+            ended_by=None,
+            started=time.time_ns(),
+            ended=None,
+            after_decision=Tally(),
+            pattern=self._ways[way].pattern.name,
+            bit_order=self._ways[way].bit_order,
+            rate_bps=facts["rate_bps"],
+            requirement=requirement_at(self._requirement, self._settings, visit.values),
+            facts=facts,
+        )
+
+    def _measurement(
+        self, visit: Visit, way: int, had: Had | None, lives: list[Live], left_points: int
+    ) -> Measurement:
+        link, chosen = self._profile.need_link(), self._ways[way]
+        requirement = requirement_at(self._requirement, self._settings, visit.values)
+        plan = requirement.make_plan() if requirement else None
+        if had is not None and had.plan is not None:
+            plan = had.plan
+        stop = _what_is_left(self._profile, had, sends=chosen.sending is not None)
+        stop = self._schedule.share(stop, left_points, self._done)
         setup = Setup(
-            pattern=way.pattern,
-            bit_order=way.bit_order,
-            plan=self._requirement.make_plan() if self._requirement else None,
-            stop=self._stop,
+            pattern=chosen.pattern,
+            bit_order=chosen.bit_order,
+            plan=plan,
+            stop=stop,
             pace_bps=link.pace_bps,
             max_in_flight_bits=link.max_in_flight_bits,
             drain_s=link.drain_s,
             reconnect_s=link.reconnect_s,
-            point=number,
+            first_place=self._next_place,
+            point=self._point(visit, way),
+            sitting=self._sitting,
+            first_index=self._next_index + way,
+            index_step=len(self._ways),
+            base_bit=had.received if had else 0,
+            base_compared=had.compared if had else 0,
+            silence_is_a_result=self._profile.sweep is not None,
         )
         return Measurement(
-            way.sending,
-            way.receiving,
+            chosen.sending,
+            chosen.receiving,
             setup,
-            commit=self._commit(number, live),
+            commit=self._commit(self._point(visit, way), lives[way]),
             interrupted=self._hooks.interrupted,
             broken=lambda: self._recorder.failed,
-            tick=(lambda: self._tick(lives)) if number == 0 else (lambda: None),
+            tick=(lambda: self._tick(lives, stop)) if way == 0 else (lambda: None),
             reopen=self._links.reopen if len(self._ways) == 1 else None,
         )
 
-    def _both(self, measurements: list[Measurement]) -> list[Outcome]:
-        """Measure; a second direction has a thread of its own, beside this one."""
-        answers: dict[int, Outcome | BaseException] = {}
-
-        def beside(number: int) -> None:
-            try:
-                answers[number] = measurements[number].run()
-            except BaseException as error:
-                answers[number] = error
-
-        threads = [
-            threading.Thread(target=beside, args=(number,), name=f"direction {number}", daemon=True)
-            for number in range(1, len(measurements))
-        ]
-        for thread in threads:
-            thread.start()
-        beside(0)
-        for thread in threads:
-            thread.join()
-        outcomes = []
-        for number in range(len(measurements)):
-            answer = answers[number]
-            if isinstance(answer, BaseException):
-                raise answer
-            outcomes.append(answer)
-        return outcomes
-
-    def _tick(self, lives: list[Live]) -> None:
+    def _tick(self, lives: list[Live], stop: StopRules) -> None:
         now = time.monotonic()
         if now < self._next_tick:
             return
         self._next_tick = now + TICK_S
+        sweep = self._profile.sweep
         self._hooks.tick(
             Progress(
                 run=self._key,
@@ -252,11 +426,20 @@ class MeasureRun:
                 device=self._profile.device,
                 point=lives[0].point(),
                 longest_bits=lives[0].plan.longest_bits if lives[0].plan else None,
-                stop=self._stop,
+                stop=stop,
                 elapsed_s=(time.time_ns() - self._started) / 1e9,
                 waiting_writes=self._recorder.waiting,
+                outlook=lives[0].outlook(),
+                number=self._now.number,
+                visits=len(self._visits),
+                units=self._conditions.units(),
+                done=tuple(self._done),
+                sensitivity_ber=sweep.sensitivity_ber if sweep else None,
+                until=self._schedule.until(self._done, len(self._visits)),
             )
         )
+
+    # -- the end
 
     def _abandon(self) -> None:
         """After a defect: close the record as failed, as far as that goes; what was committed stays."""
@@ -265,17 +448,15 @@ class MeasureRun:
         key, now = self._key, time.time_ns()
         self._recorder.put(lambda store: store.end_run(key, now, "failed", "fault", None, None))
 
-    def _end(self, outcomes: list[Outcome], fault: tuple[str, str] | None, ended_by: EndedBy) -> RunResult:
+    def _end(self, fault: tuple[str, str] | None, ended_by: EndedBy) -> RunResult:
         ended = time.time_ns()
         status = status_of(ended_by)
         key = self._key
 
         def close(store: Store) -> Run:
-            for number in range(len(self._ways)):
-                outcome = outcomes[number] if outcomes else None
-                why = outcome.ended_by if outcome else ended_by
-                store.end_point(key, number, ended, why, outcome.after if outcome else Tally(), {})
-            store.end_sitting(key, 0, ended, status)
+            for number in sorted(self._begun - self._ended):
+                store.end_point(key, number, ended, ended_by, Tally(), {})
+            store.end_sitting(key, self._sitting, ended, status)
             return store.load(key)
 
         run = replace(self._recorder.ask(close), status=status, ended=ended, ended_by=ended_by)
@@ -287,8 +468,49 @@ class MeasureRun:
         return RunResult(key, assessment, fault)
 
 
+def _what_is_left(profile: Profile, had: Had | None, *, sends: bool) -> StopRules:
+    """Give the stop rules less what a cut point had already."""
+    stop = profile.stop
+    if had is None:
+        return StopRules(stop.bits, stop.seconds, stop.errors)
+    bits = stop.bits
+    if bits is not None:
+        bits = max(8, bits - had.received - (had.lost if sends else 0))
+    seconds = None if stop.seconds is None else max(0.001, stop.seconds - had.duration_s)
+    errors = None if stop.errors is None else max(1, stop.errors - had.errors)
+    return StopRules(bits, seconds, errors)
+
+
+def side_by_side(measurements: list[Measurement]) -> list[Outcome]:
+    """Run measurements at once; every one but the first has a thread of its own."""
+    answers: dict[int, Outcome | BaseException] = {}
+
+    def beside(number: int) -> None:
+        try:
+            answers[number] = measurements[number].run()
+        except BaseException as error:
+            answers[number] = error
+
+    threads = [
+        threading.Thread(target=beside, args=(number,), name=f"direction {number}", daemon=True)
+        for number in range(1, len(measurements))
+    ]
+    for thread in threads:
+        thread.start()
+    beside(0)
+    for thread in threads:
+        thread.join()
+    outcomes = []
+    for number in range(len(measurements)):
+        answer = answers[number]
+        if isinstance(answer, BaseException):
+            raise answer
+        outcomes.append(answer)
+    return outcomes
+
+
 def _worst(outcomes: list[Outcome]) -> EndedBy:
-    """What ended a run: a fault or an interruption in either direction, else what ended the first."""
+    """What ended a point: a fault or an interruption in either direction, else what ended the first."""
     reasons: list[EndedBy] = [outcome.ended_by for outcome in outcomes]
     for bad in ("interrupted", "fault"):
         if bad in reasons:
@@ -296,4 +518,4 @@ def _worst(outcomes: list[Outcome]) -> EndedBy:
     return reasons[0]
 
 
-__all__ = ["Defect", "Hooks", "Live", "MeasureRun", "Progress", "RunResult"]
+__all__ = ["BenchRun", "Defect", "Hooks", "Live", "Progress", "RunResult"]

@@ -16,14 +16,14 @@ from importlib import metadata
 from pathlib import Path
 from typing import Any
 
-from drivers.contract import DriverError, Link
+from drivers.contract import DriverError, EndOfStream, Link
 from drivers.dialogue import run_dialogue
 from drivers.registry import link_class
 from harness.profile import LinkSettings, Profile
 from harness.record import BitOrder, Event, Status
 from harness.signal.patterns import Pattern, parse_pattern
 
-PARK_NOTE = "stopped transmitting"
+QUIET_S = 0.05
 
 
 def bench_host() -> dict[str, Any]:
@@ -130,6 +130,11 @@ class Links:
         finally:
             self._leave()
 
+    def take_events(self) -> list[Event]:
+        """Give what happened since the last call."""
+        events, self.events = self.events, []
+        return events
+
     def reopen(self) -> None:
         """Close and open again, set-up dialogue included; raises while that fails."""
         for link in self.all:
@@ -163,6 +168,21 @@ class Links:
                     step()
                 except DriverError as error:
                     self.events.append(Event("link", None, f"on the way out: {error.what}", time.time_ns()))
+
+
+def flush(link: Link, longest_s: float) -> int:
+    """Receive and drop what is still on its way, until it is quiet; gives the bytes dropped.
+
+    What was sent before a setting changed must not count for what comes after.
+    """
+    if not link.traits.receives or link.traits.finite:
+        return 0
+    buffer = memoryview(bytearray(65_536))
+    dropped, ends = 0, time.monotonic() + longest_s
+    with contextlib.suppress(EndOfStream):
+        while time.monotonic() < ends and (count := link.receive(buffer, QUIET_S)):
+            dropped += count
+    return dropped
 
 
 def status_of(ended_by: str) -> Status:

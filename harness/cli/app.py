@@ -84,9 +84,47 @@ def measure(
 
     Example: bitassay measure profiles/loopback.toml --set device.serial_number=0031
     """
+    from harness.cli.measure import Manner
     from harness.cli.measure import measure as carry_out
 
-    return carry_out(profile, set_ or [], store, as_json=json, quiet=quiet, log=log)
+    return carry_out(profile, set_ or [], Manner(store, json, quiet, log))
+
+
+@app.command()
+def sweep(
+    profile: ProfileArgument,
+    set_: SetOption = None,
+    store: StoreOption = None,
+    json: JsonOption = False,
+    quiet: QuietOption = False,
+    log: LogOption = None,
+) -> int:
+    """Carry out a run with several points: conditions are stepped, each point is measured.
+
+    Example: bitassay sweep profiles/sweep-loopback.toml
+    """
+    from harness.cli.measure import Manner
+    from harness.cli.measure import sweep as carry_out
+
+    return carry_out(profile, set_ or [], Manner(store, json, quiet, log))
+
+
+@app.command()
+def resume(
+    run: RunArgument = "last",
+    store: StoreOption = None,
+    json: JsonOption = False,
+    quiet: QuietOption = False,
+    log: LogOption = None,
+) -> int:
+    """Go on with a run that was cut; a completed one is printed again.
+
+    Example: bitassay resume last
+    """
+    from harness.cli.measure import Manner
+    from harness.cli.measure import resume as carry_out
+
+    return carry_out(run, Manner(store, json, quiet, log))
 
 
 @app.command()

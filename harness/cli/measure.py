@@ -2,21 +2,26 @@
 
 from __future__ import annotations
 
+import os
 import signal
 import sys
 import threading
 import time
 from collections.abc import Iterator, Sequence
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
+from dataclasses import dataclass
 from pathlib import Path
 from types import FrameType
-from typing import TextIO
+from typing import TYPE_CHECKING, TextIO
 
 from harness.assess.assessment import Assessment
 from harness.cli.failure import FAIL, FAULT, INTERRUPTED, PASS, TERMINATED, UNDECIDED, UserError, warn
-from harness.cli.output import open_writing, print_json, store_url
+from harness.cli.output import lock_folder, open_writing, print_json, store_url
 
-LINE_EVERY_S = 5.0
+if TYPE_CHECKING:
+    from harness.bench.run import RunResult
+    from harness.profile import Profile
+    from harness.record import Run
 
 
 class Ending:
@@ -95,41 +100,120 @@ class Log:
             self._file.close()
 
 
-def measure(
-    profile: str, overrides: Sequence[str], store: str | None, *, as_json: bool, quiet: bool, log: Path | None
-) -> int:
+@contextmanager
+def standing_in_for_the_reader() -> Iterator[None]:
+    """Let a reader that has gone (`| head`, a closed terminal) change nothing about the exit status."""
+    try:
+        yield
+    except OSError:
+        with open(os.devnull, "w", encoding="utf-8") as nowhere:
+            for stream in (sys.stdout, sys.stderr):
+                with suppress(OSError, ValueError):
+                    os.dup2(nowhere.fileno(), stream.fileno())
+
+
+@dataclass(frozen=True, slots=True)
+class Manner:
+    """How a run is carried out and printed."""
+
+    store: str | None
+    as_json: bool
+    quiet: bool
+    log: Path | None
+
+
+def measure(profile: str, overrides: Sequence[str], manner: Manner) -> int:
     """Carry out one run and print its result."""
-    from harness.bench.run import Hooks, MeasureRun
-    from harness.cli.page import page
-    from harness.cli.watch import watcher
     from harness.profile import load_profile
 
     loaded = load_profile(Path(profile), overrides)
-    ending, log_file = Ending(), Log(log)
-    where = store_url(store)
-    with open_writing(store) as opened, ending.caught():
+    if loaded.sweep is not None:
+        raise UserError(f"{profile} has a [sweep]: it is more than one point", "use `bitassay sweep` for it")
+    return carry_out(loaded, "measure", manner)
+
+
+def sweep(profile: str, overrides: Sequence[str], manner: Manner) -> int:
+    """Carry out a sweep and print its result."""
+    from harness.profile import load_profile
+
+    loaded = load_profile(Path(profile), overrides)
+    if loaded.sweep is None:
+        raise UserError(f"{profile} has no [sweep]", "use `bitassay measure` for one point, or add a [sweep]")
+    return carry_out(loaded, "sweep", manner)
+
+
+def resume(run: str, manner: Manner) -> int:
+    """Go on with a run that was cut; one that is completed is printed again."""
+    from harness.bench.resumption import prepare
+
+    with open_writing(manner.store) as opened:
+        record = opened.load(opened.find(run))
+        if record.status == "completed":
+            return _print_again(record, manner)
+        profile = prepare(record, lock_folder(store_url(manner.store)))
+    return carry_out(profile, record.command, manner, cut=record)
+
+
+def _print_again(record: Run, manner: Manner) -> int:
+    from harness.assess.run import assess
+    from harness.cli.page import print_page
+
+    assessment = assess(record)
+    if manner.as_json:
+        print_json(assessment.to_json())
+    elif manner.quiet:
+        print(f"{assessment.verdict or 'measured'} {record.key}")
+    else:
+        print_page(assessment, store_url(manner.store), None)
+    return exit_status(assessment, None, False)
+
+
+def carry_out(loaded: Profile, command: str, manner: Manner, cut: Run | None = None) -> int:
+    """Carry out a profile, watched, and print its result."""
+    from harness.bench.run import BenchRun, Hooks
+    from harness.cli.watch import watcher
+
+    as_json, quiet = manner.as_json, manner.quiet
+    ending, log_file = Ending(), Log(manner.log)
+    where = store_url(manner.store)
+    with open_writing(manner.store) as opened, ending.caught():
         try:
-            with watcher(quiet=quiet or as_json) as view:
-                log_file.line(f"begins: {loaded.title or profile}; store {where}")
+            with watcher(
+                quiet=quiet or as_json,
+                title=loaded.title,
+                device=loaded.device,
+                interrupted=ending.event,
+            ) as view:
+                log_file.line(f"begins: {loaded.title or loaded.name}; store {where}")
                 hooks = Hooks(
                     interrupted=ending.event, started=view.started, tick=view.tick, log=log_file.line
                 )
-                result = MeasureRun(loaded, opened, hooks).run()
+                bench = BenchRun(loaded, opened, hooks, lock=lock_folder(where), command=command, cut=cut)
+                result = bench.run()
             status = exit_status(result.assessment, ending.status, result.fault is not None)
             log_file.line(f"ends: run {result.key}, exit status {status}")
         finally:
             log_file.close()
+    with standing_in_for_the_reader():
+        _print_result(result, status, where, view.drawn_on, as_json=as_json, quiet=quiet)
+    return status
+
+
+def _print_result(
+    result: RunResult, status: int, where: str, drawn_on: TextIO | None, *, as_json: bool, quiet: bool
+) -> None:
+    from harness.cli.page import print_page
+
     if as_json:
         print_json(result.assessment.to_json())
     elif quiet:
         print(f"{result.assessment.verdict or 'measured'} {result.key}")
     else:
-        print("\n".join(page(result.assessment, where)))
+        print_page(result.assessment, where, drawn_on)
+    sys.stdout.flush()
     if result.fault is not None:
-        sys.stdout.flush()
         warn(result.fault[0])
         print(f"  {result.fault[1] or '`bitassay check` proves the path before a run'}", file=sys.stderr)
     elif status == FAULT:
         warn("not a single bit came")
         print("  check that something is sent to this port, and the profile's link", file=sys.stderr)
-    return status

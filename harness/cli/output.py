@@ -40,6 +40,12 @@ def open_writing(option: str | None) -> Store:
     return open_store(store_url(option), create=True)
 
 
+def lock_folder(url: str) -> Path:
+    """Say where guardians keep their files: beside a SQLite store, else in results/ here."""
+    path = url.removeprefix("sqlite:///") if url.startswith("sqlite:///") else url
+    return Path(path).parent if "://" not in path else Path.cwd() / "results"
+
+
 def missing_default(option: str | None) -> bool:
     """Whether the store in its default place is meant, and none is there yet."""
     if option is not None or os.environ.get("BITASSAY_STORE"):

@@ -44,7 +44,7 @@ def runs(store: str | None, limit: int | None, *, as_json: bool) -> int:
 def show(run: str, store: str | None, *, as_json: bool) -> int:
     """Show a run."""
     from harness.assess.run import assess
-    from harness.cli.page import page
+    from harness.cli.page import print_page
 
     with open_reading(store) as opened:
         record = opened.load(opened.find(run))
@@ -52,7 +52,7 @@ def show(run: str, store: str | None, *, as_json: bool) -> int:
     if as_json:
         print_json(assessment.to_json())
     else:
-        print("\n".join(page(assessment, store_url(store))))
+        print_page(assessment, store_url(store))
     return 0
 
 

@@ -1,0 +1,64 @@
+"""The points of a run: settings in the order of visiting, and what a resumed run has of them already."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+
+from harness.assess.accumulate import accumulator_for
+from harness.assess.requirement import Requirement
+from harness.profile import Profile
+from harness.record import Point
+from harness.statistics.plans import Plan
+
+
+@dataclass(frozen=True, slots=True)
+class Had:
+    """What a point had when its run was cut."""
+
+    received: int = 0
+    sent: int = 0
+    compared: int = 0
+    errors: int = 0
+    lost: int = 0
+    duration_s: float = 0.0
+    plan: Plan | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class Visit:
+    """A setting to be visited."""
+
+    number: int
+    values: Mapping[str, float] = field(default_factory=dict)
+    reference: bool = False
+
+
+def visits_of(profile: Profile) -> list[Visit]:
+    """List what a profile visits: its sweep's points, or one point without settings."""
+    if profile.sweep is None:
+        return [Visit(0)]
+    sweep = profile.sweep
+    name = sweep.all_axes()[0].instrument
+    return [
+        Visit(number, values, reference=sweep.reference is not None and values == {name: sweep.reference})
+        for number, values in enumerate(sweep.visits())
+    ]
+
+
+def had_by(point: Point, requirement: Requirement | None) -> Had:
+    """Sum up what a point of a cut run had, its plan advanced as far as it was."""
+    acc = accumulator_for(point, requirement)
+    for second in sorted(point.seconds, key=lambda s: s.index):
+        acc.add(second)
+    acc.flush()
+    sums = acc.sums
+    return Had(
+        received=sums.tally.received,
+        sent=sums.sent,
+        compared=sums.tally.compared,
+        errors=sums.tally.errors,
+        lost=sums.bits_lost,
+        duration_s=sums.duration_ns / 1e9,
+        plan=acc.plan,
+    )
