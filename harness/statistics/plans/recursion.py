@@ -173,8 +173,8 @@ def admit(
     """Hold the chance of acceptance at `ber` to `budget`: what would pass it is not accepted.
 
     Looking less often rejects less often, so the consumer's risk of the same stairs may grow. Whether a count
-    is admitted depends on the looks alone, never on what they showed, and so the risk is held exactly. What is
-    left at the last corner is rejected.
+    is admitted depends on the looks alone, never on what they showed, and so the risk is held exactly. What
+    is left at the last corner is rejected.
     """
     admitted: list[Checkpoint] = []
     spent = 0.0
