@@ -197,6 +197,12 @@ class Link(_Opened, ABC):
     def turn(self, to: Literal["send", "receive"]) -> None:
         """Half-duplex links: change direction."""
 
+    def carry(self, what: Literal["payload", "characters"]) -> None:
+        """Say what the bytes are: payload, as after `open`, or the characters of a set-up dialogue.
+
+        The two differ only on ports whose characters have fewer than eight bits.
+        """
+
     def lines(self) -> Mapping[str, bool]:
         """Modem lines as they are now, where known: ``CTS``, ``DCD``, ``DSR``, ``RI``."""
         return {}
@@ -247,6 +253,7 @@ class Instrument(_Opened, ABC):
     settable: bool = True
     readable: bool = False
     unattended: bool = True  # works without a person beside it
+    lasting: bool = True  # what it has set stays when the program dies
 
     def __init__(self, section: Any) -> None:
         self.section = section

@@ -4,8 +4,8 @@ What becomes of bytes that nobody asked for:
 
 - before a step sends, everything that has arrived until then is discarded;
 - what comes after the expected answer stays for the next step, if that one only expects;
-- after a step that had to be repeated, the answers still due to its other attempts are waited for, for as long
-  as the step took and its time-out at most, and discarded;
+- after a step that had to be repeated, the answers still due to its other attempts are waited for, at most
+  for as long as the step took and its time-out, and discarded;
 - at the end everything is discarded until the line has been quiet for 0.1 s (for the time of 20 characters
   on slow links), for 2 s at most.
 
@@ -103,8 +103,12 @@ def run_dialogue(link: Link, steps: Sequence[Step], cancel: Event) -> list[Excha
     if not steps:
         return []
     talk = _Talk(link, cancel)
-    exchanges = [talk.carry_out(step, number) for number, step in enumerate(steps, 1)]
-    talk.discard_until_quiet()
+    link.carry("characters")
+    try:
+        exchanges = [talk.carry_out(step, number) for number, step in enumerate(steps, 1)]
+        talk.discard_until_quiet()
+    finally:
+        link.carry("payload")
     return exchanges
 
 
@@ -138,7 +142,7 @@ class _Talk:
                 ) from None
             attempt += 1
         if attempt > 1 and step.send is not None and step.expect is not None:
-            # The answer may be the first attempt's, so the last attempt's may take as long as all of this did.
+            # The answer may be the first attempt's, so the last one's may take as long as all of this did.
             took_s = monotonic() - start
             self._pass_over(_encoded(step.expect), attempt - 1, monotonic() + took_s + step.timeout_s)
         sent = "" if step.send is None else _shown(_encoded(step.send))

@@ -18,12 +18,14 @@ import serial
 from pydantic import Field, field_validator
 
 from drivers.contract import DriverError, LinkError, LinkLost, Section, Traits
+from drivers.links.characters import Regrouper
 from drivers.links.descriptor import DescriptorLink, pause
 from drivers.links.line_counts import LineCounts, modem_lines
 from drivers.links.port_faults import busy, failed_to_open, gone, holder_of
 from drivers.links.ports import DescriptorPort, Port, RemotePort, is_pseudo_terminal, is_terminal, port_for
 
 _FIFO_CHARACTERS = 16  # what a port's hardware holds after the system's buffer is empty, where it cannot say
+_PIECE_BYTES = 4096  # packed into characters at a time
 _TIOCSERGETLSR = 0x5459  # Linux: whether the transmitter itself is empty
 _TRANSMITTER_EMPTY = 0x01
 
@@ -39,7 +41,9 @@ class SerialSection(Section):
         description="/dev/ttyUSB0, COM3, socket://HOST:PORT, rfc2217://HOST:PORT, hwgrep://PATTERN or loop://.",
     )
     baud: int = Field(115_200, ge=1, le=20_000_000, description="Symbols a second on the line.")
-    data_bits: Literal[5, 6, 7, 8] = Field(8, description="Data bits in a character.")
+    data_bits: Literal[5, 6, 7, 8] = Field(
+        8, description="Data bits in a character; with fewer than 8 the payload's bits are packed into them."
+    )
     parity: Parity = Field("none", description="Parity bit.")
     stop_bits: float = Field(
         1, description="Stop bits after a character.", json_schema_extra={"enum": [1, 1.5, 2]}
@@ -76,12 +80,16 @@ class SerialLink(DescriptorLink):
     def __init__(self, section: SerialSection, nominal_bps: float | None = None) -> None:
         super().__init__(section, nominal_bps)
         self.traits = Traits(
+            whole_bytes=section.data_bits == 8,  # a lost character is so many bits
             transparent=section.flow != "xonxoff",
             holds_back=section.flow != "none" or self._scheme in ("socket", "loop"),
         )
         self._serial: Any = None
         self._port: Port | None = None
         self._counts: LineCounts | None = None
+        self._packer: Regrouper | None = None
+        self._unpacker: Regrouper | None = None
+        self._packed = bytearray()  # characters that were accepted and not yet written
 
     @property
     def label(self) -> str:
@@ -128,6 +136,7 @@ class SerialLink(DescriptorLink):
                 raise
             # pyserial lets errors of many kinds through: its own, the system's, termios's, wrong values.
             raise failed_to_open(self.label, error) from None
+        self.carry("payload")
         self._counts = LineCounts(self._port.fd, self.lines())
         self._reading, self._writing = self._port.waiters(waker)
 
@@ -195,7 +204,7 @@ class SerialLink(DescriptorLink):
         if port is None or self._waker is None:
             return True
         deadline = monotonic() + timeout
-        if not self._wait_until(lambda: not port.unsent(), timeout):
+        if not self._wait_until(lambda: self._all_written(port) and not port.unsent(), timeout):
             return False
         if not isinstance(port, DescriptorPort) or not is_terminal(port.fd) or is_pseudo_terminal(port.fd):
             return True
@@ -204,6 +213,14 @@ class SerialLink(DescriptorLink):
         rest = _FIFO_CHARACTERS * self._character_bits / self.section.baud
         pause(self._waker, max(0.0, min(rest, deadline - monotonic())))
         return monotonic() < deadline
+
+    def carry(self, what: Literal["payload", "characters"]) -> None:
+        """Pack payload into characters of fewer than eight bits, or send characters as they are."""
+        bits = self.section.data_bits
+        packs = what == "payload" and bits < 8
+        self._packer = Regrouper(8, bits) if packs else None
+        self._unpacker = Regrouper(bits, 8) if packs else None
+        self._packed.clear()
 
     def lines(self) -> Mapping[str, bool]:
         """CTS, DCD, DSR, RI; empty for pseudo-terminals and plain sockets, which have none."""
@@ -248,11 +265,40 @@ class SerialLink(DescriptorLink):
 
     def _read(self, buffer: memoryview) -> int:
         assert self._port is not None
-        return self._port.read(buffer)
+        unpacker = self._unpacker
+        if unpacker is None:
+            return self._port.read(buffer)
+        # As many characters as fill the buffer, the bits that wait included; at least one.
+        room = (8 * buffer.nbytes + 7 - unpacker.waiting_bits) // self.section.data_bits
+        characters = bytearray(room)
+        count = self._port.read(memoryview(characters))
+        if not count:
+            return 0
+        payload = unpacker.regroup(characters[:count])
+        if not payload:
+            raise BlockingIOError  # not a whole byte yet
+        buffer.cast("B")[: len(payload)] = payload
+        return len(payload)
 
     def _write(self, data: memoryview) -> int:
         assert self._port is not None
-        return self._port.write(data)
+        if self._packer is None:
+            return self._port.write(data)
+        if not self._all_written(self._port):
+            raise BlockingIOError
+        piece = data.cast("B")[:_PIECE_BYTES]
+        self._packed += self._packer.regroup(piece)
+        self._all_written(self._port)
+        return len(piece)
+
+    def _all_written(self, port: Port) -> bool:
+        """Write packed characters that wait; whether none is left."""
+        with suppress(BlockingIOError):
+            while self._packed:
+                with memoryview(self._packed) as waiting:
+                    count = port.write(waiting)
+                del self._packed[:count]
+        return not self._packed
 
     def _ended(self) -> LinkLost:
         return gone(self._device, None)
