@@ -7,6 +7,7 @@ from .keys import new_key
 from .liveness import this_host
 from .moving import Copied, Upgraded, copy, upgrade
 from .reading import RunLine, Tail
+from .shared import SharedStore, open_for_bench
 from .store import Store, open_store
 
 __all__ = [
@@ -14,6 +15,7 @@ __all__ = [
     "Copied",
     "NoSuchRun",
     "RunLine",
+    "SharedStore",
     "Store",
     "StoreError",
     "StoreLost",
@@ -24,6 +26,7 @@ __all__ = [
     "default_url",
     "digest_of",
     "new_key",
+    "open_for_bench",
     "open_store",
     "this_host",
     "upgrade",

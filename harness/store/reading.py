@@ -174,6 +174,11 @@ class Reading:
         """
         return self._load(key, -1, 0)[0]
 
+    def load_head(self, key: str) -> Run:
+        """Give a run without its seconds and events: who, what, when, and how it stands."""
+        with self._reading() as connection:
+            return head(connection, key, time.time_ns())
+
     def load_tail(self, key: str, after_second: int, after_events: int = 0) -> Tail:
         """Give what came since: seconds numbered over `after_second`, events beyond the first `after_events`.
 

@@ -44,7 +44,8 @@ def old(address: str) -> str:
         migrate(connection, "0001")
         for statement in (
             "INSERT INTO run (id, key, title, command, started, ended, status, ended_by, verdict,"
-            " profile_text, overrides, settings, device, stated) VALUES (1, '01900000-0000-7000-8000-00000000abcd', 'old',"
+            " profile_text, overrides, settings, device, stated)"
+            " VALUES (1, '01900000-0000-7000-8000-00000000abcd', 'old',"
             " 'measure', 5, 9, 'completed', 'plan', 'PASS', 'x', '[]', '{\"requirement\":{\"ber\":1e-06}}',"
             ' \'{"serial_number":"0031","model":"Wader-9"}\', NULL)',
             "INSERT INTO sitting VALUES (1, 0, 5, 9, 'completed', '{}', '{}', 0, 9)",
