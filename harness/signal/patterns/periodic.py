@@ -66,9 +66,7 @@ class PeriodicPattern(Pattern):
     def _make_table(self, order: BitOrder, residue: int) -> NDArray[np.uint8]:
         cycle_bytes = self.period // math.gcd(8, self.period)
         table = pack(self.bits(residue, 8 * cycle_bytes), order)
-        table = np.resize(table, cycle_bytes + VIEW_BYTES)
-        table.flags.writeable = False
-        return table
+        return _repeated(table)
 
 
 class WordPattern(PeriodicPattern):
@@ -133,13 +131,19 @@ class BytesPattern(PeriodicPattern):
         if residue or self.period % 8:
             return super()._make_table(order, residue)
         data = self._cycle_data if order == self._order else swap_order(self._cycle_data)
-        table = np.resize(data ^ np.uint8(255 * self.inverted), len(data) + VIEW_BYTES)
-        table.flags.writeable = False
-        return table
+        return _repeated(data ^ np.uint8(255 * self.inverted))
 
     def opposite(self) -> BytesPattern:
         """The complement of every bit."""
         return BytesPattern(self._data.tobytes(), toggled(self.name), self._order, not self.inverted)
+
+
+def _repeated(cycle: NDArray[np.uint8]) -> NDArray[np.uint8]:
+    """A table that goes on for `VIEW_BYTES` after the cycle's end, read-only."""
+    length = len(cycle) + VIEW_BYTES
+    table = np.tile(cycle, -(-length // len(cycle)))[:length]
+    table.flags.writeable = False
+    return table
 
 
 def least_period(sequence: NDArray[np.uint8]) -> int:
