@@ -9,6 +9,7 @@ import pwd
 import shutil
 import socket
 import subprocess
+import sys
 import tempfile
 from collections.abc import Callable, Iterator
 from pathlib import Path
@@ -21,7 +22,6 @@ from harness.record import Event, Note, Second, Sitting
 from harness.store import (
     SharedStore,
     Store,
-    StoreError,
     StoreLost,
     WrongRevision,
     digest_of,
@@ -42,26 +42,17 @@ class Server:
     """A PostgreSQL server of one's own, to be stopped and started."""
 
     def __init__(self, folder: Path) -> None:
-        self._folder = folder
+        self._folder, self._data = folder, f"{folder}/data"
         with socket.socket() as probe:
             probe.bind(("127.0.0.1", 0))
             self._port = probe.getsockname()[1]
         self.address = f"postgresql+psycopg://postgres@127.0.0.1:{self._port}/postgres"
+        # The server refuses to run as root.
         self._user = pwd.getpwnam("postgres").pw_uid if os.geteuid() == 0 else None
         if self._user is not None:
             os.chown(folder, self._user, -1)
         self._do(
-            "initdb",
-            "-D",
-            f"{folder}/data",
-            "-U",
-            "postgres",
-            "-A",
-            "trust",
-            "-N",
-            "--locale=C",
-            "-E",
-            "UTF8",
+            "initdb", "-D", self._data, "-U", "postgres", "-A", "trust", "-N", "--locale=C", "-E", "UTF8"
         )
         self.start()
 
@@ -70,11 +61,13 @@ class Server:
         quiet = subprocess.DEVNULL
         subprocess.run(command, check=True, user=self._user, cwd=self._folder, stdout=quiet, stderr=quiet)
 
+    @property
+    def running(self) -> bool:
+        return Path(self._data, "postmaster.pid").exists()
+
     def start(self) -> None:
         options = f"-p {self._port} -c listen_addresses=127.0.0.1 -k {self._folder} -c fsync=off"
-        self._do(
-            "pg_ctl", "-D", f"{self._folder}/data", "-l", f"{self._folder}/log", "-w", "-o", options, "start"
-        )
+        self._do("pg_ctl", "-D", self._data, "-l", f"{self._folder}/log", "-w", "-o", options, "start")
 
     def stop(self, how: str = "immediate") -> None:
         with contextlib.suppress(subprocess.CalledProcessError):
@@ -288,8 +281,6 @@ while True:
     k += 1
     time.sleep(0.01)
 """
-    import sys
-
     process = subprocess.Popen(
         [sys.executable, "-c", writer, str(tmp_path / "handover.sqlite")], stdout=subprocess.PIPE, text=True
     )
