@@ -40,7 +40,7 @@ def test_periods_of_all_small_registers_are_those_found_by_stepping():
                 taps = (*inner, stages)
                 assert Register(taps).period == period_by_stepping(taps), taps
                 checked += 1
-    assert checked > 200
+    assert checked > 150
 
 
 @pytest.mark.parametrize("name", ROWS)
@@ -118,7 +118,7 @@ def test_place_of_every_window_of_registers_with_several_cycles(taps):
 
 @pytest.mark.parametrize("taps", [(), (1, 2, 3), (5, 5), (0, 3), (3, 2), (-1, 4), (4, 33), (7,)])
 def test_taps_that_make_no_register_are_refused(taps):
-    with pytest.raises(ValueError, match="tap|register"):
+    with pytest.raises(ValueError, match=r"tap|register"):
         Register(taps)
 
 
