@@ -1,102 +1,114 @@
-"""A run in plain lines: which unit, what was required, verdict, how sure, on how many bits, what happened."""
+"""A run in plain lines, for a pipe, a file or an e-mail, in the same order as on the terminal's page."""
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+import sys
+from collections.abc import Iterator, Sequence
+from typing import TextIO
 
 from harness.assess.assessment import Assessment, PointAssessment
 from harness.assess.words import count, duration, local_date, local_time, percent, rate, ratio
+from harness.cli.view.ink import signs_for, writable
+from harness.cli.view.ruler import ruler
+from harness.cli.view.sheet import Sheet, sheet_of_assessment
 
 EVENTS_SHOWN = 12
-SLIPS_SHOWN = 8
+LABEL = 12  # columns
+WIDTH = 100
 
 
-def unit_name(device: dict[str, str]) -> str:
-    """Name the unit: model and serial number as far as they are known."""
-    words = [device.get("model", ""), device.get("serial_number", "")]
-    return " ".join(word for word in words if word) or "unnamed unit"
+def print_page(a: Assessment, where: str, drawn_on: TextIO | None = None) -> None:
+    """Print a run: as a drawn page on a terminal, in plain lines elsewhere.
+
+    Parameters
+    ----------
+    drawn_on
+        The terminal that showed the run while it went on: its last page is left standing there, also where
+        standard output is no terminal.
+    """
+    from harness.cli.watch import terminal_among
+
+    terminal = terminal_among(sys.stdout)
+    if terminal is None:
+        print_lines(page(a, where))
+    terminal = terminal or drawn_on
+    if terminal is not None:
+        from harness.cli.view import terminal as drawing
+
+        sys.stdout.flush()
+        failed = a.status == "failed" or not a.whole.tally.received
+        drawing.print_page(sheet_of_assessment(a, where), terminal, lines_below=3 if failed else 0)
+
+
+def print_lines(lines: Iterator[str] | Sequence[str]) -> None:
+    """Print lines, free of what a terminal would obey and of what the output cannot carry."""
+    for line in lines:
+        print(writable(line, sys.stdout.encoding))
 
 
 def page(a: Assessment, where: str = "") -> Iterator[str]:
     """Give the lines of a run's page."""
-    yield f"{unit_name(dict(a.device))} — {a.title}" if a.title else unit_name(dict(a.device))
+    sheet = sheet_of_assessment(a)
+    yield f"{sheet.unit} — {sheet.title}" if sheet.title else sheet.unit
     yield f"run {a.run}" if a.run else "no record kept"
     yield ""
-    yield from _requirement(a.whole)
-    yield from verdict_lines(a)
-    yield ""
-    yield from _numbers(a.whole)
-    yield from _happened(a.whole)
+    yield from _entry("required", [*sheet.required, *([sheet.risks] if sheet.risks else [])])
+    yield from _entry("verdict", [sheet.verdict, *sheet.reasons])
+    yield from _entry("took", sheet.to_do)
+    if sheet.points:
+        yield from _entry("points", sheet.points)
+    else:
+        yield ""
+        yield from _numbers(a.whole, sheet)
+        yield from _happened(a.whole)
     if where:
         yield ""
         yield f"record in {where}"
 
 
-def verdict_lines(a: Assessment) -> Iterator[str]:
-    """Give the verdict and its reasons."""
-    if a.verdict is None:
-        word = "nothing required" if a.status != "running" else "going on"
-        yield f"verdict     {word}"
-    else:
-        yield f"verdict     {a.verdict}"
-    for reason in a.reasons:
-        yield f"            {reason}"
-    if a.status not in ("completed", "running"):
-        yield f"            the run was {a.status}"
+def _entry(label: str, lines: Sequence[str]) -> Iterator[str]:
+    for number, line in enumerate(lines):
+        yield f"{label if number == 0 else '':<{LABEL}}{line}"
 
 
-def _requirement(p: PointAssessment) -> Iterator[str]:
-    if p.plan is None:
-        yield "required    nothing: measured only"
-        return
-    plan = p.plan
-    accepts = "" if plan["accept_errors"] is None else f", at most {count(plan['accept_errors'], 'error')}"
-    yield f"required    BER under {ratio(plan['ber'])} with {percent(plan['confidence'])} confidence"
-    yield (
-        f"plan        {plan['kind']}, {count(plan['longest_bits'], 'bit')} at most{accepts}; risks: "
-        f"{percent(plan['consumer_risk'])} that a unit at the limit passes, "
-        f"{percent(plan['producer_risk'])} that one {plan['margin']:g} times better fails"
-    )
-
-
-def _numbers(p: PointAssessment) -> Iterator[str]:
-    t = p.tally
-    yield f"BER         {ratio(p.ber)}   ({count(t.errors, 'error')} in {count(t.compared, 'bit')} compared)"
-    if p.bounds is not None:
+def _numbers(p: PointAssessment, sheet: Sheet) -> Iterator[str]:
+    yield from _entry("BER", [sheet.ber])
+    if sheet.bar is not None:
+        for line in ruler(sheet.bar, WIDTH - LABEL, signs_for(sys.stdout.encoding)):
+            yield (" " * LABEL + "".join(text for text, _ink in line)).rstrip()
+    if p.bounds is not None and p.tally.compared:
         b = p.bounds
-        yield (
-            f"bounds      {ratio(b.lower)} to {ratio(b.upper)} at {percent(b.confidence)}, two-sided; "
-            f"{b.side} bound {ratio(b.value)} at {percent(b.deciding_confidence)}, one-sided ({b.method})"
+        yield from _entry(
+            "bounds",
+            [
+                f"{ratio(b.lower)} to {ratio(b.upper)}, two-sided, {percent(b.confidence)} confidence",
+                f"{b.side} bound {ratio(b.value)}, one-sided, {percent(b.deciding_confidence)} confidence",
+                f"method: {b.method}",
+            ],
         )
-    if t.errors:
-        yield (
-            f"errors      {t.ones_as_zeros} ONEs received as ZEROs, {t.zeros_as_ones} ZEROs received as ONEs"
-        )
-    yield (
-        f"bits        {t.received:,} received = {t.compared:,} compared + {t.unaligned:,} unaligned"
-        f"; {p.bits_sent:,} sent".replace(",", "\u202f")
-    )
-    pattern = p.pattern + (" inverted" if p.inverted else "")
-    also = f" (fits as well: {', '.join(p.alternatives)})" if p.alternatives else ""
-    yield f"pattern     {pattern}, {p.bit_order} first{also}"
-    speed = f" at {rate(p.rate_bps)}" if p.rate_bps else ""
-    ended = f", ended by {p.ended_by}" if p.ended_by else ""
-    yield f"time        {local_date(p.started)}, {duration(p.seconds)}{speed}{ended}"
-    if p.delay:
-        seconds = "" if p.delay.get("seconds") is None else f", {duration(float(p.delay['seconds']))}"
-        modulo = f" (modulo {p.delay['modulo']:,} bits)" if p.delay.get("modulo") else ""
-        yield f"loop delay  {count(int(p.delay['bits']), 'bit')}{seconds}{modulo}"
-    for a in p.availability:
-        if a.seconds:
-            yield (
-                f"{a.standard:<11} {count(a.seconds, 'second')}: {a.available} available, "
-                f"{a.errored} errored, {a.severely_errored} severely errored, {a.unavailable} unavailable"
-            )
+    yield from _entry("bits", [*sheet.bits, *sheet.details])
+    pattern = p.pattern + (", received inverted" if p.inverted else "")
+    also = f"; fits as well: {', '.join(p.alternatives)}" if p.alternatives else ""
+    yield from _entry("pattern", [f"{pattern}, {p.bit_order} first{also}"])
+    nominal = f"; nominal rate {rate(p.rate_bps)}" if p.rate_bps else ""
+    yield from _entry("began", [f"{local_date(p.started)}{nominal}"])
+    yield from _entry("loop delay", _delay(p))
     if p.after_decision.received:
         after = p.after_decision
-        yield f"afterwards  {count(after.received, 'bit')} with {count(after.errors, 'error')}: not counted"
-    for remark in p.remarks:
-        yield f"remark      {remark}"
+        words = f"{count(after.received, 'bit')} with {count(after.errors, 'error')} came after the decision"
+        yield from _entry("afterwards", [f"{words} and are in no figure"])
+    yield from _entry("remarks", list(p.remarks))
+
+
+def _delay(p: PointAssessment) -> list[str]:
+    if not p.delay or p.delay.get("bits") is None:
+        return []
+    words = count(int(p.delay["bits"]), "bit")
+    if p.delay.get("seconds") is not None:
+        words += f", {duration(float(p.delay['seconds']))}"
+    if p.delay.get("modulo"):
+        words += f", or longer by any multiple of {count(int(p.delay['modulo']), 'bit')}"
+    return [words]
 
 
 def _happened(p: PointAssessment) -> Iterator[str]:
@@ -104,10 +116,9 @@ def _happened(p: PointAssessment) -> Iterator[str]:
         return
     yield ""
     yield "what happened"
-    shown = [e for e in p.events if e.kind != "delay"]
-    skipped = len(shown) - EVENTS_SHOWN
+    skipped = len(p.events) - EVENTS_SHOWN
     half = EVENTS_SHOWN // 2
-    for number, event in enumerate(shown):
+    for number, event in enumerate(p.events):
         if skipped > 0 and number == half:
             yield f"  … {count(skipped, 'further event')}; `bitassay show --json` lists them"
         if skipped > 0 and half <= number < half + skipped:

@@ -1,48 +1,145 @@
-"""What is seen while a run goes on: a plain line every few seconds, or the terminal view."""
+"""What is seen while a run goes on: the terminal view where there is a terminal for it, else plain lines."""
 
 from __future__ import annotations
 
 import sys
+import threading
 import time
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from contextlib import contextmanager
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, TextIO
 
 from harness.assess.words import count, duration, ratio
+from harness.cli.view.ink import writable
 
 if TYPE_CHECKING:
     from harness.bench.run import Progress
+    from harness.cli.view.sheet import Sheet
+    from harness.cli.view.terminal import LivePage
 
 LINE_EVERY_S = 5.0
+QUIET_S = 1.5  # without news from the bench for so long, the run is being closed
 
 
 class Watcher:
     """Sees nothing: for --quiet and --json."""
 
+    drawn_on: TextIO | None = None  # the terminal that a page was drawn on, for the final one
+
+    def start(self) -> None:
+        """Begin."""
+
     def started(self, key: str) -> None:
         """Take the run's key."""
 
     def tick(self, progress: Progress) -> None:
-        """Take the state of the run, several times a second."""
+        """Take the state of the run, several times a second; never waits."""
+
+    def stop(self) -> None:
+        """End; nothing is shown any more."""
 
 
 class LineWatcher(Watcher):
-    """A plain line every few seconds, on standard error."""
+    """A plain line every few seconds, on standard error.
 
-    def __init__(self) -> None:
-        self._next = time.monotonic() + LINE_EVERY_S
+    A thread of its own writes: a reader that takes nothing, or has gone, must not hold up the run.
+    """
+
+    def __init__(self, stream: TextIO, every_s: float = LINE_EVERY_S) -> None:
+        self._stream = stream
+        self._every_s = every_s
+        self._latest: Progress | None = None
+        self._key = ""
+        self._over = threading.Event()
+        self._thread = threading.Thread(target=self._run, name="lines", daemon=True)
+
+    def start(self) -> None:
+        """Begin to write."""
+        self._thread.start()
 
     def started(self, key: str) -> None:
-        """Say the run's key."""
-        print(f"run {key}", file=sys.stderr)
+        """Take the run's key, to be written first."""
+        self._key = key
 
     def tick(self, progress: Progress) -> None:
-        """Print a line when it is time."""
+        """Take the state of the run."""
+        self._latest = progress
+
+    def stop(self) -> None:
+        """End, with what is being written; a reader that takes nothing is not waited for."""
+        self._over.set()
+        self._thread.join(1.0)
+
+    def _run(self) -> None:
+        try:
+            said = False
+            next_at = time.monotonic() + self._every_s
+            over = False
+            while not over:
+                over = self._over.wait(0.05)
+                if self._key and not said:
+                    said = True
+                    self._say(f"run {self._key}")
+                now = time.monotonic()
+                if self._latest is not None and now >= next_at and not over:
+                    next_at = now + self._every_s
+                    self._say(progress_line(self._latest))
+        except (OSError, ValueError):
+            return  # nobody reads any more: the run goes on unseen
+
+    def _say(self, line: str) -> None:
+        self._stream.write(writable(line, self._stream.encoding) + "\n")
+        self._stream.flush()
+
+
+class PageWatcher(Watcher):
+    """The terminal view."""
+
+    def __init__(
+        self, stream: TextIO, title: str, device: Mapping[str, str], interrupted: threading.Event
+    ) -> None:
+        self.drawn_on = stream
+        self._title = title
+        self._device = device
+        self._interrupted = interrupted
+        self._latest: tuple[Progress, float] | None = None
+        self._newest = (-1, time.monotonic())  # the newest decided second, and when it was first seen
+        self._live: LivePage | None = None
+
+    def start(self) -> None:
+        """Begin to draw."""
+        from harness.cli.view.terminal import LivePage
+
+        assert self.drawn_on is not None
+        self._live = LivePage(self.drawn_on, self._fill)
+        self._live.start()
+
+    def tick(self, progress: Progress) -> None:
+        """Take the state of the run; the drawing thread shows it."""
         now = time.monotonic()
-        if now < self._next:
-            return
-        self._next = now + LINE_EVERY_S
-        print(progress_line(progress), file=sys.stderr)
+        index = progress.point.recent[-1][0] if progress.point.recent else -1
+        if index != self._newest[0]:
+            self._newest = (index, now)
+        self._latest = (progress, now)
+
+    def stop(self) -> None:
+        """Give the terminal back as it was."""
+        if self._live is not None:
+            self._live.stop()
+
+    def _fill(self, now_ns: int) -> Sheet:
+        from harness.cli.view.sheet import sheet_before, sheet_of_progress
+
+        if self._latest is None:
+            return sheet_before(self._title, self._device, now_ns)
+        progress, at = self._latest
+        closing = ""
+        if self._interrupted.is_set():
+            closing = "interrupted: what was measured is being closed and kept"
+        elif time.monotonic() - at > QUIET_S:
+            closing = "nothing more is sent; what is still on its way is waited for"
+        behind_s = max(0, int(time.monotonic() - self._newest[1] - 1.0))  # a second takes a second
+        return sheet_of_progress(progress, now_ns, closing=closing, behind_s=behind_s)
 
 
 def progress_line(progress: Progress) -> str:
@@ -50,22 +147,59 @@ def progress_line(progress: Progress) -> str:
     p = progress.point
     t = p.tally
     parts = [
-        duration(progress.elapsed_s),
+        duration(round(progress.elapsed_s)),
         f"{count(t.errors, 'error')} in {count(t.compared, 'bit')}",
-        f"BER {ratio(p.ber)}",
+        f"BER {ratio(p.ber)}" if t.compared else "nothing compared yet",
     ]
     if progress.longest_bits:
-        parts.append(f"{100 * t.compared / progress.longest_bits:.0f} % of the plan's longest")
+        parts.append(f"{int(100 * t.compared / progress.longest_bits)} % of the plan's longest")
     if t.unaligned:
         parts.append(f"{count(t.unaligned, 'bit')} unaligned")
     if p.slip_count:
         parts.append(count(p.slip_count, "slip"))
+    if progress.outlook.against:
+        parts.append(f"no PASS any more: {progress.outlook.against[0]}")
     if p.events:
         parts.append(p.events[-1].text)
     return " · ".join(parts)
 
 
 @contextmanager
-def watcher(*, quiet: bool) -> Iterator[Watcher]:
-    """Choose what watches a run."""
-    yield Watcher() if quiet else LineWatcher()
+def watcher(
+    *,
+    quiet: bool,
+    title: str = "",
+    device: Mapping[str, str] | None = None,
+    interrupted: threading.Event | None = None,
+) -> Iterator[Watcher]:
+    """Choose what watches a run: nothing, the terminal view, or plain lines on standard error."""
+    view = _chosen(quiet, title, device or {}, interrupted or threading.Event())
+    view.start()
+    try:
+        yield view
+    finally:
+        view.stop()
+
+
+def _chosen(quiet: bool, title: str, device: Mapping[str, str], interrupted: threading.Event) -> Watcher:
+    if quiet:
+        return Watcher()
+    terminal = terminal_among(sys.stderr, sys.stdout)
+    if terminal is None:
+        return LineWatcher(sys.stderr)
+    return PageWatcher(terminal, title, device, interrupted)
+
+
+def terminal_among(*streams: TextIO) -> TextIO | None:
+    """Find the first stream that is a terminal fit for a page; rich is not imported where there is none."""
+    for stream in streams:
+        try:
+            if not stream.isatty():
+                continue
+        except ValueError:
+            continue
+        from harness.cli.view.terminal import can_show
+
+        if can_show(stream):
+            return stream
+    return None

@@ -1,13 +1,14 @@
-"""What is still to do and until when: the plan's bits and the profile's limits, at the rate of the last minute."""
+"""What is still to do and until when: the plan's bits and the profile's limits, at the last minute's rate."""
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import datetime
 from typing import TYPE_CHECKING
 
-from harness.assess.words import count, duration, rate, ratio
+from harness.assess.words import count, duration
 from harness.record import Tally
 
 if TYPE_CHECKING:
@@ -53,17 +54,22 @@ def moment(at_ns: float, now_ns: int) -> str:
 
 
 def until(seconds: float, now_ns: int) -> str:
-    """Write how long something takes, and until when: ``about 43 s, until 10:42:50``."""
-    words = f"about {duration(seconds if seconds < 10 else round(seconds))}"
+    """Write how long something takes, and until when: ``about 43 s: until 10:42:50``."""
+    words = f"about {duration(round(seconds, 1) if seconds < 10 else round(seconds))}"
     if seconds > _FAR_S:
         return f"{words}: too long for one run"
-    return f"{words}, until {moment(now_ns + seconds * 1e9, now_ns)}"
+    return f"{words}: until {moment(now_ns + seconds * 1e9, now_ns)}"
 
 
-def still_to_do(progress: Progress, now_ns: int) -> list[str]:
-    """Say what is still to do and until when, the plan first."""
+def still_to_do(progress: Progress, now_ns: int, *, behind_s: int = 0) -> list[str]:
+    """Say what is still to do and until when, the plan first.
+
+    Nothing is foretold of the plan when the newest second lies `behind_s` seconds back.
+    """
     p = progress.point
     pace = rates(p.recent, p.rate_bps)
+    if behind_s >= STALLED_S:
+        pace = replace(pace, stalled=True)
     lines = list(_of_the_plan(progress, pace, now_ns))
     limits = sorted(_limits(progress, pace, now_ns), key=lambda limit: limit.seconds)
     if not lines and not limits:
@@ -72,11 +78,11 @@ def still_to_do(progress: Progress, now_ns: int) -> list[str]:
     if limits and lines and not progress.outlook.decided:
         first = limits[0]
         if plan_s is not None and first.seconds < plan_s:
-            lines.append(f"{first.words}: that may come before the plan decides")
-        else:
-            lines.append(f"{first.words} at the latest")
+            lines.append(f"{first.words}, perhaps before the plan decides")
+        elif first.seconds < math.inf:
+            lines.append(f"at the latest {first.words}")
     elif limits and not lines:
-        lines = [f"{limit.words}" for limit in limits[:2]]
+        lines = [limit.words for limit in limits[:2]]
     return lines
 
 
@@ -87,20 +93,18 @@ def _of_the_plan(progress: Progress, pace: Rates, now_ns: int) -> Iterator[str]:
     if outlook.decided:
         yield "the plan has decided; what is still on its way is taken in, then the record is closed"
         return
-    compared = progress.point.tally.compared
     aim = outlook.accept_at or int(plan["longest_bits"])
-    left = max(0, aim - compared)
+    left = max(0, aim - progress.point.tally.compared)
     if outlook.accept_at is None:
         what = f"{count(left, 'bit')} to the plan's end"
     elif plan["kind"] == "sequential":
         what = f"{count(left, 'bit')} to a PASS if no more errors come"
     else:
-        what = f"{count(left, 'bit')} until the plan decides"
-    done = f" ({int(100 * compared / aim)} % done)" if compared else ""
+        what = f"{count(left, 'bit')} to the decision"
     if pace.stalled or pace.compared_bps is None:
-        yield f"{what}{done}; no telling when while nothing can be compared"
+        yield f"{what}: no forecast while none can be compared"
     else:
-        yield f"{what}{done}: {until(left / pace.compared_bps, now_ns)}"
+        yield f"{what}, {until(left / pace.compared_bps, now_ns)}"
     if outlook.on_average is not None and outlook.accept_at is not None:
         yield (
             f"a good unit takes {count(round(outlook.on_average), 'bit')} on average, "
@@ -118,25 +122,24 @@ def _plan_seconds(progress: Progress, pace: Rates) -> float | None:
 
 @dataclass(frozen=True, slots=True)
 class _Limit:
-    seconds: float  # from now
+    seconds: float  # from now; infinite where it cannot be told
     words: str
 
 
 def _limits(progress: Progress, pace: Rates, now_ns: int) -> Iterator[_Limit]:
-    """Give the profile's limits that can be told in time."""
+    """Give the profile's limits, with the time that each may end the run."""
     stop, p = progress.stop, progress.point
     if stop.seconds is not None:
         left = max(0.0, stop.seconds - progress.elapsed_s)
-        words = f"the profile's limit of {duration(stop.seconds)} ends it at {moment(now_ns + left * 1e9, now_ns)}"
-        if left <= _FAR_S:
-            yield _Limit(left, words)
-    if stop.bits is not None and pace.received_bps:
-        done = p.bits_sent or p.tally.received
-        left = max(0, stop.bits - done) / pace.received_bps
-        yield _Limit(left, f"the profile's limit of {count(stop.bits, 'bit')} ends it: {until(left, now_ns)}")
-    if stop.errors is not None and pace.errors_per_s:
-        left = max(0, stop.errors - p.tally.errors) / pace.errors_per_s
-        yield _Limit(left, f"the profile's limit of {count(stop.errors, 'error')} ends it: {until(left, now_ns)}")
-
-
-__all__ = ["Rates", "moment", "rate", "rates", "ratio", "still_to_do", "until"]
+        when = "" if left > _FAR_S else f" at {moment(now_ns + left * 1e9, now_ns)}"
+        yield _Limit(left, f"the limit of {duration(stop.seconds)} ends it{when}")
+    counted = (
+        (stop.bits, p.bits_sent or p.tally.received, pace.received_bps, "bit"),
+        (stop.errors, p.tally.errors, pace.errors_per_s, "error"),
+    )
+    for limit, done, speed, noun in counted:
+        if limit is None:
+            continue
+        words = f"the limit of {count(limit, noun)} ends it"
+        left = max(0, limit - done) / speed if speed else math.inf
+        yield _Limit(left, words if left == math.inf else f"{words} in {until(left, now_ns)}")

@@ -30,6 +30,7 @@ class Signs:
     bar: str
     bar_from_middle: str
     bar_to_middle: str
+    fading: str
     onwards: str
     measured: str
     clean: str
@@ -41,7 +42,7 @@ class Signs:
 LINES = Signs(
     margin="│",
     rule="─",
-    crossing="┼",
+    crossing="┬",
     tick="┴",
     ruler="─",
     flag="▼",
@@ -50,9 +51,10 @@ LINES = Signs(
     bar="█",
     bar_from_middle="▐",
     bar_to_middle="▌",
+    fading="░",
     onwards="→",
     measured="◆",
-    clean="·",
+    clean=".",
     heights="▁▂▃▄▅▆▇█",
     unaligned="?",
     silent="-",
@@ -69,6 +71,7 @@ LETTERS = Signs(
     bar="=",
     bar_from_middle="=",
     bar_to_middle="=",
+    fading="-",
     onwards=">",
     measured="o",
     clean=".",

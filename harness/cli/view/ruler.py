@@ -10,7 +10,7 @@ import math
 from dataclasses import dataclass
 
 from harness.assess.words import ratio
-from harness.cli.view.ink import PLAIN, RED, STRONG, Line, Signs, Span
+from harness.cli.view.ink import BOXED, PLAIN, RED, STRONG, Line, Signs, Span
 
 DECADES = 15
 MOST_COLUMNS = 10  # of a decade
@@ -26,6 +26,7 @@ class Bar:
     measured: float | None = None
     required: float | None = None
     against: bool = False  # the bar speaks against the unit
+    fades_from: float | None = None  # an open side: where the bar need not be drawn full any more
 
 
 def columns_of_a_decade(width: int) -> int:
@@ -73,17 +74,25 @@ def _bar(bar: Bar, mark: int | None, decade: int, signs: Signs) -> Line:
     cells = [" "] * length
     for column in range(first // 2, min((last + 1) // 2, length)):
         left, right = 2 * column >= first, 2 * column + 2 <= last
-        cells[column] = signs.bar if left and right else signs.bar_to_middle if left else signs.bar_from_middle
+        cells[column] = (
+            signs.bar if left and right else signs.bar_to_middle if left else signs.bar_from_middle
+        )
+        if bar.fades_from is not None and _faded(column, _column(bar.fades_from, decade), bar):
+            cells[column] = signs.fading
     inks = [RED if bar.against else STRONG] * length
     if mark is not None:
         cells[mark], inks[mark] = signs.mark, STRONG
     if bar.measured:
         column = _column(bar.measured, decade)
-        cells[column], inks[column] = signs.measured, STRONG
+        cells[column], inks[column] = signs.measured, BOXED if cells[column] == signs.bar else STRONG
     spans = _joined(cells, inks)
     if bar.lower <= 0:
         spans.append((f" {signs.onwards} 0", STRONG))
     return tuple(spans)
+
+
+def _faded(column: int, edge: int, bar: Bar) -> bool:
+    return column > edge if bar.lower <= 0 else column < edge
 
 
 def _true_to_the_mark(bar: Bar, mark: int, first: int, last: int) -> tuple[int, int]:

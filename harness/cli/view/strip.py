@@ -10,10 +10,13 @@ from harness.cli.view.ink import PLAIN, RED, Line, Signs
 from harness.record import Tally
 
 SECONDS = 60
-_LEAST_TOP = 8  # errors at the strip's top, so that a single error does not fill it
+_LEAST_TOP = 10  # errors at the strip's top, so that a single error does not fill it
+_LEAST_STEP = 4  # eighths of a row: a single error is seen at a glance
 
 
-def strip(recent: Sequence[tuple[int, Tally]], width: int, rows: int, signs: Signs) -> list[Line]:
+def strip(
+    recent: Sequence[tuple[int, Tally]], width: int, rows: int, signs: Signs, *, behind_s: int = 0
+) -> list[Line]:
     """Draw the strip, the newest second on the right.
 
     Parameters
@@ -22,14 +25,19 @@ def strip(recent: Sequence[tuple[int, Tally]], width: int, rows: int, signs: Sig
         (index, tally) of seconds, ascending; an index that is missing was no second of the run.
     width, rows
         Room in columns and rows; the height of a column grows with the logarithm of its errors.
+    behind_s
+        Seconds between the newest and now, which stay empty.
     """
     each = max(1, min(width // SECONDS, 3))
-    seconds = _by_second(recent, min(SECONDS, width // each))
+    seconds = _by_second(recent, min(SECONDS, width // each), behind_s)
     top = max(_LEAST_TOP, *(t.errors for t in seconds if t is not None), 0)
     columns = [_column(tally, top, rows, signs) for tally in seconds]
     lines: list[Line] = []
     for row in range(rows):
-        spans = [(column[row] * each, RED if _wrong(t) else PLAIN) for column, t in zip(columns, seconds, strict=True)]
+        spans = [
+            (column[row] * each, RED if _wrong(t) else PLAIN)
+            for column, t in zip(columns, seconds, strict=True)
+        ]
         lines.append(_merge(spans))
     return lines
 
@@ -40,31 +48,34 @@ def strip_width(width: int) -> int:
     return each * min(SECONDS, width // each)
 
 
-def strip_words(recent: Sequence[tuple[int, Tally]], signs: Signs) -> str:
+def strip_words(recent: Sequence[tuple[int, Tally]], signs: Signs, *, behind_s: int = 0) -> str:
     """Say in words what the strip shows."""
-    seconds = [t for t in _by_second(recent, SECONDS) if t is not None]
+    seconds = [t for t in _by_second(recent, SECONDS, behind_s) if t is not None]
+    waiting = f"the last {count(behind_s, 'second')}: not decided yet" if behind_s else ""
     if not seconds:
-        return "no second is complete yet"
+        return waiting or "no second is complete yet"
     errors = sum(t.errors for t in seconds)
-    span = f"the last {count(len(seconds), 'second')}" if len(seconds) > 1 else "the last second"
-    worst = max(t.errors for t in seconds)
-    parts = [f"no error in {span}" if not errors else f"{count(errors, 'error')} in {span}"]
-    if errors and len(seconds) > 1:
-        parts[0] += f", at most {count(worst, 'error').split()[0]} in one"
-    silent = sum(1 for t in seconds if not t.received)
-    unaligned = sum(1 for t in seconds if t.received and _mostly_unaligned(t))
-    if unaligned:
+    compared = sum(1 for t in seconds if t.compared)
+    span = count(compared, "second")
+    if not compared:
+        parts = [f"none compared in {count(len(seconds), 'second')}"]
+    elif not errors:
+        parts = [f"no error in {span}"]
+    else:
+        worst = f"{max(t.errors for t in seconds):,}".replace(",", "\u202f")
+        parts = [f"{count(errors, 'error')} in {span}, at most {worst} in one"]
+    if any(t.received and _mostly_unaligned(t) for t in seconds):
         parts.append(f"{signs.unaligned} not aligned")
-    if silent:
+    if not all(t.received for t in seconds):
         parts.append(f"{signs.silent} nothing came")
-    return "   ".join(parts)
+    return "   ".join([*parts, waiting] if waiting else parts)
 
 
-def _by_second(recent: Sequence[tuple[int, Tally]], length: int) -> list[Tally | None]:
-    """Lay the seconds out by their index; the newest is the last."""
+def _by_second(recent: Sequence[tuple[int, Tally]], length: int, behind_s: int) -> list[Tally | None]:
+    """Lay the seconds out by their index, the newest `behind_s` from the end."""
     row: list[Tally | None] = [None] * length
     if recent:
-        newest = recent[-1][0]
+        newest = recent[-1][0] + behind_s
         for index, tally in recent:
             if newest - index < length:
                 row[length - 1 - (newest - index)] = tally
@@ -90,7 +101,8 @@ def _column(tally: Tally | None, top: int, rows: int, signs: Signs) -> str:
     if not tally.errors:
         return " " * (rows - 1) + signs.clean
     steps = len(signs.heights)
-    level = 1 + round((steps * rows - 1) * math.log(tally.errors) / math.log(top))
+    least = min(_LEAST_STEP, steps * rows)
+    level = least + round((steps * rows - least) * math.log(tally.errors) / math.log(top))
     full, rest = divmod(level, steps)
     column = (signs.heights[rest - 1] if rest else "") + signs.heights[-1] * full
     return column.rjust(rows)

@@ -1,0 +1,225 @@
+"""Draws a sheet as a page of a lab notebook: questions and times in the margin, the answers beside them."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+
+from rich.cells import cell_len, set_cell_size
+from rich.text import Text
+
+from harness.assess.words import local_time
+from harness.cli.view.ink import BOXED, PLAIN, RED, STRONG, Line, Signs, clean
+from harness.cli.view.ruler import ruler
+from harness.cli.view.sheet import Sheet
+from harness.cli.view.strip import strip, strip_width, strip_words
+from harness.record import Event
+
+MARGIN = 8  # columns: a time of day
+FEWEST_EVENTS = 2
+ALARMS = frozenset(
+    ("alignment_lost", "slip", "link_lost", "fault", "host_overrun", "never_returned", "inversion")
+)
+_ASCII = str.maketrans({"\u202f": " ", "—": "-", "–": "-", "·": ";", "…": ".", "→": ">", "−": "-"})
+
+
+@dataclass(frozen=True, slots=True)
+class Layout:
+    """How much room the parts of a page take that can do with less."""
+
+    details: bool
+    gaps: bool
+    strip_rows: int
+    lines_each: int  # of a reason or a remark, at most
+    remarks: int
+
+
+LAYOUTS = (
+    Layout(True, True, 3, 4, 4),
+    Layout(True, True, 2, 3, 3),
+    Layout(False, True, 2, 3, 2),
+    Layout(False, True, 1, 2, 1),
+    Layout(False, False, 2, 2, 1),
+    Layout(False, False, 1, 2, 1),
+    Layout(False, False, 1, 1, 1),
+    Layout(False, False, 0, 1, 0),
+)
+
+
+class Notebook:
+    """Draws sheets for a terminal of a given size."""
+
+    def __init__(self, width: int, height: int, signs: Signs) -> None:
+        self.width = max(width, 20)
+        self.height = max(height, 3)
+        self.signs = signs
+        self._room = self.width - MARGIN - 4
+
+    def draw(self, sheet: Sheet, *, whole: bool = False) -> list[Text]:
+        """Draw a page of at most `height` lines; `whole`: as many as it needs, for a page that stays."""
+        for layout in LAYOUTS:
+            head, tail = self._head(sheet, layout), self._tail(sheet)
+            wanted = min(FEWEST_EVENTS, len(sheet.events))
+            room = self.height - len(head) - len(tail)
+            if room >= wanted:
+                break
+        events = self._events(sheet.events, max(room, wanted if whole else 0))
+        lines = [*head, *events, *tail]
+        if whole or len(lines) <= self.height:
+            return lines
+        return lines[: self.height]
+
+    # -- parts
+
+    def _head(self, sheet: Sheet, layout: Layout) -> list[Text]:
+        gap = [self._entry("", ((("", PLAIN)),))] if layout.gaps else []
+        lines = [self._heading(sheet), self._rule()]
+        lines += self._words("required", sheet.required, layout.lines_each)
+        if layout.details and sheet.risks:
+            lines += self._words("", [sheet.risks], 2)
+        lines += self._verdict(sheet, layout)
+        lines += gap
+        lines += self._words("points", sheet.points, layout.lines_each)
+        if sheet.bar is not None:
+            lines += self._words("BER", [sheet.ber], 2)
+            lines += [self._entry("", line) for line in ruler(sheet.bar, self._room, self.signs)]
+            lines += gap
+            lines += self._words("bits", [*sheet.bits, *(sheet.details if layout.details else ())], 2)
+            lines += self._strip(sheet, layout)
+        lines += gap
+        lines += self._words(sheet.to_do_label, sheet.to_do, 2)
+        shown = list(sheet.remarks)[: layout.remarks]
+        lines += self._words("remark", shown, layout.lines_each)
+        return [*lines, *gap]
+
+    def _tail(self, sheet: Sheet) -> list[Text]:
+        return self._words("", sheet.foot, 2)
+
+    def _heading(self, sheet: Sheet) -> Text:
+        unit, title = self._fit_words(sheet.unit), self._fit_words(sheet.title)
+        corner = self._fit_words(sheet.corner)
+        room = self.width - cell_len(corner) - 2
+        words = f"{unit} — {title}" if title else unit
+        text = Text(" " + _shorten(self._letters(words), room - 1), style=STRONG, no_wrap=True)
+        text.append(" " * max(0, self.width - 1 - text.cell_len - cell_len(corner)))
+        text.append(self._letters(corner))
+        return text
+
+    def _rule(self) -> Text:
+        s = self.signs
+        return Text(s.rule * (MARGIN + 1) + s.crossing + s.rule * (self.width - MARGIN - 2), no_wrap=True)
+
+    def _verdict(self, sheet: Sheet, layout: Layout) -> list[Text]:
+        ink = BOXED if sheet.stamped else RED if sheet.against else STRONG
+        word = f" {sheet.verdict} " if sheet.stamped else sheet.verdict
+        lines = []
+        if sheet.stamped:
+            lines.append(self._entry("verdict", ((word, ink),)))
+        else:
+            wrapped = wrap(self._fit_words(word), self._room, 2)
+            lines += [
+                self._entry("verdict" if number == 0 else "", ((part, ink),))
+                for number, part in enumerate(wrapped)
+            ]
+        return lines + self._words("", sheet.reasons, layout.lines_each)
+
+    def _strip(self, sheet: Sheet, layout: Layout) -> list[Text]:
+        if not layout.strip_rows:
+            return []
+        rows = strip(sheet.recent, self._room, layout.strip_rows, self.signs, behind_s=sheet.behind_s)
+        labels = ["errors/s"] if len(rows) == 1 else [*[""] * (len(rows) - 2), "errors", "a second"]
+        lines = [self._entry(label, row) for label, row in zip(labels, rows, strict=True)]
+        first, last = sheet.strip_ends
+        between = strip_width(self._room) - len(first) - len(last)
+        lines.append(self._entry("", ((first + " " * max(1, between) + last, PLAIN),)))
+        return lines + self._words("", [strip_words(sheet.recent, self.signs, behind_s=sheet.behind_s)], 1)
+
+    def _events(self, events: Sequence[Event], rows: int) -> list[Text]:
+        """Give the latest events, equal ones in a row joined, in as many rows as there are."""
+        groups = list(_grouped(events))
+        if rows <= 0 or not groups:
+            return []
+        shown = groups[-rows:]
+        if len(shown) < len(groups) and rows > 1:
+            shown = groups[-(rows - 1) :]
+            earlier = len(events) - sum(times for _event, times in shown)
+            lines = [self._entry("", ((self._letters(f"… {earlier} earlier"), PLAIN),))]
+        else:
+            lines = []
+        for event, times in shown:
+            words = self._fit_words(event.text) + (f" ({times} times in a row)" if times > 1 else "")
+            bit = "" if event.bit is None else f"bit {event.bit:,}".replace(",", "\u202f")
+            if cell_len(words) + len(bit) + 2 <= self._room:
+                pad = max(2, min(self._room, 76) - cell_len(words) - len(bit))
+                words = words + " " * pad + bit if bit else words
+            ink = RED if event.kind in ALARMS else PLAIN
+            lines.append(self._entry(local_time(event.at), ((_shorten(words, self._room), ink),)))
+        return lines
+
+    # -- lines
+
+    def _words(self, label: str, texts: Sequence[str], most_each: int) -> list[Text]:
+        lines = []
+        for number, text in enumerate(texts):
+            for part_number, part in enumerate(wrap(self._fit_words(text), self._room, most_each)):
+                first = number == 0 and part_number == 0
+                lines.append(self._entry(label if first else "", ((part, PLAIN),)))
+        return lines
+
+    def _entry(self, label: str, spans: Line) -> Text:
+        line = Text(f"{label:>{MARGIN}} {self.signs.margin} ", no_wrap=True)
+        for text, ink in spans:
+            line.append(self._letters(text), style=ink or None)
+        return line
+
+    def _fit_words(self, text: str) -> str:
+        return clean(text)
+
+    def _letters(self, text: str) -> str:
+        """Keep to plain letters where the output has no others; one for one, so that widths stay."""
+        if self.signs.margin != "|":
+            return text
+        return text.translate(_ASCII).encode("ascii", "replace").decode("ascii")
+
+
+def _grouped(events: Sequence[Event]) -> Iterator[tuple[Event, int]]:
+    """Join events in a row that say the same; the first one's time stands for them."""
+    held: Event | None = None
+    times = 0
+    for event in events:
+        if held is not None and (event.kind, event.text) == (held.kind, held.text):
+            times += 1
+            continue
+        if held is not None:
+            yield held, times
+        held, times = event, 1
+    if held is not None:
+        yield held, times
+
+
+def wrap(text: str, width: int, most: int) -> list[str]:
+    """Break text at spaces into at most `most` lines of `width` columns; narrow spaces in numbers hold."""
+    lines: list[str] = []
+    line = ""
+    for word in text.split(" "):
+        longer = f"{line} {word}" if line else word
+        if cell_len(longer) <= width:
+            line = longer
+            continue
+        if line:
+            lines.append(line)
+        while cell_len(word) > width:
+            head = set_cell_size(word, width).rstrip()
+            lines.append(head)
+            word = word[len(head) :]
+        line = word
+    lines.append(line)
+    if len(lines) <= most:
+        return lines
+    return [*lines[: most - 1], _shorten(" ".join(lines[most - 1 :]), width)]
+
+
+def _shorten(text: str, width: int) -> str:
+    if cell_len(text) <= width:
+        return text
+    return set_cell_size(text, max(0, width - 1)).rstrip() + "…"
