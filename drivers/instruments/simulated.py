@@ -26,15 +26,15 @@ class SimulatedSection(ConditionSection):
     """Which knob, and how far it may be turned."""
 
     knob: str = Field(min_length=1, description="Name of the knob: ber, ebn0_db, attenuation_db ...")
-    quantity: str = Field(default="", validate_default=False, description="Left out: by the knob's name.")
-    unit: str = Field(default="", validate_default=False, description="Left out: by the knob's name.")
+    quantity: str = Field(default="", description="Left out: by the knob's name.")
+    unit: str = Field(default="", description="Left out: by the knob's name.")
 
     @model_validator(mode="before")
     @classmethod
     def _by_knob(cls, keys: Any) -> Any:
-        if not isinstance(keys, dict):
+        if not isinstance(keys, dict) or "knob" not in keys:
             return keys
-        knob = str(keys.get("knob", "")).partition("@")[0]
+        knob = str(keys["knob"]).partition("@")[0]
         known = {
             "ber": ("ratio", "1"),
             "ebn0_db": ("ebn0", "dB"),
@@ -44,14 +44,14 @@ class SimulatedSection(ConditionSection):
             "ber_outside": ("ratio", "1"),
         }
         if knob not in known:
+            if not (keys.get("quantity") and keys.get("unit")):
+                raise ValueError(f"the knob {knob!r} needs a quantity and a unit")
             return keys
         quantity, unit = known[knob]
         return {"quantity": quantity, "unit": unit, **keys}
 
     @model_validator(mode="after")
     def _complete(self) -> Self:
-        if not self.quantity or not self.unit:
-            raise ValueError(f"the knob {self.knob!r} needs a quantity and a unit")
         self.bounded()
         return self
 
@@ -62,6 +62,7 @@ class SimulatedInstrument(Instrument):
     Section = SimulatedSection
     section: SimulatedSection
     readable = True
+    lasting = False
 
     def __init__(self, section: SimulatedSection) -> None:
         super().__init__(section)

@@ -50,7 +50,7 @@ def assert_in_blocks(errors: np.ndarray, ber: float) -> None:
 
 
 def q(x: float) -> float:
-    return float(stats.norm.sf(x))
+    return float(special.ndtr(-x))
 
 
 def gray(n: int) -> int:
@@ -67,7 +67,7 @@ def psk(count: int) -> Theory:
 
     def density(angle: float, es: float) -> float:
         across = sqrt(2 * es) * cos(angle)
-        held = stats.norm.cdf(across) * exp(-es * sin(angle) ** 2)
+        held = special.ndtr(across) * exp(-es * sin(angle) ** 2)
         return float(exp(-es) / (2 * pi) + across / sqrt(2 * pi) * held)
 
     def ber(ebn0: float) -> float:
@@ -117,7 +117,7 @@ def qam(count: int) -> Theory:
             for decided in range(side):
                 low = -np.inf if decided == 0 else (2 * (decided - sent) - 1) * half
                 high = np.inf if decided == side - 1 else (2 * (decided - sent) + 1) * half
-                share = stats.norm.cdf(high) - stats.norm.cdf(low)
+                share = special.ndtr(high) - special.ndtr(low)
                 total += (gray(sent) ^ gray(decided)).bit_count() * share / side
         return total / (k / 2)
 
@@ -259,8 +259,9 @@ def test_a_faded_amplitude_is_rayleigh_and_its_phase_uniform() -> None:
 
 @pytest.mark.parametrize("doppler", [0.37, 0.05, 0.004])
 def test_the_gain_forgets_as_clarke_says(doppler: float) -> None:
-    gains = Gains(0.0, doppler, np.random.default_rng(9)).take(1_000_000)
-    periods = 1_000_000 * doppler
+    count = 200_000 if doppler > 0.1 else 800_000
+    gains = Gains(0.0, doppler, np.random.default_rng(9)).take(count)
+    periods = count * doppler
     for lag in sorted({max(1, round(part / doppler)) for part in (0.1, 0.3, 0.6, 1.0, 1.5)}):
         seen = np.mean(gains[:-lag] * gains[lag:].conj())
         # Tapered at 16 periods; the estimate scatters with about one over the root of the periods seen.

@@ -37,10 +37,13 @@ class Bench:
 
     def fault(self, name: str, value: object) -> None:
         """Turn a fault on while it runs."""
-        told = self.commands().count(f"FAULT {name} {value}")
+        command = f"FAULT {name} {value}".strip()
+        told = self.commands().count(command)
         with socket.create_connection(("127.0.0.1", self.port)) as connection:
-            connection.sendall(f"FAULT {name} {value}\n".encode())
-            while self.commands().count(f"FAULT {name} {value}") == told:
+            connection.sendall(f"{command}\n".encode())
+            ends = time.monotonic() + 30
+            while self.commands().count(command) == told:
+                assert time.monotonic() < ends, "the attenuator did not take the fault"
                 time.sleep(0.01)
 
     def keys(self, **changed: object) -> dict[str, object]:
