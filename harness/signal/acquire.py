@@ -79,7 +79,7 @@ class Acquirer:
             always at BER 0.3.
         near
             A place near which it is likely to be. Only patterns without register and without a short period
-            make use of it: they are searched for within `finders.REACH` bits around it.
+            make use of it: they are searched for up to a quarter of `finders.REACH` on either side.
 
         Returns
         -------

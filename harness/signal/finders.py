@@ -18,7 +18,7 @@ from harness.signal.evidence import most_mismatches
 from harness.signal.patterns import Pattern, RegisterPattern
 
 LONGEST_FOLD = 1 << 16  # bits of period up to which all phases are tried by one correlation
-REACH = 1 << 20  # bits of the pattern, around the place asked for, that correlation searches
+REACH = 1 << 20  # bits of the pattern, about the place asked for, that correlation searches
 
 _ASSUMED_BER = 0.3  # what the parity checks start from; the true one need not be known
 _MOST_ROUNDS = 32
@@ -241,8 +241,8 @@ def _surest_windows(soft: NDArray[np.float32], width: int) -> list[int]:
 class BlockFinder:
     """Correlates a stretch with a pattern's bits, block by block, up to `REACH` bits.
 
-    Up to 16 384 bits of a stretch are used. The reach lies around the place asked for, or at the pattern's
-    beginning; a periodic pattern of up to `REACH` bits is searched all round.
+    Up to 16 384 bits of a stretch are used. The reach lies around the place asked for, at least a quarter of
+    it on either side, or at the pattern's beginning; a pattern whose period is shorter is searched all round.
     """
 
     _BLOCK = 1 << 16
@@ -288,7 +288,10 @@ class BlockFinder:
         first = max(near - reach // 2, 0)
         if period is not None and period <= reach:
             reach, first = period, 0
-        if self._first is not None and abs(first - self._first) <= reach // 4:
+        if self._first is not None and (
+            self._first == first
+            or self._first <= max(near - REACH // 4, 0) <= near + REACH // 4 <= self._first + reach
+        ):
             return
         usable = self._BLOCK - self._MOST_USED
         blocks = -(-reach // usable)
