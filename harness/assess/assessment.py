@@ -140,6 +140,7 @@ class PointAssessment:
             "plan": dict(self.plan) if self.plan else None,
             "reasons": list(self.reasons),
             "remarks": list(self.remarks),
+            "earlier_tries": int(self.facts.get("earlier_tries_count", 0)),
             "after_decision": {"bits": self.after_decision.received, "errors": self.after_decision.errors},
             "availability": [availability_json(a) for a in self.availability],
             "clustering": self.clustering.to_json() if self.clustering else None,

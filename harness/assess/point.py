@@ -92,7 +92,7 @@ def assess_point(acc: Accumulator, about: Facts, *, quick: bool = False) -> Poin
         clustering=clustering,
         unaligned_ratio=unaligned_ratio(sums, bits_lost),
         links_lost=links_lost,
-        remarks=(*bounds.remarks, *_remarks(acc, sums, bits_lost, clustering)),
+        remarks=(*_retests(acc, about), *bounds.remarks, *_remarks(acc, sums, bits_lost, clustering)),
         recent=tuple(acc.recent),
         facts=about.facts,
     )
@@ -186,6 +186,19 @@ def _clustering(acc: Accumulator, requirement: Requirement | None) -> Clustered 
         found.words,
         more,
     )
+
+
+def _retests(acc: Accumulator, about: Facts) -> Sequence[str]:
+    """Count the tries: every earlier run of the unit against the same requirement, void ones too."""
+    tries = 1 + int(about.facts.get("earlier_tries_count", 0))
+    if acc.plan is None or tries == 1:
+        return ()
+    from harness.statistics.retests import retest_words
+
+    named = ", ".join(
+        f"{try_['run'][-8:]} ({try_['verdict'] or try_['status']})" for try_ in about.facts["earlier_tries"]
+    )
+    return (f"{retest_words(acc.plan.consumer_risk, tries)} Earlier: {named}",)
 
 
 def _remarks(acc: Accumulator, sums: Sums, bits_lost: int, clustering: Clustered | None) -> Sequence[str]:

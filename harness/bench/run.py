@@ -28,6 +28,7 @@ from harness.record import EndedBy, Event, Run, Second, Sitting, Tally
 from harness.store import Store
 
 TICK_S = 0.2
+TRIES_KEPT = 20  # named in the record; all are counted
 Commit = Callable[[list[Second], list[Event], int], None]
 
 
@@ -134,6 +135,7 @@ class BenchRun:
         self._started = time.time_ns()
         self._next_tick = 0.0
         self._undecided: dict[int, int] = {}  # point -> bits received and not decided
+        self._earlier: list[dict[str, str | None]] = []
         self._begun: set[int] = set()
         self._ended: set[int] = set()
         self._done: list[PointAssessment] = []
@@ -178,6 +180,7 @@ class BenchRun:
                 device=profile.device,
             )
             store.begin_sitting(key, sitting)
+            self._earlier = self._earlier_tries(store, key)
             return key
 
         self._key = self._recorder.ask(job)
@@ -185,6 +188,17 @@ class BenchRun:
             profile, self._links.main, self._lock / f"guardian-{self._key}.log", self._hooks.interrupted
         )
         self._hooks.started(self._key)
+
+    def _earlier_tries(self, store: Store, key: str) -> list[dict[str, str | None]]:
+        """List this unit's earlier runs against the same requirement: each of them was a try."""
+        serial = self._profile.device.get("serial_number")
+        if self._requirement is None or not serial:
+            return []
+        asked, model = self._settings["requirement"], self._profile.device.get("model")
+        return [
+            {"run": r.run, "status": r.status, "verdict": r.verdict}
+            for r in store.earlier_runs(serial, key, asked, model)
+        ]
 
     def _point(self, visit: Visit, way: int) -> int:
         return visit.number * len(self._ways) + way
@@ -309,6 +323,9 @@ class BenchRun:
             return
         about = {**self._ways[way].facts(self._links), **facts}
         values = dict(visit.values)
+        if self._earlier:
+            about["earlier_tries"] = self._earlier[-TRIES_KEPT:]
+            about["earlier_tries_count"] = len(self._earlier)
         if visit.reference:
             about["reference"] = True
         if len(self._ways) > 1:

@@ -284,6 +284,41 @@ def verify(run: RunArgument = "last", store: StoreOption = None, json: JsonOptio
 
 
 @app.command()
+def compare(
+    a: Annotated[str, typer.Argument(metavar="A", help="A run: its key, a unique ending of it, or `last`.")],
+    b: Annotated[str, typer.Argument(metavar="B", help="Another run.")],
+    store: StoreOption = None,
+    confidence: Annotated[float, typer.Option("--confidence", metavar="C", help="Between 0 and 1.")] = 0.95,
+    json: JsonOption = False,
+) -> int:
+    """Is B worse than A? An exact test on the two counts, and the ratio of the BERs with bounds.
+
+    Example: bitassay compare 5f2c last
+    """
+    from harness.cli.records import compare as carry_out
+
+    return carry_out(a, b, store, confidence, as_json=json)
+
+
+@app.command()
+def note(
+    run: RunArgument,
+    text: Annotated[str, typer.Argument(metavar="TEXT", help="Why, in words.")],
+    void: Annotated[
+        bool, typer.Option("--void", help="Mark the run as void; it stays and still counts.")
+    ] = False,
+    store: StoreOption = None,
+) -> int:
+    """Add words to a run's record, with your name and the time; nothing in it is ever changed.
+
+    Example: bitassay note last "antenna cable was loose" --void
+    """
+    from harness.cli.records import note as carry_out
+
+    return carry_out(run, text, store, void=void)
+
+
+@app.command()
 def patterns(json: JsonOption = False) -> int:
     """List the patterns.
 

@@ -104,6 +104,11 @@ def plan(
 
 
 def _plan_lines(made: Any, document: dict[str, Any], rate_bps: float | None) -> list[str]:
+    import shutil
+    import textwrap
+
+    from harness.statistics.plans import describe, draw_stairs
+
     def with_time(bits: float) -> str:
         return count(round(bits), "bit") + (f" ({duration(bits / rate_bps)})" if rate_bps else "")
 
@@ -121,6 +126,8 @@ def _plan_lines(made: Any, document: dict[str, Any], rate_bps: float | None) -> 
         f"                  {with_time(expected['at_good'])} for a unit {made.margin:g} times better",
     ]
     lines += [f"  note            {remark}" for remark in made.remarks]
+    lines += ["", *draw_stairs(made, width=min(100, shutil.get_terminal_size().columns - 1))]
+    lines += ["", "For a test procedure:", *textwrap.wrap(describe(made, rate_bps), 88)]
     return lines
 
 
