@@ -39,6 +39,8 @@ def percent(value: float) -> str:
 
 def duration(seconds: float) -> str:
     """Write a duration: ``0.25 s``, ``12.3 s``, ``4 min 05 s``, ``11 h 02 min``."""
+    if 0 < seconds < 0.1:
+        return f"{1e3 * seconds:.3g} ms"
     if seconds < 60:
         return f"{seconds:.3g} s"
     whole = round(seconds)

@@ -9,7 +9,7 @@ from collections.abc import Callable, Mapping
 from dataclasses import dataclass, replace
 
 from harness.assess.accumulate import EVENTS_KEPT
-from harness.assess.words import count
+from harness.assess.words import count, duration
 from harness.bench.book import Book
 from harness.bench.places import Places
 from harness.bench.ring import Piece, Ring
@@ -323,7 +323,7 @@ class Consumer(threading.Thread):
         delay = self._places.aligned(bit, place, at, self._came_with(bit))
         if delay is None:
             return
-        seconds = "" if delay.seconds is None else f", {delay.seconds:.3g} s"
+        seconds = "" if delay.seconds is None else f", {duration(delay.seconds)}"
         data = {"bits": delay.bits, "seconds": delay.seconds, "modulo": delay.modulo}
         text = f"loop delay {count(delay.bits, 'bit')}{seconds}"
         self._happened("delay", text, at, data, bit=bit)

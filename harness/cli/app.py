@@ -128,6 +128,19 @@ def resume(
 
 
 @app.command()
+def check(
+    profile: ProfileArgument, set_: SetOption = None, store: StoreOption = None, json: JsonOption = False
+) -> int:
+    """Before a run: prove the path, the instruments and the counting; forecast time and disk.
+
+    Example: bitassay check profiles/loopback.toml
+    """
+    from harness.cli.check import check as carry_out
+
+    return carry_out(profile, set_ or [], store, as_json=json)
+
+
+@app.command()
 def examine(
     file: Annotated[Path, typer.Argument(metavar="FILE", help="Bytes captured elsewhere.")],
     pattern: Annotated[str, typer.Option("--pattern", metavar="NAME|auto", help="What was sent.")] = "auto",
