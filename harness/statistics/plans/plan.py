@@ -166,7 +166,7 @@ class Plan(ABC):
     @property
     def consumer_risk(self) -> float:
         """The probability that a unit exactly at the requirement is accepted: exact."""
-        return self.acceptance_probability(self.ber)
+        return settled(self.acceptance_probability(self.ber), self.allowed_risk)
 
     @property
     def producer_risk(self) -> float:
@@ -285,6 +285,11 @@ class Plan(ABC):
         if value < limit * (1 - _SLACK):
             raise ArithmeticError(f"a deciding bound of {value!r} contradicts the decision at {limit!r}")
         return max(value, limit)
+
+
+def settled(risk: float, limit: float) -> float:
+    """Take a rounding error off a risk that lies exactly on its limit."""
+    return limit if limit < risk <= limit * (1 + 1e-12) else risk
 
 
 def check_requirement(ber: float, confidence: float, margin: float, producer_risk: float) -> None:

@@ -109,9 +109,54 @@ class Walk:
         return min(1.0, max(0.0, math.fsum(self.rejected)))
 
 
+class Ways:
+    """One walk, from which the chances at any other true ratio follow.
+
+    A way to k errors in n bits has the chance p^k (1 - p)^(n - k), however it went, so its chance at another
+    ratio is the walk's times a likelihood ratio.
+
+    Attributes
+    ----------
+    bits, errors
+        (n,) where each way ends: the accepted ones in the plan's order, then the open ones by errors.
+    accepted
+        How many of them are accepted.
+    """
+
+    def __init__(self, checkpoints: Sequence[Checkpoint], near: float) -> None:
+        self._near = min(max(near, 1e-25), 1 - 1e-12)
+        way = walk(checkpoints, self._near)
+        until = checkpoints[-1].bits if checkpoints else 0
+        self.accepted = len(way.accepted)
+        self.bits = np.array([float(a.bits) for a in way.accepted] + [float(until)] * len(way.open))
+        counts = [a.errors for a in way.accepted] + [way.lowest + i for i in range(len(way.open))]
+        self.errors = np.array(counts, dtype=np.float64)
+        chances = np.concatenate([[a.chance for a in way.accepted], way.open])
+        with np.errstate(divide="ignore"):
+            self._logs = np.log(chances)
+
+    def chances(self, ber: float) -> Floats:
+        """(n,) chances at a true ratio over 0 and under 1."""
+        per_error = math.log(ber) - math.log(self._near)
+        per_other = math.log1p(-ber) - math.log1p(-self._near)
+        result: Floats = np.exp(self._logs + self.errors * per_error + (self.bits - self.errors) * per_other)
+        return result
+
+
 def corners(stairs: Stairs) -> tuple[Checkpoint, ...]:
     """The checkpoints of a plan that sees every bit."""
     return schedule(stairs, (), stairs.longest)
+
+
+def mean_bits(stairs: Stairs, ber: float) -> float:
+    """Mean bits at a true ratio over 0 and under 1: by Wald's identity the mean errors at the stop over it."""
+    points = corners(stairs)
+    way = walk(points, ber)
+    accepted = math.fsum(a.errors * a.chance for a in way.accepted)
+    rejected = math.fsum(
+        point.reject * chance for point, chance in zip(points, way.rejected.tolist(), strict=True)
+    )
+    return (accepted + rejected) / ber
 
 
 def schedule(stairs: Stairs, blind: Sequence[tuple[int, int]], until: int) -> tuple[Checkpoint, ...]:

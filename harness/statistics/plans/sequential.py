@@ -23,8 +23,18 @@ from harness.statistics.plans.plan import (
     Risks,
     StopBounds,
     StopChance,
+    settled,
 )
-from harness.statistics.plans.recursion import Checkpoint, Stairs, Walk, admit, corners, schedule, walk
+from harness.statistics.plans.recursion import (
+    Checkpoint,
+    Stairs,
+    Ways,
+    admit,
+    corners,
+    mean_bits,
+    schedule,
+    walk,
+)
 from harness.statistics.plans.solve import aim_at, find_stairs
 from harness.statistics.tails import log_chance_at_most
 
@@ -57,7 +67,10 @@ class SequentialPlan(Plan):
         self._corners = corners(self.stairs)
         self._blind: list[tuple[int, int]] = []  # stretches whose counts showed at their ends only
         self._seen_to = 0  # where the stretch began in which it was decided
-        self._promised = walk(self._corners, ber).acceptance, walk(self._corners, self.good_ber).rejection
+        self._promised = (
+            settled(walk(self._corners, ber).acceptance, self.allowed_risk),
+            settled(walk(self._corners, self.good_ber).rejection, producer_risk),
+        )
         self.remarks = self._say_what_is_short()
 
     def _say_what_is_short(self) -> tuple[str, ...]:
@@ -101,17 +114,12 @@ class SequentialPlan(Plan):
         return walk(self._corners, ber).rejection if ber < 1 else 1.0
 
     def expected_bits(self, ber: float) -> float:
-        """Mean bits: by Wald's identity the mean errors at the stop over `ber`."""
+        """Mean bits until it ends; see `mean_bits`."""
         if ber <= 0:
             return float(self.stairs.accept_at[0])
         if ber >= 1:
             return float(self._rejected_at_once())
-        way = walk(self._corners, ber)
-        accepted = math.fsum(a.errors * a.chance for a in way.accepted)
-        rejected = math.fsum(
-            c.reject * chance for c, chance in zip(self._corners, way.rejected.tolist(), strict=True)
-        )
-        return (accepted + rejected) / ber
+        return mean_bits(self.stairs, ber)
 
     def _rejected_at_once(self) -> int:
         """Bits until the rejection of a unit whose every bit is in error."""
@@ -191,8 +199,8 @@ class SequentialPlan(Plan):
         """By the plan's own order of outcomes; see harness/statistics/plans/after_stop.py."""
         confidence = self.confidence if confidence is None else confidence
         half = float((1 - as_written(confidence)) / 2)
-        up_to, from_it = self._tails()
         near = (self.errors + 0.5) / (self.compared_bits + 1)
+        up_to, from_it = self._tails(near)
         lower = ratio_where(from_it, half, True, near)
         upper = ratio_where(up_to, half, False, near)
         deciding = None
@@ -206,40 +214,42 @@ class SequentialPlan(Plan):
             deciding = Deciding("lower", float(1 - as_written(self.asked_producer_risk)), value)
         return StopBounds(METHOD_ORDER, confidence, lower, upper, deciding, self._undecided_remarks(ended))
 
-    def _tails(self) -> tuple[Callable[[float], float], Callable[[float], float]]:
+    def _tails(self, near: float) -> tuple[Callable[[float], float], Callable[[float], float]]:
         """Chances of outcomes up to and with the one seen, and from it on, as functions of the true ratio."""
-        rejected = self.decision is not None and not self.decision.accepted
-        if not rejected:
-            return self._tails_where_not_rejected()
+        if self.decision is None or self.decision.accepted:
+            return self._tails_where_not_rejected(near)
         end = self.compared_bits
-        exact = self.decision is not None and self.decision.exact
-        start = end - 1 if exact else self._seen_to
-        points = self._admitted(self._blind, start) if start else ()
+        start = end - 1 if self.decision.exact else self._seen_to
+        ways = Ways(self._admitted(self._blind, start) if start else (), near)
         errors, more = self.errors, end - start
 
         def at_most(ber: float, count: int) -> float:
             """Accepted up to the stretch, or open then and with at most `count` errors after it."""
-            way = walk(points, ber)
-            new = count - (way.lowest + np.arange(len(way.open), dtype=np.float64))
-            tail = np.exp(log_chance_at_most(new, more, ber)) if len(new) else np.zeros(0)
-            return way.acceptance + float((way.open * tail).sum())
+            chances = ways.chances(ber)
+            new = count - ways.errors[ways.accepted :]
+            if more == 1:
+                tail = np.where(new >= 1, 1.0, np.where(new == 0, 1 - ber, 0.0))
+            else:
+                tail = np.exp(log_chance_at_most(new, more, ber))
+            return math.fsum(chances[: ways.accepted]) + float((chances[ways.accepted :] * tail).sum())
 
         return lambda ber: at_most(ber, errors), lambda ber: 1 - at_most(ber, errors - 1)
 
-    def _tails_where_not_rejected(self) -> tuple[Callable[[float], float], Callable[[float], float]]:
+    def _tails_where_not_rejected(
+        self, near: float
+    ) -> tuple[Callable[[float], float], Callable[[float], float]]:
         """Accepted, or still open: before it in the order come accepted ways and smaller open counts."""
         bits, errors = self.compared_bits, self.errors
-        points = self._admitted(self._blind, bits) if bits else ()
-        open_ = self.decision is None
-
-        def before(way: Walk, count: int) -> float:
-            """Chance of ways earlier in the order than `count` errors at the last bit."""
-            earlier = [a.chance for a in way.accepted if open_ or a.bits < bits or a.errors < count]
-            if open_:
-                earlier += way.open[: max(0, count - way.lowest)].tolist()
-            return math.fsum(earlier)
-
+        ways = Ways(self._admitted(self._blind, bits) if bits else (), near)
+        accepted = np.arange(len(ways.bits)) < ways.accepted
+        if self.decision is None:
+            before = accepted | (ways.errors < errors)
+            here = ~accepted & (ways.errors == errors)
+        else:
+            before = accepted & ((ways.bits < bits) | (ways.errors < errors))
+            here = accepted & (ways.bits == float(bits)) & (ways.errors == errors)
+        up_to = before | here
         return (
-            lambda ber: before(walk(points, ber), errors + 1),
-            lambda ber: 1 - before(walk(points, ber), errors),
+            lambda ber: math.fsum(ways.chances(ber)[up_to]),
+            lambda ber: 1 - math.fsum(ways.chances(ber)[before]),
         )

@@ -18,7 +18,7 @@ from numpy.typing import NDArray
 from harness.statistics.bounds import bits_needed
 from harness.statistics.least_bits import risk_of
 from harness.statistics.plans.plan import PlanError
-from harness.statistics.plans.recursion import Stairs, corners, poisson_kernels, sweep, walk
+from harness.statistics.plans.recursion import Stairs, corners, mean_bits, poisson_kernels, sweep, walk
 from harness.statistics.tails import chance_over
 
 Floats = NDArray[np.float64]
@@ -27,6 +27,7 @@ MOST_ERRORS = 10_000  # that the equivalent fixed plan may accept: a margin of a
 _TARGET = 1 - 1e-7  # of the risks asked for: the true ones are never above them
 _NEAR = 1e-6  # relative: near enough to the risks asked for
 _GOOD = 1e-3  # relative: no need to try another truncation
+_SMALL = 12  # errors at the truncation: plans as small as this are tried with all truncations near
 _LATTICE = 0.4  # times the ratio: how near whole bits let the risks come, relative
 
 
@@ -133,17 +134,22 @@ def find_stairs(aim: Aim) -> Stairs:
     """
     if aim.fixed_accepts == 0:
         return as_curtailed(aim)
-    best: Stairs | None = None
-    best_miss = math.inf
+    near = max(_GOOD, _LATTICE * aim.bad)
+    found: list[tuple[float, float, Stairs]] = []  # whether it misses, what it costs
     for shift in (0, 1, 2, -1, 3):
         if aim.last + shift <= aim.fixed_accepts:
             continue
         stairs, miss = _solve(replace(aim, shift=aim.shift + shift))
-        if stairs is not None and miss < best_miss:
-            best, best_miss = stairs, miss
-        if best_miss < max(_GOOD, _LATTICE * aim.bad):
+        if stairs is not None:
+            found.append((max(0.0, miss - near), _cost(stairs, aim), stairs))
+        if aim.last > _SMALL and any(over == 0 for over, _, _ in found):
             break
-    return best if best is not None else as_curtailed(aim)
+    return min(found, key=lambda one: one[:2])[2] if found else as_curtailed(aim)
+
+
+def _cost(stairs: Stairs, aim: Aim) -> float:
+    """Mean bits of a bad and a good unit together."""
+    return mean_bits(stairs, aim.bad) + mean_bits(stairs, aim.good)
 
 
 def _solve(aim: Aim) -> tuple[Stairs | None, float]:
@@ -247,6 +253,8 @@ def _newton(function: Callable[[Floats], Floats], start: Floats) -> tuple[Floats
         if turn % 8 == 7:
             slopes = _slopes(function, x, value)
         step = -np.clip(np.linalg.lstsq(slopes, value, rcond=None)[0], -0.7, 0.7)
+        if not step.any():  # no slope leads anywhere from here
+            break
         new_value = function(x + step)
         slopes = slopes + np.outer(new_value - value - slopes @ step, step) / float(step @ step)
         x, value = x + step, new_value

@@ -6,8 +6,8 @@ from harness.statistics.plans.plan import Plan
 
 _MEANING = (
     "The length and the limits are fixed before the test and are not changed in view of its count. A pass "
-    "demonstrates the requirement; a fail says that it was not demonstrated. A unit that is tested again until "
-    "it passes does not have these risks, nor has one whose errors come in bursts."
+    "demonstrates the requirement; a fail says that it was not demonstrated. A unit that is tested again "
+    "until it passes does not have these risks, nor has one whose errors come in bursts."
 )
 
 
