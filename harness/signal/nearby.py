@@ -46,6 +46,7 @@ class Nearby:
         self._centre = centre
         self._unit = unit
         self._first = first
+        self._period = reference.pattern.period
         radius = self._radius = radius_bits(reference.pattern, unit)
         bits = reference.bits(centre, first - radius, 2 * radius + length + 128)
         self._words = _words_at(bits, unit)
@@ -70,6 +71,18 @@ class Nearby:
         return Place(
             self._centre.anchor + shift * self._unit - self._radius, self._centre.inverted != inverted
         )
+
+    def shift_of(self, place: Place) -> int | None:
+        """The index of shift that belongs to a place, whatever its polarity; None if it is not among them."""
+        change = place.anchor - self._centre.anchor + self._radius
+        if self._period is not None:
+            change %= self._period
+            # Where the link slips by bytes, one of the next periods may be a whole number of them.
+            change += self._period * next(
+                (k for k in range(self._unit) if (change + k * self._period) % self._unit == 0), 0
+            )
+        shift, rest = divmod(change, self._unit)
+        return shift if not rest and 0 <= shift < self.shifts else None
 
     def best(self, mismatches: NDArray[np.uint16], bits: int) -> Candidate:
         """The candidate with the fewest mismatches among so many bits, in either polarity.

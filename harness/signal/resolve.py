@@ -19,10 +19,10 @@ from harness.signal.slips import Gap, gap_between, split_path, worst_stretch
 
 _MOST_PLACES = 24  # in one stretch of trouble
 _CAREFUL = 0.7  # of the alarm: once there is trouble, less of it is looked into
+_AROUND = 512  # bits around trouble in which a place is looked for as well, at most
 _FILLS = 0.75  # a place that holds for so much of the trouble was not picked out of many stretches
 _GUARD = 0.75  # of the evidence must remain when the shares of ONEs are taken into account
-_BETTER = 1 / 3  # of the evidence must come from bits that were not explained before
-_LOG_FALSE_BETWEEN = math.log(rules.FALSE_BETWEEN)
+_BETTER = 1 / 5  # of the evidence must come from bits that were not explained before
 
 
 @dataclass(frozen=True, slots=True)
@@ -104,7 +104,7 @@ class Resolver:
     def __init__(self, reference: Reference, unit: int) -> None:
         self._reference = reference
         self._unit = unit
-        self._limit = _LOG_FALSE_BETWEEN - log_candidates(reference.pattern, unit)
+        self._log_candidates = log_candidates(reference.pattern, unit)
 
     def shortest(self, ends: list[Place], stretch: Stretch) -> Path:
         """The path through these places only."""
@@ -132,39 +132,45 @@ class Resolver:
         for _ in range(_MOST_PLACES):
             left = wrong.along(path)
             left[settled] = 0
-            begin, end, excess = worst_stretch(left, rule.share)
+            begin, end, excess = worst_stretch(left, rule.careful_share)
             if excess < _CAREFUL * rule.alarm:
                 break
             longer = self._with_another(path, wrong, begin, end, rule.share)
             if longer is None:
                 settled[begin:end] = True
             else:
-                path = self._without_unproven(longer, wrong, sure)
+                path = self._without_unproven(longer, wrong, sure, rule.share)
         return Path(path.places, [stretch.first + cut for cut in path.cuts])
 
     def _with_another(self, path: Path, wrong: _Differing, begin: int, end: int, share: float) -> Path | None:
         """The path with one more place in the stretch from `begin` to `end`, if it is proven there."""
-        at = int(np.searchsorted(path.cuts, begin, side="right"))
-        before, after = path.places[at], path.places[int(np.searchsorted(path.cuts, end, side="left"))]
+        begin_at = int(np.searchsorted(path.cuts, begin, side="right"))
+        end_at = int(np.searchsorted(path.cuts, end, side="left"))
+        known = {path.places[begin_at], path.places[end_at]}
+        beside = set(path.places[max(begin_at - 1, 0) : end_at + 2])
         old = wrong.along(path)
-        for centre in dict.fromkeys([before, after]):
-            place = self._best_between(centre, wrong.stretch, begin, end, share)
-            if place in (before, after):
-                continue
-            rest = path.places[at:] if before == after else path.places[at + 1 :]
-            longer = [*path.places[: at + 1], place, *rest]
-            cuts, _ = split_path([wrong[p] for p in longer])
-            first, last = Path(longer, cuts).edges(len(old))[at + 1 : at + 3]
-            limit = self._limit
-            if last - first < _FILLS * (end - begin):
-                limit -= math.log(end - begin)
-            other = old[first:last] != wrong[place][first:last]
-            better = log_tail(int(np.count_nonzero(other)), int(wrong[place][first:last][other].sum()))
-            if better <= _BETTER * limit and self._proven(place, wrong, first, last, limit):
-                return _cut(longer, wrong)
+        for centre in dict.fromkeys([path.places[begin_at], path.places[end_at]]):
+            for place in self._best_between(centre, (known, beside), wrong.stretch, begin, end, share):
+                for longer, at in _ways_in(path, place, begin, end):
+                    cuts, _ = split_path([wrong[p] for p in longer])
+                    first, last = Path(longer, cuts).edges(len(old))[at : at + 2]
+                    other = old[first:last] != wrong[place][first:last]
+                    better = log_tail(
+                        int(np.count_nonzero(other)), int(wrong[place][first:last][other].sum())
+                    )
+                    limit = self._limit(longer[at - 1 : at], longer[at + 1 : at + 2])
+                    if better <= _BETTER * limit and self._proven(
+                        place, wrong, first, last, share, limit, end - begin
+                    ):
+                        return _cut(longer, wrong)
         return None
 
-    def _without_unproven(self, path: Path, wrong: _Differing, sure: bool) -> Path:
+    def _limit(self, before: list[Place], after: list[Place]) -> float:
+        """What chance a place between two others may have: more where the stream is known to slip there."""
+        slips = bool(before and after and before != after)
+        return math.log(rules.FALSE_AT_SLIP if slips else rules.FALSE_IN_BURST) - self._log_candidates
+
+    def _without_unproven(self, path: Path, wrong: _Differing, sure: bool, share: float) -> Path:
         """Leave out places that, beside the others, no longer explain enough to be believed."""
         while True:
             edges = path.edges(len(wrong.stretch.bits))
@@ -174,7 +180,14 @@ class Resolver:
                 for index, place in enumerate(path.places)
                 if (index or not sure)
                 and not (last == 1 and sure)
-                and not self._proven(place, wrong, edges[index], edges[index + 1], self._limit)
+                and not self._proven(
+                    place,
+                    wrong,
+                    edges[index],
+                    edges[index + 1],
+                    share,
+                    self._limit(path.places[max(index - 1, 0) : index], path.places[index + 1 : index + 2]),
+                )
             ]
             if not doubtful or not last:
                 return path
@@ -182,19 +195,46 @@ class Resolver:
             places = path.places[:shortest] + path.places[shortest + 1 :]
             path = _cut([p for i, p in enumerate(places) if not i or places[i - 1] != p], wrong)
 
-    def _proven(self, place: Place, wrong: _Differing, first: int, last: int, limit: float) -> bool:
-        """Whether a place holds between two cuts better than chance lets it."""
-        if last <= first or log_tail(last - first, int(wrong[place][first:last].sum())) > limit:
-            return False
-        bits = wrong.stretch.bits[first:last]
-        return agrees(self._reference, place, bits, wrong.stretch.first + first, _GUARD * limit)
+    def _proven(
+        self,
+        place: Place,
+        wrong: _Differing,
+        first: int,
+        last: int,
+        share: float,
+        limit: float,
+        trouble: int = 0,
+    ) -> bool:
+        """Whether a place holds somewhere between two cuts better than chance lets it.
 
-    def _best_between(self, centre: Place, stretch: Stretch, begin: int, end: int, share: float) -> Place:
-        """The place near another one that explains some part of a stretch best."""
+        It may hold in a part only, as long as its neighbours are not known; then chance had as many tries as
+        there are parts of that length, and so it had where the trouble is longer than the part.
+        """
+        begin, end, _ = worst_stretch(1 - wrong[place][first:last], 1 - share)
+        bits, among = end - begin, max(last - first, trouble)
+        if bits < _FILLS * among:
+            limit -= 2 * math.log(among / max(bits, 1))
+        begin, end = first + begin, first + end
+        if log_tail(bits, int(wrong[place][begin:end].sum())) > limit:
+            return False
+        received = wrong.stretch.bits[begin:end]
+        return agrees(self._reference, place, received, wrong.stretch.first + begin, _GUARD * limit)
+
+    def _best_between(
+        self,
+        centre: Place,
+        known: tuple[set[Place], ...],
+        stretch: Stretch,
+        begin: int,
+        end: int,
+        share: float,
+    ) -> list[Place]:
+        """The places near another one that explain some part of a stretch best, beside those known."""
         length = end - begin
         size = 8 if length <= 128 else 16 if length <= 1024 else 32 if length <= 4096 else 64
-        begin = max(0, begin - size // 2)
-        bits = stretch.bits[begin : min(len(stretch.bits), end + size // 2)]
+        around = min(max(length, size), _AROUND)
+        begin = max(0, begin - around)
+        bits = stretch.bits[begin : min(len(stretch.bits), end + around)]
         bits = bits[: max(len(bits) // size, 1) * size]
         if len(bits) < size:
             bits = np.concatenate([bits, np.zeros(size - len(bits), dtype=np.uint8)])
@@ -203,11 +243,18 @@ class Resolver:
         cells = near.cells(bits, first, size)
         same = _highest_sum(np.float32(share * size) - cells)
         turned = _highest_sum(np.float32(share * size) - (size - cells.astype(np.float32)))
-        inverted = bool(turned.max() > same.max())
-        scores = turned if inverted else same
-        best = np.flatnonzero(scores == scores.max())
-        shift = int(best[np.argmin(np.abs(best - near.shifts // 2))])
-        return self._reference.normal(near.place_of(shift, inverted))
+        found = []
+        for places in known:
+            for place in places:
+                shift = near.shift_of(place)
+                if shift is not None:
+                    (same if place.inverted == centre.inverted else turned)[shift] = -np.inf
+            inverted = bool(turned.max() > same.max())
+            scores = turned if inverted else same
+            best = np.flatnonzero(scores == scores.max())
+            nearest = int(best[np.argmin(np.abs(best - near.shifts // 2))])
+            found.append(self._reference.normal(near.place_of(nearest, inverted)))
+        return list(dict.fromkeys(found))
 
 
 def _highest_sum(scores: NDArray[np.float32]) -> NDArray[np.float32]:
@@ -219,6 +266,17 @@ def _highest_sum(scores: NDArray[np.float32]) -> NDArray[np.float32]:
         current += row
         np.maximum(highest, current, out=highest)
     return highest
+
+
+def _ways_in(path: Path, place: Place, begin: int, end: int) -> list[tuple[list[Place], int]]:
+    """Where in a path another place may belong that holds somewhere in a stretch, each with its index."""
+    places, ways = path.places, []
+    for index, cut in enumerate(path.cuts):
+        if begin - _AROUND <= cut <= end + _AROUND:
+            ways.append(([*places[: index + 1], place, *places[index + 1 :]], index + 1))
+    at = int(np.searchsorted(path.cuts, (begin + end) // 2, side="right"))
+    ways.append(([*places[: at + 1], place, *places[at:]], at + 1))
+    return ways
 
 
 def _cut(places: list[Place], wrong: _Differing) -> Path:

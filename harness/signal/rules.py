@@ -25,7 +25,8 @@ DECIDED_AFTER = 200  # a place that has gathered so much is not doubted further 
 RESUMED_AFTER = 280  # after trouble a place that gathers so much holds again: chance 1e-20 a bit
 
 FALSE_ALARM = 1e-12  # of a search for a new place, on bits that are independent of the pattern
-FALSE_BETWEEN = 1e-8  # of a short place between two that are sure, on a burst of chance bits
+FALSE_AT_SLIP = 1e-5  # of a short place more where the stream slips, if it also has a burst there
+FALSE_IN_BURST = 1e-8  # of a short place, entered and left again, in a burst
 
 RADIUS_BITS = 8192  # places up to so far from the one expected are all tried
 LONGEST_WINDOW = 8192  # bits searched at once
@@ -42,6 +43,8 @@ class Level:
         Errors in a block of 4096 bits up to which this level stands.
     share
         Errors above this share of the bits are excess: about half way between what is usual and one half.
+    careful_share
+        The same where the stream is known to be in trouble.
     alarm
         So many errors in excess, over any stretch, are trouble.
     word_drift
@@ -52,17 +55,18 @@ class Level:
 
     most: int
     share: float
+    careful_share: float
     alarm: float
     word_drift: float
     by_word: bool
 
 
 LEVELS = (
-    Level(64, 0.25, 5.0, 5.5, False),
-    Level(260, 0.275, 7.0, 9.5, False),
-    Level(530, 0.31, 9.0, 14.5, False),
-    Level(940, 0.36, 8.0, 0.36 * 64, True),
-    Level(4096, 0.40, 14.0, 0.40 * 64, True),
+    Level(64, 0.25, 0.18, 5.0, 5.5, False),
+    Level(260, 0.275, 0.20, 7.0, 9.5, False),
+    Level(530, 0.31, 0.25, 9.0, 14.5, False),
+    Level(940, 0.36, 0.31, 8.0, 0.36 * 64, True),
+    Level(4096, 0.40, 0.36, 14.0, 0.40 * 64, True),
 )
 LEVEL_MOST = np.array([level.most for level in LEVELS[:-1]])
 LEVEL_DRIFT = np.array([level.word_drift for level in LEVELS])
