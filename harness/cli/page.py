@@ -55,10 +55,12 @@ def page(a: Assessment, where: str = "") -> Iterator[str]:
     yield from _entry("required", [*sheet.required, *([sheet.risks] if sheet.risks else [])])
     yield from _entry("verdict", [sheet.verdict, *sheet.reasons])
     yield from _entry("took", sheet.to_do)
+    yield ""
     if sheet.points:
+        yield from _entry("BER", [sheet.ber] if sheet.ber else [])
+        yield from _ruler(sheet)
         yield from _entry("points", sheet.points)
     else:
-        yield ""
         yield from _numbers(a.whole, sheet)
         yield from _happened(a.whole)
     if where:
@@ -71,11 +73,14 @@ def _entry(label: str, lines: Sequence[str]) -> Iterator[str]:
         yield f"{label if number == 0 else '':<{LABEL}}{line}"
 
 
+def _ruler(sheet: Sheet) -> Iterator[str]:
+    for label, line in ruler(sheet.bars, WIDTH - LABEL, signs_for(sys.stdout.encoding)):
+        yield f"{label:>{LABEL - 2}}  {''.join(text for text, _ink in line)}".rstrip()
+
+
 def _numbers(p: PointAssessment, sheet: Sheet) -> Iterator[str]:
     yield from _entry("BER", [sheet.ber])
-    if sheet.bar is not None:
-        for line in ruler(sheet.bar, WIDTH - LABEL, signs_for(sys.stdout.encoding)):
-            yield (" " * LABEL + "".join(text for text, _ink in line)).rstrip()
+    yield from _ruler(sheet)
     if p.bounds is not None and p.tally.compared:
         b = p.bounds
         yield from _entry(
@@ -87,9 +92,10 @@ def _numbers(p: PointAssessment, sheet: Sheet) -> Iterator[str]:
             ],
         )
     yield from _entry("bits", [*sheet.bits, *sheet.details])
-    pattern = p.pattern + (", received inverted" if p.inverted else "")
-    also = f"; fits as well: {', '.join(p.alternatives)}" if p.alternatives else ""
-    yield from _entry("pattern", [f"{pattern}, {p.bit_order} first{also}"])
+    if p.pattern:
+        inverted = ", received inverted" if p.inverted else ""
+        also = f"; fits as well: {', '.join(p.alternatives)}" if p.alternatives else ""
+        yield from _entry("pattern", [f"{p.pattern}, {p.bit_order} first{inverted}{also}"])
     nominal = f"; nominal rate {rate(p.rate_bps)}" if p.rate_bps else ""
     yield from _entry("began", [f"{local_date(p.started)}{nominal}"])
     yield from _entry("loop delay", _delay(p))

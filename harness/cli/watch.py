@@ -158,7 +158,7 @@ def progress_line(progress: Progress) -> str:
     if p.slip_count:
         parts.append(count(p.slip_count, "slip"))
     if progress.outlook.against:
-        parts.append(f"no PASS any more: {progress.outlook.against[0]}")
+        parts.append(f"cannot pass any more: {progress.outlook.against[0]}")
     if p.events:
         parts.append(p.events[-1].text)
     return " · ".join(parts)

@@ -61,6 +61,11 @@ def until(seconds: float, now_ns: int) -> str:
     return f"{words}: until {moment(now_ns + seconds * 1e9, now_ns)}"
 
 
+def elapsed_s(progress: Progress, now_ns: int) -> float:
+    """Say how long the point under way has been going on, s."""
+    return progress.elapsed_s if progress.visits < 2 else max(0.0, (now_ns - progress.point.started) / 1e9)
+
+
 def still_to_do(progress: Progress, now_ns: int, *, behind_s: int = 0) -> list[str]:
     """Say what is still to do and until when, the plan first.
 
@@ -74,16 +79,23 @@ def still_to_do(progress: Progress, now_ns: int, *, behind_s: int = 0) -> list[s
     limits = sorted(_limits(progress, pace, now_ns), key=lambda limit: limit.seconds)
     if not lines and not limits:
         return ["nothing ends this run by itself: end it with Ctrl-C"]
-    plan_s = _plan_seconds(progress, pace)
-    if limits and lines and not progress.outlook.decided:
+    if not lines:
+        return [_alone(limit, now_ns) for limit in limits[:2]]
+    if limits and limits[0].seconds <= _FAR_S and not progress.outlook.decided:
         first = limits[0]
+        when = moment(now_ns + first.seconds * 1e9, now_ns)
+        plan_s = _plan_seconds(progress, pace)
         if plan_s is not None and first.seconds < plan_s:
-            lines.append(f"{first.words}, perhaps before the plan decides")
-        elif first.seconds < math.inf:
-            lines.append(f"at the latest {first.words}")
-    elif limits and not lines:
-        lines = [limit.words for limit in limits[:2]]
+            lines.append(f"{first.name} ends it at {when}, perhaps before the plan decides")
+        else:
+            lines.append(f"until {when} at the latest, by {first.name}")
     return lines
+
+
+def _alone(limit: _Limit, now_ns: int) -> str:
+    if limit.seconds == math.inf:
+        return f"until {limit.name} is reached"
+    return f"{until(limit.seconds, now_ns)}, by {limit.name}"
 
 
 def _of_the_plan(progress: Progress, pace: Rates, now_ns: int) -> Iterator[str]:
@@ -102,7 +114,7 @@ def _of_the_plan(progress: Progress, pace: Rates, now_ns: int) -> Iterator[str]:
     else:
         what = f"{count(left, 'bit')} to the decision"
     if pace.stalled or pace.compared_bps is None:
-        yield f"{what}: no forecast while none can be compared"
+        yield f"{what}; no forecast at a standstill"
     else:
         yield f"{what}, {until(left / pace.compared_bps, now_ns)}"
     if outlook.on_average is not None and outlook.accept_at is not None:
@@ -123,23 +135,20 @@ def _plan_seconds(progress: Progress, pace: Rates) -> float | None:
 @dataclass(frozen=True, slots=True)
 class _Limit:
     seconds: float  # from now; infinite where it cannot be told
-    words: str
+    name: str
 
 
 def _limits(progress: Progress, pace: Rates, now_ns: int) -> Iterator[_Limit]:
-    """Give the profile's limits, with the time that each may end the run."""
+    """Give the profile's limits, with the time until each may end the run, or the point of a sweep."""
     stop, p = progress.stop, progress.point
     if stop.seconds is not None:
-        left = max(0.0, stop.seconds - progress.elapsed_s)
-        when = "" if left > _FAR_S else f" at {moment(now_ns + left * 1e9, now_ns)}"
-        yield _Limit(left, f"the limit of {duration(stop.seconds)} ends it{when}")
+        left = max(0.0, stop.seconds - elapsed_s(progress, now_ns))
+        yield _Limit(left, f"the limit of {duration(stop.seconds)}")
     counted = (
         (stop.bits, p.bits_sent or p.tally.received, pace.received_bps, "bit"),
         (stop.errors, p.tally.errors, pace.errors_per_s, "error"),
     )
     for limit, done, speed, noun in counted:
-        if limit is None:
-            continue
-        words = f"the limit of {count(limit, noun)} ends it"
-        left = max(0, limit - done) / speed if speed else math.inf
-        yield _Limit(left, words if left == math.inf else f"{words} in {until(left, now_ns)}")
+        if limit is not None:
+            left = max(0, limit - done) / speed if speed and not pace.stalled else math.inf
+            yield _Limit(left, f"the limit of {count(limit, noun)}")

@@ -17,6 +17,7 @@ from harness.record import Event
 
 MARGIN = 8  # columns: a time of day
 FEWEST_EVENTS = 2
+FEW_POINTS = 4  # written out in words also where room is short
 ALARMS = frozenset(
     ("alignment_lost", "slip", "link_lost", "fault", "host_overrun", "never_returned", "inversion")
 )
@@ -32,17 +33,18 @@ class Layout:
     strip_rows: int
     lines_each: int  # of a reason or a remark, at most
     remarks: int
+    points: int  # of a sweep, done before
 
 
 LAYOUTS = (
-    Layout(True, True, 3, 4, 4),
-    Layout(True, True, 2, 3, 3),
-    Layout(False, True, 2, 3, 2),
-    Layout(False, True, 1, 2, 1),
-    Layout(False, False, 2, 2, 1),
-    Layout(False, False, 1, 2, 1),
-    Layout(False, False, 1, 1, 1),
-    Layout(False, False, 0, 1, 0),
+    Layout(True, True, 3, 4, 4, 12),
+    Layout(True, True, 2, 3, 3, 8),
+    Layout(False, True, 2, 3, 2, 5),
+    Layout(False, True, 1, 2, 1, 3),
+    Layout(False, False, 2, 2, 1, 3),
+    Layout(False, False, 1, 2, 1, 2),
+    Layout(False, False, 1, 1, 1, 1),
+    Layout(False, False, 0, 1, 0, 0),
 )
 
 
@@ -79,13 +81,15 @@ class Notebook:
             lines += self._words("", [sheet.risks], 2)
         lines += self._verdict(sheet, layout)
         lines += gap
-        lines += self._words("points", sheet.points, layout.lines_each)
-        if sheet.bar is not None:
-            lines += self._words("BER", [sheet.ber], 2)
-            lines += [self._entry("", line) for line in ruler(sheet.bar, self._room, self.signs)]
-            lines += gap
-            lines += self._words("bits", [*sheet.bits, *(sheet.details if layout.details else ())], 2)
-            lines += self._strip(sheet, layout)
+        lines += self._words("point", [sheet.point] if sheet.point else [], 1)
+        lines += self._words("BER", [sheet.ber] if sheet.ber else [], 2)
+        bars = sheet.bars[max(0, sheet.ahead - layout.points) :]
+        lines += [self._entry(label[:MARGIN], line) for label, line in ruler(bars, self._room, self.signs)]
+        lines += gap
+        if layout.details or len(sheet.points) <= FEW_POINTS:
+            lines += self._words("points", sheet.points, layout.lines_each)
+        lines += self._words("bits", [*sheet.bits, *(sheet.details if layout.details else ())], 2)
+        lines += self._strip(sheet, layout)
         lines += gap
         lines += self._words(sheet.to_do_label, sheet.to_do, 2)
         shown = list(sheet.remarks)[: layout.remarks]
@@ -124,7 +128,7 @@ class Notebook:
         return lines + self._words("", sheet.reasons, layout.lines_each)
 
     def _strip(self, sheet: Sheet, layout: Layout) -> list[Text]:
-        if not layout.strip_rows:
+        if not layout.strip_rows or not (sheet.recent or sheet.bits):
             return []
         rows = strip(sheet.recent, self._room, layout.strip_rows, self.signs, behind_s=sheet.behind_s)
         labels = ["errors/s"] if len(rows) == 1 else [*[""] * (len(rows) - 2), "errors", "a second"]
@@ -140,7 +144,7 @@ class Notebook:
         if rows <= 0 or not groups:
             return []
         shown = groups[-rows:]
-        if len(shown) < len(groups) and rows > 1:
+        if len(shown) < len(groups) and rows > FEWEST_EVENTS:
             shown = groups[-(rows - 1) :]
             earlier = len(events) - sum(times for _event, times in shown)
             lines = [self._entry("", ((self._letters(f"… {earlier} earlier"), PLAIN),))]

@@ -7,6 +7,7 @@ however little shows at least one column on the other side, and one that does no
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 from harness.assess.words import ratio
@@ -26,6 +27,7 @@ class Bar:
     measured: float | None = None
     required: float | None = None
     against: bool = False  # the bar speaks against the unit
+    flag: str = "required: under"
     fades_from: float | None = None  # an open side: where the bar need not be drawn full any more
 
 
@@ -34,14 +36,29 @@ def columns_of_a_decade(width: int) -> int:
     return min(MOST_COLUMNS, (width - _BEYOND - 1) // DECADES)
 
 
-def ruler(bar: Bar, width: int, signs: Signs) -> list[Line]:
-    """Draw the ruler: the flag of the requirement, the bar, the scale, its labels; nothing without room."""
+def ruler(bars: Sequence[tuple[str, Bar]], width: int, signs: Signs) -> list[tuple[str, Line]]:
+    """Draw the ruler: the flag of the requirement, the bars, the scale, its labels; nothing without room.
+
+    Parameters
+    ----------
+    bars
+        With the label of each: a sweep has one for each point. The first mark gets the flag.
+
+    Returns
+    -------
+    lines, each with the label that belongs beside it
+    """
     decade = columns_of_a_decade(width)
-    if decade < 1:
+    if decade < 1 or not bars:
         return []
-    mark = None if bar.required is None else _column(bar.required, decade)
-    lines = [] if mark is None else [_flag(mark, bar.required or 0.0, decade, signs)]
-    return [*lines, _bar(bar, mark, decade, signs), _scale(mark, decade, signs), _labels(decade)]
+    first = next((bar for _label, bar in bars if bar.required is not None), None)
+    mark = None if first is None or first.required is None else _column(first.required, decade)
+    flag = [] if first is None or mark is None else [("", _flag(mark, first, decade, signs))]
+    drawn = [
+        (label, _bar(bar, None if bar.required is None else _column(bar.required, decade), decade, signs))
+        for label, bar in bars
+    ]
+    return [*flag, *drawn, ("", _scale(mark, decade, signs)), ("", _labels(decade))]
 
 
 def _place(value: float, decade: int) -> float:
@@ -55,8 +72,8 @@ def _column(value: float, decade: int) -> int:
     return min(int(_place(value, decade)), DECADES * decade)
 
 
-def _flag(mark: int, required: float, decade: int, signs: Signs) -> Line:
-    words = f"required: under {ratio(required)}"
+def _flag(mark: int, bar: Bar, decade: int, signs: Signs) -> Line:
+    words = f"{bar.flag} {ratio(bar.required)}"
     if mark + 3 + len(words) <= DECADES * decade + _BEYOND:
         return ((" " * mark, PLAIN), (signs.flag, STRONG), (f" {words}", PLAIN))
     return ((" " * (mark - len(words) - 1) + words + " ", PLAIN), (signs.flag, STRONG))

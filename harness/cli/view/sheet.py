@@ -7,12 +7,25 @@ how many bits, what is still to do, what happened meanwhile.
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 from harness.assess.assessment import Assessment, PointAssessment
-from harness.assess.words import count, duration, local_date, percent, rate, ratio
-from harness.cli.view.forecast import moment, rates, still_to_do
+from harness.assess.words import count, duration, local_date, percent, rate
+from harness.cli.view.entries import (
+    ber_decided,
+    ber_so_far,
+    bits_words,
+    detail_words,
+    pattern_name,
+    point_label,
+    point_words,
+    required_words,
+    risk_words,
+    sensitivity_words,
+    unit_name,
+)
+from harness.cli.view.forecast import STALLED_S, elapsed_s, moment, rates, still_to_do
 from harness.cli.view.ruler import Bar
 from harness.record import Event, Tally
 
@@ -52,7 +65,9 @@ class Sheet:
     against: bool = False  # what stands there speaks against the unit
     reasons: Sequence[str] = ()
     ber: str = ""
-    bar: Bar | None = field(default_factory=lambda: Bar(0.0, 1.0))
+    bars: Sequence[tuple[str, Bar]] = (("", Bar(0.0, 1.0)),)
+    ahead: int = 0  # bars that may be left out where room is short: the first ones
+    point: str = ""  # which of several is measured
     bits: Sequence[str] = ()
     details: Sequence[str] = ()  # for a page with room to spare
     points: Sequence[str] = ()
@@ -64,12 +79,6 @@ class Sheet:
     remarks: Sequence[str] = ()
     events: Sequence[Event] = ()
     foot: Sequence[str] = ()
-
-
-def unit_name(device: Mapping[str, str]) -> str:
-    """Name the unit: model and serial number as far as they are known."""
-    words = [device.get("model", ""), device.get("serial_number", "")]
-    return " ".join(word for word in words if word) or "unnamed unit"
 
 
 def sheet_before(title: str, device: Mapping[str, str], now_ns: int) -> Sheet:
@@ -95,8 +104,10 @@ def sheet_of_progress(progress: Progress, now_ns: int, *, closing: str = "", beh
         Whole seconds that have gone by and are not yet decided: the counter waits for what comes next.
     """
     p = progress.point
-    verdict, against = _state(progress, closing)
+    verdict, against = _state(progress, now_ns, closing)
     reasons = _against(progress)
+    looked_for = progress.sensitivity_ber
+    done = [(point_label(d), _bar(d, decided=False, looked_for=looked_for)) for d in progress.done]
     foot = [_foot(progress.run)]
     if progress.waiting_writes > 2:
         foot.insert(
@@ -111,13 +122,15 @@ def sheet_of_progress(progress: Progress, now_ns: int, *, closing: str = "", beh
         verdict=verdict,
         against=against,
         reasons=reasons,
-        ber=_ber_so_far(p),
-        bar=_bar(p, decided=False),
+        ber=ber_so_far(p),
+        point=_point_under_way(progress),
+        bars=[*done, (point_label(p), _bar(p, decided=False, looked_for=progress.sensitivity_ber))],
+        ahead=len(done),
         bits=bits_words(p),
         details=detail_words(p),
         recent=p.recent,
         behind_s=behind_s,
-        to_do=[closing] if closing else still_to_do(progress, now_ns, behind_s=behind_s),
+        to_do=[closing] if closing else _to_do(progress, now_ns, behind_s),
         events=p.events,
         foot=foot,
     )
@@ -139,8 +152,8 @@ def sheet_of_assessment(a: Assessment, where: str = "") -> Sheet:
         stamped=a.verdict is not None,
         against=a.verdict == "FAIL",
         reasons=a.reasons,
-        ber=_ber_decided(p) if decided else _ber_so_far(p),
-        bar=_bar(p, decided=decided),
+        ber=ber_decided(p) if decided else ber_so_far(p),
+        bars=[("", _bar(p, decided=decided))],
         bits=bits_words(p),
         details=detail_words(p),
         recent=p.recent,
@@ -153,47 +166,45 @@ def sheet_of_assessment(a: Assessment, where: str = "") -> Sheet:
     )
     if len(a.points) < 2:
         return sheet
-    return replace(sheet, ber="", bar=None, bits=(), recent=(), points=[point_words(p) for p in a.points])
+    looked_for = a.sensitivity["ber"] if a.sensitivity else None
+    return replace(
+        sheet,
+        required=next((required_words(p) for p in a.points if p.plan), sheet.required),
+        verdict=a.verdict
+        or ("none yet: the run goes on" if a.status == "running" else "none: nothing was required"),
+        ber=sensitivity_words(a.sensitivity),
+        bars=[(point_label(p), _bar(p, decided=False, looked_for=looked_for)) for p in a.points],
+        bits=(),
+        details=(),
+        recent=(),
+        points=_points(a),
+        to_do=[_took_in_all(a)],
+        remarks=(),
+        events=[event for p in a.points for event in p.events],
+    )
 
 
-# -- the words of each entry
-
-
-def required_words(p: PointAssessment) -> list[str]:
-    """Say what is required and how it is decided."""
-    plan = p.plan
-    if plan is None:
-        return ["nothing: measured only"]
-    longest = count(int(plan["longest_bits"]), "bit")
-    if plan["kind"] == "sequential":
-        how = f"a sequential plan decides, within {longest}"
-    elif plan["accept_errors"] == 0:
-        how = f"a {plan['kind']} plan accepts no error in {longest}"
-    else:
-        how = (
-            f"a {plan['kind']} plan accepts at most {count(int(plan['accept_errors']), 'error')} in {longest}"
-        )
-    return [f"BER under {ratio(plan['ber'])} with {percent(plan['confidence'])} confidence", how]
-
-
-def _state(progress: Progress, closing: str) -> tuple[str, bool]:
+def _state(progress: Progress, now_ns: int, closing: str) -> tuple[str, bool]:
     """Say where the run stands, and whether that speaks against the unit."""
     p = progress.point
-    trouble = _trouble(progress)
+    trouble = _trouble(progress, now_ns)
     if progress.outlook.against:
-        return f"no PASS any more{f'; {trouble}' if trouble else ''}", True
+        return f"cannot pass any more{f'; {trouble}' if trouble else ''}", True
     if trouble:
-        return f"none yet: {trouble}", p.tally.received > 0 or progress.elapsed_s > 3
+        return f"{'none' if p.plan is None else 'none yet'}: {trouble}", True
     if p.plan is None:
         return "none: nothing is required", False
     if closing:
         return "none yet: the run is being closed", False
+    errors = count(p.tally.errors, "error") if p.tally.errors else "no error"
     done = f"{int(100 * p.tally.compared / int(p.plan['longest_bits']))} % of the bits"
     if p.plan["kind"] == "sequential":
-        return f"none yet: {done} that it may take at most", False
+        return f"none yet: {errors} in {done} that it may take", False
     accepted = int(p.plan["accept_errors"])
-    errors = count(p.tally.errors, "error") if p.tally.errors else "no error"
-    return f"none yet: {done}, {errors} where {accepted or 'none'} may be", False
+    return (
+        f"none yet: {errors} in {done}; {accepted or 'none'} {'are' if accepted > 1 else 'is'} accepted",
+        False,
+    )
 
 
 def _against(progress: Progress) -> list[str]:
@@ -207,7 +218,7 @@ def _against(progress: Progress) -> list[str]:
     return [f"because of {progress.outlook.against[0]}"]
 
 
-def _trouble(progress: Progress) -> str:
+def _trouble(progress: Progress, now_ns: int) -> str:
     """Say what is amiss just now, if anything is."""
     p = progress.point
     lost = back = aligned = unaligned = None
@@ -219,18 +230,23 @@ def _trouble(progress: Progress) -> str:
     if lost is not None and (back is None or back < lost):
         return f"the link is lost since {moment(p.events[lost].at or 0, p.events[lost].at or 0)}"
     if not p.tally.received:
-        return f"no bit has come in {duration(round(progress.elapsed_s))}"
+        waited_s = elapsed_s(progress, now_ns)
+        return f"no bit has come in {duration(round(waited_s))}" if waited_s >= STALLED_S else ""
     if not p.tally.compared:
-        return f"{count(p.tally.received, 'bit')} came, but {p.pattern} is not found in them"
+        return f"{count(p.tally.received, 'bit')} came, but {pattern_name(p)} is not found in them"
     if unaligned is not None and (aligned is None or aligned < unaligned):
-        return f"{p.pattern} is no longer found in what comes"
+        return f"{pattern_name(p)} is no longer found in what comes"
     return ""
 
 
-def _bar(p: PointAssessment, *, decided: bool) -> Bar:
+def _bar(p: PointAssessment, *, decided: bool, looked_for: float | None = None) -> Bar:
+    """Make a point's bar; a sweep's mark is the ratio that its sensitivity is looked for at."""
     required = None if p.plan is None else float(p.plan["ber"])
+    flag = "required: under"
+    if looked_for is not None:
+        required, flag = looked_for, "looked for:"
     if p.bounds is None or not p.tally.compared:
-        return Bar(0.0, 1.0, None, required)
+        return Bar(0.0, 1.0, None, required, flag=flag)
     b = p.bounds
     lower, upper, fades = b.lower, b.upper, None
     if decided and b.side == "lower":
@@ -239,83 +255,8 @@ def _bar(p: PointAssessment, *, decided: bool) -> Bar:
         upper = b.value
         if p.verdict == "PASS":  # one-sided: nothing is said of how good the unit is
             lower, fades = 0.0, b.lower
-    against = required is not None and lower >= required
-    return Bar(lower, upper, p.ber, required, against=against, fades_from=fades)
-
-
-def _ber_so_far(p: PointAssessment) -> str:
-    """Say the ratio and the two-sided bounds, which the bar shows."""
-    if p.bounds is None or not p.tally.compared:
-        return "no bit was compared: every ratio is possible"
-    b = p.bounds
-    sure = f"at {percent(b.confidence)} confidence"
-    if not p.tally.errors:
-        return f"no error measured; under {ratio(b.upper)} {sure}"
-    return f"{ratio(p.ber)} measured; between {ratio(b.lower)} and {ratio(b.upper)} {sure}"
-
-
-def _ber_decided(p: PointAssessment) -> str:
-    """Say the ratio and the bound that decides, which the bar shows beside a verdict."""
-    if p.bounds is None or not p.tally.compared:
-        return _ber_so_far(p)
-    b = p.bounds
-    side = "under" if b.side == "upper" else "over"
-    measured = f"{ratio(p.ber)} measured" if p.tally.errors else "no error measured"
-    return f"{measured}; {side} {ratio(b.value)} with {percent(b.deciding_confidence)} confidence"
-
-
-def bits_words(p: PointAssessment) -> list[str]:
-    """Say on how many bits it all rests."""
-    t = p.tally
-    if not t.received:
-        return ["none received" + (f", {count(p.bits_sent, 'bit')} sent" if p.bits_sent else "")]
-    errors = "no error" if not t.errors else count(t.errors, "error")
-    lines = [f"{count(t.compared, 'bit')} compared with {p.pattern}, {errors}"]
-    more = []
-    if not t.compared:
-        lines = [f"none compared: {p.pattern} is not found in the {count(t.received, 'bit')} that came"]
-    elif t.unaligned:
-        more.append(f"{count(t.unaligned, 'bit')} not aligned")
-    if p.slip_count:
-        more.append(count(p.slip_count, "slip"))
-    if p.bits_lost:
-        more.append(f"{count(p.bits_lost, 'bit')} lost")
-    if p.bits_inserted:
-        more.append(f"{count(p.bits_inserted, 'bit')} inserted")
-    if more:
-        lines.append(", ".join(more))
-    return lines
-
-
-def detail_words(p: PointAssessment) -> list[str]:
-    """Say what is good to know where there is room for it."""
-    t = p.tally
-    lines = []
-    if t.errors:
-        ones, zeros = count(t.ones_as_zeros, "ONE"), count(t.zeros_as_ones, "ZERO")
-        lines.append(f"{ones} received as ZERO, {zeros} received as ONE")
-    if t.received:
-        sent = f"{count(p.bits_sent, 'bit')} sent, " if p.bits_sent else ""
-        speed = f" at {rate(p.measured_bps)}" if p.measured_bps else ""
-        lines.append(f"{sent}{count(t.received, 'bit')} received{speed}")
-    for a in p.availability:
-        if a.seconds:
-            lines.append(
-                f"{a.standard}: {count(a.seconds, 'second')}, {a.errored} errored, "
-                f"{a.severely_errored} severely errored, {a.unavailable} unavailable"
-            )
-    return lines
-
-
-def risk_words(p: PointAssessment) -> str:
-    """Say how often the plan is wrong about a unit."""
-    if p.plan is None:
-        return ""
-    plan = p.plan
-    return (
-        f"risks: {percent(plan['consumer_risk'])} that a unit with just this BER passes, "
-        f"{percent(plan['producer_risk'])} that one {plan['margin']:g} times better fails"
-    )
+    against = required is not None and looked_for is None and lower >= required
+    return Bar(lower, upper, p.ber, required, against=against, flag=flag, fades_from=fades)
 
 
 def _took(a: Assessment) -> str:
@@ -350,10 +291,38 @@ def _foot(run: str) -> str:
     return f"{key}Ctrl-C ends and keeps it"
 
 
-def point_words(p: PointAssessment) -> str:
-    """Say one of several points in a line."""
-    direction = p.facts.get("direction")
-    values = ", ".join(f"{name} {value:g}" for name, value in p.values.items())
-    name = f"{direction} direction" if direction else values or "point"
-    verdict = f"{p.verdict}, " if p.verdict else ""
-    return f"{name}: {verdict}{_ber_so_far(p)} ({bits_words(p)[0]})"
+def _point_under_way(progress: Progress) -> str:
+    if progress.visits < 2:
+        return ""
+    p = progress.point
+    units = progress.units
+    values = ", ".join(f"{name} {value:g} {units.get(name, '')}".strip() for name, value in p.values.items())
+    return (
+        f"{progress.number + 1} of {progress.visits}: {values}"
+        if values
+        else f"{progress.number + 1} of {progress.visits}"
+    )
+
+
+def _to_do(progress: Progress, now_ns: int, behind_s: int) -> list[str]:
+    lines = still_to_do(progress, now_ns, behind_s=behind_s)
+    if progress.visits < 2:
+        return lines
+    left = progress.visits - progress.number - 1
+    words = f"then {count(left, 'more point')}" if left else "this is the last point"
+    if progress.until is not None:
+        words += f"; the whole until about {moment(progress.until * 1e9, now_ns)}"
+    return [*lines[:1], words]
+
+
+def _points(a: Assessment) -> list[str]:
+    sure = next((percent(p.bounds.confidence) for p in a.points if p.bounds), None)
+    words = [point_words(p) for p in a.points]
+    return [f"bounds at {sure} confidence", *words] if sure else words
+
+
+def _took_in_all(a: Assessment) -> str:
+    words = count(len(a.points), "point")
+    if a.ended is not None:
+        words += f" in {duration(round((a.ended - a.started) / 1e9))}, until {local_date(a.ended)[11:19]}"
+    return f"{words}; {_why(a)}" if _why(a) else words

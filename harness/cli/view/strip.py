@@ -51,7 +51,7 @@ def strip_width(width: int) -> int:
 def strip_words(recent: Sequence[tuple[int, Tally]], signs: Signs, *, behind_s: int = 0) -> str:
     """Say in words what the strip shows."""
     seconds = [t for t in _by_second(recent, SECONDS, behind_s) if t is not None]
-    waiting = f"the last {count(behind_s, 'second')}: not decided yet" if behind_s else ""
+    waiting = f"{behind_s} s not decided yet" if behind_s else ""
     if not seconds:
         return waiting or "no second is complete yet"
     errors = sum(t.errors for t in seconds)
