@@ -76,10 +76,10 @@ class PointAssessment:
     seconds: float
     rate_bps: float | None
     measured_bps: float | None
-    pattern: str
+    pattern: str | None
     alternatives: Sequence[str]
     inverted: bool | None
-    bit_order: str
+    bit_order: str | None
     bits_sent: int
     tally: Tally
     ber: float | None

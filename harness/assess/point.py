@@ -28,10 +28,11 @@ class Facts:
     started: int
     ended: int | None
     after_decision: Tally
-    pattern: str
-    bit_order: str
+    pattern: str | None  # None: none was found
+    bit_order: str | None
     rate_bps: float | None
     requirement: Requirement | None
+    confidence: float = DEFAULT_CONFIDENCE  # of the bounds where nothing is required
     facts: Mapping[str, Any] = field(default_factory=dict)
 
 
@@ -119,7 +120,7 @@ def _slip(event: Event) -> dict[str, Any]:
 def _bounds(acc: Accumulator, about: Facts, quick: bool) -> Bounds:
     """Give the bounds that go with the way the run was stopped; while it goes on, those of the count."""
     tally = acc.sums.tally
-    confidence = about.requirement.confidence if about.requirement else DEFAULT_CONFIDENCE
+    confidence = about.requirement.confidence if about.requirement else about.confidence
     upper = upper_bound(tally.errors, tally.compared, confidence)
     if acc.plan is not None and tally.compared and not quick:
         stop = acc.plan.bounds(confidence, "operator" if about.ended_by == "interrupted" else "limit")

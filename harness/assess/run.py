@@ -7,7 +7,7 @@ from typing import Any
 
 from harness.assess.accumulate import Accumulator, accumulator_for
 from harness.assess.assessment import Assessment, PointAssessment
-from harness.assess.point import Facts, assess_point
+from harness.assess.point import DEFAULT_CONFIDENCE, Facts, assess_point
 from harness.assess.requirement import Requirement, requirement_at, requirement_of
 from harness.record import Event, Point, Run, Verdict
 
@@ -67,10 +67,11 @@ def facts_of(run: Run, point: Point, requirement: Requirement | None) -> Facts:
         started=point.started,
         ended=point.ended,
         after_decision=point.after_decision,
-        pattern=str(point.facts.get("pattern", pattern.get("name", ""))),
-        bit_order=str(point.facts.get("bit_order", pattern.get("bit_order", "lsb"))),
+        pattern=point.facts.get("pattern", pattern.get("name")),
+        bit_order=point.facts.get("bit_order", pattern.get("bit_order")),
         rate_bps=point.facts.get("rate_bps"),
         requirement=requirement,
+        confidence=float(run.settings.get("confidence", DEFAULT_CONFIDENCE)),
         facts=point.facts,
     )
 

@@ -18,7 +18,7 @@ from numpy.typing import NDArray
 from harness.assess.accumulate import EVENTS_KEPT
 from harness.bench.book import Book
 from harness.bench.consumer import slip_words
-from harness.record import BitOrder, Event, Point, Run, Second, Segment
+from harness.record import BitOrder, Event, Point, Run, Second, Segment, Tally
 from harness.signal.counter import Counter
 from harness.signal.patterns import Pattern
 
@@ -124,9 +124,8 @@ class Examination:
         if commit is not None and rows:
             commit(rows, [], self._counter.received - self._counter.decided)
 
-    def record(self, *, title: str, settings: dict[str, Any], key: str = "") -> Run:
+    def record(self) -> Run:
         """Give the record that a store would hold."""
-        now = time.time_ns()
         capture = self._capture
         facts = {
             "pattern": capture.pattern.name,
@@ -136,24 +135,39 @@ class Examination:
             "alternatives": list(capture.alternatives),
             "untimed": capture.rate_bps is None,
         }
-        point = Point(0, {}, now, now, "end_of_data", tuple(self.seconds), tuple(self.events), facts=facts)
-        return Run(
-            key=key,
-            title=title,
-            command="examine",
-            started=now,
-            ended=now,
-            status="completed",
-            ended_by="end_of_data",
-            verdict=None,
-            profile_text="",
-            overrides=(),
-            settings=settings,
-            device={},
-            sittings=(),
-            points=(point,),
-            stated=None,
-        )
+        settings = {"pattern": {"name": capture.pattern.name, "bit_order": capture.bit_order}}
+        return _run(settings, facts, self.seconds, self.events)
+
+
+def nothing_found(data: NDArray[np.uint8], rate_bps: float | None, asked: str) -> Run:
+    """Give the record of a capture in which no pattern was found: all of it unaligned."""
+    bits = 8 * len(data)
+    duration_ns = 0 if rate_bps is None else round(bits / rate_bps * 1e9)
+    whole = Second(0, 0, 0, 0, duration_ns, 0, Tally(bits, 0, bits), stretches=((bits, False),))
+    facts = {"pattern": None, "bit_order": None, "rate_bps": rate_bps, "untimed": True, "asked": asked}
+    return _run({"pattern": {"name": asked}}, facts, [whole], [])
+
+
+def _run(settings: dict[str, Any], facts: dict[str, Any], seconds: list[Second], events: list[Event]) -> Run:
+    now = time.time_ns()
+    point = Point(0, {}, now, now, "end_of_data", tuple(seconds), tuple(events), facts=facts)
+    return Run(
+        key="",
+        title="",
+        command="examine",
+        started=now,
+        ended=now,
+        status="completed",
+        ended_by="end_of_data",
+        verdict=None,
+        profile_text="",
+        overrides=(),
+        settings=settings,
+        device={},
+        sittings=(),
+        points=(point,),
+        stated=None,
+    )
 
 
 def map_file(path: Path) -> NDArray[np.uint8]:

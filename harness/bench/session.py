@@ -4,9 +4,6 @@ from __future__ import annotations
 
 import contextlib
 import getpass
-import os
-import platform
-import socket
 import sys
 import threading
 import time
@@ -22,6 +19,7 @@ from drivers.registry import link_class
 from harness.profile import LinkSettings, Profile
 from harness.record import BitOrder, Event, Status
 from harness.signal.patterns import Pattern, parse_pattern
+from harness.store import this_host
 
 QUIET_S = 0.05
 
@@ -32,13 +30,7 @@ def bench_host() -> dict[str, Any]:
         person = getpass.getuser()
     except (KeyError, OSError):
         person = ""
-    return {
-        "name": socket.gethostname(),
-        "pid": os.getpid(),
-        "user": person,
-        "python": platform.python_version(),
-        "platform": platform.platform(),
-    }
+    return {**this_host(), "user": person}
 
 
 def bench_versions() -> dict[str, str]:

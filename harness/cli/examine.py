@@ -5,7 +5,7 @@ from __future__ import annotations
 import sys
 from dataclasses import replace
 from pathlib import Path
-from typing import TYPE_CHECKING, Any, BinaryIO
+from typing import TYPE_CHECKING, BinaryIO, Literal
 
 from harness.cli.failure import FAULT, PASS, UNDECIDED, UserError, warn
 from harness.cli.output import open_writing, print_json, store_url
@@ -14,7 +14,7 @@ if TYPE_CHECKING:
     import numpy as np
     from numpy.typing import NDArray
 
-    from harness.bench.examine import Capture
+    from harness.bench.identification import Identified
     from harness.record import BitOrder, Run
 
 ORDERS = ("lsb", "msb")
@@ -33,7 +33,7 @@ def examine(
 ) -> int:
     """Count errors in a capture."""
     from harness.assess.run import assess
-    from harness.bench.examine import Examination, map_file
+    from harness.bench.examine import Examination, map_file, nothing_found
     from harness.cli.page import page
 
     _check(bit_order, rate_bps, confidence)
@@ -47,38 +47,41 @@ def examine(
         raise UserError(
             f"{file} is empty: not a single bit came", "capture again; nothing was counted", FAULT
         )
-    capture, words = _identified(data, pattern, bit_order, rate_bps)
-    if capture is None:
-        raise UserError(
-            f"{file}: {words}", "name the pattern with --pattern if you know what was sent", UNDECIDED
-        )
-    examination = Examination(capture)
-    examination.run()
-    settings: dict[str, Any] = {
-        "pattern": {"name": capture.pattern.name, "bit_order": capture.bit_order},
-        "confidence": confidence,
-        "file": str(file),
-    }
-    record = examination.record(title=f"capture {file.name}", settings=settings)
+    found = _identified(data, pattern, bit_order, rate_bps)
+    if found.capture is None:
+        examination = None
+        record = nothing_found(data, rate_bps, pattern)
+    else:
+        examination = Examination(found.capture)
+        examination.run()
+        record = examination.record()
+    settings = {**record.settings, "confidence": confidence, "file": str(file)}
+    record = replace(record, title=f"capture {file.name}", settings=settings)
     if store is not None:
         record = _keep(record, store)
     assessment = assess(record)
-    document = assessment.to_json()
-    document["identification"] = words
     if not record.key:
-        document["run"] = None
         assessment = replace(assessment, run=None)
+    document = assessment.to_json() | {
+        "identification": found.words,
+        "identification_confidence": found.confidence,
+    }
     if as_json:
         print_json(document)
     else:
         print("\n".join(page(assessment, store_url(store) if store is not None else "")))
-        if words:
-            print(f"identified  {words}")
-    if assessment.whole.tally.compared == 0:
-        warn(f"{file} was never aligned to {capture.pattern.name}")
+        if found.words:
+            print(f"identified  {found.words}")
+    if assessment.whole.tally.compared:
+        return PASS
+    sys.stdout.flush()
+    if found.capture is None:
+        warn(f"{file}: {found.words}")
+        print("  name the pattern with --pattern if you know what was sent", file=sys.stderr)
+    else:
+        warn(f"{file} was never aligned to {found.capture.pattern.name}")
         print("  try --pattern auto, the other --bit-order, or a longer capture", file=sys.stderr)
-        return UNDECIDED
-    return PASS
+    return UNDECIDED
 
 
 def _check(bit_order: str, rate_bps: float | None, confidence: float) -> None:
@@ -92,20 +95,20 @@ def _check(bit_order: str, rate_bps: float | None, confidence: float) -> None:
         raise UserError(f"a confidence of {confidence:g} is outside 0 to 1", "give 0.95 for 95 %")
 
 
-def _identified(
-    data: NDArray[np.uint8], pattern: str, bit_order: str, rate_bps: float | None
-) -> tuple[Capture | None, str]:
+def _identified(data: NDArray[np.uint8], pattern: str, bit_order: str, rate_bps: float | None) -> Identified:
     """Find out pattern and order where they are not told."""
     from harness.bench.examine import Capture
+    from harness.bench.identification import Identified, identify_capture
     from harness.signal.patterns import parse_pattern
 
     if pattern.lower() != "auto" and bit_order != "auto":
         order: BitOrder = "lsb" if bit_order == "lsb" else "msb"
         named = parse_pattern(pattern, bit_order=order, read=_read)
-        return Capture(data, named, order, rate_bps), ""
-    from harness.bench.identification import identify_capture
-
-    return identify_capture(data, pattern, bit_order, rate_bps, _read)
+        return Identified(Capture(data, named, order, rate_bps), "", 1.0)
+    chosen: Literal["lsb", "msb", "auto"] = "auto"
+    if bit_order != "auto":
+        chosen = "lsb" if bit_order == "lsb" else "msb"
+    return identify_capture(data, pattern, chosen, rate_bps, _read)
 
 
 def _read(path: str) -> bytes:
