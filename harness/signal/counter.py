@@ -23,6 +23,7 @@ from harness.signal.track import SLAB_BYTES, Scratch, Track, Trouble
 
 _LOSS_AFTER = rules.OUTAGE_BITS + 2 * rules.LONGEST_WINDOW  # bits without evidence until loss is stated
 _LONGEST_PUZZLE = 4 * rules.LONGEST_WINDOW  # bits in which places between two are looked for
+_LEAST_FOR_LEVEL = 512  # bits that tell by themselves how many errors are usual
 
 
 class Counter:
@@ -252,6 +253,8 @@ class Counter:
             evidence = self._pass_over(before, after, cut, end)
         place = path.places[-1]
         level = self._level(place, Stretch(evidence, stretch.bits[evidence - stretch.first :]))
+        if search.old is not None and stretch.end - evidence < _LEAST_FOR_LEVEL:
+            level = max(level, self._trouble.level)
         if search.old is not None:
             # Trouble that was judged is not met again, so every search is further on than the last.
             evidence = max(evidence, self._trouble.noticed if old == place else search.begin + 64)

@@ -18,11 +18,12 @@ from harness.signal.places import Place, Reference
 from harness.signal.slips import Gap, gap_between, split_path, worst_stretch
 
 _MOST_PLACES = 24  # in one stretch of trouble
-_CAREFUL = 0.7  # of the alarm: once there is trouble, less of it is looked into
+_CAREFUL = 0.6  # of the alarm: once there is trouble, less of it is looked into
 _AROUND = 512  # bits around trouble in which a place is looked for as well, at most
 _FILLS = 0.75  # a place that holds for so much of the trouble was not picked out of many stretches
 _GUARD = 0.75  # of the evidence must remain when the shares of ONEs are taken into account
-_BETTER = 1 / 5  # of the evidence must come from bits that were not explained before
+_LEAST_GAIN = 5  # mismatches that a place more must save
+_TRIED = 6  # places that explain a stretch best are tried
 
 
 @dataclass(frozen=True, slots=True)
@@ -148,22 +149,18 @@ class Resolver:
         end_at = int(np.searchsorted(path.cuts, end, side="left"))
         known = {path.places[begin_at], path.places[end_at]}
         beside = set(path.places[max(begin_at - 1, 0) : end_at + 2])
-        old = wrong.along(path)
+        best, least = None, int(wrong.along(path).sum()) - _LEAST_GAIN
         for centre in dict.fromkeys([path.places[begin_at], path.places[end_at]]):
             for place in self._best_between(centre, (known, beside), wrong.stretch, begin, end, share):
                 for longer, at in _ways_in(path, place, begin, end):
-                    cuts, _ = split_path([wrong[p] for p in longer])
-                    first, last = Path(longer, cuts).edges(len(old))[at : at + 2]
-                    other = old[first:last] != wrong[place][first:last]
-                    better = log_tail(
-                        int(np.count_nonzero(other)), int(wrong[place][first:last][other].sum())
-                    )
+                    cuts, total = split_path([wrong[p] for p in longer])
+                    if total > least:
+                        continue
+                    first, last = Path(longer, cuts).edges(len(wrong.stretch.bits))[at : at + 2]
                     limit = self._limit(longer[at - 1 : at], longer[at + 1 : at + 2])
-                    if better <= _BETTER * limit and self._proven(
-                        place, wrong, first, last, share, limit, end - begin
-                    ):
-                        return _cut(longer, wrong)
-        return None
+                    if self._proven(place, wrong, first, last, share, limit, end - begin):
+                        best, least = longer, total - 1
+        return None if best is None else _cut(best, wrong)
 
     def _limit(self, before: list[Place], after: list[Place]) -> float:
         """What chance a place between two others may have: more where the stream is known to slip there."""
@@ -249,11 +246,10 @@ class Resolver:
                 shift = near.shift_of(place)
                 if shift is not None:
                     (same if place.inverted == centre.inverted else turned)[shift] = -np.inf
-            inverted = bool(turned.max() > same.max())
-            scores = turned if inverted else same
-            best = np.flatnonzero(scores == scores.max())
-            nearest = int(best[np.argmin(np.abs(best - near.shifts // 2))])
-            found.append(self._reference.normal(near.place_of(nearest, inverted)))
+            scores = np.concatenate([same, turned])
+            for index in np.argsort(-scores, kind="stable")[:_TRIED]:
+                inverted, shift = divmod(int(index), near.shifts)
+                found.append(self._reference.normal(near.place_of(shift, bool(inverted))))
         return list(dict.fromkeys(found))
 
 
