@@ -106,6 +106,9 @@ def serve_pty(args: argparse.Namespace) -> None:
         out = answer(data) if answer else mangle(data)
         while out:
             out = out[os.write(master, out) :]
+        if args.modem == "talkative":
+            time.sleep(0.05)
+            os.write(master, b"WADER-9 at your service")
         if mangle.done:
             # The system throws away what a closed pseudo-terminal still holds: wait until it has been read.
             while select.select([slave], [], [], 0)[0]:

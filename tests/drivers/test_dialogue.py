@@ -44,7 +44,7 @@ def left_over(link: Link) -> bytes:
 DATA = {"send": "AT+DATA=1\r", "expect": "OK"}
 
 
-@pytest.mark.parametrize("modem", ["ok", "late", "echoing"])
+@pytest.mark.parametrize("modem", ["ok", "late", "echoing", "talkative"])
 def test_a_modem_that_answers_is_set_up_and_nothing_of_it_is_left(modem: str, device: Start) -> None:
     with pty(device("pty", "--modem", modem)) as link:
         first, second = talk(link, DATA, {"send": "ATE0\r", "expect": "OK"})

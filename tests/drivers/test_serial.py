@@ -232,6 +232,9 @@ def test_line_settings_left_by_the_last_program_lose_no_byte(pair: Pair) -> None
         assert receive(link, 256) == bytes(range(256))
         send_all(link, bytes(range(256)))
         assert os.read(master, 1000) == bytes(range(256))
+        # What a pseudo-terminal cannot show: a break would flush, a byte with a framing error would vanish.
+        told = subprocess.run(["stty", "-F", port, "-a"], check=True, capture_output=True, text=True).stdout
+        assert {"-ignpar", "-brkint", "-parmrk", "-istrip", "-inpck"} <= set(told.replace(";", " ").split())
 
 
 @pytest.mark.parametrize(
