@@ -119,10 +119,7 @@ def apply(raw: dict[str, Any], override: str, keys: Keys) -> None:
     if not isinstance(node, dict):
         raise ProfileError(f"{dotted(path[:-1])} is a value, not a section", EXAMPLE)
     annotation = keys.at((*real, last), raw)
-    value = read_value(text.strip() if path[0] != "device" else text, annotation)
-    if path[0] == "device":
-        value = as_text(value)
-    node[str(last)] = value
+    node[str(last)] = read_value(text if path[0] == "device" else text.strip(), annotation)
 
 
 def _span(section: Any) -> tuple[float, float] | None:

@@ -46,7 +46,7 @@ def find_profile(path: Path) -> Path:
         ) from None
     names = ready_names()
     wanted = path.as_posix().removeprefix("./").removeprefix("profiles/").removesuffix(".toml")
-    if not path.is_absolute() and wanted in names:
+    if wanted in names:
         return ready_profiles() / f"{wanted}.toml"
     near = nearest(wanted, names)
     listed = f"; ready profiles: {', '.join(names)}" if names else ""
