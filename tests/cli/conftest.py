@@ -1,0 +1,152 @@
+"""Fixtures for what is shown: assessments and progress made of real seconds, through the real accumulator."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from typing import Any
+
+import numpy as np
+import pytest
+
+from harness.assess.accumulate import Accumulator
+from harness.assess.assessment import Assessment, PointAssessment
+from harness.assess.point import Facts, assess_point
+from harness.assess.requirement import Requirement
+from harness.bench.measurement import StopRules
+from harness.bench.outlook import outlook_of
+from harness.bench.run import Progress
+from harness.record import Event, Second, Tally
+
+BITS = 48_000  # of a second
+SECOND_NS = 10**9
+START = 1_788_250_000 * SECOND_NS  # some morning in 2026
+
+
+class Making:
+    """Makes what the view is shown from seconds: a number of errors each, or "silent", or "unaligned"."""
+
+    start = START
+
+    def second(self, index: int, what: int | str, first_bit: int) -> Second:
+        bits = 0 if what == "silent" else BITS
+        errors = 0 if isinstance(what, str) else what
+        aligned = what != "unaligned"
+        positions = first_bit + np.linspace(0, BITS - 1, errors).astype(np.int64)
+        lost = np.arange(errors) % 2 == 0
+        ones = int(np.count_nonzero(lost))
+        compared = bits if aligned else 0
+        return Second(
+            point=0,
+            sitting=0,
+            index=index,
+            at=START + index * SECOND_NS,
+            duration_ns=SECOND_NS,
+            sent=BITS,
+            tally=Tally(bits, compared, bits - compared, errors, ones, errors - ones),
+            first_bit=first_bit,
+            positions=positions,
+            ones_lost=lost,
+            stretches=((bits, aligned),) if bits else (),
+        )
+
+    def accumulator(
+        self, seconds: Sequence[int | str], events: Sequence[Event], requirement: Requirement | None
+    ) -> Accumulator:
+        acc = Accumulator(requirement, float(BITS))
+        for event in events:
+            acc.note(event)
+        first = 0
+        for index, what in enumerate(seconds):
+            made = self.second(index, what, first)
+            first += made.tally.received
+            acc.add(made)
+        return acc
+
+    def point(
+        self,
+        acc: Accumulator,
+        requirement: Requirement | None,
+        values: dict[str, float] | None = None,
+        **more: Any,
+    ) -> PointAssessment:
+        about: dict[str, Any] = {
+            "values": values or {},
+            "status": "running",
+            "ended_by": None,
+            "started": START,
+            "ended": None,
+            "after_decision": Tally(),
+            "pattern": "PRBS15",
+            "bit_order": "lsb",
+            "rate_bps": float(BITS),
+            "requirement": requirement,
+        }
+        return assess_point(acc, Facts(**(about | more)), quick=about["status"] == "running" and not more)
+
+    def progress(
+        self,
+        seconds: Sequence[int | str] = (),
+        events: Sequence[Event] = (),
+        requirement: Requirement | None = None,
+        stop: StopRules | None = None,
+        **more: Any,
+    ) -> Progress:
+        acc = self.accumulator(seconds, events, requirement)
+        fields: dict[str, Any] = {
+            "run": "01a23131-8b67-7daf-abad-9efac13d5de1",
+            "title": "Wader-9 acceptance, 48 kbit/s",
+            "device": {"model": "Wader-9", "serial_number": "0031"},
+            "point": self.point(acc, requirement),
+            "longest_bits": acc.plan.longest_bits if acc.plan else None,
+            "stop": stop or StopRules(),
+            "elapsed_s": float(len(seconds)),
+            "outlook": outlook_of(acc, requirement),
+        }
+        return Progress(**(fields | more))
+
+    def assessment(
+        self,
+        seconds: Sequence[int | str],
+        events: Sequence[Event] = (),
+        requirement: Requirement | None = None,
+        *,
+        status: str = "completed",
+        ended_by: str = "plan",
+        **more: Any,
+    ) -> Assessment:
+        acc = self.accumulator(seconds, events, requirement)
+        ended = START + len(seconds) * SECOND_NS
+        p = self.point(acc, requirement, status=status, ended_by=ended_by, ended=ended)
+        fields: dict[str, Any] = {
+            "run": "01a23131-8b67-7daf-abad-9efac13d5de1",
+            "title": "Wader-9 acceptance, 48 kbit/s",
+            "command": "measure",
+            "status": status,
+            "ended_by": ended_by,
+            "started": START,
+            "ended": ended,
+            "device": {"model": "Wader-9", "serial_number": "0031"},
+            "verdict": p.verdict,
+            "reasons": p.reasons,
+            "whole": p,
+            "points": [p],
+        }
+        return Assessment(**(fields | more))
+
+    def event(self, kind: str, text: str, second: float = 0.0, bit: int | None = None) -> Event:
+        return Event(kind, bit, text, START + int(second * SECOND_NS))
+
+
+@pytest.fixture
+def making(monkeypatch: pytest.MonkeyPatch) -> Making:
+    return Making()
+
+
+@pytest.fixture
+def utc(monkeypatch: pytest.MonkeyPatch) -> Callable[[], None]:
+    """Let the local time of day be UTC."""
+    import time
+
+    monkeypatch.setenv("TZ", "UTC")
+    time.tzset()
+    return time.tzset

@@ -1,0 +1,114 @@
+"""Ctrl-C, SIGTERM and SIGKILL: the run is closed, or cut; what was measured is kept and goes on."""
+
+from __future__ import annotations
+
+import json
+import os
+import random
+import signal
+import subprocess
+import sys
+import time
+
+import pytest
+
+RUN = """
+title = "Wader-9, invented"
+[device]
+serial_number = "0031"
+[link]
+driver = "loopback"
+rate_bps = 800_000
+pace_bps = 800_000
+drain_s = 1
+[[link.channel]]
+model = "independent"
+ber = 1e-3
+seed = 7
+"""
+
+
+def start(tmp_path, *arguments: str) -> subprocess.Popen[str]:
+    return subprocess.Popen(
+        [sys.executable, "-m", "harness.cli.main", *arguments],
+        cwd=tmp_path,
+        env={k: v for k, v in os.environ.items() if k != "BITASSAY_STORE"},
+        stdout=subprocess.PIPE,
+        stderr=subprocess.PIPE,
+        text=True,
+    )
+
+
+def seconds_kept(bitassay) -> float:
+    shown = bitassay("show", "last", "--json")
+    return shown.json["seconds"] if shown.status == 0 else 0.0
+
+
+def wait_until_measuring(bitassay, least_s: float = 1.0) -> None:
+    for _ in range(40):
+        if seconds_kept(bitassay) >= least_s:
+            return
+        time.sleep(0.2)
+    raise AssertionError("the run never got going")
+
+
+@pytest.mark.parametrize(("number", "status"), [(signal.SIGINT, 130), (signal.SIGTERM, 143)])
+def test_a_signal_closes_the_run_properly(bitassay, tmp_path, number, status):
+    (tmp_path / "run.toml").write_text(RUN + "[requirement]\nber = 1e-9\n[stop]\nseconds = 60\n")
+    process = start(tmp_path, "measure", "run.toml", "--json")
+    wait_until_measuring(bitassay)
+    process.send_signal(number)
+    out, err = process.communicate(timeout=20)
+    assert process.returncode == status, err
+    got = json.loads(out)
+    assert (got["status"], got["ended_by"]) == ("interrupted", "interrupted")
+    assert got["bits_received"] == got["bits_compared"] > 400_000
+    assert bitassay("show", "last", "--json").json == got
+    assert bitassay("verify", "last").status == 0
+
+
+def test_a_killed_run_is_cut_and_keeps_all_but_its_last_second(bitassay, tmp_path):
+    (tmp_path / "run.toml").write_text(RUN + "[stop]\nseconds = 60\n")
+    process = start(tmp_path, "measure", "run.toml", "--quiet")
+    wait_until_measuring(bitassay, 2.0)
+    begun = time.monotonic()
+    process.kill()
+    process.communicate()
+    kept = seconds_kept(bitassay)
+    shown = bitassay("show", "last", "--json").json
+    assert shown["status"] == "cut"
+    assert kept >= 2.0
+    assert time.monotonic() - begun < 30
+    assert bitassay("verify", "last").status == 0
+
+
+def test_a_sweep_killed_again_and_again_has_the_bits_of_one_that_was_not(bitassay, tmp_path):
+    (tmp_path / "sweep.toml").write_text(
+        RUN
+        + "[stop]\nbits = 2_400_000\n[instruments.attenuator]\ndriver = 'simulated'\nknob = 'ber'\n"
+        + "limits = [0, 0.5]\nsafe = 0\n[sweep]\ninstrument = 'attenuator'\nvalues = [0.001, 0.01, 0.1]\n"
+    )
+    rng = random.Random(4)
+    process = start(tmp_path, "sweep", "sweep.toml", "--quiet")
+    wait_until_measuring(bitassay)
+    kills = 0
+    while process.poll() is None and kills < 4:
+        process.kill()
+        process.communicate()
+        kills += 1
+        process = start(tmp_path, "resume", "last", "--quiet")
+        time.sleep(rng.uniform(2.0, 4.0))
+    process.communicate(timeout=60)
+    assert process.returncode == 0
+    assert kills >= 2
+    got = bitassay("show", "last", "--json").json
+    assert got["status"] == "completed"
+    assert [point["values"]["attenuator"] for point in got["points"]] == [0.001, 0.01, 0.1]
+    for point in got["points"]:
+        assert point["bits_compared"] == point["bits_received"] == 2_400_000
+        expected = 2_400_000 * point["values"]["attenuator"]
+        assert abs(point["errors"] - expected) < 6 * expected**0.5  # under 1e-8 by chance
+    assert bitassay("verify", "last").status == 0
+    again = bitassay("resume", "last", "--json")
+    assert again.status == 0
+    assert again.json["run"] == got["run"]
