@@ -257,6 +257,28 @@ def test_a_server_that_does_not_answer_says_so_without_its_password() -> None:
     assert "secret" not in error.what + error.advice
 
 
+def test_a_reader_of_ones_own_needs_rights_to_read_only(postgres: str, filled: Begin, begin: Begin) -> None:
+    name = postgres.rpartition("%3D")[2]
+    with open_store(postgres) as store:
+        key = filled(store)
+        with store._writing() as connection:
+            connection.execute(text(f"CREATE ROLE {name}_reader LOGIN"))
+            connection.execute(text(f"GRANT USAGE ON SCHEMA {name} TO {name}_reader"))
+            connection.execute(text(f"GRANT SELECT ON ALL TABLES IN SCHEMA {name} TO {name}_reader"))
+        try:
+            reader = postgres.replace("//postgres@", f"//{name}_reader@")
+            with open_store(reader, create=False) as readers:
+                assert readers.find("last") == key
+                assert readers.load(key).status == "completed"
+                with pytest.raises(StoreError) as caught:
+                    begin(readers)
+                assert "permission denied" in caught.value.what or "may not be used" in caught.value.what
+        finally:
+            with store._writing() as connection:
+                connection.execute(text(f"DROP OWNED BY {name}_reader"))
+                connection.execute(text(f"DROP ROLE {name}_reader"))
+
+
 def test_a_database_that_does_not_exist_says_so(postgres: str) -> None:
     failure(postgres.split("?")[0].rpartition("/")[0] + "/nowhere")
 
