@@ -58,7 +58,7 @@ class LineCounts:
         self._fd = fd
         self._first = port_counts(fd) if fd is not None else None
         self._seen = lines
-        self._changes = {f"{name.lower()}_changes": 0 for name in ("CTS", "DCD") if name in lines}
+        self._changes: dict[str, int] = {}
 
     def look(self, lines: Mapping[str, bool]) -> Mapping[str, int]:
         """Counts up to now, with the lines as they are now."""
@@ -67,7 +67,9 @@ class LineCounts:
             # The driver's counters are 32 bits wide and wrap.
             return {name: (now[name] - self._first[name]) & 0xFFFFFFFF for name in _TOLD}
         for name in ("CTS", "DCD"):
-            if name in lines and name in self._seen and lines[name] != self._seen[name]:
-                self._changes[f"{name.lower()}_changes"] += 1
+            if name in lines:
+                changed = lines[name] != self._seen.get(name, lines[name])
+                key = f"{name.lower()}_changes"
+                self._changes[key] = self._changes.get(key, 0) + changed
         self._seen = lines or self._seen
         return dict(self._changes)

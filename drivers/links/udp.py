@@ -79,6 +79,14 @@ class UdpLink(DescriptorLink):
             Unresolvable, or the local port is in use.
         """
         self.close()
+        waker = self._begin()
+        try:
+            self._open()
+        except BaseException:
+            waker.close()
+            raise
+
+    def _open(self) -> None:
         section = self.section
         peer = None
         family = socket.AF_INET
@@ -104,12 +112,7 @@ class UdpLink(DescriptorLink):
             family = socket.AF_INET6 if ":" in local[0] else socket.AF_INET
         elif section.local_port:
             local = ("::" if family == socket.AF_INET6 else "0.0.0.0", section.local_port)
-        waker = self._begin()
-        try:
-            self._socket = self._make(family, local, peer)
-        except BaseException:
-            waker.close()
-            raise
+        self._socket = self._make(family, local, peer)
         self._connected = peer is not None
         self._spill.clear()
         self._dropped = 0

@@ -330,6 +330,15 @@ def test_counts_are_those_since_opening_and_bear_the_kernels_wrapping(
     assert counts == dict.fromkeys(names, 5) | {"parity": 0}
 
 
+def test_lines_that_a_remote_port_tells_late_are_counted_from_then_on() -> None:
+    counts = LineCounts(None, {})
+    assert counts.look({}) == {}
+    assert counts.look({"CTS": True, "DCD": False}) == {"cts_changes": 0, "dcd_changes": 0}
+    assert counts.look({"CTS": False, "DCD": False}) == {"cts_changes": 1, "dcd_changes": 0}
+    assert counts.look({}) == {"cts_changes": 1, "dcd_changes": 0}
+    assert counts.look({"CTS": False, "DCD": True}) == {"cts_changes": 1, "dcd_changes": 1}
+
+
 def test_lines_that_cannot_be_asked_for_are_none() -> None:
     class Mute:
         @property
