@@ -35,6 +35,7 @@ from drivers.registry import UnknownDriver, instrument_class
 _GOODBYE = b"bye\n"
 _TRY_FOR_S = 30.0  # an instrument may still be busy with the dead run's connection
 _TRY_EVERY_S = 1.0
+_START_WITHIN_S = 30.0
 _LOOK_EVERY_S = 1.0
 _LOCK_WITHIN_S = 0.5  # whoever only looks whether it is free holds it for a moment
 
@@ -84,14 +85,26 @@ class Guardian:
                 )
             held.truncate(0)
             process = _spawn(held.fileno())
-        assert process.stdin is not None
-        try:
-            process.stdin.write(description.encode() + b"\n")
-            process.stdin.flush()
-        except OSError as error:
-            process.wait()
-            raise DriverError("the guardian ended at once", f"see {lock_path}") from error
-        return cls(process, lock_path)
+        guardian = cls(process, lock_path)
+        guardian._brief(description)
+        return guardian
+
+    def _brief(self, description: str) -> None:
+        """Tell it what to make safe, and wait until it watches: only then may anything be set."""
+        pipe = self._process.stdin
+        assert pipe is not None
+        with suppress(OSError):  # it may have ended at once
+            pipe.write(description.encode() + b"\n")
+            pipe.flush()
+        ends = time.monotonic() + _START_WITHIN_S
+        while not last_words(self.log):
+            if not self.alive or time.monotonic() >= ends:
+                self.dismiss()
+                raise DriverError(
+                    "the guardian, which makes the instruments safe if the run is killed, did not start",
+                    f"see that {sys.executable} can run -m drivers.guardian",
+                )
+            time.sleep(0.01)
 
     @property
     def alive(self) -> bool:

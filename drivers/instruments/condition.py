@@ -79,14 +79,11 @@ class ConditionSection(Section):
                 raise ValueError(f"the safe value {self.safe:g} lies outside the limits {low:g} to {high:g}")
         return self
 
-    def bounded(self) -> tuple[float, float, float]:
-        """Limits and safe value of an instrument that can be set.
 
-        Raises
-        ------
-        ValueError
-            Where one of them is not stated.
-        """
-        if self.limits is None or self.safe is None:
-            raise ValueError("an instrument that sets something needs limits and a safe value")
-        return *self.limits, self.safe
+class BoundedSection(ConditionSection):
+    """What an instrument that always sets something needs to state."""
+
+    limits: tuple[FiniteFloat, FiniteFloat] = Field(
+        description="Lowest and highest value that may ever be set."
+    )
+    safe: FiniteFloat = Field(description="Value to go to at the end and after any fault; within the limits.")

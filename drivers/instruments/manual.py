@@ -4,20 +4,20 @@ from __future__ import annotations
 
 import select
 import sys
+import termios
 from threading import Event
-from typing import Self
 
-from pydantic import Field, model_validator
+from pydantic import Field
 
 from drivers.contract import Applied, Identity, Instrument, InstrumentLost, Interrupted, NotConfirmed
 from drivers.instruments.commands import parse_number
-from drivers.instruments.condition import ConditionSection
+from drivers.instruments.condition import BoundedSection
 
 _LOOK_EVERY_S = 0.2
 _TRIES = 3
 
 
-class ManualSection(ConditionSection):
+class ManualSection(BoundedSection):
     """What the operator is asked to do."""
 
     name: str = Field(default="", description="What to call it: the step attenuator beside the shielded box.")
@@ -27,11 +27,6 @@ class ManualSection(ConditionSection):
         ge=0,
         description="How far a value that the operator types may lie from the one asked for.",
     )
-
-    @model_validator(mode="after")
-    def _complete(self) -> Self:
-        self.bounded()
-        return self
 
 
 class Terminal:
@@ -51,12 +46,13 @@ class Terminal:
         InstrumentLost
             When nobody can answer.
         """
-        print(text, end=" ", file=sys.stderr, flush=True)
         if not sys.stdin.isatty():
             raise InstrumentLost(
                 "there is no terminal at which somebody could answer",
                 "run it at a terminal, or use an instrument that needs no hands",
             )
+        termios.tcflush(sys.stdin, termios.TCIFLUSH)  # an Enter typed before is no answer to this
+        print(text, end=" ", file=sys.stderr, flush=True)
         while not cancel.is_set():
             if select.select([sys.stdin], [], [], _LOOK_EVERY_S)[0]:
                 line = sys.stdin.readline()
@@ -132,7 +128,7 @@ class ManualInstrument(Instrument):
 
     def make_safe(self) -> None:
         """Tell the operator, without waiting for an answer."""
-        if self._told_safe or self.section.safe is None:
+        if self._told_safe:
             return
         self._told_safe = True
         self._operator.tell(

@@ -88,7 +88,9 @@ class ScpiSection(ConditionSection):
         if self.expect_identity is not None and self.identity is None:
             raise ValueError("expect_identity needs the question `identity`")
         if self.set is not None:
-            low, high, safe = self.bounded()
+            if self.limits is None or self.safe is None:
+                raise ValueError("an instrument that sets something needs limits and a safe value")
+            (low, high), safe = self.limits, self.safe
             if not low <= SetCommand(self.set).sent(safe) <= high:
                 raise ValueError(f"the safe value {safe:g}, rounded as `set` says, lies outside the limits")
         return self

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from difflib import get_close_matches
 from threading import Event
-from typing import Any, Self
+from typing import Any
 
 from pydantic import Field, model_validator
 
@@ -19,10 +19,10 @@ from drivers.contract import (
     Link,
     OpenFailed,
 )
-from drivers.instruments.condition import ConditionSection
+from drivers.instruments.condition import BoundedSection
 
 
-class SimulatedSection(ConditionSection):
+class SimulatedSection(BoundedSection):
     """Which knob, and how far it may be turned."""
 
     knob: str = Field(min_length=1, description="Name of the knob: ber, ebn0_db, attenuation_db ...")
@@ -49,11 +49,6 @@ class SimulatedSection(ConditionSection):
             return keys
         quantity, unit = known[knob]
         return {"quantity": quantity, "unit": unit, **keys}
-
-    @model_validator(mode="after")
-    def _complete(self) -> Self:
-        self.bounded()
-        return self
 
 
 class SimulatedInstrument(Instrument):
@@ -86,7 +81,7 @@ class SimulatedInstrument(Instrument):
                 f"did you mean {near[0]!r}?" if near else "choose a channel model with such a knob",
             )
         knob = knobs[wanted]
-        low, high, _ = self.section.bounded()
+        low, high = self.section.limits
         if not (knob.minimum <= low and high <= knob.maximum):
             raise OpenFailed(
                 f"the knob {wanted!r} goes from {knob.minimum:g} to {knob.maximum:g}, "
@@ -116,7 +111,7 @@ class SimulatedInstrument(Instrument):
 
     def make_safe(self) -> None:
         """Turn the knob to the safe value; without one there is nothing that could do harm."""
-        if self._knob is not None and self.section.safe is not None:
+        if self._knob is not None:
             self._knob.turn(self.section.safe)
 
     def _turned(self) -> Knob:

@@ -1,17 +1,20 @@
 """A programmable attenuator as a program of its own: lines of text over TCP, every command in its log.
 
-Prints its port. Commands: *IDN?, ATT x, ATT?, SYST:ERR?. Faults are asked for by options, and `FAULT
-name value` on a connection turns one on later, so that a test can break it in mid-run.
+Prints its port, or with --serial the name of its terminal. Commands: *IDN?, ATT x, ATT?, SYST:ERR?.
+Faults are asked for by options, and `FAULT name value` on a connection turns one on later, so that a
+test can break it in mid-run.
 """
 
 from __future__ import annotations
 
 import argparse
 import os
+import pty
 import socket
 import sys
 import threading
 import time
+import tty
 from pathlib import Path
 
 
@@ -72,6 +75,22 @@ def serve(connection: socket.socket, device: Attenuator) -> None:
                 return
 
 
+def serve_terminal(device: Attenuator) -> None:
+    """The same on a serial port, which is a pseudo-terminal here."""
+    ours, theirs = pty.openpty()
+    tty.setraw(theirs)
+    print(os.ttyname(theirs), flush=True)
+    with os.fdopen(ours, "r+b", buffering=0) as port:
+        pending = b""
+        while True:
+            pending += port.read(100)
+            while b"\n" in pending:
+                line, _, pending = pending.partition(b"\n")
+                answer = device.answer(line.decode().strip())
+                if answer is not None:
+                    port.write(answer.encode() + b"\n")
+
+
 def main() -> None:
     parser = argparse.ArgumentParser()
     parser.add_argument("--log", required=True)
@@ -85,7 +104,11 @@ def main() -> None:
     parser.add_argument("--stuck", default="")
     parser.add_argument("--mute", default="")
     parser.add_argument("--die-after", type=int, dest="die_after")
-    device = Attenuator(parser.parse_args())
+    parser.add_argument("--serial", action="store_true")
+    options = parser.parse_args()
+    device = Attenuator(options)
+    if options.serial:
+        serve_terminal(device)
     listener = socket.create_server(("127.0.0.1", 0))
     print(listener.getsockname()[1], flush=True)
     sys.stdout.close()

@@ -20,13 +20,15 @@ PROGRAM = Path(__file__).with_name("attenuator.py")
 class Bench:
     """An attenuator that runs: where it is, and what it was told."""
 
-    port: int
+    where: str  # port, or name of a terminal
     log: Path
     process: subprocess.Popen[str]
 
     @property
     def resource(self) -> str:
-        return f"TCPIP::127.0.0.1::{self.port}::SOCKET"
+        if self.where.isdigit():
+            return f"TCPIP::127.0.0.1::{self.where}::SOCKET"
+        return f"ASRL{self.where}::INSTR"
 
     def commands(self) -> list[str]:
         """Every line that it received, in order."""
@@ -39,7 +41,7 @@ class Bench:
         """Turn a fault on while it runs."""
         command = f"FAULT {name} {value}".strip()
         told = self.commands().count(command)
-        with socket.create_connection(("127.0.0.1", self.port)) as connection:
+        with socket.create_connection(("127.0.0.1", int(self.where))) as connection:
             connection.sendall(f"{command}\n".encode())
             ends = time.monotonic() + 30
             while self.commands().count(command) == told:
@@ -74,13 +76,16 @@ def attenuator(tmp_path: Path) -> Iterator[StartAttenuator]:
 
         def start(**options: object) -> Bench:
             log = tmp_path / f"attenuator-{len(list(tmp_path.iterdir()))}.log"
-            arguments = [f"--{name.replace('_', '-')}={value}" for name, value in options.items()]
+            arguments = [
+                f"--{name.replace('_', '-')}" + ("" if value is True else f"={value}")
+                for name, value in options.items()
+            ]
             process = subprocess.Popen(
                 [sys.executable, str(PROGRAM), f"--log={log}", *arguments], stdout=subprocess.PIPE, text=True
             )
             stack.callback(stop, process)
             assert process.stdout is not None
-            return Bench(int(process.stdout.readline()), log, process)
+            return Bench(process.stdout.readline().strip(), log, process)
 
         yield start
 

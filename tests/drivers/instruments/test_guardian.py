@@ -163,3 +163,14 @@ def test_a_file_that_cannot_be_written_is_an_error_in_plain_words(tmp_path: Path
     (tmp_path / "file").write_text("")
     with pytest.raises(DriverError, match="cannot be written"):
         Guardian.start({}, tmp_path / "file" / "guardian.log")
+
+
+def test_a_guardian_that_does_not_start_is_an_error_before_anything_is_set(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr(sys, "executable", "/bin/false")
+    with pytest.raises(DriverError, match="did not start"):
+        Guardian.start({}, tmp_path / "guardian.log")
+    monkeypatch.setattr(sys, "executable", "/bin/no-such-program")
+    with pytest.raises(DriverError, match="cannot be started"):
+        Guardian.start({}, tmp_path / "guardian.log")

@@ -90,7 +90,7 @@ if "cancel" in sys.argv:
     threading.Timer(0.5, cancel.set).start()
 instrument = ManualInstrument(ManualSection.model_validate({keys}))
 try:
-    print("result", instrument.apply(20, cancel).reading)
+    print("result", instrument.apply(20.0, cancel).reading)
 except DriverError as error:
     print("error", type(error).__name__)
 """.replace("{keys}", repr(KEYS))
@@ -100,6 +100,7 @@ except DriverError as error:
     ("typed", "arguments", "result"),
     [
         (b"20 dB\n", [], "result 20.0"),
+        (b"\n", [], "result 20.0"),
         (b"", ["cancel"], "error Interrupted"),
         (b"\x04", [], "error InstrumentLost"),
     ],
@@ -107,15 +108,26 @@ except DriverError as error:
 def test_at_a_real_terminal(typed: bytes, arguments: list[str], result: str) -> None:
     ours, theirs = pty.openpty()
     try:
-        os.write(ours, typed)
-        done = subprocess.run(
-            [sys.executable, "-c", ASK, *arguments], stdin=theirs, capture_output=True, text=True, timeout=60
-        )
+        os.write(ours, b"n\n")  # typed before the question: no answer to it
+        with subprocess.Popen(
+            [sys.executable, "-c", ASK, *arguments],
+            stdin=theirs,
+            stdout=subprocess.PIPE,
+            stderr=subprocess.PIPE,
+        ) as process:
+            assert process.stderr is not None
+            assert process.stdout is not None
+            asked = b""
+            while b"n: it cannot be set." not in asked:
+                more = os.read(process.stderr.fileno(), 1000)
+                assert more, asked
+                asked += more
+            os.write(ours, typed)
+            assert process.stdout.read().decode().strip() == result
     finally:
         os.close(ours)
         os.close(theirs)
-    assert done.stdout.strip() == result
-    assert "Set the step attenuator to 20 dB." in done.stderr
+    assert asked.startswith(b"Set the step attenuator to 20 dB.")
 
 
 def test_without_a_terminal_nobody_can_answer() -> None:

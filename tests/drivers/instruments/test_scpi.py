@@ -282,6 +282,14 @@ def test_two_instruments_on_one_resource_share_a_session(attenuator: Start) -> N
     assert second._session._handle is None
 
 
+def test_the_same_commands_work_on_a_serial_port(attenuator: Start) -> None:
+    bench = attenuator(serial=True)
+    with instrument(bench, baud=19200) as device:
+        assert device.apply(20.0, NEVER).reading == 20.0
+        device.make_safe()
+    assert bench.settings() == [20.0, 95.0]
+
+
 def test_the_same_profile_works_against_a_simulated_library() -> None:
     library = Path(__file__).with_name("sim.yaml")
     section = ScpiSection.model_validate(
