@@ -56,7 +56,8 @@ def draw_stairs(plan: Plan, width: int = 72, height: int = 18, ink: Ink | None =
     lines.append(f"{'errors':>{margin}} {ink.corner}{ink.axis * columns}")
     right = f"{plan.longest_bits:,} bits".replace(",", " ")
     lines.append(" " * (margin + 2) + "0" + right.rjust(columns - 1))
-    lines.append(f"{'':>{margin}}  {ink.reject * 3} fails   {ink.accept * 3} passes   blank: goes on")
+    legend = f"{ink.reject * 3} fails  {ink.accept * 3} passes  blank: goes on"
+    lines.append(" " * min(margin + 2, max(0, width - len(legend))) + legend)
     return lines
 
 
