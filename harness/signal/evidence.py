@@ -10,13 +10,15 @@ import math
 import numpy as np
 from numpy.typing import NDArray
 
-from harness.signal.patterns import BytesPattern, Pattern
+from harness.signal.patterns import BytesPattern, Pattern, WordPattern
 
 CANDIDATES = 80  # candidates tried in one search: growing stretches, both polarities, several windows each
 SEARCHES = 10_000  # searches that one run may make
 
 _LONG_FILE_BITS = 4096  # a file longer than this is judged as bytes, a shorter one as a word
 _SURE_PHASE = 2.5  # standard deviations by which a place of a short word is confirmed by itself
+_OTHER_ORDER = 0.35  # share of mismatches from which a stream may be in the other bit order: it has 7/16
+_REST_LIMIT = math.log(1e-9)  # for what is left without the best bit of eight
 _FEW_MISMATCHES = 0.05  # share up to which a rhythm is the device's, not another word's
 _LINE = 25.0  # times the level around it that a line in the spectrum stands out
 _AROUND = 64  # frequencies
@@ -84,6 +86,24 @@ def log_chance_of_agreement(
     ones_received = received.reshape(-1, unit).mean(axis=0)
     by_chance = ones_expected * (1 - ones_received) + ones_received * (1 - ones_expected)
     return log_chance(n, mismatches, min(0.5, float(by_chance.mean()))) / unit
+
+
+def rests_on_one_bit_of_eight(
+    pattern: Pattern, expected: NDArray[np.uint8], received: NDArray[np.uint8]
+) -> bool:
+    """Whether the agreement of a stretch is that of a stream whose bytes came in the other bit order.
+
+    Such a stream agrees with its own pattern in one bit of every eight wherever the place is right for that
+    bit, and by chance in the others: 7/16 of its bits are mismatches, for ever. What is left without the
+    best of the eight must still be evidence. Words are not meant: eight of their bits may be all there is.
+    """
+    wrong = expected != received
+    if isinstance(pattern, WordPattern) or wrong.mean() < _OTHER_ORDER:
+        return False
+    kinds = np.arange(len(wrong)) % 8
+    best = int(np.argmin(np.bincount(kinds, weights=wrong) / np.bincount(kinds)))
+    rest = kinds != best
+    return log_chance_of_agreement(pattern, expected[rest], received[rest]) > _REST_LIMIT
 
 
 def repeats_as_the_pattern(

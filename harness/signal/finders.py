@@ -16,10 +16,13 @@ from numpy.typing import NDArray
 from harness.signal.bits import int_of_bits
 from harness.signal.evidence import most_mismatches
 from harness.signal.patterns import Pattern, RegisterPattern
+from harness.signal.polynomials import prime_factors
 
 LONGEST_FOLD = 1 << 16  # bits of period up to which all phases are tried by one correlation
+_LONGEST_HASTY_FOLD = 1 << 12
 REACH = 1 << 20  # bits of the pattern, about the place asked for, that correlation searches
 
+_LARGEST_FACTOR = 200  # of a transform's length
 _ASSUMED_BER = 0.3  # what the parity checks start from; the true one need not be known
 _MOST_ROUNDS = 32
 _ROUNDS_BETWEEN_LOOKS = 4
@@ -38,12 +41,18 @@ class Finder(Protocol):
         """Places and polarities, from the bits to search in; `fresh` only spares hopeless ones."""
 
 
-def make_finder(pattern: Pattern, limit: float) -> Finder:
-    """The finder that suits a pattern; `limit` is what `log_chance` a candidate may have."""
-    if pattern.period is not None and pattern.period <= LONGEST_FOLD:
+def make_finder(pattern: Pattern, limit: float, hasty: bool) -> Finder:
+    """The finder that suits a pattern; `limit` is what `log_chance` a candidate may have.
+
+    A hasty one gives up where the parity checks of a long register look like chance; that misses a BER over
+    0.3 or so.
+    """
+    light = isinstance(pattern, RegisterPattern) and len(pattern.register.taps) == 2
+    longest_fold = _LONGEST_HASTY_FOLD if hasty and light else LONGEST_FOLD
+    if pattern.period is not None and pattern.period <= longest_fold:
         return FoldFinder(pattern)
-    if isinstance(pattern, RegisterPattern) and (len(pattern.register.taps) == 2 or pattern.period > REACH):
-        return ParityFinder(pattern, limit)
+    if isinstance(pattern, RegisterPattern) and (light or pattern.period > REACH):
+        return ParityFinder(pattern, limit, hasty)
     return BlockFinder(pattern)
 
 
@@ -63,8 +72,12 @@ class FoldFinder:
     def __init__(self, pattern: Pattern) -> None:
         assert pattern.period is not None
         self._period = pattern.period
-        cycle = signs(pattern.bits(0, self._period))
-        self._spectrum = np.fft.rfft(cycle - cycle.mean())
+        # A transform of the period's own length is slow where that has a large prime factor; then two periods
+        # in a row are used, in the next power of two.
+        smooth = prime_factors(self._period)[-1] <= _LARGEST_FACTOR if self._period > 1 else True
+        self._size = self._period if smooth else 1 << (2 * self._period - 2).bit_length()
+        cycle = signs(pattern.bits(0, self._period if smooth else 2 * self._period - 1))
+        self._spectrum = np.fft.rfft(cycle - cycle[: self._period].mean(), self._size)
 
     def cut(self, count: int) -> int:
         """Half of them."""
@@ -81,10 +94,11 @@ class FoldFinder:
         folded = np.zeros(-(-len(received) // self._period) * self._period, dtype=np.float32)
         folded[: len(received)] = received
         folded = folded.reshape(-1, self._period).sum(axis=0)
-        agreement = np.fft.irfft(self._spectrum * np.conj(np.fft.rfft(folded)), self._period)
+        spectrum = np.conj(np.fft.rfft(folded, self._size))
+        agreement = np.fft.irfft(self._spectrum * spectrum, self._size)[: self._period]
         upright, turned = int(np.argmax(agreement)), int(np.argmin(agreement))
         # A word may be its own complement, shifted: then both are as good, and it is not called inverted.
-        if agreement[upright] >= -agreement[turned] - 1e-6 * len(received):
+        if agreement[upright] >= -agreement[turned] - 1e-3 * len(received):
             yield upright, False
         else:
             yield turned, True
@@ -104,8 +118,9 @@ class ParityFinder:
     A register with more than two taps has heavier checks, which bear fewer errors.
     """
 
-    def __init__(self, pattern: RegisterPattern, limit: float) -> None:
+    def __init__(self, pattern: RegisterPattern, limit: float, hasty: bool) -> None:
         self._pattern = pattern
+        self._hasty = hasty and len(pattern.register.taps) == 2
         self._register = pattern.register
         self._limit = limit
 
@@ -155,6 +170,8 @@ class ParityFinder:
                 parity ^= plain[lags[-1] - lag : len(plain) - lag]
             balance += len(parity) - 2 * int(np.count_nonzero(parity))
             checks += len(parity)
+        if self._hasty and abs(balance) < 4 * checks**0.5:
+            return
         likelier = balance < 0
         yield likelier, plain ^ np.uint8(likelier)
         if abs(balance) <= 6 * checks**0.5:

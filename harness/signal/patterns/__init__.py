@@ -4,7 +4,7 @@
 """
 
 from harness.signal.patterns.base import Pattern, PatternError
-from harness.signal.patterns.naming import parse_pattern
+from harness.signal.patterns.naming import parse_pattern, table_pattern, word_pattern
 from harness.signal.patterns.periodic import BytesPattern, PeriodicPattern, WordPattern
 from harness.signal.patterns.readers import Reader
 from harness.signal.patterns.sequences import LongRegisterPattern, RegisterPattern, ShortRegisterPattern
@@ -25,4 +25,6 @@ __all__ = [
     "WordPattern",
     "known_patterns",
     "parse_pattern",
+    "table_pattern",
+    "word_pattern",
 ]

@@ -68,6 +68,14 @@ def table_pattern(row: KnownPattern, backwards: bool = False, inverted: bool = F
     return register_pattern(name, register, row.sent_inverted != inverted, inverted, row.force_after_zeros)
 
 
+def word_pattern(word: NDArray[np.uint8]) -> WordPattern:
+    """A word of 0 and 1, shape (m,), under its name: digits, or hexadecimal where it is long."""
+    digits = "".join(map(str, word.tolist()))
+    if len(digits) > 16 and len(digits) % 4 == 0:
+        digits = f"0x{int(digits, 2):0{len(digits) // 4}X}"
+    return WordPattern(word, f"word:{digits}")
+
+
 def _split_suffixes(text: str) -> tuple[str, frozenset[str]]:
     found: set[str] = set()
     while True:
