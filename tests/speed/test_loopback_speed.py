@@ -4,10 +4,12 @@ from __future__ import annotations
 
 import threading
 import time
+from contextlib import suppress
 
 import numpy as np
 import pytest
 
+from drivers.contract import EndOfStream
 from drivers.links.loopback import LoopbackLink, LoopbackSection
 
 BUFFER_BYTES = 1 << 20
@@ -36,8 +38,9 @@ def through(channel: dict[str, object], total: int) -> float:
         start = time.perf_counter()
         sender.start()
         got = 0
-        while got < total * 0.99:  # some bytes may be lost on the way
-            got += link.receive(memoryview(back), 1.0)
+        with suppress(EndOfStream):
+            while True:
+                got += link.receive(memoryview(back), 1.0)
         seconds = time.perf_counter() - start
         sender.join()
     return got / seconds
@@ -53,4 +56,3 @@ def test_the_loopback_against_copying(capsys: pytest.CaptureFixture[str]) -> Non
         rate = through(channel, 256 << 20 if channel.get("model") in (None, "independent") else 32 << 20)
         with capsys.disabled():
             print(f"\nloopback {channel or 'bare'}: {rate / 1e9:.2f} GB/s, {rate / yardstick:.3f} of copyto")
-        assert rate > 0
