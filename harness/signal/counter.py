@@ -180,11 +180,13 @@ class Counter:
             elif not self._look(final):
                 return
 
-    def _meet(self, trouble: Trouble) -> None:
+    def _meet(self, trouble: Trouble, filled_up: bool = False) -> None:
         """Stop following and search; the bits that are not sure come back into play."""
         track, self._track = self._track, None
         assert track is not None
         first_bit, held = track.held()
+        if filled_up:
+            held = held[:-8]  # the last word was not all received, and is still in the stream
         self._stream.restart(first_bit // 8, held)
         self._written = track.written
         self._trouble = trouble
@@ -329,7 +331,7 @@ class Counter:
         self._lost_at = None
         self._run_on = place
         self._track = self._new_track(place, start, watch_from, level)
-        self._stream.drop_until(start // rules.WORD_BITS * rules.WORD_BITS)
+        self._forget(start)
 
     # ---- the ledger
 
@@ -354,7 +356,11 @@ class Counter:
     def _write_unaligned(self, until: int) -> None:
         self._ledger.unaligned(until - self._written)
         self._written = until
-        self._stream.drop_until(until)
+        self._forget(until)
+
+    def _forget(self, until: int) -> None:
+        """Let go of whole words before a bit: a track begins with the word in which its first bit lies."""
+        self._stream.drop_until(until // rules.WORD_BITS * rules.WORD_BITS)
 
     # ---- the end
 
@@ -365,7 +371,7 @@ class Counter:
             if trouble is None:
                 self._track.decide_all(self._ledger, self._stream.end)
                 return
-            self._meet(trouble)
+            self._meet(trouble, filled_up=True)
             self._go_on(final=True)
         self._end_in_trouble()
 

@@ -18,6 +18,7 @@ from harness.signal.places import Place, Reference
 from harness.signal.slips import Gap, gap_between, split_path, worst_stretch
 
 _MOST_PLACES = 24  # in one stretch of trouble
+_MOST_IN_VAIN = 4  # stretches of a trouble in which places are looked for and none is found
 _CAREFUL = 0.6  # of the alarm: once there is trouble, less of it is looked into
 _AROUND = 512  # bits around trouble in which a place is looked for as well, at most
 _FILLS = 0.75  # a place that holds for so much of the trouble was not picked out of many stretches
@@ -86,7 +87,9 @@ def evidence_walk(
 def gap(reference: Reference, old: Place | None, new: Place, stretch: Stretch, weights: rules.Weights) -> Gap:
     """The stretch without evidence between two places, in stream bits."""
     later = evidence_walk(reference, new, stretch, weights)
-    earlier = None if old is None else evidence_walk(reference, old, stretch, weights)
+    earlier = None
+    if old is not None:
+        earlier = later if old == new else evidence_walk(reference, old, stretch, weights)
     found = gap_between(earlier, later)
     return Gap(stretch.first + found.begin, stretch.first + found.end)
 
@@ -130,7 +133,8 @@ class Resolver:
         path = _cut(list(ends), wrong)
         settled = np.zeros(len(stretch.bits), dtype=np.bool_)  # stretches in which no place was found
         rule = rules.LEVELS[level]
-        for _ in range(_MOST_PLACES):
+        in_vain = 0
+        while in_vain < _MOST_IN_VAIN and len(path.places) < _MOST_PLACES:
             left = wrong.along(path)
             left[settled] = 0
             begin, end, excess = worst_stretch(left, rule.careful_share)
@@ -139,6 +143,7 @@ class Resolver:
             longer = self._with_another(path, wrong, begin, end, rule.share)
             if longer is None:
                 settled[begin:end] = True
+                in_vain += 1
             else:
                 path = self._without_unproven(longer, wrong, sure, rule.share)
         return Path(path.places, [stretch.first + cut for cut in path.cuts])

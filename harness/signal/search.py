@@ -21,6 +21,7 @@ from harness.signal.stream import Undecided
 _LEAST_BLIND = 128  # bits from which on a place can be acquired
 _NEARBY_FOR = 5 * rules.LONGEST_WINDOW  # bits after trouble in which places nearby are tried
 _FIRST_NEARBY = 1024
+_FEW_WRONG = 0.02  # with so few wrong no other place can be right
 
 
 @dataclass(frozen=True, slots=True)
@@ -174,6 +175,24 @@ class Search:
 
     def _anywhere(self, stream: Undecided, begin: int, end: int) -> Hit | None:
         """Acquire from nothing."""
+        hit = self._acquired(stream, begin, end)
+        if hit is None:
+            return None
+        # Two places of a register may agree for some hundred bits more often than chance has it; the one
+        # that is found first need not be the right one, so the newest bits have their say.
+        size = end - begin
+        while size >= 4 * _LEAST_BLIND and self._wrong(stream, hit.place, begin, end) > _FEW_WRONG:
+            size //= 2
+            other = self._acquired(stream, end - size, end)
+            if other is not None and other.place != hit.place:
+                newest = end - size // 2
+                if self._wrong(stream, other.place, newest, end) < self._wrong(
+                    stream, hit.place, newest, end
+                ):
+                    hit = other
+        return hit
+
+    def _acquired(self, stream: Undecided, begin: int, end: int) -> Hit | None:
         if end - begin < _LEAST_BLIND:
             return None
         near = begin if self.old is None else self.old.anchor + begin
@@ -181,3 +200,8 @@ class Search:
         if found is None:
             return None
         return Hit(self._reference.normal(Place(found.place - begin, found.inverted)), begin, end)
+
+    def _wrong(self, stream: Undecided, place: Place, begin: int, end: int) -> float:
+        """The share of bits that differ."""
+        differs = stream.bits(begin, end) ^ self._reference.bits(place, begin, end - begin)
+        return float(differs.mean())

@@ -72,12 +72,21 @@ def gap_between(old: NDArray[np.int64] | None, new: NDArray[np.int64]) -> Gap:
     Gap
         Of all pairs of a first bit and a later last one, the pair between which the new walk's height above
         the old one's is greatest, the earliest where several are equal: where the old walk is lowest and the
-        new one highest. Empty where the new place's evidence begins before the old one's ends.
+        new one highest. Empty where the new place's evidence begins before the old one's ends. A new place
+        counts up to where its evidence ends.
     """
     if old is None:
-        return Gap(0, int(np.argmax(new)))
+        return Gap(0, int(np.argmax(new[: _evidence_end(new)])))
+    if new is not old:
+        upto = _evidence_end(new)
+        old, new = old[:upto], new[:upto]
     end = int(np.argmax(new - np.minimum.accumulate(old)))
     return Gap(int(np.argmin(old[: end + 1])), end)
+
+
+def _evidence_end(height: NDArray[np.int64]) -> int:
+    """One past the bit at which a walk has come down furthest."""
+    return int(np.argmax(np.maximum.accumulate(height) - height)) + 1
 
 
 def worst_stretch(wrong: NDArray[np.uint8], share: float) -> tuple[int, int, float]:
