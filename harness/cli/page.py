@@ -93,9 +93,10 @@ def _numbers(p: PointAssessment, sheet: Sheet) -> Iterator[str]:
         )
     yield from _entry("bits", [*sheet.bits, *sheet.details])
     if p.pattern:
+        order = f", {p.bit_order} first" if p.bit_order else ""
         inverted = ", received inverted" if p.inverted else ""
         also = f"; fits as well: {', '.join(p.alternatives)}" if p.alternatives else ""
-        yield from _entry("pattern", [f"{p.pattern}, {p.bit_order} first{inverted}{also}"])
+        yield from _entry("pattern", [f"{p.pattern}{order}{inverted}{also}"])
     nominal = f"; nominal rate {rate(p.rate_bps)}" if p.rate_bps else ""
     yield from _entry("began", [f"{local_date(p.started)}{nominal}"])
     yield from _entry("loop delay", _delay(p))

@@ -73,6 +73,7 @@ class LineWatcher(Watcher):
     def _run(self) -> None:
         try:
             said = False
+            events_said = 0
             next_at = time.monotonic() + self._every_s
             over = False
             while not over:
@@ -83,7 +84,9 @@ class LineWatcher(Watcher):
                 now = time.monotonic()
                 if self._latest is not None and now >= next_at and not over:
                     next_at = now + self._every_s
-                    self._say(progress_line(self._latest))
+                    latest = self._latest
+                    self._say(progress_line(latest, time.time_ns(), events_said))
+                    events_said = len(latest.point.events)
         except (OSError, ValueError):
             return  # nobody reads any more: the run goes on unseen
 
@@ -142,24 +145,27 @@ class PageWatcher(Watcher):
         return sheet_of_progress(progress, now_ns, closing=closing, behind_s=behind_s)
 
 
-def progress_line(progress: Progress) -> str:
-    """Say the state of a run in one line."""
+def progress_line(progress: Progress, now_ns: int, events_said: int = 0) -> str:
+    """Say the state of a run in one line, with the latest event where it is not one of those said before."""
+    from harness.cli.view.forecast import still_to_do
+    from harness.cli.view.sheet import against_words
+
     p = progress.point
     t = p.tally
+    point = f"point {progress.number + 1} of {progress.visits}, " if progress.visits > 1 else ""
     parts = [
-        duration(round(progress.elapsed_s)),
+        f"{point}{duration(round(progress.elapsed_s))}",
         f"{count(t.errors, 'error')} in {count(t.compared, 'bit')}",
         f"BER {ratio(p.ber)}" if t.compared else "nothing compared yet",
     ]
-    if progress.longest_bits:
-        parts.append(f"{int(100 * t.compared / progress.longest_bits)} % of the plan's longest")
     if t.unaligned:
         parts.append(f"{count(t.unaligned, 'bit')} unaligned")
     if p.slip_count:
         parts.append(count(p.slip_count, "slip"))
-    if progress.outlook.against:
-        parts.append(f"cannot pass any more: {progress.outlook.against[0]}")
-    if p.events:
+    parts += [f"cannot pass any more {why}" for why in against_words(progress)]
+    if p.plan is not None or progress.stop.any:
+        parts.append(still_to_do(progress, now_ns)[0])
+    if len(p.events) > events_said:
         parts.append(p.events[-1].text)
     return " · ".join(parts)
 

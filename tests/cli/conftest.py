@@ -23,13 +23,17 @@ START = 1_788_250_000 * SECOND_NS  # some morning in 2026
 
 
 class Making:
-    """Makes what the view is shown from seconds: a number of errors each, or "silent", or "unaligned"."""
+    """Makes what the view is shown from seconds: a number of errors each, or what else they were.
+
+    "silent": nothing came; "unaligned"; "slip": a byte was lost.
+    """
 
     start = START
 
     def second(self, index: int, what: int | str, first_bit: int) -> Second:
         bits = 0 if what == "silent" else BITS
         errors = 0 if isinstance(what, str) else what
+        slipped = what == "slip"
         aligned = what != "unaligned"
         positions = first_bit + np.linspace(0, BITS - 1, errors).astype(np.int64)
         lost = np.arange(errors) % 2 == 0
@@ -47,6 +51,8 @@ class Making:
             positions=positions,
             ones_lost=lost,
             stretches=((bits, aligned),) if bits else (),
+            slips=int(slipped),
+            bits_lost=8 * slipped,
         )
 
     def accumulator(
@@ -134,7 +140,8 @@ class Making:
         return Assessment(**(fields | more))
 
     def event(self, kind: str, text: str, second: float = 0.0, bit: int | None = None) -> Event:
-        return Event(kind, bit, text, START + int(second * SECOND_NS))
+        data = {"bits": -8, "modulo": None} if kind == "slip" else {}
+        return Event(kind, bit, text, START + int(second * SECOND_NS), data)
 
 
 @pytest.fixture

@@ -78,7 +78,8 @@ def test_a_sequential_plan_says_when_it_would_accept_and_what_a_good_unit_takes(
     lines = words(making, progress)
     assert lines[0].startswith(f"{accept_at - 3 * 48_000} bits to a PASS if no more errors come")
     assert lines[1] == (
-        f"a good unit takes {round(plan.expected_bits(1e-5 / 3))} bits on average, none more than {plan.longest_bits} bits"
+        f"a good unit takes {round(plan.expected_bits(1e-5 / 3))} bits on average, "
+        f"none more than {plan.longest_bits} bits"
     )
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import re
 
 import pytest
@@ -58,7 +59,7 @@ def test_every_label_stands_at_its_tick_and_decades_are_equally_wide(width):
     scale, labels = rows(Bar(0.0, 1.0), width)[-2:]
     ticks = [i for i, sign in enumerate(scale) if sign == LINES.tick]
     assert len(ticks) == DECADES + 1
-    assert {b - a for a, b in zip(ticks, ticks[1:], strict=False)} == {columns_of_a_decade(width)}
+    assert {b - a for a, b in itertools.pairwise(ticks)} == {columns_of_a_decade(width)}
     assert labels[0] == "1"
     found = re.finditer(r"1e-(\d+)", labels)
     places = {int(m[1]): (m.start(), m.end()) for m in found}

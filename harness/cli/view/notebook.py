@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from rich.cells import cell_len, set_cell_size
 from rich.text import Text
@@ -17,6 +17,7 @@ from harness.record import Event
 
 MARGIN = 8  # columns: a time of day
 FEWEST_EVENTS = 2
+_ALL = 1_000
 FEW_POINTS = 4  # written out in words also where room is short
 ALARMS = frozenset(
     ("alignment_lost", "slip", "link_lost", "fault", "host_overrun", "never_returned", "inversion")
@@ -58,8 +59,10 @@ class Notebook:
         self._room = self.width - MARGIN - 4
 
     def draw(self, sheet: Sheet, *, whole: bool = False) -> list[Text]:
-        """Draw a page of at most `height` lines; `whole`: as many as it needs, for a page that stays."""
+        """Draw a page of at most `height` lines; `whole`: a page that stays, as long as it needs to be."""
         for layout in LAYOUTS:
+            if whole:  # nothing that was said of the verdict is cut from a page that stays
+                layout = replace(layout, lines_each=_ALL, remarks=_ALL)
             head, tail = self._head(sheet, layout), self._tail(sheet)
             wanted = min(FEWEST_EVENTS, len(sheet.events))
             room = self.height - len(head) - len(tail)

@@ -15,6 +15,7 @@ from harness.cli.view.ink import BOXED, PLAIN, RED, STRONG, Line, Signs, Span
 
 DECADES = 15
 MOST_COLUMNS = 10  # of a decade
+_LABEL = 7  # columns of the widest label, with room around it
 _BEYOND = 6  # columns kept free on the right: the last label and the sign of an open end
 
 
@@ -74,9 +75,12 @@ def _column(value: float, decade: int) -> int:
 
 def _flag(mark: int, bar: Bar, decade: int, signs: Signs) -> Line:
     words = f"{bar.flag} {ratio(bar.required)}"
-    if mark + 3 + len(words) <= DECADES * decade + _BEYOND:
-        return ((" " * mark, PLAIN), (signs.flag, STRONG), (f" {words}", PLAIN))
-    return ((" " * (mark - len(words) - 1) + words + " ", PLAIN), (signs.flag, STRONG))
+    before, flag = (" " * mark, PLAIN), (signs.flag, STRONG)
+    if mark + 2 + len(words) <= DECADES * decade + _BEYOND:
+        return (before, flag, (f" {words}", PLAIN))
+    if len(words) < mark:
+        return ((f"{words:>{mark - 1}} ", PLAIN), flag)
+    return (before, flag)
 
 
 def _bar(bar: Bar, mark: int | None, decade: int, signs: Signs) -> Line:
@@ -144,7 +148,7 @@ def _scale(mark: int | None, decade: int, signs: Signs) -> Line:
 
 
 def _labels(decade: int) -> Line:
-    step = 1 if decade >= 7 else 3 if decade >= 3 else 5
+    step = next(step for step in (1, 3, 5, DECADES) if step * decade >= _LABEL)
     text = "1"
     for power in range(step, DECADES + 1, step):
         label = f"1e-{power}"

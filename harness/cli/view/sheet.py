@@ -105,7 +105,7 @@ def sheet_of_progress(progress: Progress, now_ns: int, *, closing: str = "", beh
     """
     p = progress.point
     verdict, against = _state(progress, now_ns, closing)
-    reasons = _against(progress)
+    reasons = against_words(progress)
     looked_for = progress.sensitivity_ber
     done = [(point_label(d), _bar(d, decided=False, looked_for=looked_for)) for d in progress.done]
     foot = [_foot(progress.run)]
@@ -207,7 +207,7 @@ def _state(progress: Progress, now_ns: int, closing: str) -> tuple[str, bool]:
     )
 
 
-def _against(progress: Progress) -> list[str]:
+def against_words(progress: Progress) -> list[str]:
     """Say why there can be no PASS any more, shortly."""
     if not progress.outlook.against:
         return []

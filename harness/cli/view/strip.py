@@ -11,7 +11,6 @@ from harness.record import Tally
 
 SECONDS = 60
 _LEAST_TOP = 10  # errors at the strip's top, so that a single error does not fill it
-_LEAST_STEP = 4  # eighths of a row: a single error is seen at a glance
 
 
 def strip(
@@ -101,7 +100,7 @@ def _column(tally: Tally | None, top: int, rows: int, signs: Signs) -> str:
     if not tally.errors:
         return " " * (rows - 1) + signs.clean
     steps = len(signs.heights)
-    least = min(_LEAST_STEP, steps * rows)
+    least = max(1, steps // 2)  # a single error is seen at a glance
     level = least + round((steps * rows - least) * math.log(tally.errors) / math.log(top))
     full, rest = divmod(level, steps)
     column = (signs.heights[rest - 1] if rest else "") + signs.heights[-1] * full

@@ -1,0 +1,151 @@
+"""The entries of a page in words: what is required, the ratio and its bounds, the bits, the points of a sweep."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any
+
+from harness.assess.assessment import PointAssessment
+from harness.assess.words import count, percent, rate, ratio
+
+
+def unit_name(device: Mapping[str, str]) -> str:
+    """Name the unit: model and serial number as far as they are known."""
+    words = [device.get("model", ""), device.get("serial_number", "")]
+    return " ".join(word for word in words if word) or "unnamed unit"
+
+
+def pattern_name(p: PointAssessment) -> str:
+    """Name the pattern, where bits were compared with one."""
+    return p.pattern or "the pattern"
+
+
+def required_words(p: PointAssessment) -> list[str]:
+    """Say what is required and how it is decided."""
+    plan = p.plan
+    if plan is None:
+        return ["nothing: measured only"]
+    longest = count(int(plan["longest_bits"]), "bit")
+    if plan["kind"] == "sequential":
+        how = f"a sequential plan decides, within {longest}"
+    elif plan["accept_errors"] == 0:
+        how = f"a {plan['kind']} plan accepts no error in {longest}"
+    else:
+        how = (
+            f"a {plan['kind']} plan accepts at most {count(int(plan['accept_errors']), 'error')} in {longest}"
+        )
+    return [f"BER under {ratio(plan['ber'])} with {percent(plan['confidence'])} confidence", how]
+
+
+def ber_so_far(p: PointAssessment) -> str:
+    """Say the ratio and the two-sided bounds, which the bar shows."""
+    if p.bounds is None or not p.tally.compared:
+        return "no bit was compared: every ratio is possible"
+    b = p.bounds
+    sure = f"at {percent(b.confidence)} confidence"
+    if not p.tally.errors:
+        return f"no error measured; under {ratio(b.upper)} {sure}"
+    return f"{ratio(p.ber)} measured; between {ratio(b.lower)} and {ratio(b.upper)} {sure}"
+
+
+def ber_decided(p: PointAssessment) -> str:
+    """Say the ratio and the bound that decides, which the bar shows beside a verdict."""
+    if p.bounds is None or not p.tally.compared:
+        return ber_so_far(p)
+    b = p.bounds
+    side = "under" if b.side == "upper" else "over"
+    measured = f"{ratio(p.ber)} measured" if p.tally.errors else "no error measured"
+    return f"{measured}; {side} {ratio(b.value)} with {percent(b.deciding_confidence)} confidence"
+
+
+def bits_words(p: PointAssessment) -> list[str]:
+    """Say on how many bits it all rests."""
+    t = p.tally
+    if not t.received:
+        return ["none received" + (f", {count(p.bits_sent, 'bit')} sent" if p.bits_sent else "")]
+    errors = "no error" if not t.errors else count(t.errors, "error")
+    lines = [f"{count(t.compared, 'bit')} compared with {pattern_name(p)}, {errors}"]
+    more = []
+    if not t.compared:
+        lines = [f"none compared: {pattern_name(p)} is not found in the {count(t.received, 'bit')} that came"]
+    elif t.unaligned:
+        more.append(f"{count(t.unaligned, 'bit')} not aligned")
+    if p.slip_count:
+        more.append(count(p.slip_count, "slip"))
+    if p.bits_lost:
+        more.append(f"{count(p.bits_lost, 'bit')} lost")
+    if p.bits_inserted:
+        more.append(f"{count(p.bits_inserted, 'bit')} inserted")
+    if more:
+        lines.append(", ".join(more))
+    return lines
+
+
+def detail_words(p: PointAssessment) -> list[str]:
+    """Say what is good to know where there is room for it."""
+    t = p.tally
+    lines = []
+    if t.errors:
+        ones, zeros = count(t.ones_as_zeros, "ONE"), count(t.zeros_as_ones, "ZERO")
+        lines.append(f"{ones} received as ZERO, {zeros} received as ONE")
+    if t.received:
+        sent = f"{count(p.bits_sent, 'bit')} sent, " if p.bits_sent else ""
+        speed = f" at {rate(p.measured_bps)}" if p.measured_bps else ""
+        lines.append(f"{sent}{count(t.received, 'bit')} received{speed}")
+    for a in p.availability:
+        if a.seconds:
+            lines.append(
+                f"{a.standard}: {count(a.seconds, 'second')}, {a.errored} errored, "
+                f"{a.severely_errored} severely errored, {a.unavailable} unavailable"
+            )
+    return lines
+
+
+def risk_words(p: PointAssessment) -> str:
+    """Say how often the plan is wrong about a unit."""
+    if p.plan is None:
+        return ""
+    plan = p.plan
+    return (
+        f"risks: {percent(plan['consumer_risk'])} that a unit with just this BER passes, "
+        f"{percent(plan['producer_risk'])} that one {plan['margin']:g} times better fails"
+    )
+
+
+def point_words(p: PointAssessment) -> str:
+    """Say one of several points in a line; the confidence is said once for all of them."""
+    verdict = f"{p.verdict}, " if p.verdict else ""
+    t = p.tally
+    if p.bounds is None or not t.compared:
+        return f"{point_name(p)}: {verdict}{bits_words(p)[0]}"
+    errors = count(t.errors, "error") if t.errors else "no error"
+    lower, upper = ratio(p.bounds.lower), ratio(p.bounds.upper)
+    between = f"{ratio(p.ber)} ({lower} to {upper})" if t.errors else f"under {upper}"
+    return f"{point_name(p)}: {verdict}{between}, {errors} in {count(t.compared, 'bit')}"
+
+
+def point_name(p: PointAssessment) -> str:
+    """Name a point by its direction, or by what was set."""
+    direction = p.facts.get("direction")
+    if direction:
+        return f"{direction} direction"
+    return ", ".join(f"{name} {value:g}" for name, value in p.values.items()) or "point"
+
+
+def point_label(p: PointAssessment) -> str:
+    """Name a point as shortly as the margin wants it."""
+    direction = p.facts.get("direction")
+    return str(direction) if direction else "/".join(f"{value:g}" for value in p.values.values())
+
+
+def sensitivity_words(found: Mapping[str, Any] | None) -> str:
+    """Say where the ratio that was looked for is reached."""
+    if not found:
+        return ""
+    if found.get("value") is None:
+        return f"{ratio(found.get('ber'))} was not reached within the sweep"
+    unit = f" {found['unit']}" if found.get("unit") else ""
+    words = f"{ratio(found.get('ber'))} is reached at {found['value']:.4g}{unit}"
+    if found.get("lower") is None or found.get("upper") is None:
+        return words
+    return f"{words} ({found['lower']:.4g} to {found['upper']:.4g}{unit} at {percent(found['confidence'])})"

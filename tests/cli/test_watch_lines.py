@@ -1,0 +1,92 @@
+"""Plain lines while a run goes on: what they say, and that no reader can hold up or end a run."""
+
+from __future__ import annotations
+
+import contextlib
+import io
+import os
+import threading
+import time
+
+import pytest
+
+from harness.assess.requirement import Requirement
+from harness.cli.watch import LineWatcher, progress_line
+
+LONG = Requirement(ber=1e-6, accept_errors=3)
+
+
+def said(making, progress, **more) -> str:
+    return progress_line(progress, making.start + int(progress.elapsed_s * 1e9), **more).replace(
+        "\u202f", " "
+    )
+
+
+def test_a_line_says_counts_ratio_and_what_is_still_to_do(making, utc):
+    line = said(making, making.progress([0, 1, 0, 0, 0], requirement=LONG))
+    assert line.startswith(
+        "5 s · 1 error in 240 000 bits · BER 4.17e-6 · 7 513 655 bits to the decision, about"
+    )
+
+
+def test_a_line_says_that_there_can_be_no_pass_any_more(making):
+    assert "cannot pass any more because of 10 errors, where the plan accepts 3" in said(
+        making, making.progress([5, 5], requirement=LONG)
+    )
+
+
+def test_a_line_says_what_was_not_aligned_and_slips(making):
+    line = said(making, making.progress(["unaligned", "slip"]))
+    assert "48 000 bits unaligned" in line
+    assert "1 slip" in line
+
+
+def test_an_event_is_said_once(making):
+    progress = making.progress([0], [making.event("aligned", "the pattern was found")])
+    assert said(making, progress).endswith("the pattern was found")
+    assert "found" not in said(making, progress, events_said=1)
+
+
+def test_the_run_is_named_first_and_lines_follow(making):
+    stream = io.TextIOWrapper(io.BytesIO(), "utf-8", write_through=True)
+    said = stream.buffer
+    watcher = LineWatcher(stream, every_s=0.1)
+    watcher.start()
+    watcher.started("01a2")
+    deadline = time.monotonic() + 20
+    while said.getvalue().count(b"\n") < 3 and time.monotonic() < deadline:
+        watcher.tick(making.progress([0], requirement=LONG))
+        time.sleep(0.05)
+    watcher.stop()
+    lines = said.getvalue().decode().splitlines()
+    assert lines[0] == "run 01a2"
+    assert all(line.startswith("1 s · 0 errors") for line in lines[1:])
+
+
+@pytest.mark.parametrize("closed", [False, True])
+def test_no_reader_holds_up_a_run_by_taking_nothing_or_by_going_away(making, closed):
+    reading, writing = os.pipe()
+    os.set_blocking(writing, True)
+    if closed:
+        os.close(reading)
+    stream = os.fdopen(writing, "w")
+    watcher = LineWatcher(stream, every_s=0.0)
+    watcher.start()
+    watcher.started("01a2" * 50_000)  # more than a pipe takes
+    done = threading.Event()
+
+    def bench() -> None:
+        for _ in range(5):
+            watcher.tick(making.progress([0], requirement=LONG))
+        watcher.stop()
+        done.set()
+
+    threading.Thread(target=bench, daemon=True).start()
+    assert done.wait(30)
+    if not closed:
+        os.close(reading)
+    for thread in threading.enumerate():
+        if thread.name == "lines":
+            thread.join(30)
+    with contextlib.suppress(OSError):
+        stream.close()
