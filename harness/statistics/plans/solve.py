@@ -25,9 +25,14 @@ Floats = NDArray[np.float64]
 
 MOST_ERRORS = 10_000  # that the equivalent fixed plan may accept: a margin of about 1.05 at risks of 0.01
 _TARGET = 1 - 1e-7  # of the risks asked for: the true ones are never above them
+_ROUNDING = 2e-12  # what the many sums leave in a producer's risk
+LEAST_RISK = 1e-9  # a producer's risk under this would drown in it
 _NEAR = 1e-6  # relative: near enough to the risks asked for
 _GOOD = 1e-3  # relative: no need to try another truncation
+_FAIR = 0.1  # the same for larger plans over whole bits
 _SMALL = 12  # errors at the truncation: plans as small as this are tried with all truncations near
+_COARSE = 1e-3  # ratios over this may be kept off the risks asked for by whole bits
+_FREQUENT = 0.02
 _LATTICE = 0.4  # times the ratio: how near whole bits let the risks come, relative
 
 
@@ -67,6 +72,12 @@ class Aim:
         return max(self.fixed_accepts + 1, round(middle / self.error_step)) + self.shift
 
     @property
+    def targets(self) -> Floats:
+        """(2,) logarithms of the risks to aim at."""
+        result: Floats = np.log([self.consumer * _TARGET, self.producer * _TARGET - _ROUNDING])
+        return result
+
+    @property
     def first_guess(self) -> tuple[float, float]:
         """Wald's intercepts of the accepting and the rejecting line."""
         return (
@@ -93,6 +104,12 @@ def aim_at(ber: float, confidence: float, margin: float, producer_risk: float) -
         raise PlanError(
             f"risks of {consumer:g} and {producer_risk:g} leave nothing to decide",
             "a coin meets them: ask for a higher confidence or a lower producer's risk",
+        )
+
+    if producer_risk < LEAST_RISK:
+        raise PlanError(
+            f"a producer's risk of {producer_risk:g} is less than can be computed",
+            f"state at least {LEAST_RISK:g}, or use a fixed plan",
         )
 
     def meets(accepts: int) -> bool:
@@ -142,8 +159,8 @@ def find_stairs(aim: Aim) -> Stairs:
         stairs, miss = _solve(replace(aim, shift=aim.shift + shift))
         if stairs is not None:
             found.append((max(0.0, miss - near), _cost(stairs, aim), stairs))
-        if aim.last > _SMALL and any(over == 0 for over, _, _ in found):
-            break
+            if aim.last > _SMALL and miss < max(near, _FAIR if aim.bad > _COARSE else 0.0):
+                break
     return min(found, key=lambda one: one[:2])[2] if found else as_curtailed(aim)
 
 
@@ -154,11 +171,15 @@ def _cost(stairs: Stairs, aim: Aim) -> float:
 
 def _solve(aim: Aim) -> tuple[Stairs | None, float]:
     """Stairs that end at a given number of errors, and how far their risks stay under those asked for."""
-    smooth, slopes = _newton(lambda x: _misses(_poisson_risks(aim, x), aim), np.array(aim.first_guess))
+    if aim.bad > _FREQUENT:  # far from Poisson: Wald's own lines, and his slopes, are nearer
+        smooth, slopes = np.array(aim.first_guess), -np.eye(2)
+    else:
+        smooth, slopes = _newton(lambda x: _misses(_poisson_risks(aim, x), aim), np.array(aim.first_guess))
     best: Stairs | None = None
     best_miss = math.inf
-    x, targets = smooth, np.log([aim.consumer * _TARGET, aim.producer * _TARGET])
-    asked = np.log([aim.consumer, aim.producer])
+    x, targets = smooth, aim.targets
+    asked = np.log([aim.consumer, aim.producer - _ROUNDING / 2])
+    idle = 0
     for _ in range(14):
         stairs = _whole(aim, x)
         if stairs is None:
@@ -167,8 +188,11 @@ def _solve(aim: Aim) -> tuple[Stairs | None, float]:
         over = risks - asked
         miss = _shortfall(np.exp(risks), aim)
         if miss < math.inf:
+            idle += 1
             if miss < best_miss:
-                best, best_miss = stairs, miss
+                best, best_miss, idle = stairs, miss, 0
+            if idle == 4:
+                break
             if miss < max(_NEAR, _LATTICE / 8 * aim.bad):
                 break
         else:  # whole bits are a lattice: where it overshoots, aim lower by as much
@@ -179,7 +203,7 @@ def _solve(aim: Aim) -> tuple[Stairs | None, float]:
 
 def _shortfall(risks: Floats, aim: Aim) -> float:
     """How far risks lie under those asked for, in logarithms; infinite where one is above."""
-    over = np.log(np.maximum(risks, 1e-300)) - np.log([aim.consumer, aim.producer])
+    over = np.log(np.maximum(risks, 1e-300)) - np.log([aim.consumer, aim.producer - _ROUNDING / 2])
     return float(-over.sum()) if np.all(over <= 0) else math.inf
 
 
@@ -235,7 +259,7 @@ def _poisson_risks(aim: Aim, intercepts: Floats) -> Floats:
 def _misses(risks: Floats, aim: Aim) -> Floats:
     """How far risks are from those asked for, in logarithms."""
     floor = np.maximum(risks, 1e-300)
-    result: Floats = np.log(floor) - np.log([aim.consumer * _TARGET, aim.producer * _TARGET])
+    result: Floats = np.log(floor) - aim.targets
     return result
 
 
