@@ -215,6 +215,15 @@ def test_bits_that_fill_no_symbol_come_out_when_the_sender_pauses() -> None:
     np.testing.assert_array_equal(stages.apply(data[:300].copy()), data[:300])
 
 
+def test_what_a_stage_held_back_still_goes_through_those_behind_it() -> None:
+    data = random_bytes(100)
+    noisy = {"model": "awgn", "modulation": "64qam", "ebn0_db": 90, "seed": 1}
+    stages = chain(noisy, {"model": "inversion", "from_start": True})
+    first, rest = stages.apply(data.copy()), stages.flush()
+    assert len(rest) == 1
+    np.testing.assert_array_equal(np.concatenate([first, rest]), ~data)
+
+
 def test_attenuation_takes_off_as_many_decibels() -> None:
     data = random_bytes(50_000)
     pad = {"model": "awgn", "modulation": "bpsk", "ebn0_db": 26, "attenuation_db": 20, "seed": 2}

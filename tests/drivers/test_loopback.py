@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import threading
 import time
+from contextlib import suppress
 
 import numpy as np
 import pytest
@@ -159,6 +160,24 @@ def test_bits_held_back_by_the_channel_come_at_the_end_and_on_drain() -> None:
         assert link.drain(1.0)
         assert link.receive(memoryview(buffer[99:]), 0.0) == 1
         np.testing.assert_array_equal(buffer[:100], data)
+
+
+def test_draining_a_full_loopback_neither_waits_nor_changes_the_order() -> None:
+    data = random_bytes(600)
+    channel = [{"model": "awgn", "modulation": "64qam", "ebn0_db": 90}]
+    with loopback(channel=channel, buffer_bytes=100) as link:
+        got, sent = [], 0
+        while sent < len(data):
+            sent += link.send(memoryview(data[sent : sent + 64]), 0.0)
+            assert link.drain(60.0)
+            buffer = np.empty(41, dtype=np.uint8)
+            got.append(buffer[: link.receive(memoryview(buffer), 0.0)])
+        link.finish_sending()
+        with suppress(EndOfStream):
+            while True:
+                buffer = np.empty(41, dtype=np.uint8)
+                got.append(buffer[: link.receive(memoryview(buffer), 0.0)])
+    np.testing.assert_array_equal(np.concatenate(got), data)
 
 
 def test_a_device_that_swallows_everything_takes_bytes_for_ever_and_gives_none() -> None:

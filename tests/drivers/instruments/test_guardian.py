@@ -145,6 +145,17 @@ def test_one_that_cannot_be_made_safe_does_not_keep_the_others_from_it(
     assert "imagined" not in words
 
 
+def test_a_run_that_could_not_make_it_safe_itself_leaves_it_to_the_guardian(
+    attenuator: Start, tmp_path: Path
+) -> None:
+    bench, lock = attenuator(), tmp_path / "guardian.log"
+    guardian = Guardian.start({"attenuator": ("scpi", bench.keys())}, lock)
+    guardian.abandon()
+    assert wait_for_guardian(lock, 30)
+    assert bench.settings() == [95.0]
+    guardian.dismiss()
+
+
 def test_the_file_belongs_to_one_guardian_at_a_time(tmp_path: Path) -> None:
     lock = tmp_path / "made" / "guardian.log"
     assert wait_for_guardian(lock, 0)
