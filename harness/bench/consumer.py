@@ -134,8 +134,7 @@ class Consumer(threading.Thread):
     def _finish(self) -> None:
         self._absorb(self._counter.finish())
         self._look(whole_second=True)
-        while self._given_up:
-            self._unexplained += self._given_up.popleft()
+        self._take_given_up()
         now = max(time.monotonic_ns(), self._boundary_ns - SECOND_NS)
         if self.decision is None:
             self._never_returned(self._traffic.in_flight() if self._sends else 0, now)
@@ -279,6 +278,10 @@ class Consumer(threading.Thread):
         self._flush()
         self._ask_stop("plan")
 
+    def _take_given_up(self) -> None:
+        while self._given_up:
+            self._unexplained += self._given_up.popleft()
+
     def _never_returned(self, left: int, at: int) -> None:
         """Say what was sent and never came back, as far as no slip says it already."""
         bits = left + min(self._unexplained, self._traffic.written_off_bits)
@@ -310,6 +313,7 @@ class Consumer(threading.Thread):
         size, modulo = int(event.data["bits"]), event.data.get("modulo")
         if self._places is not None:
             size, modulo = self._places.slipped(bit, size, modulo, at)
+        self._take_given_up()
         if size < 0:
             explained = min(-size, self._unexplained)
             self._unexplained -= explained
@@ -376,8 +380,7 @@ class Consumer(threading.Thread):
     def _flush(self) -> None:
         while self._posted:
             self._events.append(self._posted.popleft())
-        while self._given_up and self.decision is None:
-            self._unexplained += self._given_up.popleft()
+        self._take_given_up()
         events, self._events = self._events, []
         self._commit(self._book.take_complete(), events, self._counter.received - self._counter.decided)
 

@@ -9,6 +9,7 @@ from collections.abc import Callable
 from dataclasses import dataclass
 
 from drivers.contract import DriverError, Link
+from harness.assess.words import count
 from harness.bench.book import Book
 from harness.bench.consumer import Consumer, Rules
 from harness.bench.places import Places
@@ -23,7 +24,15 @@ from harness.signal.patterns import Pattern
 from harness.statistics.plans import Decision, Plan
 
 POLL_S = 0.05
-LINE_COUNTS = {"framing": "framing error", "parity": "parity error", "overrun": "overrun", "break": "break"}
+LINE_COUNTS = {
+    "framing": "framing error",
+    "parity": "parity error",
+    "break": "break",
+    "overrun": "overrun (of this computer's port)",
+    "buffer_overrun": "buffer overrun (of this computer)",
+    "cts_changes": "CTS change",
+    "dcd_changes": "DCD change",
+}
 RETRY_S = 0.5
 HOPELESS_S = 60.0  # without a stop rule: nothing aligned for so long ends the point
 
@@ -242,8 +251,8 @@ class Measurement:
             for key, number in now.items():
                 more = number - before.get(key, 0)
                 if more > 0:
-                    name = LINE_COUNTS.get(key, f"change of {key}")
-                    text = f"{more} {name}{'' if more == 1 else 's'} on the line"
+                    name, paren, rest = LINE_COUNTS.get(key, key).partition(" (")
+                    text = f"{count(more, name)}{paren}{rest} on the line"
                     at = time.monotonic_ns() + self._wall_ns
                     events.append(Event("line", None, text, at, {"count": key, "more": more}))
             self._healthy[id(link)] = now

@@ -53,7 +53,7 @@ class Places:
 
     def _window(self, received_bit: int, arrived_ns: int) -> tuple[int, int]:
         """Sent bits that the received bit can have been, [low, high)."""
-        high = self._traffic.sent_by(arrived_ns)
+        high = self._traffic.perhaps_sent_by(arrived_ns)
         low = 0
         if self._most is not None:
             low = max(0, high - self._most - 1)

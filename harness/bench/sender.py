@@ -130,6 +130,7 @@ class Sender(threading.Thread):
                 ):
                     if self._halt.is_set():
                         return False
+            self._traffic.offered(8 * len(chunk))
             accepted = self._link.send(chunk, WAIT_S)
             if accepted:
                 self._traffic.sent(8 * accepted, time.monotonic_ns())

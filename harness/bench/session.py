@@ -11,7 +11,7 @@ from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from importlib import metadata
 from pathlib import Path
-from typing import Any
+from typing import Any, Literal
 
 from drivers.contract import DriverError, EndOfStream, Link
 from drivers.dialogue import run_dialogue
@@ -118,6 +118,7 @@ class Links:
                 self._talk(self.settings.before, self._cancel)
             elif self.settings.after:
                 self._dialogue_due = True
+            self._carry("payload")
             yield
         finally:
             self._leave()
@@ -134,7 +135,14 @@ class Links:
         for link in self.all:
             link.open()
         if self.settings.before:
+            self._carry("characters")
             self._talk(self.settings.before, self._cancel)
+        self._carry("payload")
+
+    def _carry(self, what: Literal["payload", "characters"]) -> None:
+        """Dialogues are in characters; on ports with fewer than 8 data bits the pattern is not."""
+        for link in self.all:
+            link.carry(what)
 
     def _talk(self, steps: Any, cancel: threading.Event) -> None:
         for exchange in run_dialogue(self.main, steps, cancel):
@@ -151,6 +159,7 @@ class Links:
         """Never raises: a failing way out must not hide why it was taken."""
         if self._dialogue_due and self.settings.after:
             try:
+                self._carry("characters")
                 self._talk(self.settings.after, threading.Event())
             except DriverError as error:
                 self.events.append(Event("dialogue", None, f"closing dialogue: {error.what}", time.time_ns()))

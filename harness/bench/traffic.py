@@ -20,6 +20,7 @@ class Traffic:
         self._lock = threading.Lock()
         self._changed = threading.Condition(self._lock)
         self._sent = 0
+        self._offered = 0
         self._received = 0
         self._written_off = 0
         self._sent_at: deque[tuple[int, int]] = deque(maxlen=HISTORY)  # (bits, ns)
@@ -47,6 +48,10 @@ class Traffic:
         with self._lock:
             return max(0, self._sent - self._received - self._written_off)
 
+    def offered(self, bits: int) -> None:
+        """Say that so many more bits are being handed to the link: some may come back before it says so."""
+        self._offered = self._sent + bits
+
     def sent(self, bits: int, now_ns: int) -> None:
         """Count bits that the link accepted."""
         with self._changed:
@@ -61,7 +66,7 @@ class Traffic:
         with self._changed:
             self._received += bits
             # More came back than was thought to be out: it had been given up too early.
-            over = self._received + self._written_off - self._sent
+            over = self._received + self._written_off - max(self._sent, self._offered)
             if over > 0 and self._written_off:
                 self._written_off = max(0, self._written_off - over)
             self.last_received_ns = now_ns
@@ -106,6 +111,14 @@ class Traffic:
         if at == 0:
             return moments[0][0] if moments and len(moments) == HISTORY else 0
         return moments[at - 1][0]
+
+    def perhaps_sent_by(self, at_ns: int) -> int:
+        """Bits that can have been sent up to a time, those just being handed over included."""
+        with self._lock:
+            moments = list(self._sent_at)
+            most = max(self._sent, self._offered)
+        at = bisect.bisect_right(moments, at_ns, key=lambda moment: moment[1])
+        return moments[at][0] if at < len(moments) else most
 
     def when_sent(self, bit: int) -> int | None:
         """Monotonic time at which a bit had been accepted, None where that is no longer known."""
