@@ -12,6 +12,9 @@ from harness.record import BitOrder
 _NUMPY_ORDER: dict[BitOrder, Literal["little", "big"]] = {"lsb": "little", "msb": "big"}
 
 
+_ROW_BYTES = 4096  # looked at as one when ONEs are counted
+
+
 def as_bytes(data: bytes | bytearray | memoryview | NDArray[np.uint8]) -> NDArray[np.uint8]:
     """See any buffer of bytes as an array of shape (n,), without a copy."""
     if isinstance(data, np.ndarray):
@@ -48,14 +51,18 @@ def swap_order(data: NDArray[np.uint8]) -> NDArray[np.uint8]:
 
 
 def count_ones(data: NDArray[np.uint8]) -> int:
-    """Count the ONEs in n bytes; fastest where the buffer is contiguous and 8-byte aligned."""
-    whole = len(data) & ~7
-    if whole == 0 or not data.flags.c_contiguous:
-        return int(np.bitwise_count(data).sum(dtype=np.int64))
-    words = data[:whole].view(np.uint64)
-    count = int(np.bitwise_count(words).sum(dtype=np.int64))
-    if whole < len(data):
-        count += int(np.bitwise_count(data[whole:]).sum(dtype=np.int64))
+    """Count the ONEs in n bytes; fastest where the buffer is contiguous, 8-byte aligned and mostly ZERO."""
+    whole = len(data) // _ROW_BYTES * _ROW_BYTES
+    if not data.flags.c_contiguous:
+        whole = 0
+    count = int(np.bitwise_count(data[whole:]).sum(dtype=np.int64))
+    if whole:
+        rows = data[:whole].view(np.uint64).reshape(-1, _ROW_BYTES // 8)
+        touched = np.flatnonzero(np.bitwise_or.reduce(rows, axis=1))
+        if 2 * len(touched) < len(rows):
+            rows = rows[touched]
+        # A row's ONEs fit into 16 bits, and adding bytes up in 16 bits is the quickest.
+        count += int(np.add.reduce(np.bitwise_count(rows), axis=1, dtype=np.uint16).sum(dtype=np.int64))
     return count
 
 

@@ -37,6 +37,14 @@ def test_count_of_ones_does_not_depend_on_alignment_or_length(data, skip):
     assert bits.count_ones(piece[::2]) == sum(byte.bit_count() for byte in data[skip::2])
 
 
+@pytest.mark.parametrize("share", [0, 1e-5, 1e-3, 0.1, 0.5, 1])
+@pytest.mark.parametrize("size", [4095, 4096, 100_000, 300_001])
+def test_count_of_ones_in_large_buffers_is_the_sum_of_their_bits(share, size):
+    rng = np.random.default_rng(1)
+    ones = (rng.random(8 * size) < share).astype(np.uint8)
+    assert bits.count_ones(np.packbits(ones)) == int(ones.sum())
+
+
 @given(pair=st.binary(min_size=2, max_size=100))
 def test_errors_are_the_bits_that_differ(pair):
     half = len(pair) // 2

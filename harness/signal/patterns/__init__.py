@@ -6,12 +6,13 @@
 from harness.signal.patterns.base import Pattern, PatternError
 from harness.signal.patterns.naming import parse_pattern, table_pattern, word_pattern
 from harness.signal.patterns.periodic import BytesPattern, PeriodicPattern, WordPattern
-from harness.signal.patterns.readers import Reader
+from harness.signal.patterns.readers import ROW_BYTES, Reader
 from harness.signal.patterns.sequences import LongRegisterPattern, RegisterPattern, ShortRegisterPattern
 from harness.signal.patterns.sources import BernoulliPattern
 from harness.signal.patterns.table import KnownPattern, known_patterns
 
 __all__ = [
+    "ROW_BYTES",
     "BernoulliPattern",
     "BytesPattern",
     "KnownPattern",

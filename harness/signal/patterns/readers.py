@@ -8,8 +8,10 @@ from abc import ABC, abstractmethod
 import numpy as np
 from numpy.typing import NDArray
 
+ROW_BYTES = 8192  # a comparison says where something differs by rows of so many bytes
 VIEW_BYTES = 1 << 18  # up to so many bytes lie in one piece where the pattern lies in a table
 _STEP_BYTES = 65536  # what one step of a recurrence should make, so that calls cost little beside the work
+_SLAB_BYTES = 1 << 20  # compared at once: long enough to make calls cheap, and still in a cache
 
 
 class Reader(ABC):
@@ -46,35 +48,45 @@ class Reader(ABC):
             at = to
         self.place += 8 * end
 
-    def compare(self, data: NDArray[np.uint8], out: NDArray[np.uint8]) -> bool:
-        """Write `data` XOR the bytes that follow to `out`, of the same length; say whether they differ.
+    def compare(self, data: NDArray[np.uint8], out: NDArray[np.uint8]) -> NDArray[np.intp]:
+        """Write `data` XOR the bytes that follow to `out`, and say where they differ.
 
-        Where it returns False nothing differs, and what stands in `out` means nothing: that spares a pass
-        over memory. `data` and `out` may be one.
+        Parameters
+        ----------
+        data
+            n bytes, at any address.
+        out
+            n bytes, contiguous; quickest where 8-byte aligned. May be `data`.
+
+        Returns
+        -------
+        NDArray[np.intp]
+            The rows of `ROW_BYTES` bytes of `out`, counted from 0, that are not all ZERO, ascending; the last
+            row may be a partial one. Whoever counts need look at these alone.
         """
+        if len(data) <= _SLAB_BYTES:
+            return self._compare_slab(data, out)
+        touched = []
+        for start in range(0, len(data), _SLAB_BYTES):
+            end = start + _SLAB_BYTES
+            touched.append(self._compare_slab(data[start:end], out[start:end]) + start // ROW_BYTES)
+        return np.concatenate(touched)
+
+    def _compare_slab(self, data: NDArray[np.uint8], out: NDArray[np.uint8]) -> NDArray[np.intp]:
         at, end = 0, len(data)
-        differs = False
+        self.place += 8 * end
         while at < end:
             piece = self._next(end - at)
             to = at + len(piece)
-            part = out[at:to]
-            np.bitwise_xor(data[at:to], piece, out=part)
-            same = part.min() == 255 if self._complemented else not part.max()
-            if not (same or differs):
-                out[:at] = 0
-                differs = True
-            if differs and same:
-                part.fill(0)
-            elif differs and self._complemented:
-                np.invert(part, out=part)
+            np.bitwise_xor(data[at:to], piece, out=out[at:to])
             at = to
-        self.place += 8 * end
-        return differs
+        if self._complemented:
+            np.invert(out, out=out)
+        return _rows_touched(out)
 
     def xor_into(self, data: NDArray[np.uint8], out: NDArray[np.uint8]) -> None:
-        """Write `data` XOR the bytes that follow to `out`, of the same length; they may be one."""
-        if not self.compare(data, out):
-            out.fill(0)
+        """As `compare`, for whoever wants the difference alone."""
+        self.compare(data, out)
 
     def view(self, count: int) -> NDArray[np.uint8]:
         """The next `count` bytes, not to be written to, valid until more is read; a copy where need be."""
@@ -91,6 +103,16 @@ class Reader(ABC):
         out = np.empty(count, dtype=np.uint8)
         self.read_into(out)
         return out
+
+
+def _rows_touched(data: NDArray[np.uint8]) -> NDArray[np.intp]:
+    """Rows that are not all ZERO."""
+    whole = len(data) // ROW_BYTES * ROW_BYTES
+    rows = data[:whole].view(np.uint64).reshape(-1, ROW_BYTES // 8)
+    touched: NDArray[np.intp] = np.bitwise_or.reduce(rows, axis=1).nonzero()[0]
+    if whole < len(data) and data[whole:].any():
+        return np.append(touched, len(rows))
+    return touched
 
 
 class TableReader(Reader):
