@@ -12,6 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from harness.assess.feed import PlanFeed
 from harness.assess.requirement import Requirement
 from harness.record import Event, Point, Second, Segment, Tally
 from harness.statistics.availability import Availability, AvailabilityResult
@@ -44,6 +45,7 @@ class Accumulator:
     ) -> None:
         self.requirement = requirement
         self.plan = requirement.make_plan() if requirement else None
+        self.feed = PlanFeed(self.plan, requirement) if self.plan and requirement else None
         self.decision: Decision | None = None
         self.events: list[Event] = []
         self.events_cut = 0
@@ -140,10 +142,10 @@ class Accumulator:
         self._kept += len(among_compared)
 
     def _advance_plan(self, second: Second) -> None:
-        if self.plan is None or self.decision is not None:
+        if self.feed is None or self.decision is not None:
             return
         for segment in segments_of(second):
-            decision = self.plan.advance(segment)
+            decision = self.feed.advance(segment)
             if decision is not None:
                 self.decision = decision
                 return

@@ -127,9 +127,10 @@ def _bounds(acc: Accumulator, about: Facts, quick: bool) -> Bounds:
         side, sure, value = "upper", confidence, upper
         if stop.deciding is not None:
             side, sure, value = stop.deciding.side, stop.deciding.confidence, stop.deciding.value
-        return Bounds(
-            stop.method, stop.confidence, stop.lower, stop.upper, side, sure, value, tuple(stop.remarks)
-        )
+        method = stop.method
+        if about.requirement is not None and about.requirement.count == "events":
+            method += ", on error events"
+        return Bounds(method, stop.confidence, stop.lower, stop.upper, side, sure, value, tuple(stop.remarks))
     interval = clopper_pearson(tally.errors, tally.compared, confidence)
     return Bounds("Clopper-Pearson", confidence, interval.lower, interval.upper, "upper", confidence, upper)
 

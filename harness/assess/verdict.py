@@ -69,7 +69,7 @@ def _failures(
     reasons = []
     if decision is not None and not decision.accepted:
         reasons.append(_rejected(plan, decision))
-    elif decision is None and cannot_accept(plan, sums.tally.errors):
+    elif decision is None and cannot_accept(plan, plan.errors):
         assert plan.accept_errors is not None
         reasons.append(
             f"not demonstrated: {count(sums.tally.errors, 'error')} already in "

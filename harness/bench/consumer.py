@@ -9,6 +9,7 @@ from collections.abc import Callable, Mapping
 from dataclasses import dataclass, replace
 
 from harness.assess.accumulate import EVENTS_KEPT
+from harness.assess.feed import PlanFeed
 from harness.assess.words import count, duration
 from harness.bench.book import Book
 from harness.bench.places import Places
@@ -17,7 +18,7 @@ from harness.bench.traffic import Traffic
 from harness.bench.watch import LinkWatch
 from harness.record import Event, Second, Segment, Tally
 from harness.signal.counter import Counter
-from harness.statistics.plans import Decision, Plan
+from harness.statistics.plans import Decision
 
 SECOND_NS = 1_000_000_000
 WAIT_S = 0.05
@@ -28,7 +29,7 @@ ARRIVALS_KEPT = 65_536
 class Rules:
     """What ends a point, as far as the consumer sees it."""
 
-    plan: Plan | None = None
+    plan: PlanFeed | None = None
     errors: int | None = None
     received_bits: int | None = None  # where nothing is sent
 

@@ -9,6 +9,7 @@ from collections.abc import Callable
 from dataclasses import dataclass
 
 from drivers.contract import DriverError, Link
+from harness.assess.feed import PlanFeed
 from harness.assess.words import count
 from harness.bench.book import Book
 from harness.bench.consumer import Consumer, Rules
@@ -21,7 +22,7 @@ from harness.bench.watch import LinkWatch
 from harness.record import BitOrder, EndedBy, Event, Second, Tally
 from harness.signal.counter import Counter
 from harness.signal.patterns import Pattern
-from harness.statistics.plans import Decision, Plan
+from harness.statistics.plans import Decision
 
 POLL_S = 0.05
 LINE_COUNTS = {
@@ -57,7 +58,7 @@ class Setup:
 
     pattern: Pattern
     bit_order: BitOrder
-    plan: Plan | None
+    plan: PlanFeed | None
     stop: StopRules
     pace_bps: float | None = None
     max_in_flight_bits: int | None = None
@@ -185,7 +186,9 @@ class Measurement:
             setup.pattern,
             bit_order=setup.bit_order,
             slip_unit=unit,
-            position_limit=max(setup.positions_per_second, setup.plan.positions_needed if setup.plan else 0),
+            position_limit=max(
+                setup.positions_per_second, setup.plan.plan.positions_needed if setup.plan else 0
+            ),
             cut_compared=self._cut_compared(),
         )
         places = None
@@ -221,7 +224,7 @@ class Measurement:
         )
 
     def _cut_compared(self) -> int | None:
-        plan = self._setup.plan
+        plan = self._setup.plan.plan if self._setup.plan else None
         if plan is None or plan.cut_compared is None:
             return None
         return max(0, plan.cut_compared - self._setup.base_compared)

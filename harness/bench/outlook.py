@@ -8,7 +8,6 @@ from dataclasses import dataclass
 from harness.assess.accumulate import Accumulator
 from harness.assess.requirement import Requirement
 from harness.assess.verdict import Evidence, ruled_out
-from harness.record import Tally
 from harness.statistics.plans import Plan
 
 
@@ -48,17 +47,17 @@ def outlook_of(acc: Accumulator, requirement: Requirement | None) -> Outlook:
         sums, sums.bits_lost + lost, links_lost, clustered=False, too_few_events=False, objectives_met=None
     )
     return Outlook(
-        accept_at=_accept_at(plan, sums.tally),
+        accept_at=_accept_at(plan),
         on_average=plan.expected_bits(plan.good_ber) if plan.kind == "sequential" else None,
         against=tuple(ruled_out(requirement, plan, acc.decision, evidence)),
         decided=acc.decision is not None,
     )
 
 
-def _accept_at(plan: Plan, tally: Tally) -> int | None:
-    if plan.accept_errors is not None and tally.errors > plan.accept_errors:
+def _accept_at(plan: Plan) -> int | None:
+    if plan.accept_errors is not None and plan.errors > plan.accept_errors:
         return None
     stairs = plan.boundaries
     if not stairs:
         return plan.longest_bits
-    return stairs[tally.errors].accept_at if tally.errors < len(stairs) else None
+    return stairs[plan.errors].accept_at if plan.errors < len(stairs) else None

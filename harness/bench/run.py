@@ -13,6 +13,7 @@ from typing import Any
 from drivers.contract import DriverError, Interrupted
 from harness.assess.accumulate import Accumulator
 from harness.assess.assessment import Assessment, PointAssessment
+from harness.assess.feed import PlanFeed
 from harness.assess.point import Facts, assess_point
 from harness.assess.requirement import Requirement, requirement_at, requirement_of
 from harness.assess.run import assess
@@ -396,7 +397,7 @@ class BenchRun:
     ) -> Measurement:
         link, chosen = self._profile.need_link(), self._ways[way]
         requirement = requirement_at(self._requirement, self._settings, visit.values)
-        plan = requirement.make_plan() if requirement else None
+        plan = PlanFeed(requirement.make_plan(), requirement) if requirement else None
         if had is not None and had.plan is not None:
             plan = had.plan
         stop = _what_is_left(self._profile, had, sends=chosen.sending is not None)

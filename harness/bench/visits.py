@@ -6,10 +6,10 @@ from collections.abc import Mapping
 from dataclasses import dataclass, field
 
 from harness.assess.accumulate import accumulator_for
+from harness.assess.feed import PlanFeed
 from harness.assess.requirement import Requirement
 from harness.profile import Profile
 from harness.record import Point
-from harness.statistics.plans import Plan
 
 
 @dataclass(frozen=True, slots=True)
@@ -22,7 +22,7 @@ class Had:
     errors: int = 0
     lost: int = 0
     duration_s: float = 0.0
-    plan: Plan | None = None
+    plan: PlanFeed | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -60,5 +60,5 @@ def had_by(point: Point, requirement: Requirement | None) -> Had:
         errors=sums.tally.errors,
         lost=sums.bits_lost,
         duration_s=sums.duration_ns / 1e9,
-        plan=acc.plan,
+        plan=acc.feed,
     )
