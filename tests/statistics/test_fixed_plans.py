@@ -60,6 +60,9 @@ def test_an_error_at_the_very_last_bit_counts(stretch) -> None:
         decision = plan.advance(stretch(0, 9000, [17, 4742]))
         assert decision is not None
         assert (decision.accepted, decision.compared_bits, decision.errors) == (False, 4742, 2)
+        # The fixed plan's count is binomial; the curtailed one ended at the error, whatever bit that was.
+        upper = clopper_pearson(2, 4742, 0.95).upper if kind == "fixed" else upper_bound(1, 4741, 0.975)
+        assert plan.bounds().upper == pytest.approx(upper, rel=1e-13)
 
 
 def test_a_curtailed_plan_rejects_at_the_bit_of_the_first_error_too_many(stretch) -> None:
@@ -330,3 +333,21 @@ def test_a_segment_that_contradicts_itself_is_refused(stretch) -> None:
     with pytest.raises(ValueError, match="cannot hold"):
         plan.advance_count(3, 4)
     assert (plan.compared_bits, plan.errors) == (0, 0)
+
+
+@pytest.mark.campaign
+@pytest.mark.parametrize("kind", ["fixed", "curtailed", "sequential"])
+def test_bounds_cover_in_simulated_runs_at_ten_true_ratios(stretch, kind: str) -> None:
+    """Not more than three standard errors under nominal; by chance one in 25 of the 30 cases together."""
+    ber, runs = 1e-6, 2000
+    for i, times in enumerate((0.02, 0.1, 0.2, 0.35, 0.5, 0.75, 1.0, 1.5, 3.0, 20.0)):
+        rng = np.random.default_rng(100 + i)
+        true, covered = ber * times, 0
+        for _ in range(runs):
+            plan = ready_plan(kind, ber, 0.95, 3, 0.1)
+            places = np.cumsum(rng.geometric(true, 100 + int(3 * true * plan.longest_bits)))
+            places = places[places <= plan.longest_bits]
+            assert plan.advance(stretch(0, plan.longest_bits, places)) is not None
+            found = plan.bounds()
+            covered += found.lower <= true <= found.upper
+        assert covered / runs >= 0.95 - 3 * (0.95 * 0.05 / runs) ** 0.5, times

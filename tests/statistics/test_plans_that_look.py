@@ -214,8 +214,8 @@ def test_looks_beyond_the_length_are_counted_at_the_look(kind: str) -> None:
 
 def test_without_admission_rare_looks_would_break_the_consumers_risk() -> None:
     """The reason for it: rejections that nobody sees let more bad units through to the accepting stair."""
-    stairs = small_stairs()
-    worst = 0.0
+    stairs, plan = small_stairs(), small_plan()
+    worst: tuple[float, list[int]] = (0.0, [])
     for first in range(5, stairs.longest, 5):
         for step in (1, 5, 40):
             looks = [*range(first, stairs.longest, step), stairs.longest]
@@ -227,8 +227,13 @@ def test_without_admission_rare_looks_would_break_the_consumers_risk() -> None:
                 allowed = max(allowed, may)
                 free[bit] = (top, stairs.rejectable(bit) if bit < stairs.longest else top + 1)
             ways = oracle(looks, SMALL[0], free).chances
-            worst = max(worst, sum(c for o, c in ways.items() if o[0]))
-    assert worst > 0.1005
+            worst = max(worst, (sum(c for o, c in ways.items() if o[0]), looks))
+            assert plan.risks_for_looks(looks).consumer <= 0.1
+    assert worst[0] > 0.1005
+    held = oracle(worst[1], SMALL[0])
+    assert plan.risks_for_looks(worst[1]).consumer == pytest.approx(
+        sum(c for o, c in held.chances.items() if o[0]), abs=1e-12
+    )
 
 
 def test_bounds_cover_under_looks() -> None:
