@@ -165,6 +165,7 @@ class Assessment:
     points: Sequence[PointAssessment]
     sweep: bool = False
     sensitivity: Mapping[str, Any] | None = None
+    curves: Sequence[Any] = ()  # harness.assess.curve.Curve, one for each setting of a sweep's other axes
     more: Mapping[str, Any] = field(default_factory=dict)
 
     def to_json(self) -> dict[str, Any]:
@@ -186,6 +187,7 @@ class Assessment:
         if self.sweep:
             document["points"] = [{"values": dict(p.values), **p.to_json()} for p in self.points]
             document["sensitivity"] = dict(self.sensitivity) if self.sensitivity else None
+            document["curve_remarks"] = [remark for curve in self.curves for remark in curve.remarks]
         document.update(self.more)
         return document
 

@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
+from dataclasses import replace
 from typing import Any
 
 from harness.assess.accumulate import Accumulator, accumulator_for
 from harness.assess.assessment import Assessment, PointAssessment
 from harness.assess.point import DEFAULT_CONFIDENCE, Facts, assess_point
 from harness.assess.requirement import Requirement, requirement_at, requirement_of
-from harness.record import Event, Point, Run, Verdict
+from harness.record import Event, Point, Run, Tally, Verdict
 
 
 def assess(run: Run) -> Assessment:
@@ -19,11 +20,25 @@ def assess(run: Run) -> Assessment:
         _assess_one(run, point, requirement_at(requirement, run.settings, point.values))
         for point in run.points
     ]
-    several = run.command == "sweep" or len(points) > 1
+    sweep = run.command == "sweep"
+    several = sweep or len(points) > 1
     whole = points[0] if points else _nothing(run, requirement)
-    verdict, reasons = whole.verdict, whole.reasons
+    verdict, reasons = whole.verdict, list(whole.reasons)
+    curves: list[Any] = []
     if several:
         verdict, reasons = _together(points)
+        whole = _summed(whole, points)
+    if sweep and run.status != "running":
+        from harness.assess.curve import curves_of, judge_sensitivity
+
+        curves = curves_of(run.settings, points)
+        least = (run.settings.get("requirement") or {}).get("sensitivity_at_least")
+        if least is not None:
+            judged = [judge_sensitivity(curve, float(least)) for curve in curves] or [
+                judge_sensitivity(None, float(least))
+            ]
+            verdict, reasons = _worst([*judged, *([(verdict, reasons)] if verdict is not None else [])])
+    sensitivities = [found for curve in curves if (found := curve.sensitivity()) is not None]
     return Assessment(
         run=run.key,
         title=run.title,
@@ -38,6 +53,9 @@ def assess(run: Run) -> Assessment:
         whole=whole,
         points=points,
         sweep=several,
+        sensitivity=sensitivities[0] if len(sensitivities) == 1 else None,
+        curves=tuple(curves),
+        more={"sensitivities": sensitivities} if len(sensitivities) > 1 else {},
     )
 
 
@@ -76,15 +94,47 @@ def facts_of(run: Run, point: Point, requirement: Requirement | None) -> Facts:
     )
 
 
+def _summed(first: PointAssessment, points: list[PointAssessment]) -> PointAssessment:
+    """Sum up counts over all points; a BER, bounds or clustering over all of them would mean nothing."""
+    tally, after = Tally(), Tally()
+    for point in points:
+        tally += point.tally
+        after += point.after_decision
+    return replace(
+        first,
+        values={},
+        seconds=sum(p.seconds for p in points),
+        measured_bps=None,
+        bits_sent=sum(p.bits_sent for p in points),
+        tally=tally,
+        ber=None,
+        ber_half_wrong=None,
+        unaligned_ratio=None,
+        bounds=None,
+        slips=(),
+        slip_count=sum(p.slip_count for p in points),
+        bits_lost=sum(p.bits_lost for p in points),
+        bits_inserted=sum(p.bits_inserted for p in points),
+        links_lost=sum(p.links_lost for p in points),
+        events=tuple(event for p in points for event in p.events),
+        plan=next((p.plan for p in points if p.plan), None),
+        after_decision=after,
+        availability=(),
+        clustering=None,
+        remarks=(),
+    )
+
+
 def _together(points: list[PointAssessment]) -> tuple[Verdict | None, list[str]]:
     """Join the verdicts of points that carry one: all must pass."""
-    judged = [p for p in points if p.verdict is not None]
-    if not judged:
-        return None, []
+    judged = [(p.verdict, [f"{_name(p)}: {r}" for r in p.reasons]) for p in points if p.verdict is not None]
+    return _worst(judged) if judged else (None, [])
+
+
+def _worst(judged: list[tuple[Verdict | None, list[str]]]) -> tuple[Verdict | None, list[str]]:
     ranks: list[Verdict] = ["FAIL", "UNDECIDED", "PASS"]
-    worst = next(rank for rank in ranks if any(p.verdict == rank for p in judged))
-    reasons = [f"{_name(p)}: {reason}" for p in judged if p.verdict == worst for reason in p.reasons]
-    return worst, reasons
+    worst = next(rank for rank in ranks if any(verdict == rank for verdict, _ in judged))
+    return worst, [reason for verdict, reasons in judged if verdict == worst for reason in reasons]
 
 
 def _name(point: PointAssessment) -> str:

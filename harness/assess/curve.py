@@ -1,0 +1,196 @@
+"""A sweep as a curve: its points in order of the condition, the fit, the sensitivity, drift and hysteresis."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field
+from typing import Any
+
+from harness.assess.assessment import PointAssessment
+from harness.assess.words import percent
+from harness.record import Verdict
+from harness.statistics.comparing import compare_counts
+from harness.statistics.curve import CurveFit, CurvePoint, fit_curve
+
+DEFAULT_CONFIDENCE = 0.95
+NOTICEABLE = 0.99  # confidence at which drift and hysteresis are called
+
+
+@dataclass(frozen=True, slots=True)
+class Curve:
+    """The points of one axis, all else being equal, with what was fitted to them."""
+
+    instrument: str
+    unit: str
+    at: Mapping[str, float]  # the other axes' values
+    points: tuple[PointAssessment, ...]  # in order of the axis
+    fit: CurveFit | None
+    target_ber: float | None
+    level_at_value: float | None = None  # dBm at the device's port at the sensitivity
+    level_uncertainty_db: float | None = None  # standard uncertainty, of the set-up
+    theory_db: float | None = None  # how far the sensitivity lies from the textbook curve; positive: worse
+    remarks: tuple[str, ...] = field(default=())
+
+    def sensitivity(self) -> dict[str, Any] | None:
+        """JSON of the sensitivity; None where no target was set."""
+        if self.target_ber is None or self.fit is None:
+            return None
+        return {
+            "ber": self.target_ber,
+            "instrument": self.instrument,
+            "value": self.fit.value,
+            "unit": self.unit,
+            "lower": self.fit.lower,
+            "upper": self.fit.upper,
+            "confidence": self.fit.confidence,
+            "goodness": self.fit.goodness,
+            "scatter_db": self.fit.scatter_db,
+            "floor": self.fit.floor,
+            "level_dbm": self.level_at_value,
+            "level_uncertainty_db": self.level_uncertainty_db,
+            "theory_distance_db": self.theory_db,
+            "words": self.fit.words,
+            **({"at": dict(self.at)} if self.at else {}),
+        }
+
+
+def curves_of(settings: Mapping[str, Any], points: Sequence[PointAssessment]) -> list[Curve]:
+    """Sort a sweep's points into curves along its first axis, one for each setting of the others."""
+    sweep = settings.get("sweep") or {}
+    axes = sweep.get("axes") or [{"instrument": sweep.get("instrument")}]
+    name = axes[0]["instrument"]
+    if not name:
+        return []
+    groups: dict[tuple[tuple[str, float], ...], list[PointAssessment]] = {}
+    for point in points:
+        if name not in point.values or not _was_measured(point):
+            continue
+        rest = tuple(sorted((key, value) for key, value in point.values.items() if key != name))
+        groups.setdefault(rest, []).append(point)
+    return [_curve(settings, name, dict(rest), group) for rest, group in groups.items()]
+
+
+def _was_measured(point: PointAssessment) -> bool:
+    """Whether a point says anything: it was measured to its end, be it without a single aligned bit."""
+    return point.ended_by is not None and (
+        point.tally.compared > 0 or point.ended_by not in ("interrupted", "fault")
+    )
+
+
+def _curve(
+    settings: Mapping[str, Any], name: str, rest: dict[str, float], points: list[PointAssessment]
+) -> Curve:
+    sweep = settings.get("sweep") or {}
+    target = sweep.get("sensitivity_ber")
+    unit = str((points[0].facts.get("units") or {}).get(name, ""))
+    confidence = float((settings.get("requirement") or {}).get("confidence") or DEFAULT_CONFIDENCE)
+    fit = None
+    if target is not None:
+        fit = fit_curve([_counted(p, name) for p in points], float(target), confidence, unit=unit or "dB")
+    level, uncertainty = _level(points, name, fit.value if fit else None)
+    return Curve(
+        instrument=name,
+        unit=unit,
+        at=rest,
+        points=tuple(sorted(points, key=lambda p: p.values[name])),
+        fit=fit,
+        target_ber=target,
+        level_at_value=level,
+        level_uncertainty_db=uncertainty,
+        theory_db=_theory_distance(sweep.get("theory"), fit),
+        remarks=(*_drift(points, name), *_hysteresis(points, name)),
+    )
+
+
+def _counted(point: PointAssessment, name: str) -> CurvePoint:
+    t = point.tally
+    return CurvePoint(point.values[name], t.compared, t.errors, aligned=t.compared > 0)
+
+
+def _level(
+    points: Sequence[PointAssessment], name: str, value: float | None
+) -> tuple[float | None, float | None]:
+    """Level at the port at a value, between the points' own levels; and the set-up's uncertainty."""
+    known = sorted(
+        (p.values[name], float(p.facts["level"]["dbm"]), float(p.facts["level"]["uncertainty_db"]))
+        for p in points
+        if p.facts.get("level")
+    )
+    if value is None or not known:
+        return None, None
+    if value <= known[0][0] or len(known) == 1:
+        near = known[0]
+    elif value >= known[-1][0]:
+        near = known[-1]
+    else:
+        i = next(k for k in range(1, len(known)) if value <= known[k][0])
+        (x0, y0, u0), (x1, y1, u1) = known[i - 1], known[i]
+        share = 0.0 if x1 == x0 else (value - x0) / (x1 - x0)
+        return y0 + share * (y1 - y0), max(u0, u1)
+    # Beyond the points the level runs on dB for dB, in the direction that the points show.
+    falls = len(known) < 2 or known[-1][1] <= known[0][1]
+    return near[1] + (near[0] - value if falls else value - near[0]), near[2]
+
+
+def _theory_distance(mapping: Mapping[str, Any] | None, fit: CurveFit | None) -> float | None:
+    """By how many dB the device needs more than the textbook says, at the target BER."""
+    if not mapping or fit is None or fit.value is None:
+        return None
+    from harness.statistics import theory
+
+    needed = theory.ebn0_db(str(mapping["modulation"]), fit.target_ber)
+    has = float(mapping["ebn0_db"]) + float(mapping["slope"]) * (fit.value - float(mapping["value"]))
+    return has - needed if math.isfinite(has - needed) else None
+
+
+def _drift(points: Sequence[PointAssessment], name: str) -> list[str]:
+    """Compare the visits to the reference point, the first with the last."""
+    visits = [p for p in points if p.facts.get("reference") and p.tally.compared]
+    if len(visits) < 2:
+        return []
+    return _differ(visits[0], visits[-1], f"the reference point at {visits[0].values[name]:g}", "drifted")
+
+
+def _hysteresis(points: Sequence[PointAssessment], name: str) -> list[str]:
+    """Compare points that were visited on the way up and on the way down."""
+    visited: dict[float, list[PointAssessment]] = {}
+    for point in points:
+        if point.tally.compared and not point.facts.get("reference"):
+            visited.setdefault(point.values[name], []).append(point)
+    words = []
+    for value, group in sorted(visited.items()):
+        if len(group) == 2:
+            words += _differ(group[0], group[1], f"{value:g}, up against down,", "shows hysteresis")
+    return words
+
+
+def _differ(a: PointAssessment, b: PointAssessment, what: str, verb: str) -> list[str]:
+    compared = compare_counts(a.tally.errors, a.tally.compared, b.tally.errors, b.tally.compared, NOTICEABLE)
+    if not (compared.worse or compared.better):
+        return []
+    chance = 2 * min(compared.p_value, compared.p_value_better)
+    return [f"{what} {verb}: BER {a.ber:.3g}, then {b.ber:.3g} (by chance alone {percent(min(1.0, chance))})"]
+
+
+def judge_sensitivity(curve: Curve | None, least: float) -> tuple[Verdict, list[str]]:
+    """Give the verdict on ``requirement.sensitivity_at_least``: the bound on the unfavourable side decides."""
+    fit = curve.fit if curve is not None else None
+    if curve is None or fit is None or fit.value is None:
+        why = fit.words if fit is not None else "no point was measured"
+        return "UNDECIDED", [f"the sensitivity could not be determined: {why}"]
+    unit = curve.unit
+    about = f"the sensitivity is {fit.value:.2f} {unit}"
+    between = f"(between {_bound(fit.lower)} and {_bound(fit.upper)} {unit} at {percent(fit.confidence)})"
+    # More attenuation is better where BER rises with it; less level is better where BER falls with it.
+    good, bad = (fit.lower, fit.upper) if fit.rising else (fit.upper, fit.lower)
+    sign = 1 if fit.rising else -1
+    if good is not None and sign * good >= sign * least:
+        return "PASS", [f"{about} {between}, at least {least:g} {unit} as required"]
+    if bad is not None and sign * bad < sign * least:
+        return "FAIL", [f"{about} {between}, and {least:g} {unit} is required"]
+    return "UNDECIDED", [f"{about} {between}: whether it reaches {least:g} {unit} is open"]
+
+
+def _bound(value: float | None) -> str:
+    return "no bound" if value is None else f"{value:.2f}"
