@@ -130,6 +130,13 @@ def test_slips_close_together_add_up() -> None:
     np.testing.assert_array_equal(bits_of(once([section], data)), whole_bytes(expected))
 
 
+def test_a_loss_goes_on_into_the_next_chunks() -> None:
+    data = np.arange(30, dtype=np.uint8)
+    stages = chain({"model": "byte_loss", "count": 7, "at_bytes": [9]})
+    got = np.concatenate([stages.apply(data[at : at + 5].copy()) for at in range(0, 30, 5)])
+    assert got.tolist() == [*range(9), *range(16, 30)]
+
+
 def test_a_repeat_gives_the_last_bytes_again() -> None:
     data = np.arange(20, dtype=np.uint8)
     got = once([{"model": "byte_loss", "kind": "repeat", "count": 2, "at_bytes": [5]}], data)
@@ -152,6 +159,18 @@ def test_a_device_deaf_for_half_of_the_time_gives_half_of_the_bytes() -> None:
     np.testing.assert_array_equal(got, expected)
     in_time = {"model": "dropout", "every_s": 4, "for_s": 2}
     np.testing.assert_array_equal(once([in_time], data, rate_bps=4_000), expected)
+
+
+def test_a_short_dropout_within_a_longer_one_does_not_end_it() -> None:
+    data = random_bytes(20_000)
+    keys = {"model": "dropout", "for_bits": 8_000, "length": "exponential"}
+    shorter_within = 0
+    for seed in range(30):
+        first = once([{**keys, "at_bits": [0], "seed": seed}], data)
+        both = once([{**keys, "at_bits": [0, 800], "seed": seed}], data)
+        assert len(both) <= len(first)
+        shorter_within += len(both) == len(first) < len(data) - 100
+    assert shorter_within > 5  # or the loop would have proved nothing
 
 
 @pytest.mark.parametrize(("fill", "byte"), [("zeros", 0), ("ones", 255)])

@@ -8,6 +8,7 @@ fading) the bounds come from the scatter over 200 blocks of the stream.
 
 from __future__ import annotations
 
+import tracemalloc
 from collections.abc import Callable
 from math import cos, exp, log10, pi, sin, sqrt
 
@@ -268,6 +269,21 @@ def test_the_gain_forgets_as_clarke_says(doppler: float) -> None:
         expected = special.j0(2 * pi * doppler * lag) * (0.5 + 0.5 * cos(pi * doppler * lag / 16))
         assert abs(seen - expected) < 6 / sqrt(periods)
     assert abs(np.mean(np.abs(gains) ** 2) - 1) < 6 / sqrt(periods)
+
+
+def test_a_long_run_through_fading_needs_no_more_memory() -> None:
+    gains = Gains(0.0, 0.2, np.random.default_rng(11))
+    gains.take(20_000)
+    tracemalloc.start()
+    try:
+        gains.take(20_000)
+        before = tracemalloc.get_traced_memory()[0]
+        for _ in range(10):
+            gains.take(20_000)
+        grown = tracemalloc.get_traced_memory()[0] - before
+    finally:
+        tracemalloc.stop()
+    assert grown < 1_000_000  # kept, ten stretches of 128 000 grid points would be 20 MB
 
 
 def test_a_path_that_stands_out_has_its_share_of_the_power() -> None:

@@ -178,6 +178,21 @@ def test_another_instrument_after_a_fault_is_refused_and_not_even_sent_to_safe(a
     assert bench.settings() == [20.0]
 
 
+def test_an_instrument_that_was_exchanged_meanwhile_is_refused_though_none_was_expected(
+    attenuator: Start,
+) -> None:
+    bench = attenuator()
+    with instrument(bench, timeout_s=0.3) as device:
+        bench.fault("late", 0.6)
+        with pytest.raises(InstrumentLost):
+            device.read()
+        bench.fault("late", 0)
+        bench.fault("identity", "Fictional Bench,SA-95,0043,1.3")
+        with pytest.raises(WrongInstrument, match="another instrument before"):
+            device.apply(30.0, NEVER)
+    assert bench.settings() == []
+
+
 def test_it_is_made_safe_after_a_fault_and_twice_and_without_being_open(attenuator: Start) -> None:
     bench = attenuator()
     device = instrument(bench, timeout_s=0.3)
@@ -202,6 +217,11 @@ def test_a_device_that_no_longer_answers_is_still_sent_to_its_safe_value(attenua
         with pytest.raises(InstrumentLost):
             device.make_safe()
     assert bench.settings()[-1] == 95.0
+    stranger = instrument(bench, timeout_s=0.3, expect_identity="SA-95")
+    sent = len(bench.settings())
+    with pytest.raises(InstrumentLost):
+        stranger.make_safe()  # never met: it cannot be asked, and is sent there all the same
+    assert bench.settings()[sent:].count(95.0) >= 1
 
 
 def test_an_attenuator_that_does_not_go_to_its_safe_value_is_reported(attenuator: Start) -> None:
