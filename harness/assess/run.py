@@ -127,7 +127,11 @@ def _summed(first: PointAssessment, points: list[PointAssessment]) -> PointAsses
 
 def _together(points: list[PointAssessment]) -> tuple[Verdict | None, list[str]]:
     """Join the verdicts of points that carry one: all must pass."""
-    judged = [(p.verdict, [f"{_name(p)}: {r}" for r in p.reasons]) for p in points if p.verdict is not None]
+    judged: list[tuple[Verdict | None, list[str]]] = [
+        (p.verdict, [f"{_name(p)}: {reason}" for reason in p.reasons])
+        for p in points
+        if p.verdict is not None
+    ]
     return _worst(judged) if judged else (None, [])
 
 

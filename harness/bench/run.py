@@ -29,6 +29,7 @@ from harness.record import EndedBy, Event, Run, Second, Sitting, Tally
 from harness.store import Store
 
 TICK_S = 0.2
+SIGN_OF_LIFE_S = 30.0
 TRIES_KEPT = 20  # named in the record; all are counted
 Commit = Callable[[list[Second], list[Event], int], None]
 
@@ -314,8 +315,11 @@ class BenchRun:
         return ended_by, None
 
     def _pause(self, seconds: float) -> None:
-        if seconds:
-            self._hooks.interrupted.wait(seconds)
+        key, ends = self._key, time.monotonic() + seconds
+        while (left := ends - time.monotonic()) > 0 and not self._hooks.interrupted.is_set():
+            # Other hosts take a run that says nothing for two minutes to be cut.
+            self._recorder.put(lambda store: store.commit(key, [], [], 0))
+            self._hooks.interrupted.wait(min(left, SIGN_OF_LIFE_S))
 
     def _begin_point(self, visit: Visit, way: int, facts: Mapping[str, Any]) -> None:
         number, key = self._point(visit, way), self._key

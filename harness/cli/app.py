@@ -110,6 +110,24 @@ def sweep(
 
 
 @app.command()
+def lot(
+    profile: ProfileArgument,
+    set_: SetOption = None,
+    store: StoreOption = None,
+    json: JsonOption = False,
+    log: LogOption = None,
+) -> int:
+    """Measure many units, one after another: asks for each serial number; ends with the lot at a glance.
+
+    Example: bitassay lot my-lot.toml
+    """
+    from harness.cli.lot import lot as carry_out
+    from harness.cli.measure import Manner
+
+    return carry_out(profile, set_ or [], Manner(store, json, False, log))
+
+
+@app.command()
 def resume(
     run: RunArgument = "last",
     store: StoreOption = None,

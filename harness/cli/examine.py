@@ -8,7 +8,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, BinaryIO, Literal
 
 from harness.cli.failure import FAULT, PASS, UNDECIDED, UserError, warn
-from harness.cli.output import open_writing, print_json, store_url
+from harness.cli.output import open_writing, print_json, store_place
 
 if TYPE_CHECKING:
     import numpy as np
@@ -69,7 +69,7 @@ def examine(
     if as_json:
         print_json(document)
     else:
-        print("\n".join(page(assessment, store_url(store) if store is not None else "")))
+        print("\n".join(page(assessment, store_place(store) if store is not None else "")))
         if found.words:
             print(f"identified  {found.words}")
     if assessment.whole.tally.compared:

@@ -16,7 +16,14 @@ from typing import TYPE_CHECKING, TextIO
 
 from harness.assess.assessment import Assessment
 from harness.cli.failure import FAIL, FAULT, INTERRUPTED, PASS, TERMINATED, UNDECIDED, UserError, warn
-from harness.cli.output import lock_folder, open_writing, print_json, store_url
+from harness.cli.output import (
+    lock_folder,
+    open_for_measuring,
+    open_writing,
+    print_json,
+    store_place,
+    store_url,
+)
 
 if TYPE_CHECKING:
     from harness.bench.run import RunResult
@@ -164,7 +171,7 @@ def _print_again(record: Run, manner: Manner) -> int:
     elif manner.quiet:
         print(f"{assessment.verdict or 'measured'} {record.key}")
     else:
-        print_page(assessment, store_url(manner.store), None)
+        print_page(assessment, store_place(manner.store), None)
     return exit_status(assessment, None, False)
 
 
@@ -175,8 +182,8 @@ def carry_out(loaded: Profile, command: str, manner: Manner, cut: Run | None = N
 
     as_json, quiet = manner.as_json, manner.quiet
     ending, log_file = Ending(), Log(manner.log)
-    where = store_url(manner.store)
-    with open_writing(manner.store) as opened, ending.caught():
+    where = store_place(manner.store)
+    with open_for_measuring(manner.store) as opened, ending.caught():
         try:
             with watcher(
                 quiet=quiet or as_json,
@@ -188,7 +195,9 @@ def carry_out(loaded: Profile, command: str, manner: Manner, cut: Run | None = N
                 hooks = Hooks(
                     interrupted=ending.event, started=view.started, tick=view.tick, log=log_file.line
                 )
-                bench = BenchRun(loaded, opened, hooks, lock=lock_folder(where), command=command, cut=cut)
+                bench = BenchRun(
+                    loaded, opened, hooks, lock=lock_folder(store_url(manner.store)), command=command, cut=cut
+                )
                 result = bench.run()
             status = exit_status(result.assessment, ending.status, result.fault is not None)
             log_file.line(f"ends: run {result.key}, exit status {status}")

@@ -40,6 +40,27 @@ def open_writing(option: str | None) -> Store:
     return open_store(store_url(option), create=True)
 
 
+def open_for_measuring(option: str | None) -> Store:
+    """Open the store for a bench: a server that goes away in mid-run is no end of the run.
+
+    What the server has not taken stands in results/handover.sqlite, and is handed over when it is back.
+    """
+    from harness.cli.failure import warn
+    from harness.store import open_for_bench
+
+    return open_for_bench(store_url(option), Path.cwd() / "results" / "handover.sqlite", warn)
+
+
+def store_place(option: str | None) -> str:
+    """Say where the store is, without a password."""
+    url = store_url(option)
+    if "://" not in url:
+        return url
+    from sqlalchemy.engine import make_url
+
+    return make_url(url).render_as_string(hide_password=True)
+
+
 def lock_folder(url: str) -> Path:
     """Say where guardians keep their files: beside a SQLite store, else in results/ here."""
     path = url.removeprefix("sqlite:///") if url.startswith("sqlite:///") else url

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from harness.assess.words import count, local_date
 from harness.cli.failure import FAULT
-from harness.cli.output import missing_default, open_reading, print_json, store_url
+from harness.cli.output import missing_default, open_reading, print_json, store_place, store_url
 
 
 def runs(store: str | None, limit: int | None, *, as_json: bool) -> int:
@@ -30,7 +30,7 @@ def runs(store: str | None, limit: int | None, *, as_json: bool) -> int:
         print_json({"schema": 1, "runs": listing})
         return 0
     if not lines:
-        print(f"no runs yet in {store_url(store)}")
+        print(f"no runs yet in {store_place(store)}")
         return 0
     print(f"{'run':<36}  {'started':<25}  {'status':<11} {'verdict':<9}  {'unit':<10}  title")
     for r in lines:
@@ -52,7 +52,7 @@ def show(run: str, store: str | None, *, as_json: bool) -> int:
     if as_json:
         print_json(assessment.to_json())
     else:
-        print_page(assessment, store_url(store))
+        print_page(assessment, store_place(store))
     return 0
 
 
@@ -88,8 +88,13 @@ def upgrade(store: str | None) -> int:
     from harness.store import upgrade as carry_out
 
     url = store_url(store)
-    backup = carry_out(url)
-    print(f"{url} has this version's layout" + (f"; the backup is {backup}" if backup else ""))
+    done = carry_out(url)
+    if done.found == done.now:
+        print(f"{done.place} has this version's layout already")
+    else:
+        print(f"{done.place} went from layout {done.found} to {done.now}")
+    if done.backup is not None:
+        print(f"the backup is {done.backup}")
     return 0
 
 
@@ -98,8 +103,18 @@ def copy(source: str, target: str) -> int:
     from harness.store import copy as carry_out
 
     done = carry_out(source, target)
-    print(f"{target}: {done}")
-    return 0
+    print(
+        f"{count(len(done.new), 'new run')}, {len(done.continued)} continued, {done.unchanged} unchanged; "
+        f"{count(done.seconds, 'second')} and {count(done.events, 'event')} copied"
+    )
+    for keys, words in (
+        (done.behind, "has more in the target than in the source, and was left alone"),
+        (done.diverged, "differs between the two, and was left alone: look at both before you trust either"),
+        (done.unsound, "does not match its own digest: it was copied as it is"),
+    ):
+        for key in keys:
+            print(f"run {key} {words}")
+    return FAULT if done.diverged or done.unsound else 0
 
 
 def compare(a: str, b: str, store: str | None, confidence: float, *, as_json: bool) -> int:

@@ -1,5 +1,6 @@
 """Profiles: the TOML files that say what to do, read strictly and worded kindly where they are wrong."""
 
+from .lab import Lot
 from .links import CounterSettings, InstrumentSettings, LinkSettings, ReceiveSettings
 from .load import load_profile, parse_profile
 from .problems import ProfileError
@@ -14,6 +15,7 @@ __all__ = [
     "CounterSettings",
     "InstrumentSettings",
     "LinkSettings",
+    "Lot",
     "Objectives",
     "PatternChoice",
     "PatternSettings",
