@@ -145,7 +145,7 @@ class ParityFinder:
             for at in _surest_windows(soft, stages):
                 window = int_of_bits(hard[at : at + stages])
                 if window == 0:
-                    continue  # what constant, sparse and periodic streams converge to
+                    continue  # what constant, sparse and periodic streams converge to; it has no place either
                 follow = self._register.bits_from(window, len(searched) - at + len(fresh))
                 turned = np.uint8(inverted != self._pattern.sent_inverted)
                 wrong = int(np.count_nonzero(follow[len(searched) - at :] ^ turned != fresh))

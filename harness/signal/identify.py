@@ -23,7 +23,7 @@ from harness.signal.patterns import (
 )
 from harness.signal.streams import Look, look_at
 
-_LONG, _SHORT = 8192, 2048  # bits of a stretch that is searched in; between slips a short one may fit
+_LONG, _SHORT = 8192, 1024  # bits of a stretch that is searched in; between slips a short one may fit
 _PLACES = 16  # places in a stream at which a stretch is tried
 _BLOCK = 1 << 13  # bits compared at once where two patterns are told apart
 _DECIDING_ODDS = 1e4

@@ -17,7 +17,6 @@ _LOOKED_AT = 1 << 16  # bits of a stream that a period is looked for in
 _LONGEST_PERIOD = 1 << 13  # bits
 _LEAST_LIKENESS = 0.3  # correlation with itself, one period later: a word at BER 0.2 has 0.36
 _SHORT_WORD = 64  # bits: a longer word may be better described by a register
-_MOST_UNLIKE = 0.25  # share of bits in which a stream may differ from its word
 _STRETCH = 512  # bits on which a recurrence is sought
 _PROOF = 96  # bits of it that the recurrence must predict beyond the 2L that determine it
 _STRETCHES = 48
@@ -137,14 +136,9 @@ def repeated_word(bits: NDArray[np.uint8]) -> WordPattern | None:
         seen = np.bincount(np.arange(len(stretch)) % period, minlength=period)
         ones = np.bincount(np.arange(len(stretch)) % period, weights=stretch, minlength=period)
         pattern = word_pattern(_highest_rotation((2 * ones > seen).astype(np.uint8)))
-        if not pattern.constant and all(_follows(pattern, part) for part in parts):
+        if not pattern.constant and all(Acquirer(pattern).search(part) is not None for part in parts):
             return pattern
     return None
-
-
-def _follows(pattern: WordPattern, stretch: NDArray[np.uint8]) -> bool:
-    found = Acquirer(pattern).search(stretch)
-    return found is not None and found.mismatches <= _MOST_UNLIKE * found.verified_on
 
 
 def _likely_period(bits: NDArray[np.uint8]) -> int | None:

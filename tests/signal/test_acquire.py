@@ -319,6 +319,15 @@ def test_noise_is_never_aligned_to(name):
         assert acquirer.search(rng.integers(0, 2, int(rng.choice([128, 512, 2048]))).astype("u1")) is None
 
 
+@pytest.mark.parametrize("name", ["bernoulli:0.02", "bernoulli:0.9", "word:0xFE"])
+def test_few_ones_in_pattern_and_stream_are_no_evidence(name):
+    """A dead line agrees with 98 of 100 bits of a source with 2 % ONEs; so does noise with as few of them."""
+    acquirer = Acquirer(parse_pattern(name))
+    rng = np.random.default_rng(15)
+    for share in (0, 0.001, 0.02, 0.1, 0.9, 0.98, 1):
+        assert acquirer.search((rng.random(4096) < share).astype(np.uint8)) is None
+
+
 @pytest.mark.campaign
 def test_no_pattern_is_found_in_a_hundred_thousand_random_stretches():
     """1e5 stretches in all, shared among the patterns and four lengths."""

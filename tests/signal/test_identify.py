@@ -89,8 +89,9 @@ def test_junk_before_and_after_and_slips_do_not_hide_a_pattern():
         assert full_names(identify(np.concatenate([junk, pattern.packed(3, 25_000, "msb"), junk]))) == {name}
         idle = np.full(70_000, 0xFF, dtype=np.uint8)
         assert full_names(identify(np.concatenate([idle, pattern.packed(3, 20_000, "msb")]))) == {name}
-        slips = [pattern.packed(int(rng.integers(10**6)), 400, "lsb") for _ in range(100)]
-        assert full_names(identify(np.concatenate(slips))) == {name}
+        for between in (150, 400):
+            slips = [pattern.packed(int(rng.integers(10**6)), between, "lsb") for _ in range(100)]
+            assert full_names(identify(np.concatenate(slips))) == {name}
 
 
 def test_a_named_pattern_is_looked_for_alone():
@@ -229,7 +230,7 @@ def test_noise_has_no_register_behind_it():
     assert register_behind(np.random.default_rng(13).integers(0, 2, 20_000).astype(np.uint8)) is None
 
 
-@pytest.mark.parametrize("count", [0, 7, 8, 100, 2048, 2056, 8192, 8200, 10**6, 10**9])
+@pytest.mark.parametrize("count", [0, 7, 8, 100, 1024, 1032, 8192, 8200, 10**6, 10**9])
 def test_stretches_are_whole_bytes_inside_the_stream_and_begin_at_its_start(count):
     given = list(stretches(count))
     assert len(given) == len(set(given)) <= 32
