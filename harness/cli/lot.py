@@ -41,7 +41,7 @@ def lot(profile: str, overrides: Sequence[str], manner: Manner) -> int:
         given = [*overrides, f"device.serial_number={serial}", f"device.lot={name}"]
         unit = load_profile(path, given)
         command = "measure" if unit.sweep is None and unit.search is None else "sweep"
-        status = carry_out(unit, command, Manner(manner.store, False, True, manner.log))
+        status = carry_out(unit, command, Manner(manner.store, False, True, manner.log, silent=True))
         if status in _ENDING:
             ended = status
             break

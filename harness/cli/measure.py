@@ -127,6 +127,7 @@ class Manner:
     as_json: bool
     quiet: bool
     log: Path | None
+    silent: bool = False  # print no result at all: the caller prints one for many runs
 
 
 def measure(profile: str, overrides: Sequence[str], manner: Manner) -> int:
@@ -203,6 +204,9 @@ def carry_out(loaded: Profile, command: str, manner: Manner, cut: Run | None = N
             log_file.line(f"ends: run {result.key}, exit status {status}")
         finally:
             log_file.close()
+    if manner.silent:
+        print(f"{result.assessment.verdict or 'measured'} {result.key}", file=sys.stderr)
+        return status
     with standing_in_for_the_reader():
         _print_result(result, status, where, view.drawn_on, as_json=as_json, quiet=quiet)
     return status
