@@ -91,7 +91,15 @@ def _numbers(p: PointAssessment, sheet: Sheet) -> Iterator[str]:
                 f"method: {b.method}",
             ],
         )
+    clustering = p.clustering
+    if clustering is not None and clustering.clustered and clustering.bounds:
+        lower, upper = ratio(clustering.bounds["lower"]), ratio(clustering.bounds["upper"])
+        sure = percent(clustering.bounds["confidence"])
+        yield from _entry(
+            "in bursts", [f"{lower} to {upper}, two-sided, {sure} confidence, from error events"]
+        )
     yield from _entry("bits", [*sheet.bits, *sheet.details])
+    yield from _entry("link", [sheet.path] if sheet.path else [])
     if p.pattern:
         order = f", {p.bit_order} first" if p.bit_order else ""
         inverted = ", received inverted" if p.inverted else ""

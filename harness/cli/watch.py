@@ -192,15 +192,15 @@ def _chosen(quiet: bool, title: str, device: Mapping[str, str], interrupted: thr
         return Watcher()
     terminal = terminal_among(sys.stderr, sys.stdout)
     if terminal is None:
-        return LineWatcher(sys.stderr)
+        return Watcher() if sys.stderr is None else LineWatcher(sys.stderr)
     return PageWatcher(terminal, title, device, interrupted)
 
 
-def terminal_among(*streams: TextIO) -> TextIO | None:
+def terminal_among(*streams: TextIO | None) -> TextIO | None:
     """Find the first stream that is a terminal fit for a page; rich is not imported where there is none."""
     for stream in streams:
         try:
-            if not stream.isatty():
+            if stream is None or not stream.isatty():  # None: it was closed before the start
                 continue
         except ValueError:
             continue

@@ -2,7 +2,12 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
+import json
+import subprocess
+import sys
+from collections.abc import Callable, Iterator, Sequence
+from dataclasses import dataclass
+from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -157,3 +162,88 @@ def utc(monkeypatch: pytest.MonkeyPatch) -> Callable[[], None]:
     monkeypatch.setenv("TZ", "UTC")
     time.tzset()
     return time.tzset
+
+
+@dataclass(frozen=True)
+class AttenuatedDevice:
+    """A device behind a SCPI attenuator, as a process of its own that logs what the attenuator is told."""
+
+    scpi_port: int
+    echo_port: int
+    log: Path
+    process: subprocess.Popen[str]
+
+    def commands(self) -> list[tuple[float, str]]:
+        """Every line that the attenuator got, with the time of day."""
+        lines = [line.split(" ", 1) for line in self.log.read_text().splitlines()]
+        return [(float(at), words) for at, words in lines]
+
+    def settings(self) -> list[float]:
+        """Every value that it was set to, in order."""
+        return [float(words[4:]) for _, words in self.commands() if words.startswith("ATT ")]
+
+    def profile(self, sweep: str, *, stop: str = "bits = 400_000", more: str = "", **keys: Any) -> str:
+        """Write a profile; `keys` change the attenuator's section, None drops a key."""
+        section: dict[str, Any] = {
+            "driver": "scpi",
+            "resource": f"TCPIP::127.0.0.1::{self.scpi_port}::SOCKET",
+            "backend": "@py",
+            "quantity": "attenuation",
+            "unit": "dB",
+            "limits": [0, 80],
+            "safe": 80,
+            "set": "ATT {value:.1f}",
+            "read": "ATT?",
+            "expect_identity": "SA-95",
+            "error_queue": "SYST:ERR?",
+            "tolerance": 0.05,
+            "timeout_s": 10,
+        }
+        lines = [f"{k} = {json.dumps(v)}" for k, v in (section | keys).items() if v is not None]
+        attenuator = "\n".join(lines)
+        return f"""
+title = "Wader-9, invented: sensitivity at the bench"
+[device]
+model = "Wader-9"
+serial_number = "0031"
+[link]
+driver = "tcp"
+host = "127.0.0.1"
+port = {self.echo_port}
+rate_bps = 1_000_000
+max_in_flight_bits = 800_000
+drain_s = 2
+[stop]
+{stop}
+[instruments.attenuator]
+{attenuator}
+{sweep}
+{more}
+"""
+
+
+@pytest.fixture
+def attenuated(tmp_path: Path) -> Iterator[Callable[..., AttenuatedDevice]]:
+    """Start a device behind a SCPI attenuator, with the options of its program."""
+    running: list[subprocess.Popen[str]] = []
+    program = Path(__file__).parents[1] / "devices" / "attenuated_device.py"
+
+    def start(**options: Any) -> AttenuatedDevice:
+        log = tmp_path / f"attenuator-{len(running)}.log"
+        log.touch()
+        process = subprocess.Popen(
+            [sys.executable, str(program), json.dumps({"log": str(log), **options})],
+            stdout=subprocess.PIPE,
+            text=True,
+        )
+        running.append(process)
+        assert process.stdout is not None
+        scpi, echo = (int(word) for word in process.stdout.readline().split())
+        return AttenuatedDevice(scpi, echo, log, process)
+
+    yield start
+    for process in running:
+        process.kill()
+        process.wait()
+        assert process.stdout is not None
+        process.stdout.close()

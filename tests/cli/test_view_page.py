@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import io
+from dataclasses import replace
 
 import pytest
 from rich.cells import cell_len
@@ -309,3 +310,28 @@ def test_numbers_are_not_broken_at_their_narrow_spaces():
 def test_a_word_without_spaces_is_cut_and_wide_letters_count_twice():
     assert wrap("漢字" * 6, 8, 9) == ["漢字漢字"] * 3
     assert wrap("a bb ccc dddd", 6, 2) == ["a bb", "ccc d…"]
+
+
+def test_long_remarks_never_push_the_verdict_off_the_screen(making):
+    assessment = making.assessment([1] * 5, [], REQUIREMENT)
+    remarks = [f"remark {n}: " + "many words of warning that nobody may overlook " * 8 for n in range(3)]
+    sheet = replace(sheet_of_assessment(assessment, "results/runs.sqlite"), remarks=remarks)
+    text = text_of(sheet, 80, 23, whole=True)
+    assert text.count("\n") < 23
+    assert all(f"remark {n}:" in text for n in range(3))
+    assert "`bitassay show RUN | cat` has every word" in text
+
+
+def test_a_ratio_behind_the_devices_own_repeats_is_called_residual(making):
+    device = {"model": "Wader-9", "error_control": "arq"}
+    assert "residual" in text_of(sheet_of_assessment(making.assessment([1] * 5, device=device)))
+    assert "residual" in text_of(sheet_of_progress(making.progress([1], device=device), making.start))
+    assert "residual" not in text_of(sheet_of_assessment(making.assessment([1] * 5)))
+
+
+def test_a_far_end_loop_is_called_both_directions_in_series(making):
+    acc = making.accumulator([0], [], None)
+    link = {"driver": "serial", "port": "/dev/ttyUSB0", "topology": "far-end-loop"}
+    point = making.point(acc, None, facts={"link": link})
+    text = text_of(sheet_of_progress(making.progress([0], point=point), making.start), 140, 40)
+    assert "serial /dev/ttyUSB0; far-end loop, both directions in series" in text

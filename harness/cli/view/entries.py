@@ -8,6 +8,16 @@ from typing import Any
 from harness.assess.assessment import PointAssessment
 from harness.assess.words import count, percent, rate, ratio
 
+PATHS = {
+    "far-end-loop": "far-end loop, both directions in series",
+    "two-port": "two ports, one direction",
+    "one-way": "one way",
+}
+RESIDUAL = {
+    "arq": "residual, after the device's own repeats",
+    "fec": "residual, after the device's own correction",
+}
+
 
 def unit_name(device: Mapping[str, str]) -> str:
     """Name the unit: model and serial number as far as they are known."""
@@ -54,6 +64,8 @@ def ber_decided(p: PointAssessment) -> str:
         return ber_so_far(p)
     b = p.bounds
     side = "under" if b.side == "upper" else "over"
+    if p.verdict == "FAIL" and p.plan and b.side == "upper" and b.value > p.plan["ber"]:
+        side = "only under"
     measured = f"{ratio(p.ber)} measured" if p.tally.errors else "no error measured"
     return f"{measured}; {side} {ratio(b.value)} with {percent(b.deciding_confidence)} confidence"
 
@@ -79,6 +91,27 @@ def bits_words(p: PointAssessment) -> list[str]:
     if more:
         lines.append(", ".join(more))
     return lines
+
+
+def path_words(p: PointAssessment) -> str:
+    """Say which path was measured: a far-end loop's errors are those of both directions."""
+    link = p.facts.get("link") or {}
+    if not link.get("driver"):
+        return ""
+    ends = [str(link.get("peer") or link.get("port") or "")]
+    other = link.get("receive")
+    if isinstance(other, Mapping):
+        ends.append(str(other.get("peer") or other.get("port") or ""))
+    where = " and ".join(end for end in ends if end)
+    kind = PATHS.get(str(link.get("topology")), "")
+    driver = str(link["driver"])
+    name = where if where.startswith(driver) else f"{driver} {where}".strip()
+    return f"{name}; {kind}" if kind else name
+
+
+def residual(device: Mapping[str, str]) -> str:
+    """Say what the ratio is where the device corrects errors itself: a residual one."""
+    return RESIDUAL.get(device.get("error_control", "none").lower(), "")
 
 
 def detail_words(p: PointAssessment) -> list[str]:

@@ -9,7 +9,7 @@ from __future__ import annotations
 import unicodedata
 from dataclasses import dataclass
 
-PLAIN, STRONG, RED, BOXED = "", "bold", "bold red", "bold reverse"
+PLAIN, STRONG, RED, BOXED, BOXED_RED = "", "bold", "bold red", "bold reverse", "bold red reverse"
 
 Span = tuple[str, str]  # text and ink
 Line = tuple[Span, ...]

@@ -15,9 +15,10 @@ from harness.cli.view.sheet import Sheet
 from harness.cli.view.strip import strip, strip_width, strip_words
 from harness.record import Event
 
-MARGIN = 8  # columns: a time of day
-FEWEST_EVENTS = 2
 _ALL = 1_000
+MARGIN = 8  # columns: a time of day
+CUT_SHORT = "(cut short; `bitassay show RUN | cat` has every word)"
+FEWEST_EVENTS = 2
 FEW_POINTS = 4  # written out in words also where room is short
 ALARMS = frozenset(
     ("alignment_lost", "slip", "link_lost", "fault", "host_overrun", "never_returned", "inversion")
@@ -32,20 +33,21 @@ class Layout:
     details: bool
     gaps: bool
     strip_rows: int
-    lines_each: int  # of a reason or a remark, at most
+    reason_lines: int  # of each reason, at most
+    remark_lines: int
     remarks: int
     points: int  # of a sweep, done before
 
 
 LAYOUTS = (
-    Layout(True, True, 3, 4, 4, 12),
-    Layout(True, True, 2, 3, 3, 8),
-    Layout(False, True, 2, 3, 2, 5),
-    Layout(False, True, 1, 2, 1, 3),
-    Layout(False, False, 2, 2, 1, 3),
-    Layout(False, False, 1, 2, 1, 2),
-    Layout(False, False, 1, 1, 1, 1),
-    Layout(False, False, 0, 1, 0, 0),
+    Layout(True, True, 3, 4, _ALL, 4, 12),
+    Layout(True, True, 2, 3, _ALL, 3, 8),
+    Layout(False, True, 2, 3, 4, 2, 5),
+    Layout(False, True, 1, 2, 2, 1, 3),
+    Layout(False, False, 2, 2, 2, 1, 3),
+    Layout(False, False, 1, 2, 2, 1, 2),
+    Layout(False, False, 1, 1, 1, 1, 1),
+    Layout(False, False, 0, 1, 1, 0, 0),
 )
 
 
@@ -61,9 +63,9 @@ class Notebook:
     def draw(self, sheet: Sheet, *, whole: bool = False) -> list[Text]:
         """Draw a page of at most `height` lines; `whole`: a page that stays, as long as it needs to be."""
         for layout in LAYOUTS:
-            if whole:  # nothing that was said of the verdict is cut from a page that stays
-                layout = replace(layout, lines_each=_ALL, remarks=_ALL)
-            head, tail = self._head(sheet, layout), self._tail(sheet)
+            if whole:  # of a page that stays no reason is cut, and no remark is left out
+                layout = replace(layout, reason_lines=_ALL, remarks=_ALL)
+            head, tail = self._head(sheet, layout), self._tail(sheet, layout)
             wanted = min(FEWEST_EVENTS, len(sheet.events))
             room = self.height - len(head) - len(tail)
             if room >= wanted:
@@ -77,9 +79,9 @@ class Notebook:
     # -- parts
 
     def _head(self, sheet: Sheet, layout: Layout) -> list[Text]:
-        gap = [self._entry("", ((("", PLAIN)),))] if layout.gaps else []
+        gap = [self._entry("", ())] if layout.gaps else []
         lines = [self._heading(sheet), self._rule()]
-        lines += self._words("required", sheet.required, layout.lines_each)
+        lines += self._words("required", sheet.required, layout.reason_lines)
         if layout.details and sheet.risks:
             lines += self._words("", [sheet.risks], 2)
         lines += self._verdict(sheet, layout)
@@ -90,17 +92,24 @@ class Notebook:
         lines += [self._entry(label[:MARGIN], line) for label, line in ruler(bars, self._room, self.signs)]
         lines += gap
         if layout.details or len(sheet.points) <= FEW_POINTS:
-            lines += self._words("points", sheet.points, layout.lines_each)
+            lines += self._words("points", sheet.points, 2)
+        if layout.details and sheet.path:
+            lines += self._words("link", [sheet.path], 1)
         lines += self._words("bits", [*sheet.bits, *(sheet.details if layout.details else ())], 2)
         lines += self._strip(sheet, layout)
         lines += gap
         lines += self._words(sheet.to_do_label, sheet.to_do, 2)
-        shown = list(sheet.remarks)[: layout.remarks]
-        lines += self._words("remark", shown, layout.lines_each)
-        return [*lines, *gap]
+        return lines + self._remarks(sheet.remarks[: layout.remarks], layout) + gap
 
-    def _tail(self, sheet: Sheet) -> list[Text]:
-        return self._words("", sheet.foot, 2)
+    def _remarks(self, remarks: Sequence[str], layout: Layout) -> list[Text]:
+        lines = self._words("remark", remarks, layout.remark_lines)
+        if any(line.plain.endswith("…") for line in lines):
+            lines += self._words("", [CUT_SHORT], 1)
+        return lines
+
+    def _tail(self, sheet: Sheet, layout: Layout) -> list[Text]:
+        gap = [self._entry("", ())] if layout.details else []
+        return gap + self._words("", sheet.foot, 2)
 
     def _heading(self, sheet: Sheet) -> Text:
         unit, title = self._fit_words(sheet.unit), self._fit_words(sheet.title)
@@ -128,7 +137,7 @@ class Notebook:
                 self._entry("verdict" if number == 0 else "", ((part, ink),))
                 for number, part in enumerate(wrapped)
             ]
-        return lines + self._words("", sheet.reasons, layout.lines_each)
+        return lines + self._words("", sheet.reasons, layout.reason_lines)
 
     def _strip(self, sheet: Sheet, layout: Layout) -> list[Text]:
         if not layout.strip_rows or not (sheet.recent or sheet.bits):

@@ -11,7 +11,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 from harness.assess.words import ratio
-from harness.cli.view.ink import BOXED, PLAIN, RED, STRONG, Line, Signs, Span
+from harness.cli.view.ink import BOXED, BOXED_RED, PLAIN, RED, STRONG, Line, Signs, Span
 
 DECADES = 15
 MOST_COLUMNS = 10  # of a decade
@@ -87,7 +87,7 @@ def _bar(bar: Bar, mark: int | None, decade: int, signs: Signs) -> Line:
     length = DECADES * decade + 1
     # In half columns, rounded outwards: the bar is never shorter than the interval.
     first = 0 if bar.upper >= 1 else math.floor(2 * _place(bar.upper, decade))
-    last = 2 * length if bar.lower <= 0 else math.ceil(2 * _place(bar.lower, decade))
+    last = 2 * length if bar.lower <= 0 else math.floor(2 * _place(bar.lower, decade)) + 1
     first = min(first, 2 * length - 1)
     last = max(last, first + 1)
     if mark is not None and bar.required is not None:
@@ -105,7 +105,9 @@ def _bar(bar: Bar, mark: int | None, decade: int, signs: Signs) -> Line:
         cells[mark], inks[mark] = signs.mark, STRONG
     if bar.measured:
         column = _column(bar.measured, decade)
-        cells[column], inks[column] = signs.measured, BOXED if cells[column] == signs.bar else STRONG
+        boxed = BOXED_RED if bar.against else BOXED
+        inks[column] = boxed if cells[column] == signs.bar else STRONG
+        cells[column] = signs.measured
     spans = _joined(cells, inks)
     if bar.lower <= 0:
         spans.append((f" {signs.onwards} 0", STRONG))

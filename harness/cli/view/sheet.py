@@ -17,10 +17,12 @@ from harness.cli.view.entries import (
     ber_so_far,
     bits_words,
     detail_words,
+    path_words,
     pattern_name,
     point_label,
     point_words,
     required_words,
+    residual,
     risk_words,
     sensitivity_words,
     unit_name,
@@ -68,6 +70,7 @@ class Sheet:
     bars: Sequence[tuple[str, Bar]] = (("", Bar(0.0, 1.0)),)
     ahead: int = 0  # bars that may be left out where room is short: the first ones
     point: str = ""  # which of several is measured
+    path: str = ""  # what was measured
     bits: Sequence[str] = ()
     details: Sequence[str] = ()  # for a page with room to spare
     points: Sequence[str] = ()
@@ -122,10 +125,11 @@ def sheet_of_progress(progress: Progress, now_ns: int, *, closing: str = "", beh
         verdict=verdict,
         against=against,
         reasons=reasons,
-        ber=ber_so_far(p),
+        ber=_labelled(ber_so_far(p), progress.device),
         point=_point_under_way(progress),
         bars=[*done, (point_label(p), _bar(p, decided=False, looked_for=progress.sensitivity_ber))],
         ahead=len(done),
+        path=path_words(p),
         bits=bits_words(p),
         details=detail_words(p),
         recent=p.recent,
@@ -152,8 +156,9 @@ def sheet_of_assessment(a: Assessment, where: str = "") -> Sheet:
         stamped=a.verdict is not None,
         against=a.verdict == "FAIL",
         reasons=a.reasons,
-        ber=ber_decided(p) if decided else ber_so_far(p),
+        ber=_labelled(ber_decided(p) if decided else ber_so_far(p), a.device),
         bars=[("", _bar(p, decided=decided))],
+        path=path_words(p),
         bits=bits_words(p),
         details=detail_words(p),
         recent=p.recent,
@@ -257,6 +262,12 @@ def _bar(p: PointAssessment, *, decided: bool, looked_for: float | None = None) 
             lower, fades = 0.0, b.lower
     against = required is not None and looked_for is None and lower >= required
     return Bar(lower, upper, p.ber, required, against=against, flag=flag, fades_from=fades)
+
+
+def _labelled(ber: str, device: Mapping[str, str]) -> str:
+    """Label the ratio of a device that corrects errors itself, so that nobody takes it for the channel's."""
+    label = residual(device)
+    return f"{ber}; {label}" if label else ber
 
 
 def _took(a: Assessment) -> str:
