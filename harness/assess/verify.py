@@ -19,10 +19,19 @@ def differences(run: Run) -> list[str]:
     """Name what does not hold in a record: sums, positions, and the numbers stated at the run's end."""
     found = [line for point in run.points for line in _point(point)]
     if run.stated is not None:
-        found.extend(_compare(run.stated, assess(run).to_json(), ""))
+        found.extend(_against_stated(run, run.stated))
     elif run.status not in ("running", "cut"):
         found.append("the run has ended, but no numbers were stated at its end")
     return found[:_LISTED] + ([f"and {len(found) - _LISTED} more"] if len(found) > _LISTED else [])
+
+
+def _against_stated(run: Run, stated: Mapping[str, Any]) -> Iterator[str]:
+    try:
+        derived = assess(run).to_json()
+    except (ValueError, ArithmeticError, KeyError, TypeError, IndexError) as error:
+        yield f"nothing follows from the record any more: {error}"
+        return
+    yield from _compare(stated, derived, "")
 
 
 def _point(point: Point) -> Iterator[str]:

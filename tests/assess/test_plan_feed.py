@@ -10,7 +10,9 @@ from harness.assess.requirement import Requirement
 from harness.record import Segment, Tally
 
 
-def segment(start: int, bits: int, at: list[int], *, complete: bool = True, errors: int | None = None) -> Segment:
+def segment(
+    start: int, bits: int, at: list[int], *, complete: bool = True, errors: int | None = None
+) -> Segment:
     n = len(at) if errors is None else errors
     return Segment(
         start,
