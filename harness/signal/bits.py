@@ -66,11 +66,6 @@ def count_ones(data: NDArray[np.uint8]) -> int:
     return count
 
 
-def count_errors(received: NDArray[np.uint8], expected: NDArray[np.uint8]) -> int:
-    """Count the bits in which two buffers of n bytes differ."""
-    return count_ones(np.bitwise_xor(received, expected))
-
-
 def positions_of_ones(data: NDArray[np.uint8], order: BitOrder) -> NDArray[np.int64]:
     """Where the ONEs of n bytes are, counted in bits from the first, ascending, shape (k,).
 

@@ -13,7 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from harness.signal import polynomials
-from harness.signal.bits import bits_of_int, int_of_bits
+from harness.signal.bits import bits_of_int
 
 LONGEST_REGISTER = 32  # stages; a place is found from a state in about 2^(n/2) steps
 
@@ -66,11 +66,6 @@ class Register:
         """Bits after which the sequence that starts with n ONEs repeats: 2^n - 1 where it is maximal."""
         stretch = bits_of_int(self.run((1 << self.stages) - 1, 2 * self.stages), 2 * self.stages)
         return polynomials.order_of_x(connection_to_characteristic(*shortest_recurrence(stretch)))
-
-    @property
-    def maximal(self) -> bool:
-        """Whether every state but zero lies on one cycle."""
-        return self.period == (1 << self.stages) - 1
 
     def run(self, window: int, count: int) -> int:
         """The sequence that begins with a window, as an int whose bit i is its i-th bit.
@@ -264,8 +259,3 @@ def shortest_recurrence(bits: NDArray[np.uint8]) -> tuple[int, int]:
 def connection_to_characteristic(length: int, connection: int) -> int:
     """x^L · C(1/x): the polynomial whose order is the period, from `shortest_recurrence`'s result."""
     return sum(1 << (length - t) for t in range(length + 1) if connection >> t & 1)
-
-
-def window_of(bits: NDArray[np.uint8]) -> int:
-    """The window of n bits, bit j of the int being ``bits[j]``."""
-    return int_of_bits(bits)

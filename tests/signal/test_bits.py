@@ -45,14 +45,6 @@ def test_count_of_ones_in_large_buffers_is_the_sum_of_their_bits(share, size):
     assert bits.count_ones(np.packbits(ones)) == int(ones.sum())
 
 
-@given(pair=st.binary(min_size=2, max_size=100))
-def test_errors_are_the_bits_that_differ(pair):
-    half = len(pair) // 2
-    left, right = pair[:half], pair[half : 2 * half]
-    expected = sum((a ^ b).bit_count() for a, b in zip(left, right, strict=True))
-    assert bits.count_errors(bits.as_bytes(left), bits.as_bytes(right)) == expected
-
-
 @given(data=st.binary(min_size=1, max_size=50))
 def test_swapping_the_order_turns_one_reading_into_the_other(data):
     swapped = bits.swap_order(np.frombuffer(data, dtype=np.uint8))

@@ -165,7 +165,7 @@ def test_streams_that_fit_nothing_are_described(stream, says):
 @pytest.mark.parametrize("ber", [0.0, 0.05, 0.2])
 def test_a_repeated_word_is_named_through_errors(digits, ber):
     rng = np.random.default_rng(9)
-    sent = noisy(parse_pattern(f"word:{digits}").packed(1, 6000, "lsb"), ber, rng)
+    sent = noisy(parse_pattern(f"word:{digits}").packed(1, 3000, "lsb"), ber, rng)
     word = repeated_word(unpack(sent, "lsb"))
     assert word is not None
     assert word.period == len(digits)

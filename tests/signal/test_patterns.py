@@ -98,9 +98,9 @@ def test_reading_on_equals_reading_from_further_on(name):
 def test_comparing_gives_the_difference_and_says_in_which_rows_there_is_one(name):
     pattern = parse_pattern(name)
     rng = np.random.default_rng(9)
-    for size in (1, 100, 40_000, 3_000_000):
+    for size in (1, 100, 40_000, 2_200_000):
         clean = pattern.packed(11, size, "lsb")
-        some, many = rng.integers(size, size=5), rng.integers(size, size=size // 3 + 1)
+        some, many = rng.integers(size, size=5), rng.integers(size, size=min(size // 3 + 1, 20_000))
         for wrong in ([], [0], [size - 1], some.tolist(), np.unique(many).tolist()):
             expected = np.zeros(size, dtype=np.uint8)
             expected[wrong] = 0x41
@@ -113,17 +113,6 @@ def test_comparing_gives_the_difference_and_says_in_which_rows_there_is_one(name
             assert reader.place == 11 + 8 * size
             pattern.reader(11, "lsb").xor_into(data, data)
             assert np.array_equal(data, expected)
-
-
-@pytest.mark.parametrize("name", ["PRBS7", "PRBS31", "word:0xA5", "bernoulli:0.3"])
-def test_views_are_what_reading_gives(name):
-    pattern = parse_pattern(name)
-    reader = pattern.reader(5, "msb")
-    expected = pattern.packed(5, 400_000, "msb")
-    at = 0
-    for size in (1, 5000, 65_536, 300_000):
-        assert np.array_equal(reader.view(size), expected[at : at + size])
-        at += size
 
 
 @pytest.mark.parametrize("name", ["PRBS31", "PRBS31-reversed", "PRBS29"])

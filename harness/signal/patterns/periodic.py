@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 from harness.record import BitOrder
 from harness.signal.bits import pack, swap_order, unpack
 from harness.signal.patterns.base import Pattern
-from harness.signal.patterns.readers import VIEW_BYTES, TableReader
+from harness.signal.patterns.readers import TAIL_BYTES, TableReader
 from harness.signal.polynomials import prime_factors
 
 LONGEST_CYCLE = 1 << 20  # bits: registers up to here are kept as a table, of so many bytes in each bit order
@@ -139,8 +139,8 @@ class BytesPattern(PeriodicPattern):
 
 
 def _repeated(cycle: NDArray[np.uint8]) -> NDArray[np.uint8]:
-    """A table that goes on for `VIEW_BYTES` after the cycle's end, read-only."""
-    length = len(cycle) + VIEW_BYTES
+    """A table that goes on for `TAIL_BYTES` after the cycle's end, read-only."""
+    length = len(cycle) + TAIL_BYTES
     table = np.tile(cycle, -(-length // len(cycle)))[:length]
     table.flags.writeable = False
     return table

@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 ROW_BYTES = 8192  # a comparison says where something differs by rows of so many bytes
-VIEW_BYTES = 1 << 18  # up to so many bytes lie in one piece where the pattern lies in a table
+TAIL_BYTES = 1 << 18  # a table goes on for so many bytes after its cycle, so that pieces are long
 _STEP_BYTES = 65536  # what one step of a recurrence should make, so that calls cost little beside the work
 _SLAB_BYTES = 1 << 20  # compared at once: long enough to make calls cheap, and still in a cache
 
@@ -88,22 +88,6 @@ class Reader(ABC):
         """As `compare`, for whoever wants the difference alone."""
         self.compare(data, out)
 
-    def view(self, count: int) -> NDArray[np.uint8]:
-        """The next `count` bytes, not to be written to, valid until more is read; a copy where need be."""
-        if not self._complemented:
-            piece = self._next(count)
-            if len(piece) == count:
-                self.place += 8 * count
-                return piece
-            out = np.empty(count, dtype=np.uint8)
-            out[: len(piece)] = piece
-            self.place += 8 * len(piece)
-            self.read_into(out[len(piece) :])
-            return out
-        out = np.empty(count, dtype=np.uint8)
-        self.read_into(out)
-        return out
-
 
 def _rows_touched(data: NDArray[np.uint8]) -> NDArray[np.intp]:
     """Rows that are not all ZERO."""
@@ -123,7 +107,7 @@ class TableReader(Reader):
     place
         Where in the pattern it begins.
     table
-        The cycle, repeated so that the table goes on for at least `VIEW_BYTES` after its end.
+        The cycle, repeated so that the table goes on for at least `TAIL_BYTES` after its end.
     cycle
         Bytes in one cycle.
     offset

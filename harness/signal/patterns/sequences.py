@@ -11,7 +11,7 @@ from harness.record import BitOrder
 from harness.signal.bits import bits_of_int, swap_order, unpack
 from harness.signal.patterns.base import Pattern
 from harness.signal.patterns.periodic import LONGEST_CYCLE, PeriodicPattern, toggled
-from harness.signal.patterns.readers import VIEW_BYTES, Reader, RecurrenceReader, TableReader
+from harness.signal.patterns.readers import TAIL_BYTES, Reader, RecurrenceReader, TableReader
 from harness.signal.registers import Register
 
 _FIRST_SCALE = 16  # a long register's reader starts from n·16 words, which come from small tables
@@ -119,7 +119,7 @@ class LongRegisterPattern(RegisterPattern):
     def _table(self, order: BitOrder) -> NDArray[np.uint8]:
         """One cycle of bytes and a little more, as sent."""
         if order not in self._tables:
-            table = np.empty(self.period + VIEW_BYTES, dtype=np.uint8)
+            table = np.empty(self.period + TAIL_BYTES, dtype=np.uint8)
             self._run_from(0, order).read_into(table)
             table.flags.writeable = False
             self._tables[order] = table
