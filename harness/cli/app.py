@@ -304,6 +304,29 @@ def show(run: RunArgument = "last", store: StoreOption = None, json: JsonOption 
 
 
 @app.command()
+def report(
+    run: RunArgument = "last",
+    html: Annotated[Path | None, typer.Option("--html", metavar="FILE", help="Write a page.")] = None,
+    pdf: Annotated[
+        Path | None, typer.Option("--pdf", metavar="FILE", help="Write a PDF (needs the extra `pdf`).")
+    ] = None,
+    text: Annotated[
+        bool, typer.Option("--text", help="Print it as text; so without --html and --pdf.")
+    ] = False,
+    paper: Annotated[str, typer.Option("--paper", metavar="a4|letter", help="Of the PDF.")] = "a4",
+    store: StoreOption = None,
+) -> int:
+    """Write a run's report: a page, a PDF, or text.
+
+    Example: bitassay report last --html report.html --pdf report.pdf
+    """
+    from harness.cli.report import Forms
+    from harness.cli.report import report as carry_out
+
+    return carry_out(run, Forms(html, pdf, text, paper), store)
+
+
+@app.command()
 def verify(run: RunArgument = "last", store: StoreOption = None, json: JsonOption = False) -> int:
     """Derive every number of a run again from its record and compare.
 

@@ -1,0 +1,151 @@
+"""Drawing the ruler and the stairs."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+from matplotlib.axes import Axes
+from matplotlib.figure import Figure as Sheet
+from matplotlib.ticker import MaxNLocator
+
+from harness.assess.words import ratio
+from harness.report.figures.canvas import BAR, INK, LINE, PALE, PAPER, RED, SOFT, sheet
+from harness.report.figures.drawings import Bar, Ruler, Stairs
+from harness.report.figures.scales import power, short_count
+
+DECADES = 15
+_HALF = 0.30  # of a bar's height
+
+
+def _place(value: float) -> float:
+    """Where a ratio stands: 0 at 1, 15 at 1e-15 and under."""
+    return min(max(-math.log10(value), 0.0), DECADES + 0.0) if value > 0 else DECADES + 0.0
+
+
+def ruler(drawing: Ruler) -> Sheet:
+    """Draw the bounds as bars on a scale from 1 down to 1e-15, with the requirement as a mark."""
+    rows = len(drawing.bars)
+    labelled = any(bar.label for bar in drawing.bars)
+    height = 74 + rows * (18 if rows > 1 else 22)
+    made, axes = sheet(height)
+    longest = max(len(bar.label) for bar in drawing.bars)
+    left = min(0.30, 0.03 + 0.0135 * longest) if labelled else 0.02
+    made.subplots_adjust(left=left, right=0.965, top=1 - 26 / height, bottom=32 / height)
+    axes.spines["left"].set_visible(False)
+    axes.set_xlim(-0.12, DECADES + 0.5)
+    axes.set_ylim(rows - 0.4, -0.75)
+    axes.set_xticks(range(DECADES + 1), [power(-k) if k % 3 == 0 else "" for k in range(DECADES + 1)])
+    axes.set_yticks(range(rows), [_short(bar.label) for bar in drawing.bars] if labelled else [""] * rows)
+    axes.tick_params(axis="y", length=0)
+    axes.grid(axis="x", color=LINE, linewidth=0.5)
+    axes.set_axisbelow(True)
+    for row, bar in enumerate(drawing.bars):
+        _draw_bar(axes, row, bar)
+    if drawing.mark is not None:
+        at = _place(drawing.mark)
+        axes.plot([at, at], [rows - 0.4, -0.75], color=INK, linewidth=1.4)
+        right = at < DECADES * 0.55
+        axes.annotate(
+            f"{drawing.flag} {ratio(drawing.mark)}",
+            (at, -0.75),
+            xytext=(5 if right else -5, 3),
+            textcoords="offset points",
+            ha="left" if right else "right",
+            va="bottom",
+            annotation_clip=False,
+        )
+    return made
+
+
+def _short(label: str) -> str:
+    return label if len(label) <= 18 else f"{label[:17]}…"
+
+
+def _draw_bar(axes: Axes, row: int, bar: Bar) -> None:
+    start, end = _place(bar.upper), _place(bar.lower)
+    end = max(end, start + 0.06)  # a bar is seen, however narrow
+    colour = RED if bar.against else BAR
+    solid = end if bar.fades_from is None else min(max(_place(bar.fades_from), start + 0.06), end)
+    axes.fill_between([start, solid], row - _HALF, row + _HALF, color=colour, linewidth=0)
+    if solid < end or bar.lower <= 0:
+        # Nothing is claimed of how good the unit is: the bar thins out towards 0.
+        axes.fill_between([solid, end], row - _HALF, row + _HALF, color=PALE, linewidth=0)
+        axes.plot([solid, end], [row - _HALF] * 2, color=colour, linewidth=0.7)
+        axes.plot([solid, end], [row + _HALF] * 2, color=colour, linewidth=0.7)
+        axes.annotate("0", (DECADES, row), xytext=(12, 0), textcoords="offset points", va="center", color=SOFT,
+                      annotation_clip=False)  # fmt: skip
+        axes.annotate("", (DECADES + 0.35, row), xytext=(DECADES - 0.35, row),
+                      arrowprops={"arrowstyle": "->", "color": SOFT, "linewidth": 0.9})  # fmt: skip
+    if bar.measured:
+        axes.plot([_place(bar.measured)], [row], marker="D", markersize=6, color=PAPER,
+                  markeredgecolor=INK, markeredgewidth=1.2)  # fmt: skip
+
+
+def stairs(drawing: Stairs) -> Sheet:
+    """Draw where the plan accepts, goes on and rejects, and the path of the run between."""
+    made, axes = sheet(236)
+    made.subplots_adjust(left=0.115, right=0.97, top=0.94, bottom=0.2)
+    n = float(drawing.longest_bits)
+    top = _top(drawing)
+    seen = max(float(drawing.path_bits[-1]), n) if drawing.kind == "fixed" else n
+    right = min(seen, 1.15 * n) * 1.03
+    _zones(axes, drawing, n, top, right)
+    axes.plot([n, n], [0, top], color=SOFT, linewidth=0.9, linestyle=(0, (4, 2)))
+    cut = int(np.searchsorted(drawing.path_errors, top, side="right"))
+    bits, errors = drawing.path_bits[: cut + 1], np.minimum(drawing.path_errors[: cut + 1], top)
+    axes.plot(bits, errors, color=INK, linewidth=1.6, drawstyle="steps-post")
+    leaves = drawing.path_errors[-1] > top
+    if leaves:
+        words = f"goes on to {drawing.total_errors:,} errors".replace(",", "\u202f")
+        near_right = bits[-1] > right / 2
+        axes.annotate(words, (bits[-1], top), xytext=(-6 if near_right else 8, -4), textcoords="offset points",
+                      ha="right" if near_right else "left", va="top")  # fmt: skip
+        axes.plot([bits[-1]], [top], marker="^", color=INK, markersize=6, clip_on=False)
+    elif drawing.decided:
+        against = drawing.decided == "rejected"
+        axes.plot([bits[-1]], [errors[-1]], marker="s" if against else "o", markersize=7, clip_on=False,
+                  color=RED if against else PAPER, markeredgecolor=RED if against else INK,
+                  markeredgewidth=1.4, zorder=5)  # fmt: skip
+    axes.set_xlim(0, right)
+    axes.set_ylim(0, top)
+    axes.xaxis.set_major_locator(_nice(6))
+    axes.xaxis.set_major_formatter(lambda value, _at: short_count(value))
+    axes.yaxis.set_major_locator(_nice(6))
+    axes.yaxis.set_major_formatter(lambda value, _at: short_count(value))
+    axes.set_xlabel("compared bits")
+    axes.set_ylabel("errors so far")
+    return made
+
+
+def _nice(most: int) -> MaxNLocator:
+    return MaxNLocator(most, integer=True)
+
+
+def _top(drawing: Stairs) -> float:
+    """Give the highest count shown: the plan's own reach and some room."""
+    reach = float(drawing.errors[-1])
+    return max(reach * 1.12, reach + 0.8)
+
+
+def _zones(axes: Axes, drawing: Stairs, n: float, top: float, right: float) -> None:
+    """Fill the areas: lower right accepts, upper left rejects; a fixed plan rejects at its end only."""
+    if drawing.kind == "sequential":
+        rows = drawing.errors.astype(float)
+        accept = np.minimum(drawing.accept_at.astype(float), n)
+        reject = np.where(drawing.reject_at < 0, 0.0, drawing.reject_at.astype(float))
+        # Each row is the band from its count to the next one.
+        edges = np.append(rows, top)
+        axes.fill_betweenx(edges, np.append(accept, accept[-1]), right, step="post", color=PALE, linewidth=0)
+        axes.fill_betweenx(edges, 0, np.append(reject, reject[-1]), step="post", color=LINE, linewidth=0)
+        axes.text(0.97, 0.06, "passes", transform=axes.transAxes, ha="right", color=SOFT)
+        axes.text(0.03, 0.90, "fails", transform=axes.transAxes, color=SOFT)
+        return
+    limit = float(drawing.errors[-1])
+    axes.fill_between([0, right], limit, top, color=LINE, linewidth=0)
+    axes.fill_between([n, right], 0, limit, color=PALE, linewidth=0)
+    axes.plot([0, right], [limit, limit], color=SOFT, linewidth=0.9)
+    middle = (limit + top) / 2 / top
+    axes.text(0.02, middle, "too many: fails", transform=axes.transAxes, color=SOFT, va="center")
+    axes.annotate("passes at the line", (n, limit / 2 if limit > 1 else 0.5), xytext=(-5, 0),
+                  textcoords="offset points", ha="right", va="center", color=SOFT)  # fmt: skip

@@ -1,0 +1,141 @@
+"""Figures of counts: the ruler with the bounds, and the plan's stairs with the path that was taken."""
+
+from __future__ import annotations
+
+from typing import Literal
+
+import numpy as np
+
+from harness.assess.assessment import PointAssessment
+from harness.assess.words import count, percent, ratio
+from harness.report.document import Figure
+from harness.report.figures.drawings import Bar, Ruler, Stairs
+from harness.report.material import Material, Measured
+from harness.report.phrases import number, on_bits, point_label, point_name
+
+_PATH = 2_000  # corners drawn, at most
+
+
+def ruler_of(material: Material) -> Figure | None:
+    """Lay the bounds on the ruler: one bar for each point; none where no bit was compared."""
+    points = [m for m in material.points if m.assessed.tally.compared]
+    if not points:
+        return None
+    target, flag = _mark(material)
+    several = len(points) > 1
+    bars = tuple(
+        _bar(m.assessed, point_label(m) if several else "", target, judged=not material.swept) for m in points
+    )
+    return Figure(
+        _title(material, points), "; ".join(_words(m, several) for m in points), Ruler(bars, target, flag)
+    )
+
+
+def _mark(material: Material) -> tuple[float | None, str]:
+    if material.swept:
+        found = material.assessment.sensitivity or {}
+        target = found.get("ber") or material.section("sweep").get("sensitivity_ber")
+        return (float(target), "looked for") if target else (None, "")
+    plan = next((m.assessed.plan for m in material.points if m.assessed.plan), None)
+    return (float(plan["ber"]), "required: at most") if plan else (None, "")
+
+
+def _title(material: Material, points: list[Measured]) -> str:
+    decided = not material.swept and all(m.assessed.verdict in ("PASS", "FAIL") for m in points)
+    b = next(m.assessed.bounds for m in points)
+    if b is None:
+        return "The BER and its bounds"
+    if decided:
+        return f"The BER measured, and the bound that decides ({percent(b.deciding_confidence)} confidence)"
+    return f"The BER measured, and its bounds (two-sided, {percent(b.confidence)} confidence)"
+
+
+def _words(m: Measured, several: bool) -> str:
+    p = m.assessed
+    name = f"{point_name(m)}: " if several else ""
+    if p.bounds is None:
+        return f"{name}{on_bits(p)}"
+    return f"{name}{on_bits(p)}, BER {ratio(p.bounds.lower)} to {ratio(p.bounds.upper)}"
+
+
+def _bar(p: PointAssessment, label: str, target: float | None, *, judged: bool) -> Bar:
+    b = p.bounds
+    if b is None:
+        return Bar(label, 0.0, 1.0)
+    lower, upper, fades = b.lower, b.upper, None
+    if judged and p.verdict == "PASS" and b.side == "upper":
+        lower, upper, fades = 0.0, b.value, b.lower or b.value / 100
+    elif judged and p.verdict == "FAIL" and b.side == "lower":
+        lower = b.value
+    elif judged and p.verdict == "FAIL":
+        upper = max(b.value, b.upper)
+    against = judged and p.verdict == "FAIL" and target is not None
+    return Bar(label, lower, upper, p.ber if p.tally.errors else None, fades, against)
+
+
+def stairs_of(material: Material, m: Measured) -> Figure | None:
+    """Draw the plan's stairs with the run's path; none where no plan was followed."""
+    plan, p = m.plan, m.assessed
+    if plan is None or p.plan is None:
+        return None
+    if plan.boundaries:
+        rows = [(b.errors, b.accept_at, -1 if b.reject_at is None else b.reject_at) for b in plan.boundaries]
+    else:
+        last = (plan.accept_errors or 0) + 1
+        shown = range(last) if last <= 400 else (*range(0, last, last // 200), last - 1)
+        # A fixed plan rejects at its end; an error too many is one wherever it falls.
+        rows = [*((k, plan.longest_bits, -1) for k in shown), (last, plan.longest_bits, plan.longest_bits)]
+    errors, accept, reject = np.array(rows, dtype=np.int64).T
+    bits, so_far = _path(m)
+    decided = p.plan.get("decided_at_bit")
+    outcome: Literal["accepted", "rejected", ""] = ""
+    if decided is not None:
+        outcome = "accepted" if _accepted(m) else "rejected"
+    counted = "error events" if _events(m) else "errors"
+    end = int(decided) if decided is not None else p.tally.compared
+    total = int(so_far[-1]) if len(so_far) else 0
+    drawing = Stairs(plan.kind, plan.longest_bits, errors, accept, reject, bits, so_far, outcome, total)
+    words = (
+        f"{count(total, counted[:-1])} in {count(end, 'compared bit')}; "
+        + (f"the plan {outcome} there" if outcome else "the plan had not decided")
+        + f"; it ends at {number(plan.longest_bits)} bits at the latest"
+    )
+    name = f", {point_name(m)}" if len(material.points) > 1 else ""
+    title = f"The {plan.kind} plan and the path of this run{name} ({counted} against compared bits)"
+    return Figure(title, words, drawing)
+
+
+def _accepted(m: Measured) -> bool:
+    """Whether the plan itself accepted: a FAIL may have another reason."""
+    return any(e.kind == "decided" and "accepted" in e.text for e in m.assessed.events) or (
+        m.assessed.verdict == "PASS"
+    )
+
+
+def _events(m: Measured) -> bool:
+    return m.requirement is not None and m.requirement.count == "events"
+
+
+def _path(m: Measured) -> tuple[np.ndarray, np.ndarray]:
+    """Give the path's corners, beginning at nothing and ending where the count ended."""
+    series = m.series
+    compared = int(series.compared.sum())
+    if _events(m):
+        bits, errors = _event_path(m)
+    else:
+        bits, errors = series.path(_PATH)
+    last = errors[-1] if len(errors) else 0
+    bits = np.concatenate(([0], bits, [max(compared, int(bits[-1]) if len(bits) else 0)]))
+    return bits.astype(np.float64), np.concatenate(([0], errors, [last])).astype(np.float64)
+
+
+def _event_path(m: Measured) -> tuple[np.ndarray, np.ndarray]:
+    places = m.series.compared_positions()
+    gap = m.requirement.event_gap_bits if m.requirement is not None else 0
+    if places is None:
+        return m.series.path(_PATH)
+    first = np.diff(places, prepend=-gap - 1) > gap
+    bits = places[first] + 1
+    errors = np.arange(1, len(bits) + 1)
+    step = max(1, -(-len(bits) // _PATH))
+    return bits[step - 1 :: step], errors[step - 1 :: step]

@@ -1,0 +1,134 @@
+"""What belongs to a sweep: its points, the curve with its fit, and the sensitivity."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any
+
+from harness.assess.words import count, percent, ratio
+from harness.report.document import Block, Column, Entries, Entry, Listing, Paragraph, Section, Table
+from harness.report.figures.of_sweep import curve_of, curve_words
+from harness.report.material import Material, Measured
+from harness.report.phrases import digits, number, units_of
+from harness.report.sections.conditions import point_level
+
+
+def required_sensitivity(material: Material) -> str:
+    """Say which sensitivity is required; empty where none is."""
+    asked = material.section("requirement").get("sensitivity_at_least")
+    if asked is None:
+        return ""
+    found = material.assessment.sensitivity or {}
+    unit = found.get("unit") or ""
+    ber = material.section("sweep").get("sensitivity_ber") or material.section("search").get("ber")
+    at = f" at BER {ratio(float(ber))}" if ber else ""
+    return f"sensitivity{at} at least {float(asked):g} {unit}".rstrip()
+
+
+def sensitivity_words(material: Material) -> str:
+    """Say where the BER that was looked for is reached; empty where none was looked for."""
+    found = material.assessment.sensitivity
+    if not found:
+        return ""
+    target = ratio(found.get("ber"))
+    unit = f" {found['unit']}" if found.get("unit") else ""
+    if found.get("value") is None:
+        return f"sensitivity: a BER of {target} cannot be placed by this sweep{_sides(found, unit)}"
+    return f"sensitivity: BER {target} at {found['value']:.4g}{unit}{_sides(found, unit)}"
+
+
+def _sides(found: Mapping[str, Any], unit: str) -> str:
+    lower, upper = found.get("lower"), found.get("upper")
+    sure = f" at {percent(float(found['confidence']))} confidence" if found.get("confidence") else ""
+    if lower is None and upper is None:
+        return ", without bounds" if found.get("value") is not None else ""
+    if lower is None:
+        return f", at most {upper:.4g}{unit}{sure}, no bound below"
+    if upper is None:
+        return f", at least {lower:.4g}{unit}{sure}, no bound above"
+    return f", {lower:.4g} to {upper:.4g}{unit}{sure}"
+
+
+def sweep_section(material: Material) -> Section | None:
+    """Give the curve and the sensitivity; none where conditions were not stepped."""
+    if not material.swept:
+        return None
+    blocks: list[Block] = []
+    found = material.assessment.sensitivity
+    if found:
+        blocks.append(Paragraph(_sentence(sensitivity_words(material))))
+    figure = curve_of(material)
+    if figure is not None:
+        blocks.append(figure)
+    words = curve_words(material)
+    if words:
+        blocks.append(Listing(words))
+    blocks.append(_points(material))
+    remarks = [
+        f"{_named(m)}: {remark}"
+        for m in material.points
+        for remark in m.assessed.remarks
+        if m.assessed.bounds is None or remark not in m.assessed.bounds.remarks
+    ]
+    if remarks:
+        blocks.append(Listing(tuple(remarks)))
+    if not blocks:
+        return None
+    return Section("The points", tuple(blocks))
+
+
+def _sentence(text: str) -> str:
+    return f"{text[0].upper()}{text[1:]}." if text else ""
+
+
+def _named(m: Measured) -> str:
+    units = units_of(m)
+    return ", ".join(f"{n} {v:g} {units.get(n, '')}".strip() for n, v in m.point.values.items()) or "point"
+
+
+def _points(material: Material) -> Table:
+    names = list(dict.fromkeys(name for m in material.points for name in m.point.values))
+    units: dict[str, str] = {}
+    for m in material.points:
+        units.update(units_of(m))
+    leveled = any(point_level(m) for m in material.points)
+    judged = any(m.assessed.verdict for m in material.points)
+    columns = [Column(f"{name}, {units[name]}" if units.get(name) else name) for name in names]
+    columns += [Column("level, dBm")] if leveled else []
+    columns += [Column(c) for c in ("bits compared", "errors", "BER", "lower", "upper", "unaligned")]
+    columns += [Column("slips")] if any(m.assessed.slip_count for m in material.points) else []
+    columns += [Column("verdict", False)] if judged else []
+    slips = any(m.assessed.slip_count for m in material.points)
+    rows = []
+    for m in material.points:
+        p = m.assessed
+        reference = " (reference)" if m.facts.get("reference") else ""
+        row = [f"{m.point.values[n]:g}" if n in m.point.values else "" for n in names]
+        row[0] = row[0] + reference if row else ""
+        row += [point_level(m)] if leveled else []
+        row += [
+            number(p.tally.compared),
+            number(p.tally.errors),
+            digits(p.ber) if p.tally.compared else "never aligned",
+        ]
+        row += [digits(p.bounds.lower), digits(p.bounds.upper)] if p.bounds and p.tally.compared else ["", ""]
+        row += [number(p.tally.unaligned)]
+        row += [number(p.slip_count)] if slips else []
+        row += [p.verdict or ""] if judged else []
+        rows.append(tuple(row))
+    sure = next((m.assessed.bounds.confidence for m in material.points if m.assessed.bounds), None)
+    note = f"bounds two-sided at {percent(sure)} confidence, each point by itself" if sure else ""
+    return Table("", tuple(columns), tuple(rows), note)
+
+
+def search_entries(material: Material) -> Entries | None:
+    """Tell what a search was asked for; none where there was none."""
+    search = material.section("search")
+    if not search:
+        return None
+    words = (
+        f"{search.get('instrument')} between {search.get('low'):g} and {search.get('high'):g} for a BER of "
+        f"{ratio(search.get('ber'))}, to within {search.get('resolution'):g}"
+    )
+    used = sum(m.assessed.tally.compared for m in material.points)
+    return Entries((Entry("search", (words, f"{count(used, 'bit')} used")),))
