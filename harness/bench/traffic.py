@@ -83,7 +83,8 @@ class Traffic:
     def lose(self, bits: int) -> None:
         """Give up bits that a slip has shown to be lost."""
         with self._changed:
-            out = max(0, self._sent - self._received - self._written_off)
+            # Bits may be back before the link has said that it took them: then those offered are out.
+            out = max(0, max(self._sent, self._offered) - self._received - self._written_off)
             self._written_off += min(bits, out)
             self._changed.notify_all()
 

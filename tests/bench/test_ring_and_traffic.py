@@ -88,6 +88,16 @@ def test_what_is_on_its_way_is_sent_less_received_and_given_up():
     assert traffic.written_off_bits == 600
 
 
+def test_a_loss_shown_before_the_link_says_that_it_took_the_bits_is_counted_once():
+    traffic = Traffic()
+    traffic.offered(800)
+    traffic.received(792, 1)  # back, with a byte lost, before `send` has returned
+    traffic.lose(8)
+    traffic.sent(800, 2)
+    assert traffic.in_flight() == 0
+    assert traffic.written_off_bits == 8
+
+
 def test_times_of_sending_are_found_again():
     traffic = Traffic()
     for n in range(1, 100):
