@@ -84,6 +84,8 @@ class Consumer(threading.Thread):
         self._held: list[Segment] = []  # of a second whose positions were cut: one look at its end
         self._mark_bits: deque[int] = deque()
         self._unexplained = 0  # bits given up in silence that no slip has explained so far
+        self._out_at_decision = 0
+        self._first_delay_bits: int | None = None
         self._posted: deque[Event] = deque()
         self._given_up: deque[int] = deque()
         self.tally = Tally()
@@ -137,7 +139,9 @@ class Consumer(threading.Thread):
         self._look(whole_second=True)
         self._take_given_up()
         now = max(time.monotonic_ns(), self._boundary_ns - SECOND_NS)
-        if self.decision is None:
+        if self.decision is not None:
+            self._missing_at_the_decision(now)
+        else:
             self._never_returned(self._traffic.in_flight() if self._sends else 0, now)
             sent = self._traffic.sent_bits - self._sent_before
             self._book.end(ends_ns=now, received_bits=self._counter.received, sent=sent, due=self._due(now))
@@ -268,6 +272,7 @@ class Consumer(threading.Thread):
 
     def _close_book(self, decision: Decision, bit: int) -> None:
         self.decision = decision
+        self._out_at_decision = self._traffic.in_flight()
         at = self._arrived(bit)
         self._never_returned(0, at)
         verb = "accepted" if decision.accepted else "rejected"
@@ -278,6 +283,17 @@ class Consumer(threading.Thread):
         self._book.cut(bit=bit, ends_ns=at, sent=max(0, self._traffic.sent_bits - self._sent_before))
         self._flush()
         self._ask_stop("plan")
+
+    def _missing_at_the_decision(self, at: int) -> None:
+        """Say what had gone missing before the decision without a slip that shows it.
+
+        A loss of whole periods leaves no trace in a periodic stream: only the count of bits tells. Of what was
+        out at the decision and never came, so much is taken to be on its way as was when the stream began.
+        """
+        missing = min(self._traffic.in_flight(), self._out_at_decision) - (self._first_delay_bits or 0)
+        if self._sends and missing > 0:
+            text = f"{count(missing, 'bit')} sent before the decision never came back"
+            self._happened("never_returned", text, at, {"bits": missing})
 
     def _take_given_up(self) -> None:
         while self._given_up:
@@ -328,6 +344,8 @@ class Consumer(threading.Thread):
         delay = self._places.aligned(bit, place, at, self._came_with(bit))
         if delay is None:
             return
+        if self._first_delay_bits is None:
+            self._first_delay_bits = delay.bits
         seconds = "" if delay.seconds is None else f", {duration(delay.seconds)}"
         data = {"bits": delay.bits, "seconds": delay.seconds, "modulo": delay.modulo}
         text = f"loop delay {count(delay.bits, 'bit')}{seconds}"

@@ -61,7 +61,7 @@ def test_a_device_deaf_for_half_of_the_run_gets_no_pass(bitassay, device, profil
     done = bitassay("measure", path, "--json")
     assert done.json["verdict"] == "FAIL"
     assert done.status == 1
-    assert done.json["bits_lost"] == pytest.approx(160_000, rel=0.2)
+    assert done.json["bits_lost"] == pytest.approx(160_000, rel=0.4)
 
 
 def test_a_device_deaf_from_the_beginning_gets_no_pass(bitassay, device, profile):
@@ -69,7 +69,7 @@ def test_a_device_deaf_from_the_beginning_gets_no_pass(bitassay, device, profile
     path = profile(port, REQUIRED, link="rate_bps = 80_000\npace_bps = 80_000\ndrain_s = 1")
     done = bitassay("measure", path, "--json")
     assert done.json["verdict"] == "FAIL"
-    assert done.json["bits_lost"] == pytest.approx(240_000, rel=0.2)
+    assert done.json["bits_lost"] == pytest.approx(240_000, rel=0.4)
 
 
 def test_a_device_that_loses_a_byte_a_second_gets_no_pass(bitassay, device, profile):
@@ -137,4 +137,17 @@ def test_the_verdict_is_decided_at_the_plans_very_bit(bitassay, device, profile)
     assert got["bounds"]["deciding"]["value"] <= 1e-5
     shown = bitassay("show", "last", "--json").json
     assert shown == got
+    assert bitassay("verify", "last").status == 0
+
+
+def test_losses_of_whole_periods_leave_no_slip_and_still_get_no_pass(bitassay, device, profile):
+    """127 bytes are eight periods of PRBS7: the stream goes on as though nothing had been lost."""
+    port = device(lose=[127, 12_700])
+    link = "rate_bps = 400_000\npace_bps = 400_000\ndrain_s = 1"
+    done = bitassay(
+        "measure", profile(port, "[requirement]\nber = 1e-5\n", link=link, pattern="PRBS7"), "--json"
+    )
+    assert done.json["slips"] == []
+    assert done.json["verdict"] == "FAIL"
+    assert 1016 <= done.json["bits_lost"] <= done.json["bits_compared"] / 90
     assert bitassay("verify", "last").status == 0

@@ -3,6 +3,7 @@
 Prints its port on the first line. Options are one JSON object on the command line:
   delay_s        every byte comes back so much later
   flip           bit positions (least significant bit first) of the stream that are turned over
+  lose           [m, n]: of every n bytes the first m are lost, but for the first n
   lose_every     every so many bytes one is lost
   deaf           [from, to] in bytes: bytes swallowed
   deaf_s         [from, to] in seconds after the first byte: bytes swallowed
@@ -48,6 +49,11 @@ class Device:
         while self.flips and self.flips[0] < 8 * self.seen:
             bit = self.flips.pop(0)
             out[bit // 8 - first] ^= 1 << (bit % 8)
+        if "lose" in o:
+            some, every_so_many = o["lose"]
+            out = bytearray(
+                b for k, b in enumerate(out, first) if k % every_so_many >= some or k < every_so_many
+            )
         if "deaf" in o or "lose_every" in o:
             start, stop = o.get("deaf", (0, 0))
             every = o.get("lose_every")
