@@ -129,8 +129,8 @@ def clopper_pearson(errors: int, bits: int, confidence: float) -> Interval:
     Examples
     --------
     >>> interval = clopper_pearson(4, 20, 0.90)
-    >>> round(interval.lower, 6), round(interval.upper, 6)
-    (0.071354, 0.401029)
+    >>> round(interval.lower, 5), round(interval.upper, 5)
+    (0.07135, 0.40103)
     """
     _check_count(errors, bits)
     _check_confidence(confidence)
