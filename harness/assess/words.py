@@ -12,6 +12,16 @@ def count(number: int, noun: str) -> str:
     return f"{digits} {noun}{'' if number == 1 else 's'}"
 
 
+def slip_words(bits: int) -> str:
+    """Say a slip in words: ``one byte lost``, ``3 bits inserted``."""
+    verb = "lost" if bits < 0 else "inserted"
+    size = abs(bits)
+    number, noun = (size // 8, "byte") if size % 8 == 0 else (size, "bit")
+    if number == 1:
+        return f"one {noun} {verb}"
+    return f"{count(number, noun)} {verb}"
+
+
 def ratio(value: float | None) -> str:
     """Write a ratio such as a BER: ``1e-06`` becomes ``1e-6``, 1.234e-6 keeps three digits."""
     if value is None:

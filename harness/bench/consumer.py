@@ -10,7 +10,7 @@ from dataclasses import dataclass, replace
 
 from harness.assess.accumulate import EVENTS_KEPT
 from harness.assess.feed import PlanFeed
-from harness.assess.words import count, duration
+from harness.assess.words import count, duration, slip_words
 from harness.bench.book import Book
 from harness.bench.places import Places
 from harness.bench.ring import Piece, Ring
@@ -402,13 +402,3 @@ class Consumer(threading.Thread):
         self._take_given_up()
         events, self._events = self._events, []
         self._commit(self._book.take_complete(), events, self._counter.received - self._counter.decided)
-
-
-def slip_words(bits: int) -> str:
-    """Say a slip in words: ``one byte lost``, ``3 bits inserted``."""
-    verb = "lost" if bits < 0 else "inserted"
-    size = abs(bits)
-    number, noun = (size // 8, "byte") if size % 8 == 0 else (size, "bit")
-    if number == 1:
-        return f"one {noun} {verb}"
-    return f"{count(number, noun)} {verb}"

@@ -16,8 +16,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from harness.assess.accumulate import EVENTS_KEPT
+from harness.assess.words import slip_words
 from harness.bench.book import Book
-from harness.bench.consumer import slip_words
 from harness.record import BitOrder, Event, Point, Run, Second, Segment, Tally
 from harness.signal.counter import Counter
 from harness.signal.patterns import Pattern

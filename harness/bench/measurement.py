@@ -10,32 +10,22 @@ from dataclasses import dataclass
 
 from drivers.contract import DriverError, Link
 from harness.assess.feed import PlanFeed
-from harness.assess.words import count
 from harness.bench.book import Book
 from harness.bench.consumer import Consumer, Rules
+from harness.bench.line import LineCounts
 from harness.bench.places import Places
 from harness.bench.receiver import Receiver
 from harness.bench.ring import Ring
 from harness.bench.sender import Sender
 from harness.bench.traffic import Traffic
-from harness.bench.watch import LinkWatch
+from harness.bench.watch import LinkWatch, hopeless
 from harness.record import BitOrder, EndedBy, Event, Second, Tally
 from harness.signal.counter import Counter
 from harness.signal.patterns import Pattern
 from harness.statistics.plans import Decision
 
 POLL_S = 0.05
-LINE_COUNTS = {
-    "framing": "framing error",
-    "parity": "parity error",
-    "break": "break",
-    "overrun": "overrun (of this computer's port)",
-    "buffer_overrun": "buffer overrun (of this computer)",
-    "cts_changes": "CTS change",
-    "dcd_changes": "DCD change",
-}
 RETRY_S = 0.5
-HOPELESS_S = 60.0  # without a stop rule: nothing aligned for so long ends the point
 
 
 @dataclass(frozen=True, slots=True)
@@ -136,11 +126,11 @@ class Measurement:
         self._wake = threading.Event()
         self._asked: str | None = None
         self._lock = threading.Lock()
-        self._healthy = self._health()
         self.traffic = Traffic()
         self._ring = Ring()
         self._started_ns = time.monotonic_ns()
         self._wall_ns = time.time_ns() - self._started_ns
+        self._line = LineCounts([link for link in (sending, receiving) if link is not None], self._wall_ns)
         self._draining = False
         self._sender = self._make_sender()
         self._receiver = self._make_receiver()
@@ -218,7 +208,7 @@ class Measurement:
             sending=self._is_sending,
             commit=commit,
             stop=self._ask_stop,
-            each_second=self._line_events,
+            each_second=self._line.events,
             base_bit=setup.base_bit,
             base_compared=setup.base_compared,
         )
@@ -241,25 +231,6 @@ class Measurement:
         with self._lock:
             self._asked = self._asked or why
         self._wake.set()
-
-    def _line_events(self) -> list[Event]:
-        """Turn what the operating system counted on the line since the last look into events."""
-        events = []
-        for link in {id(x): x for x in (self._sending, self._receiving) if x is not None}.values():
-            try:
-                now = dict(link.health())
-            except DriverError:
-                continue
-            before = self._healthy[id(link)]
-            for key, number in now.items():
-                more = number - before.get(key, 0)
-                if more > 0:
-                    name, paren, rest = LINE_COUNTS.get(key, key).partition(" (")
-                    text = f"{count(more, name)}{paren}{rest} on the line"
-                    at = time.monotonic_ns() + self._wall_ns
-                    events.append(Event("line", None, text, at, {"count": key, "more": more}))
-            self._healthy[id(link)] = now
-        return events
 
     # -- the point
 
@@ -369,7 +340,7 @@ class Measurement:
                 "link_returned", f"the link came back after {(back_ns - gone_ns) / 1e9:.1f} s", back_ns
             )
             self._consumer.gave_up(self.traffic.write_off())
-            self._healthy = self._health()
+            self._line.forget()
             self._sender, self._receiver = self._make_sender(), self._make_receiver()
             for thread in (self._receiver, self._sender):
                 if thread is not None:
@@ -380,32 +351,18 @@ class Measurement:
     def _tell(self, kind: str, text: str, at_ns: int) -> None:
         self._consumer.post(Event(kind, None, text, at_ns + self._wall_ns))
 
-    def _health(self) -> dict[int, dict[str, int]]:
-        links = (self._sending, self._receiving)
-        return {id(link): dict(link.health()) for link in links if link is not None}
-
     def _hopeless(self, now_ns: int) -> DriverError | None:
-        """Say why waiting longer makes no sense, or None."""
-        first_sent = self.traffic.first_sent_ns
-        patience_s = max(3 * self._setup.drain_s, 10.0)
         if self._receiver is None:
             return None
-        if self.traffic.last_received_ns is None:
-            since = first_sent if self._sender is not None else self._started_ns
-            if since is not None and now_ns - since >= patience_s * 1e9:
-                return DriverError(
-                    f"nothing came back in {patience_s:.0f} s: not a single bit was received",
-                    "check power, cable and that the device is in its data mode; `bitassay check` helps",
-                )
-            return None
-        if self._setup.stop.seconds is None:
-            last = self._consumer.last_aligned_ns or self._started_ns
-            if now_ns - last >= HOPELESS_S * 1e9 and self._consumer.is_alive():
-                return DriverError(
-                    f"nothing was aligned for {HOPELESS_S:.0f} s, and the profile has no stop.seconds",
-                    "check the link and the pattern's name; set stop.seconds to wait longer",
-                )
-        return None
+        waiting_since = self.traffic.first_sent_ns if self._sender is not None else self._started_ns
+        return hopeless(
+            now_ns,
+            waiting_since_ns=waiting_since,
+            anything_came=self.traffic.last_received_ns is not None,
+            last_aligned_ns=self._consumer.last_aligned_ns or self._started_ns,
+            drain_s=self._setup.drain_s,
+            ends_by_time=self._setup.stop.seconds is not None,
+        )
 
     def _stop_sending(self, ended_by: EndedBy) -> None:
         if self._sender is None or self._sending is None:

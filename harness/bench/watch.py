@@ -1,8 +1,12 @@
-"""The watch over a link: when bits were due and none was aligned, and when what is out will not return."""
+"""The watch over a link: when bits were due and none was aligned, and when waiting longer makes no sense."""
 
 from __future__ import annotations
 
+from drivers.contract import DriverError
+
 LOST_NS = 3_000_000_000
+LEAST_PATIENCE_S = 10.0
+HOPELESS_S = 60.0  # without a stop rule: nothing aligned for so long ends the point
 
 
 class LinkWatch:
@@ -56,3 +60,29 @@ class LinkWatch:
             return False
         self.lost = True
         return True
+
+
+def hopeless(
+    now_ns: int,
+    *,
+    waiting_since_ns: int | None,
+    anything_came: bool,
+    last_aligned_ns: int,
+    drain_s: float,
+    ends_by_time: bool,
+) -> DriverError | None:
+    """Say why waiting longer makes no sense, or None while it does."""
+    if not anything_came:
+        patience_s = max(3 * drain_s, LEAST_PATIENCE_S)
+        if waiting_since_ns is None or now_ns - waiting_since_ns < patience_s * 1e9:
+            return None
+        return DriverError(
+            f"nothing came back in {patience_s:.0f} s: not a single bit was received",
+            "check power, cable and that the device is in its data mode; `bitassay check` helps",
+        )
+    if ends_by_time or now_ns - last_aligned_ns < HOPELESS_S * 1e9:
+        return None
+    return DriverError(
+        f"nothing was aligned for {HOPELESS_S:.0f} s, and the profile has no stop.seconds",
+        "check the link and the pattern's name; set stop.seconds to wait longer",
+    )
