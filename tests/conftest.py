@@ -69,3 +69,27 @@ def device() -> Iterator[Callable[..., int]]:
         process.wait()
         assert process.stdout is not None
         process.stdout.close()
+
+
+@pytest.fixture
+def modem() -> Iterator[Callable[..., str]]:
+    """Start a modem over a pseudo-terminal, a socket or RFC 2217; gives what link.port names in a profile."""
+    running: list[subprocess.Popen[str]] = []
+    urls = {"pty": "{}", "socket": "socket://127.0.0.1:{}", "rfc2217": "rfc2217://127.0.0.1:{}"}
+
+    def start(**options: Any) -> str:
+        process = subprocess.Popen(
+            [sys.executable, str(DEVICES / "modem.py"), json.dumps(options)],
+            stdout=subprocess.PIPE,
+            text=True,
+        )
+        running.append(process)
+        assert process.stdout is not None
+        return urls[options.get("over", "pty")].format(process.stdout.readline().strip())
+
+    yield start
+    for process in running:
+        process.kill()
+        process.wait()
+        assert process.stdout is not None
+        process.stdout.close()
