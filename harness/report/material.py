@@ -25,6 +25,7 @@ class Measured:
     point: Point
     assessed: PointAssessment
     requirement: Requirement | None
+    units: Mapping[str, str]  # of the instruments
 
     @cached_property
     def series(self) -> Series:
@@ -53,6 +54,7 @@ class Material:
     digest: str | None  # of the record as it is now; None where it was not computed
     written: int  # UTC, ns
     program: str
+    units: Mapping[str, str]  # of the instruments
 
     @property
     def settings(self) -> Mapping[str, Any]:
@@ -106,11 +108,21 @@ def material_of(
     """
     assessment = assess(run)
     requirement = requirement_of(run.settings)
+    units = _units(run)
     points = tuple(
-        Measured(point, assessed, requirement_at(requirement, run.settings, point.values))
+        Measured(point, assessed, requirement_at(requirement, run.settings, point.values), units)
         for point, assessed in zip(run.points, assessment.points, strict=True)
     )
-    return Material(run, assessment, points, kept_digest, digest, written, program)
+    return Material(run, assessment, points, kept_digest, digest, written, program, units)
+
+
+def _units(run: Run) -> dict[str, str]:
+    """Give each instrument's unit, as found at the points or else as the profile states it."""
+    sections = run.settings.get("instruments") or {}
+    units = {name: str(section.get("unit") or "") for name, section in sections.items()}
+    for point in run.points:
+        units.update({name: str(unit) for name, unit in (point.facts.get("units") or {}).items() if unit})
+    return units
 
 
 def _differences(run: Run, derived: Assessment) -> list[str]:

@@ -12,6 +12,8 @@ from harness.report.document import Block, Document, Figure, Table, Verdict
 from harness.report.figures.drawing import draw_all
 
 Paper = Literal["a4", "us-letter"]
+_TOGETHER = 16  # rows of a table that is not broken over pages
+_LONG = 26  # characters: text that may need more than one line
 
 
 class NoTypst(Exception):
@@ -95,6 +97,18 @@ def _block(block: Block, pictures: Any) -> dict[str, Any]:
         return {"kind": kind, "word": block.word, "words": block.words, "mood": block.kind}
     data = {"kind": kind, **asdict(block)}
     if isinstance(block, Table):
-        for column, about in zip(block.columns, data["columns"], strict=True):
-            about["stretch"] = not column.number and len(block.columns) > 2
+        widest = _widest(block)
+        for number, about in enumerate(data["columns"]):
+            about["stretch"] = number == widest
+        data["together"] = len(block.rows) <= _TOGETHER
     return data
+
+
+def _widest(table: Table) -> int | None:
+    """Give the column whose text is to be broken into lines; None where all are short."""
+    lengths = [
+        0 if column.number else max((len(row[k]) for row in table.rows), default=0)
+        for k, column in enumerate(table.columns)
+    ]
+    longest = max(lengths, default=0)
+    return lengths.index(longest) if longest > _LONG else None

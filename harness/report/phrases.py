@@ -38,7 +38,7 @@ def digits(value: float | None) -> str:
         return "none"
     if value == 0:
         return "0"
-    if value >= 0.001:
+    if value >= 0.01:
         return f"{value:.6g}"
     mantissa, exponent = f"{value:.5e}".split("e")
     return f"{mantissa.rstrip('0').rstrip('.')}e{int(exponent)}"
@@ -62,11 +62,6 @@ def unit_name(device: Mapping[str, str]) -> str:
     return " ".join(word for word in (model, serial) if word) or "unnamed unit"
 
 
-def units_of(measured: Measured) -> Mapping[str, str]:
-    """Give each instrument's unit."""
-    return measured.facts.get("units") or {}
-
-
 def with_unit(value: float, unit: str) -> str:
     """Write a value with its unit."""
     return f"{value:g} {unit}".rstrip()
@@ -77,7 +72,7 @@ def point_name(measured: Measured) -> str:
     direction = measured.facts.get("direction")
     if direction:
         return f"{direction} direction"
-    units = units_of(measured)
+    units = measured.units
     named = [
         f"{name} {with_unit(value, units.get(name, ''))}" for name, value in measured.point.values.items()
     ]
@@ -89,7 +84,7 @@ def point_label(measured: Measured) -> str:
     direction = measured.facts.get("direction")
     if direction:
         return str(direction)
-    units = units_of(measured)
+    units = measured.units
     return ", ".join(with_unit(v, units.get(n, "")) for n, v in measured.point.values.items())
 
 

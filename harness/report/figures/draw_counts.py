@@ -90,15 +90,16 @@ def stairs(drawing: Stairs) -> Sheet:
     top = _top(drawing)
     seen = max(float(drawing.path_bits[-1]), n) if drawing.kind == "fixed" else n
     right = min(seen, 1.15 * n) * 1.03
-    _zones(axes, drawing, n, top, right)
-    axes.plot([n, n], [0, top], color=SOFT, linewidth=0.9, linestyle=(0, (4, 2)))
+    leaves = bool(drawing.path_errors[-1] > top)
     cut = int(np.searchsorted(drawing.path_errors, top, side="right"))
+    early = leaves and float(drawing.path_bits[min(cut, len(drawing.path_bits) - 1)]) < 0.35 * right
+    _zones(axes, drawing, n, top, right, words_right=early)
+    axes.plot([n, n], [0, top], color=SOFT, linewidth=0.9, linestyle=(0, (4, 2)))
     bits, errors = drawing.path_bits[: cut + 1], np.minimum(drawing.path_errors[: cut + 1], top)
     axes.plot(bits, errors, color=INK, linewidth=1.6, drawstyle="steps-post")
-    leaves = drawing.path_errors[-1] > top
     if leaves:
         words = f"goes on to {drawing.total_errors:,} errors".replace(",", "\u202f")
-        near_right = bits[-1] > right / 2
+        near_right = bits[-1] > 0.62 * right
         axes.annotate(words, (bits[-1], top), xytext=(-6 if near_right else 8, -4), textcoords="offset points",
                       ha="right" if near_right else "left", va="top")  # fmt: skip
         axes.plot([bits[-1]], [top], marker="^", color=INK, markersize=6, clip_on=False)
@@ -128,7 +129,7 @@ def _top(drawing: Stairs) -> float:
     return max(reach * 1.12, reach + 0.8)
 
 
-def _zones(axes: Axes, drawing: Stairs, n: float, top: float, right: float) -> None:
+def _zones(axes: Axes, drawing: Stairs, n: float, top: float, right: float, *, words_right: bool) -> None:
     """Fill the areas: lower right accepts, upper left rejects; a fixed plan rejects at its end only."""
     if drawing.kind == "sequential":
         rows = drawing.errors.astype(float)
@@ -146,6 +147,9 @@ def _zones(axes: Axes, drawing: Stairs, n: float, top: float, right: float) -> N
     axes.fill_between([n, right], 0, limit, color=PALE, linewidth=0)
     axes.plot([0, right], [limit, limit], color=SOFT, linewidth=0.9)
     middle = (limit + top) / 2 / top
-    axes.text(0.02, middle, "too many: fails", transform=axes.transAxes, color=SOFT, va="center")
+    axes.text(
+        n / right - 0.02 if words_right else 0.02, middle, "too many: fails", transform=axes.transAxes,
+        color=SOFT, va="center", ha="right" if words_right else "left",
+    )  # fmt: skip
     axes.annotate("passes at the line", (n, limit / 2 if limit > 1 else 0.5), xytext=(-5, 0),
                   textcoords="offset points", ha="right", va="center", color=SOFT)  # fmt: skip

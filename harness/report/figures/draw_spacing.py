@@ -14,7 +14,7 @@ from harness.report.figures.scales import octave, short_count
 def gaps(drawing: Gaps) -> Sheet:
     """Draw how often each octave of gaps was counted, and how often independent errors would have it."""
     made, axes = sheet(204)
-    made.subplots_adjust(left=0.115, right=0.98, top=0.86, bottom=0.2)
+    made.subplots_adjust(left=0.115, right=0.96, top=0.86, bottom=0.2)
     octaves = np.arange(len(drawing.counted))
     axes.bar(octaves + 0.5, drawing.counted, width=0.82, color=BAR, label="counted")
     axes.plot(octaves + 0.5, drawing.expected, color=INK, marker="o", markersize=3.2, linewidth=1.0,
@@ -45,7 +45,8 @@ def bursts(drawing: Bursts) -> Sheet:
         labels[-1] += "+"
     step = max(1, -(-len(labels) // 10))
     shown = [(s, text) for s, text in zip(drawing.sizes.tolist(), labels, strict=True)]
-    ticks = shown[::step] if shown[::step][-1] == shown[-1] else [*shown[::step], shown[-1]]
+    ticks = [tick for tick in shown[::step] if tick[0] <= shown[-1][0] - step]
+    ticks.append(shown[-1])
     axes.set_xticks([s for s, _text in ticks], [text for _s, text in ticks])
     axes.yaxis.set_major_formatter(lambda value, _at: short_count(value))
     axes.set_xlabel("errors in an event")

@@ -32,10 +32,12 @@ def curve(drawing: Curve) -> Sheet:
         axes.plot(
             *drawing.theory, color=BLUE, linewidth=1.2, linestyle=(0, (5, 2)), label=drawing.theory_label
         )
-    if drawing.fit is not None:
-        axes.plot(*drawing.fit, color=INK, linewidth=1.5, label="fitted")
     several = len(drawing.series) > 1
     for number, series in enumerate(drawing.series):
+        if series.fit is not None:
+            line = _LINES[number % len(_LINES)]
+            label = None if several else "fitted"
+            axes.plot(*series.fit, color=INK, linewidth=1.4, linestyle=line, label=label)
         _points(axes, series, number, lowest, several=several)
     axes.yaxis.set_major_locator(LogLocator(numticks=10))
     axes.yaxis.set_minor_formatter(NullFormatter())
@@ -79,7 +81,7 @@ def _points(axes: Axes, series: CurveSeries, number: int, lowest: float, *, seve
     axes.plot(
         [], [], marker=marker, color=PAPER, markeredgecolor=INK, markersize=5.5, linestyle="none", label=label
     )
-    if several:
+    if several and series.fit is None:
         drawn = [p for p in series.points if p.ber]
         axes.plot([p.at for p in drawn], [p.ber or 0.0 for p in drawn], color=SOFT, linewidth=0.9,
                   linestyle=_LINES[number % len(_LINES)], zorder=1)  # fmt: skip
@@ -91,14 +93,20 @@ def _show_sensitivity(axes: Axes, drawing: Curve, lowest: float) -> None:
     if drawing.target is None:
         return
     axes.axhline(drawing.target, color=RED, linewidth=0.9, linestyle=(0, (4, 2)))
-    if drawing.sensitivity is None:
-        return
-    value, lower, upper = drawing.sensitivity
+    for series in drawing.series:
+        if series.sensitivity is not None:
+            _mark_sensitivity(axes, drawing.target, series.sensitivity, lowest)
+
+
+def _mark_sensitivity(
+    axes: Axes, target: float, found: tuple[float | None, float | None, float | None], lowest: float
+) -> None:
+    value, lower, upper = found
     left, right = axes.get_xlim()
     if lower is not None or upper is not None:
         start = left if lower is None else max(lower, left)
         stop = right if upper is None else min(upper, right)
         axes.axvspan(start, stop, color=PALE, linewidth=0, zorder=0)
     if value is not None:
-        axes.plot([value, value], [lowest, drawing.target], color=RED, linewidth=1.1)
-        axes.plot([value], [drawing.target], marker="o", color=RED, markersize=4)
+        axes.plot([value, value], [lowest, target], color=RED, linewidth=1.1)
+        axes.plot([value], [target], marker="o", color=RED, markersize=4)

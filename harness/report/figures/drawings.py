@@ -92,15 +92,16 @@ class CurvePoint:
     lower: float
     upper: float
     errors: int
-    fitted: bool = True
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class CurveSeries:
     """The points of one curve; several where a sweep has several axes."""
 
     label: str
     points: tuple[CurvePoint, ...]
+    fit: tuple[Floats, Floats] | None = None  # (values, BER)
+    sensitivity: tuple[float | None, float | None, float | None] | None = None  # value, lower, upper
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -109,11 +110,9 @@ class Curve:
 
     axis: str
     series: tuple[CurveSeries, ...]
-    fit: tuple[Floats, Floats] | None = None  # (values, BER)
     theory: tuple[Floats, Floats] | None = None
     theory_label: str = ""
     target: float | None = None
-    sensitivity: tuple[float | None, float | None, float | None] | None = None  # value, lower, upper
 
 
 Drawing = Ruler | Course | Stairs | Gaps | Bursts | Curve

@@ -26,15 +26,17 @@ def ruler_of(material: Material) -> Figure | None:
     bars = tuple(
         _bar(m.assessed, point_label(m) if several else "", target, judged=not material.swept) for m in points
     )
-    return Figure(
-        _title(material, points), "; ".join(_words(m, several) for m in points), Ruler(bars, target, flag)
+    words = (
+        f"{count(len(points), 'point')}, from {_words(points[0], several)}; to {_words(points[-1], several)}"
     )
+    if len(points) < 3:
+        words = "; ".join(_words(m, several) for m in points)
+    return Figure(_title(material, points), words, Ruler(bars, target, flag))
 
 
 def _mark(material: Material) -> tuple[float | None, str]:
     if material.swept:
-        found = material.assessment.sensitivity or {}
-        target = found.get("ber") or material.section("sweep").get("sensitivity_ber")
+        target = material.section("sweep").get("sensitivity_ber") or material.section("search").get("ber")
         return (float(target), "looked for") if target else (None, "")
     plan = next((m.assessed.plan for m in material.points if m.assessed.plan), None)
     return (float(plan["ber"]), "required: at most") if plan else (None, "")

@@ -8,7 +8,7 @@ from typing import Any
 from harness.assess.words import count, duration, rate
 from harness.report.document import Block, Column, Entries, Entry, Listing, Paragraph, Section, Table
 from harness.report.material import Material, Measured
-from harness.report.phrases import digits, point_name, units_of, value_words, with_unit
+from harness.report.phrases import digits, point_name, value_words, with_unit
 
 _TOPOLOGY = {
     "far-end-loop": "far-end loop: sent and received at the same end, both directions in series",
@@ -51,11 +51,10 @@ def _instruments(material: Material, m: Measured | None) -> Table:
     calibration = facts.get("calibration") or {}
     due, certificates = calibration.get("due") or {}, calibration.get("certificates") or {}
     tables = (material.section("correction").get("tables")) or {}
-    units = facts.get("units") or {}
     rows = []
     for name, section in material.section("instruments").items():
         table = tables.get(name) or {}
-        unit = str(units.get(name) or section.get("unit") or "")
+        unit = material.units.get(name, "")
         limits = section.get("limits")
         allowed = " to ".join(f"{v:g}" for v in limits) if limits else "not stated"
         calibrated = [
@@ -73,7 +72,7 @@ def _instruments(material: Material, m: Measured | None) -> Table:
 
 
 def _set(m: Measured) -> Iterator[Entry]:
-    units, readings = units_of(m), m.facts.get("readings") or {}
+    units, readings = m.units, m.facts.get("readings") or {}
     for name in m.facts.get("instruments") or {}:
         value = m.point.values.get(name)
         said = []

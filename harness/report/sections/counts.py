@@ -9,7 +9,7 @@ from harness.report.document import Block, Column, Entries, Entry, Listing, Para
 from harness.report.figures.of_spacing import bursts_of, gaps_of
 from harness.report.figures.of_time import course_figures
 from harness.report.material import Material, Measured
-from harness.report.phrases import ber_name, digits, moment, number, point_name
+from harness.report.phrases import ber_name, digits, moment, number, point_label, point_name
 from harness.report.series import Outage
 from harness.statistics.availability import AvailabilityResult, nines
 
@@ -31,6 +31,8 @@ def counts_section(material: Material) -> Section:
         for m in material.points:
             blocks += _half_wrong(material, m)
     blocks += [block for m in material.points for block in (*_slips(material, m), *_outages(material, m))]
+    if material.swept and not blocks:
+        blocks.append(Paragraph("No slip and no outage at any point; the tallies stand under “The curve”."))
     blocks.append(Paragraph(_RULE, "aside"))
     return Section("Counts", tuple(blocks))
 
@@ -207,7 +209,7 @@ def _about(a: AvailabilityResult) -> Iterator[str]:
     if a.idle:
         yield f"{count(a.idle, 'second')} in which nothing was due are left out"
     if a.partial:
-        yield f"{count(a.partial, 'partial second')} left out, {number(a.partial_errored)} of them with errors"
+        yield f"{count(a.partial, 'partial second')} left out"
     yield from a.warnings
 
 
@@ -280,7 +282,7 @@ def _events(material: Material) -> Table | None:
     rows = tuple(
         (
             moment(event.at)[11:19] if event.at else "",
-            *((point_name(m),) if several else ()),
+            *((point_label(m),) if several else ()),
             event.text,
             number(event.bit) if event.bit is not None else "",
         )

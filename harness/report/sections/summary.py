@@ -90,13 +90,12 @@ def _how_sure(material: Material) -> Iterator[str]:
         yield "nothing was measured"
     elif material.swept:
         found = sensitivity_words(material)
-        if found:
-            yield found
+        yield from found
         judged = [m for m in material.points if m.assessed.plan]
         for m in judged:
             yield f"{point_name(m)}: {deciding_words(m.assessed) or 'no bit was compared'}"
         if not found and not judged:
-            yield "each point has bounds of its own: see “The points”"
+            yield "each point has bounds of its own: see “The curve”"
     else:
         for m in material.points:
             yield from _sure_of(material, m)
@@ -109,8 +108,20 @@ def _sure_of(material: Material, m: Measured) -> Iterator[str]:
         yield f"{named}no bit was compared: every ratio is possible"
         return
     measured = f"{ber_name(material)} {ratio(p.ber)} measured" if p.tally.errors else "no error measured"
-    sure = deciding_words(p) if p.verdict in ("PASS", "FAIL") else bounds_words(p)
-    yield f"{named}{measured}; {sure}"
+    sure = [deciding_words(p)] if p.verdict in ("PASS", "FAIL") else [bounds_words(p)]
+    if p.verdict == "FAIL" and p.bounds.side == "upper":
+        sure.append(bounds_words(p))
+    yield f"{named}{'; '.join((measured, *sure))}"
+    c = p.clustering
+    if c is not None and c.clustered:
+        if c.bounds is None:
+            yield f"{named}the errors come in clusters, in too few events to bound the BER"
+        else:
+            yield (
+                f"{named}the errors come in clusters, so these bounds are too narrow; from error events "
+                f"{ratio(c.bounds['lower'])} to {ratio(c.bounds['upper'])} at "
+                f"{percent(c.bounds['confidence'])} confidence"
+            )
     if p.plan is not None:
         plan = p.plan
         yield (
@@ -122,8 +133,8 @@ def _sure_of(material: Material, m: Measured) -> Iterator[str]:
 
 def _bits(material: Material) -> Iterator[str]:
     if material.swept:
-        bits = sum(m.assessed.tally.compared for m in material.points)
-        yield f"{count(bits, 'bit')} compared at {count(len(material.points), 'point')}"
+        compared = material.assessment.whole.tally.compared
+        yield f"{count(compared, 'bit')} compared at {count(len(material.points), 'point')}"
         return
     for m in material.points:
         named = f"{point_name(m)}: " if len(material.points) > 1 else ""

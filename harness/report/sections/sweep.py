@@ -8,8 +8,8 @@ from typing import Any
 from harness.assess.words import count, percent, ratio
 from harness.report.document import Block, Column, Entries, Entry, Listing, Paragraph, Section, Table
 from harness.report.figures.of_sweep import curve_of, curve_words
-from harness.report.material import Material, Measured
-from harness.report.phrases import digits, number, units_of
+from harness.report.material import Material
+from harness.report.phrases import digits, number, point_label
 from harness.report.sections.conditions import point_level
 
 
@@ -18,23 +18,31 @@ def required_sensitivity(material: Material) -> str:
     asked = material.section("requirement").get("sensitivity_at_least")
     if asked is None:
         return ""
-    found = material.assessment.sensitivity or {}
-    unit = found.get("unit") or ""
-    ber = material.section("sweep").get("sensitivity_ber") or material.section("search").get("ber")
+    sweep = material.section("sweep")
+    axes = sweep.get("axes") or [sweep]
+    unit = material.units.get(
+        axes[0].get("instrument") or material.section("search").get("instrument") or "", ""
+    )
+    ber = sweep.get("sensitivity_ber") or material.section("search").get("ber")
     at = f" at BER {ratio(float(ber))}" if ber else ""
     return f"sensitivity{at} at least {float(asked):g} {unit}".rstrip()
 
 
-def sensitivity_words(material: Material) -> str:
-    """Say where the BER that was looked for is reached; empty where none was looked for."""
-    found = material.assessment.sensitivity
-    if not found:
-        return ""
+def sensitivity_words(material: Material) -> list[str]:
+    """Say where the BER that was looked for is reached, for each curve; nothing where none was looked for."""
+    a = material.assessment
+    found = [a.sensitivity] if a.sensitivity else a.more.get("sensitivities", ())
+    return [_sensitivity(one) for one in found]
+
+
+def _sensitivity(found: Mapping[str, Any]) -> str:
+    at = ", ".join(f"{name} {value:g}" for name, value in (found.get("at") or {}).items())
+    name = f"{at}: sensitivity" if at else "sensitivity"
     target = ratio(found.get("ber"))
     unit = f" {found['unit']}" if found.get("unit") else ""
     if found.get("value") is None:
-        return f"sensitivity: a BER of {target} cannot be placed by this sweep{_sides(found, unit)}"
-    return f"sensitivity: BER {target} at {found['value']:.4g}{unit}{_sides(found, unit)}"
+        return f"{name}: a BER of {target} cannot be placed by this sweep{_sides(found, unit)}"
+    return f"{name}: BER {target} at {found['value']:.4g}{unit}{_sides(found, unit)}"
 
 
 def _sides(found: Mapping[str, Any], unit: str) -> str:
@@ -54,9 +62,7 @@ def sweep_section(material: Material) -> Section | None:
     if not material.swept:
         return None
     blocks: list[Block] = []
-    found = material.assessment.sensitivity
-    if found:
-        blocks.append(Paragraph(_sentence(sensitivity_words(material))))
+    blocks += [Paragraph(_sentence(words)) for words in sensitivity_words(material)]
     figure = curve_of(material)
     if figure is not None:
         blocks.append(figure)
@@ -64,33 +70,33 @@ def sweep_section(material: Material) -> Section | None:
     if words:
         blocks.append(Listing(words))
     blocks.append(_points(material))
-    remarks = [
-        f"{_named(m)}: {remark}"
-        for m in material.points
-        for remark in m.assessed.remarks
-        if m.assessed.bounds is None or remark not in m.assessed.bounds.remarks
-    ]
+    remarks = _remarks(material)
     if remarks:
-        blocks.append(Listing(tuple(remarks)))
-    if not blocks:
-        return None
-    return Section("The points", tuple(blocks))
+        blocks.append(Listing(remarks))
+    return Section("The curve", tuple(blocks))
+
+
+def _remarks(material: Material) -> tuple[str, ...]:
+    """Collect the points' remarks, equal ones said once with all their points."""
+    by_text: dict[str, list[str]] = {}
+    for m in material.points:
+        known = (*(m.assessed.bounds.remarks if m.assessed.bounds else ()), *m.facts.get("overdue", ()))
+        for remark in m.assessed.remarks:
+            if remark not in known:
+                by_text.setdefault(remark, []).append(point_label(m))
+    return tuple(
+        f"{remark} (at {', '.join(names)})" if len(names) < len(material.points) else remark
+        for remark, names in by_text.items()
+    )
 
 
 def _sentence(text: str) -> str:
     return f"{text[0].upper()}{text[1:]}." if text else ""
 
 
-def _named(m: Measured) -> str:
-    units = units_of(m)
-    return ", ".join(f"{n} {v:g} {units.get(n, '')}".strip() for n, v in m.point.values.items()) or "point"
-
-
 def _points(material: Material) -> Table:
     names = list(dict.fromkeys(name for m in material.points for name in m.point.values))
-    units: dict[str, str] = {}
-    for m in material.points:
-        units.update(units_of(m))
+    units = material.units
     leveled = any(point_level(m) for m in material.points)
     judged = any(m.assessed.verdict for m in material.points)
     columns = [Column(f"{name}, {units[name]}" if units.get(name) else name) for name in names]
