@@ -94,7 +94,12 @@ def assess_point(acc: Accumulator, about: Facts, *, quick: bool = False) -> Poin
         clustering=clustering,
         unaligned_ratio=unaligned_ratio(sums, bits_lost),
         links_lost=links_lost,
-        remarks=(*_retests(acc, about), *bounds.remarks, *_remarks(acc, sums, bits_lost, clustering)),
+        remarks=(
+            *_retests(acc, about),
+            *about.facts.get("overdue", ()),
+            *bounds.remarks,
+            *_remarks(acc, sums, bits_lost, clustering),
+        ),
         recent=tuple(acc.recent),
         facts=about.facts,
     )

@@ -38,6 +38,8 @@ def assess(run: Run) -> Assessment:
                 judge_sensitivity(None, float(least))
             ]
             verdict, reasons = _worst([*judged, *([(verdict, reasons)] if verdict is not None else [])])
+    if several:
+        whole = replace(whole, remarks=_common_remarks(points, curves))
     sensitivities = [found for curve in curves if (found := curve.sensitivity()) is not None]
     return Assessment(
         run=run.key,
@@ -123,6 +125,13 @@ def _summed(first: PointAssessment, points: list[PointAssessment]) -> PointAsses
         clustering=None,
         remarks=(),
     )
+
+
+def _common_remarks(points: list[PointAssessment], curves: list[Any]) -> tuple[str, ...]:
+    """Collect what has to be said of a sweep as a whole: calibrations that ran out, the fit, drift, hysteresis."""
+    overdue = dict.fromkeys(words for point in points for words in point.facts.get("overdue", ()))
+    fits = [curve.fit.words for curve in curves if curve.fit is not None and curve.fit.words]
+    return (*overdue, *fits, *(remark for curve in curves for remark in curve.remarks))
 
 
 def _together(points: list[PointAssessment]) -> tuple[Verdict | None, list[str]]:

@@ -13,7 +13,7 @@ from collections.abc import Iterator, Mapping
 from pathlib import Path
 from typing import Any
 
-from drivers.contract import DriverError, Instrument, Link
+from drivers.contract import DriverError, Instrument, Link, OutOfLimits, WrongInstrument
 from drivers.guardian import Guardian
 from drivers.registry import instrument_class
 from harness.bench.correction import PortLevel
@@ -41,6 +41,7 @@ class Conditions:
         self.level = PortLevel.of(profile)
         self.events: list[Event] = []
         self.instruments: dict[str, Instrument] = {}
+        self._strangers: set[str] = set()  # not those that a resumed run was begun with: never sent a value
         for name, settings in profile.instruments.items():
             self.instruments[name] = instrument_class(settings.driver)(settings.options)
         for name, instrument in self.instruments.items():
@@ -53,7 +54,14 @@ class Conditions:
 
     @contextlib.contextmanager
     def opened(self) -> Iterator[None]:
-        """Open all; on every way out make them safe and close them."""
+        """Open all; on every way out make them safe and close them.
+
+        Raises
+        ------
+        DriverError
+            `OutOfLimits` before anything is opened, where a safe value is none for the device.
+        """
+        self._check_safe_values()
         if not self.instruments:
             yield
             return
@@ -77,10 +85,27 @@ class Conditions:
                 else:  # let it try again: it takes our silence for our death
                     guardian.abandon()
 
+    def _check_safe_values(self) -> None:
+        """A safe value that would reach a power limit is not safe."""
+        name = self.level.instrument
+        safe = getattr(self.instruments[name].section, "safe", None) if name is not None else None
+        if name is None or safe is None:
+            return
+        try:
+            self.level.check({**self.fixed(), name: float(safe)})
+        except OutOfLimits as error:
+            raise OutOfLimits(
+                f"the safe value {_value(self.instruments[name], safe)} of {name} is not safe: {error.what}",
+                "state a safe value that keeps to [level]",
+            ) from error
+
     def _leave(self) -> bool:
         """Make everything safe and close it; never raises, says whether all went well."""
         well = True
         for name, instrument in self.instruments.items():
+            if name in self._strangers:
+                self._say(f"{name} was left alone: it is another instrument than before")
+                continue
             try:
                 instrument.make_safe()
                 if getattr(instrument.section, "safe", None) is not None:
@@ -102,6 +127,21 @@ class Conditions:
                 w for w in (who.manufacturer, who.model, who.serial_number, who.firmware) if w
             )
         return found
+
+    def recognise(self, before: Mapping[str, str]) -> None:
+        """See to it that these are the instruments that a cut run was begun with, before one is set.
+
+        Raises
+        ------
+        WrongInstrument
+        """
+        now = self.identities()
+        self._strangers = {name for name, who in before.items() if now.get(name) != who}
+        for name in sorted(self._strangers):
+            raise WrongInstrument(
+                f'{name} is "{now.get(name, "")}" now, and the run was begun with "{before[name]}"',
+                "connect the instrument that it was begun with, or start a new run",
+            )
 
     def fixed(self) -> dict[str, float]:
         """Give what the profile sets where no sweep does."""
@@ -147,3 +187,16 @@ class Conditions:
 
 def _value(instrument: Instrument, value: float) -> str:
     return f"{value:g} {getattr(instrument.section, 'unit', '')}".rstrip()
+
+
+def caution(profile: Profile) -> str:
+    """Say what a person must see to before power flows; empty where nothing real is set."""
+    real = [s.options for s in profile.instruments.values() if s.driver != "simulated"]
+    kinds = {str(getattr(options, "quantity", "")) for options in real}
+    if not kinds & {"attenuation", "loss", "gain", "level", "power"} and profile.level is None:
+        return ""
+    level = profile.level
+    words = "caution: too little attenuation can destroy a receiver"
+    if level is not None and level.damage_dbm is not None:
+        words += f" (this one's damage level is stated as {level.damage_dbm:g} dBm)"
+    return f"{words}; transmit only into a shielded set-up, or where licence and local rules permit it"

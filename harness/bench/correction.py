@@ -146,7 +146,7 @@ class PortLevel:
                     "state level.source_dbm and level.instrument, or measure without the receiver",
                 )
             highest = port.dbm + 2 * port.uncertainty_db
-            if highest >= self.damage_dbm:
+            if not highest < self.damage_dbm:
                 raise OutOfLimits(
                     f"{port.dbm:.1f} dBm (± {2 * port.uncertainty_db:.1f} dB) at the receiver's port would "
                     f"reach its damage level of {self.damage_dbm:g} dBm; nothing was set",
@@ -154,17 +154,26 @@ class PortLevel:
                 )
         if self.permitted_dbm is not None:
             sent = self._transmitted(values)
-            if sent is not None and sent > self.permitted_dbm:
+            if sent is None:
                 raise OutOfLimits(
-                    f"{sent:.1f} dBm is over the permitted {self.permitted_dbm:g} dBm; nothing was set",
+                    "the transmitted level is not known, and there is a permitted one",
+                    "state level.source_dbm, or let a generator in dBm be set by the profile",
+                )
+            if not sent.value + 2 * sent.uncertainty <= self.permitted_dbm:
+                raise OutOfLimits(
+                    f"{sent.value:.1f} dBm (± {2 * sent.uncertainty:.1f} dB) would be over the permitted "
+                    f"{self.permitted_dbm:g} dBm; nothing was set",
                     "lower the transmitter's level; local rules and the licence decide what is permitted",
                 )
 
-    def _transmitted(self, values: Mapping[str, float]) -> float | None:
-        if self.unit == LEVEL_UNIT and self.instrument in values:
-            assert self.instrument is not None
-            return self.corrected(self.instrument, values[self.instrument]).value
-        return self.source_dbm
+    def _transmitted(self, values: Mapping[str, float]) -> Corrected | None:
+        if self.unit == LEVEL_UNIT and self.instrument is not None:
+            if self.instrument not in values:
+                return None
+            return self.corrected(self.instrument, values[self.instrument])
+        if self.source_dbm is None:
+            return None
+        return Corrected(self.source_dbm, self.source_uncertainty_db)
 
     def overdue(self, today: datetime.date) -> list[str]:
         """Say what is overdue for calibration."""

@@ -6,6 +6,8 @@ from pathlib import Path
 
 from drivers.contract import DriverError
 from drivers.guardian import wait_for_guardian
+from harness.assess.assessment import PointAssessment
+from harness.assess.run import assess
 from harness.profile import Profile, ProfileError, parse_profile
 from harness.record import Run
 
@@ -42,3 +44,17 @@ def prepare(record: Run, lock: Path) -> Profile:
             f"wait, and see {guardian}",
         )
     return profile
+
+
+def instruments_of(record: Run) -> dict[str, str]:
+    """Say who answered when a run was begun: name -> identity in one line."""
+    known: dict[str, str] = {}
+    for point in record.points:
+        known |= {n: who for n, who in (point.facts.get("instruments") or {}).items() if n not in known}
+    return known
+
+
+def points_done(record: Run) -> list[PointAssessment]:
+    """Assess the points that a cut run has to the end already."""
+    unfinished = (None, "interrupted", "fault")
+    return [point for point in assess(record).points if point.ended_by not in unfinished]

@@ -21,6 +21,7 @@ from harness.bench.conditions import Conditions
 from harness.bench.measurement import Defect, Measurement, Outcome, Setup, StopRules
 from harness.bench.outlook import Outlook, outlook_of
 from harness.bench.recorder import Recorder
+from harness.bench.resumption import instruments_of, points_done
 from harness.bench.schedule import Schedule
 from harness.bench.session import Links, bench_host, bench_versions, flush, status_of, ways_of
 from harness.bench.visits import Had, Visit, had_by, visits_of
@@ -140,7 +141,7 @@ class BenchRun:
         self._earlier: list[dict[str, str | None]] = []
         self._begun: set[int] = set()
         self._ended: set[int] = set()
-        self._done: list[PointAssessment] = []
+        self._done: list[PointAssessment] = points_done(cut) if cut else []
         self._next_index = 1 + max((s.index for p in cut.points for s in p.seconds), default=-1) if cut else 0
         self._next_place = 0
         self._sitting = len(cut.sittings) if cut else 0
@@ -246,12 +247,14 @@ class BenchRun:
         """Visit all points; gives the fault that ended it, and what ended it."""
         fault: tuple[str, str] | None = None
         ended_by: EndedBy = "bits"
-        last = 0
+        left = [visit for visit in self._visits if not self._is_done(visit)]
+        if not left:
+            return None, "bits"
+        self._now = left[0]
         try:
             with self._conditions.opened():
-                left = [visit for visit in self._visits if not self._is_done(visit)]
-                if not left:
-                    return None, "bits"
+                if self._cut is not None:
+                    self._conditions.recognise(instruments_of(self._cut))
                 facts = self._set(left[0])
                 with self._links.opened():
                     ended_by, failed = self._visit_all(left, facts)
@@ -278,12 +281,13 @@ class BenchRun:
         """Set a point's conditions; nothing is being sent meanwhile."""
         self._now = visit
         values = {**self._conditions.fixed(), **visit.values}
-        if not self._conditions.instruments:
-            return {}
         facts = self._conditions.apply(values)
-        facts["instruments"] = self._conditions.identities()
-        facts["units"] = self._conditions.units()
-        facts["calibration"] = self._conditions.level.facts()
+        if self._conditions.instruments:
+            facts["instruments"] = self._conditions.identities()
+            facts["units"] = self._conditions.units()
+        calibration = self._conditions.level.facts()
+        if any(calibration.values()):
+            facts["calibration"] = calibration
         overdue = self._conditions.level.overdue(datetime.date.today())
         if overdue:
             facts["overdue"] = overdue
@@ -325,6 +329,9 @@ class BenchRun:
         number, key = self._point(visit, way), self._key
         self._begun.add(number)
         if self._cut is not None and any(p.index == number for p in self._cut.points):
+            self._recorder.ask(
+                lambda store: store.begin_point(key, number, {}, 0)
+            )  # it goes on, facts and all
             return
         about = {**self._ways[way].facts(self._links), **facts}
         values = dict(visit.values)
@@ -351,6 +358,8 @@ class BenchRun:
             live = Live(
                 requirement_at(self._requirement, self._settings, visit.values), self._about(visit, way)
             )
+            if had is not None:  # the screen goes on from what the point had
+                live.take(list(had.point.seconds), list(had.point.events))
             lives.append(live)
             measurements.append(self._measurement(visit, way, had, lives, left_points))
             self._note(number, self._resumed(had))

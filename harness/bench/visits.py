@@ -16,6 +16,7 @@ from harness.record import Point
 class Had:
     """What a point had when its run was cut."""
 
+    point: Point
     received: int = 0
     sent: int = 0
     compared: int = 0
@@ -54,6 +55,7 @@ def had_by(point: Point, requirement: Requirement | None) -> Had:
     acc.flush()
     sums = acc.sums
     return Had(
+        point,
         received=sums.tally.received,
         sent=sums.sent,
         compared=sums.tally.compared,

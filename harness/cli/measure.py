@@ -178,9 +178,12 @@ def _print_again(record: Run, manner: Manner) -> int:
 
 def carry_out(loaded: Profile, command: str, manner: Manner, cut: Run | None = None) -> int:
     """Carry out a profile, watched, and print its result."""
+    from harness.bench.conditions import caution
     from harness.bench.run import BenchRun, Hooks
     from harness.cli.watch import watcher
 
+    if words := caution(loaded):
+        print(words, file=sys.stderr)
     as_json, quiet = manner.as_json, manner.quiet
     ending, log_file = Ending(), Log(manner.log)
     where = store_place(manner.store)

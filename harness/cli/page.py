@@ -60,6 +60,7 @@ def page(a: Assessment, where: str = "") -> Iterator[str]:
         yield from _entry("BER", [sheet.ber] if sheet.ber else [])
         yield from _ruler(sheet)
         yield from _entry("points", sheet.points)
+        yield from _entry("remarks", list(sheet.remarks))
     else:
         yield from _numbers(a.whole, sheet)
         yield from _happened(a.whole)

@@ -141,6 +141,24 @@ def _within(profile: Profile, name: str, values: tuple[float, ...], path: str) -
             )
 
 
+def _level(profile: Profile, name: str, source_dbm: float | None) -> None:
+    """Only what is known to take away from a level, or to set one in dBm, can be reckoned with."""
+    options = _known_instrument(profile, name, "level.instrument").options
+    quantity, unit = getattr(options, "quantity", ""), getattr(options, "unit", "")
+    if quantity in ("level", "power") and unit == "dBm":
+        if source_dbm is not None:
+            raise ProfileError(
+                f"level.source_dbm is stated, and {name} sets the level in dBm itself",
+                "leave one of them out: either a source and an attenuator, or a generator",
+            )
+        return
+    if quantity not in ("attenuation", "loss"):
+        raise ProfileError(
+            f"level.instrument names {name}, which sets {quantity or 'something'} in {unit or 'no unit'}",
+            "name an attenuator (dB), or a generator whose level is in dBm",
+        )
+
+
 def _conditions(profile: Profile) -> None:
     sweep, search, requirement = profile.sweep, profile.search, profile.requirement
     if sweep is not None and search is not None:
@@ -153,7 +171,7 @@ def _conditions(profile: Profile) -> None:
     if search is not None:
         _within(profile, search.instrument, (search.low, search.high), "search")
     if profile.level is not None and profile.level.instrument is not None:
-        _known_instrument(profile, profile.level.instrument, "level.instrument")
+        _level(profile, profile.level.instrument, profile.level.source_dbm)
     if profile.correction is not None:
         for name in profile.correction.tables:
             _known_instrument(profile, name, "correction.tables")

@@ -150,21 +150,50 @@ def keep_limits(before: dict[str, Any], after: dict[str, Any]) -> None:
                 f"the profile has {old[0]:g} to {old[1]:g}",
                 "stay within the profile's limits, or have the profile changed by whoever answers for it",
             )
-    old_level, new_level = before.get("level"), after.get("level")
-    if not isinstance(old_level, dict) or not isinstance(new_level, dict):
+    _keep_meaning(before, after)
+    _keep_levels(before, after)
+
+
+def _keep_meaning(before: dict[str, Any], after: dict[str, Any]) -> None:
+    """See to it that a limit still limits what it did: 10 dBm are not 10 W."""
+    instruments = after.get("instruments", {})
+    for name, section in (before.get("instruments") or {}).items():
+        if _span(section) is None:
+            continue
+        for key in ("quantity", "unit", "set", "knob"):
+            if section.get(key) != (instruments.get(name) or {}).get(key):
+                raise ProfileError(
+                    f"instruments.{name}.{key} says what the limits of {name} mean, and is not to be "
+                    "overridden",
+                    "change the profile when the instrument has changed",
+                )
+
+
+def _keep_levels(before: dict[str, Any], after: dict[str, Any]) -> None:
+    """See to it that no power limit is raised, lost, or got round by other figures on the way to the port."""
+    old = before.get("level")
+    if not isinstance(old, dict):
         return
+    new = after.get("level")
+    new = new if isinstance(new, dict) else {}
     for key in ("damage_dbm", "permitted_dbm"):
-        if key in old_level and not _at_most(new_level.get(key), old_level[key]):
+        if key in old and not _at_most(new.get(key), old[key]):
             raise ProfileError(
-                f"an override may lower level.{key}, never raise it: the profile has {old_level[key]} dBm",
+                f"an override may lower level.{key}, never raise it: the profile has {old[key]} dBm",
                 "stay under the profile's level, or have the profile changed by whoever answers for it",
             )
+    limited = "damage_dbm" in old or "permitted_dbm" in old
     for key in ("instrument", "source_dbm", "source_uncertainty_db"):
-        if key in old_level and old_level[key] != new_level.get(key):
+        if old.get(key) != new.get(key) and (key in old or limited):
             raise ProfileError(
                 f"level.{key} says what power reaches the device, and is not to be overridden",
                 "change the profile when the set-up has changed",
             )
+    if limited and before.get("correction") != after.get("correction"):
+        raise ProfileError(
+            "[correction] says what power reaches the device, and is not to be overridden",
+            "change the profile when the set-up has changed",
+        )
 
 
 def _at_most(new: Any, old: Any) -> bool:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import socket
 import subprocess
 import sys
 from collections.abc import Callable, Iterator, Sequence
@@ -182,7 +183,15 @@ class AttenuatedDevice:
         """Every value that it was set to, in order."""
         return [float(words[4:]) for _, words in self.commands() if words.startswith("ATT ")]
 
-    def profile(self, sweep: str, *, stop: str = "bits = 400_000", more: str = "", **keys: Any) -> str:
+    def pretend(self, identity: str) -> None:
+        """Let another attenuator answer from now on."""
+        with socket.create_connection(("127.0.0.1", self.scpi_port)) as connection:
+            connection.sendall(f"PRETEND {identity}\n".encode())
+            assert connection.recv(100)
+
+    def profile(
+        self, sweep: str, *, stop: str = "bits = 400_000", more: str = "", link: str = "", **keys: Any
+    ) -> str:
         """Write a profile; `keys` change the attenuator's section, None drops a key."""
         section: dict[str, Any] = {
             "driver": "scpi",
@@ -213,6 +222,7 @@ port = {self.echo_port}
 rate_bps = 1_000_000
 max_in_flight_bits = 800_000
 drain_s = 2
+{link}
 [stop]
 {stop}
 [instruments.attenuator]

@@ -98,7 +98,9 @@ def test_an_attenuator_that_fails_in_mid_sweep_ends_it_and_what_was_measured_is_
     got = done.json
     assert got["status"] == "failed"
     assert words in done.err
-    assert len(done.err.strip().splitlines()) == 2
+    said = done.err.strip().splitlines()
+    assert said[0].startswith("caution: too little attenuation")
+    assert len(said) == 3
     assert "Traceback" not in done.err
     first = got["points"][0]
     assert first["bits_compared"] == 80_000

@@ -18,6 +18,7 @@ Options are one JSON object on the command line:
   refuse         goes into the error queue at every setting, which is not carried out
   offset_db      what ATT? reads is off by so much
   fault_from     `answer`, `refuse`, `offset_db`, `late_s` begin after so many settings (default 0)
+  count          file that holds how many bytes reached the echo, in all connections so far
   die_after      the whole bench ends when it is set once more than so many times
 """
 
@@ -31,6 +32,7 @@ import sys
 import threading
 import time
 from collections import deque
+from pathlib import Path
 
 import numpy as np
 
@@ -43,6 +45,7 @@ class Bench:
         self.history: list[tuple[float, float]] = [(-math.inf, self.value)]
         self.errors: list[str] = []
         self.settings = 0
+        self.seen = 0
         self.rng = np.random.default_rng(options.get("seed", 1))
         self.scattered: float = 0.0
         self.log = open(options["log"], "a", buffering=1) if "log" in options else None  # noqa: SIM115
@@ -57,6 +60,9 @@ class Bench:
             if self.log is not None:
                 self.log.write(f"{time.time():.6f} {line}\n")
             head, _, rest = line.partition(" ")
+            if head == "PRETEND":  # of the test, not of the device: be another one from now on
+                self.options["identity"] = rest
+                return "done"
             if line == "*IDN?":
                 return self.options.get("identity", "Fictional Bench,SA-95,0042,1.3")
             if line == "SYST:ERR?":
@@ -102,6 +108,9 @@ class Bench:
 
     def through(self, data: bytes) -> bytes:
         """What comes back for bytes that pass the attenuator now."""
+        self.seen += len(data)
+        if "count" in self.options:
+            Path(self.options["count"]).write_text(str(self.seen))
         ber = self.ber()
         if ber > self.options.get("deaf_above", 1.0):
             return b""

@@ -184,7 +184,6 @@ def sheet_of_assessment(a: Assessment, where: str = "") -> Sheet:
         recent=(),
         points=_points(a),
         to_do=[_took_in_all(a)],
-        remarks=(),
         events=[event for p in a.points for event in p.events],
     )
 
