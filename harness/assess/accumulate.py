@@ -47,7 +47,7 @@ class Accumulator:
         self.plan = requirement.make_plan() if requirement else None
         self.feed = PlanFeed(self.plan, requirement) if self.plan and requirement else None
         self.decision: Decision | None = None
-        self.looks: list[int] = []  # compared bits at which the plan looked without knowing positions
+        self.looks = 0  # of the plan, without knowing positions
         self.events: list[Event] = []
         self.events_cut = 0
         self.recent: list[tuple[int, Tally]] = []  # (index, tally) of the last minute
@@ -142,16 +142,12 @@ class Accumulator:
         self._positions.append(among_compared)
         self._kept += len(among_compared)
 
-    def _compared_after(self, segment: Segment) -> int:
-        assert self.plan is not None
-        return self.plan.compared_bits + segment.tally.compared
-
     def _advance_plan(self, second: Second) -> None:
         if self.feed is None or self.decision is not None:
             return
         for segment in segments_of(second):
             if segment.aligned and not segment.positions_complete:
-                self.looks.append(self._compared_after(segment))
+                self.looks += 1
             decision = self.feed.advance(segment)
             if decision is not None:
                 self.decision = decision

@@ -15,7 +15,6 @@ from harness.record import EndedBy, Event, Status, Tally, Verdict
 from harness.statistics.bounds import clopper_pearson, upper_bound
 
 DEFAULT_CONFIDENCE = 0.95
-LOOKS_KEPT = 10_000
 CLUSTERED_SHARE = 0.01  # independent errors are called clustered in this share of runs
 
 
@@ -145,7 +144,7 @@ def _plan(acc: Accumulator) -> dict[str, Any] | None:
     plan, decision = acc.plan, acc.decision
     if plan is None:
         return None
-    risks = plan.risks_for_looks(acc.looks[-LOOKS_KEPT:]) if acc.looks and plan.kind != "fixed" else None
+    risks = plan.risks_as_run()  # None where every bit was seen
     return {
         "kind": plan.kind,
         "ber": plan.ber,
@@ -153,7 +152,7 @@ def _plan(acc: Accumulator) -> dict[str, Any] | None:
         "margin": plan.margin,
         "consumer_risk": plan.consumer_risk if risks is None else risks.consumer,
         "producer_risk": plan.producer_risk if risks is None else risks.producer,
-        "looks": len(acc.looks),
+        "looks_without_positions": acc.looks,
         "bits": plan.bits,
         "accept_errors": plan.accept_errors,
         "decided_at_bit": decision.compared_bits if decision else None,
@@ -239,7 +238,7 @@ def _remarks(acc: Accumulator, sums: Sums, bits_lost: int, clustering: Clustered
         remarks.extend(acc.plan.remarks)
         if acc.looks and acc.plan.kind != "fixed":
             remarks.append(
-                f"error positions were not known at {count(len(acc.looks), 'look')}: the plan decided at the ends of "
-                "seconds there, and its risks are those of the looks taken"
+                f"error positions were not known at {count(acc.looks, 'look')}: the plan could only decide at the ends "
+                "of these seconds, and its risks are those of the looks taken"
             )
     return remarks
