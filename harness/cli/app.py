@@ -327,6 +327,33 @@ def report(
 
 
 @app.command()
+def export(
+    run: RunArgument = "last",
+    format_: Annotated[
+        str, typer.Option("--format", metavar="csv|json|junit", help="csv: one row for each second.")
+    ] = "csv",
+    output: Annotated[
+        Path | None, typer.Option("--output", metavar="FILE", help="Left out: standard output.")
+    ] = None,
+    points: Annotated[
+        bool, typer.Option("--points", help="csv: one row for each point, with bounds and verdict.")
+    ] = False,
+    schema_: Annotated[
+        bool, typer.Option("--schema", help="Print the JSON Schema of `--format json` instead.")
+    ] = False,
+    store: StoreOption = None,
+) -> int:
+    """Write a run's data for other programs: CSV, JSON, or JUnit XML for test automation.
+
+    Example: bitassay export last --format junit --output result.xml
+    """
+    from harness.cli.report import Export
+    from harness.cli.report import export as carry_out
+
+    return carry_out(run, Export(format_, output, points, schema_), store)
+
+
+@app.command()
 def verify(run: RunArgument = "last", store: StoreOption = None, json: JsonOption = False) -> int:
     """Derive every number of a run again from its record and compare.
 

@@ -2,19 +2,22 @@
 
 from __future__ import annotations
 
+import io
 import sys
 import time
+from collections.abc import Callable
 from dataclasses import dataclass
 from importlib.metadata import version
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, TextIO
 
-from harness.cli.failure import UserError
+from harness.cli.failure import UserError, warn
 from harness.cli.output import open_reading
 
 if TYPE_CHECKING:
     from harness.report.material import Material
 
+FORMATS = ("csv", "json", "junit")
 PAPERS = {"a4": "a4", "letter": "us-letter"}
 
 
@@ -26,6 +29,16 @@ class Forms:
     pdf: Path | None = None
     text: bool = False
     paper: str = "a4"
+
+
+@dataclass(frozen=True, slots=True)
+class Export:
+    """What is to be exported, and where to; no output: standard output."""
+
+    format: str = "csv"
+    output: Path | None = None
+    points: bool = False
+    schema: bool = False
 
 
 def report(run: str, forms: Forms, store: str | None) -> int:
@@ -92,3 +105,53 @@ def _write(path: Path, data: bytes) -> None:
         part.replace(path)
     finally:
         part.unlink(missing_ok=True)
+
+
+def export(run: str, wanted: Export, store: str | None) -> int:
+    """Write a run's data, or the schema of its JSON."""
+    if wanted.schema:
+        from harness.report.exports.data import schema_text
+
+        _deliver(wanted.output, lambda to: _put(to, schema_text()))
+        return 0
+    if wanted.format not in FORMATS:
+        raise UserError(f'there is no format "{wanted.format}"', f"choose one of {', '.join(FORMATS)}")
+    if wanted.points and wanted.format != "csv":
+        raise UserError("--points is for CSV", f"leave it out: {wanted.format} holds every point anyway")
+    material = _material(run, store)
+    for what in material.broken:
+        warn(f"the record does not hold: {what}")
+    _deliver(wanted.output, lambda to: _writer(wanted)(material, to))
+    return 0
+
+
+def _writer(wanted: Export) -> Callable[[Material, TextIO], None]:
+    if wanted.format == "csv":
+        from harness.report.exports.tables import write_points, write_seconds
+
+        return write_points if wanted.points else write_seconds
+    if wanted.format == "json":
+        from harness.report.exports.data import write_json
+
+        return write_json
+    from harness.report.exports.testcases import write_junit
+
+    return write_junit
+
+
+def _put(to: TextIO, text: str) -> None:
+    to.write(text)
+
+
+def _deliver(output: Path | None, write: Callable[[TextIO], None]) -> None:
+    """Write UTF-8 to a file, whole or not at all, or to standard output; line ends as they are written."""
+    text = io.StringIO(newline="")
+    write(text)
+    data = text.getvalue().encode("utf-8", "replace")
+    if output is None:
+        sys.stdout.flush()
+        sys.stdout.buffer.write(data)
+        sys.stdout.buffer.flush()
+        return
+    _write(output, data)
+    print(f"wrote {output}", file=sys.stderr)
