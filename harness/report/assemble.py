@@ -23,6 +23,7 @@ from harness.report.sections.formalities import (
     versions_section,
 )
 from harness.report.sections.requirement import (
+    boundaries_section,
     bounds_section,
     requirement_section,
     retest_section,
@@ -52,6 +53,7 @@ def assemble(material: Material) -> Document:
         deviation_section(material),
         cautions_section(),
         signature_section(material),
+        boundaries_section(material),
         versions_section(material),
         digests_section(material),
     )

@@ -10,6 +10,8 @@ from harness.report.figures.canvas import BAR, INK, RED, SOFT, sheet
 from harness.report.figures.drawings import Bursts, Gaps
 from harness.report.figures.scales import octave, short_count
 
+_MANY = 40  # events of one size: beyond it the scale is logarithmic
+
 
 def gaps(drawing: Gaps) -> Sheet:
     """Draw how often each octave of gaps was counted, and how often independent errors would have it."""
@@ -38,8 +40,13 @@ def bursts(drawing: Bursts) -> Sheet:
     made, axes = sheet(176)
     made.subplots_adjust(left=0.115, right=0.98, top=0.95, bottom=0.25)
     axes.bar(drawing.sizes, drawing.counted, width=0.7, color=BAR)
-    axes.set_yscale("symlog", linthresh=1, linscale=0.5)
-    axes.set_ylim(0, float(drawing.counted.max()) * 2)
+    most = float(drawing.counted.max())
+    if most > _MANY:
+        axes.set_yscale("symlog", linthresh=1, linscale=0.5)
+        axes.set_ylim(0, most * 2)
+    else:
+        axes.yaxis.set_major_locator(MaxNLocator(4, integer=True, min_n_ticks=1))
+        axes.set_ylim(0, most * 1.08)
     labels = [f"{size}" for size in drawing.sizes.tolist()]
     if drawing.last_is_more:
         labels[-1] += "+"

@@ -244,7 +244,8 @@ def _clustering(material: Material, m: Measured) -> Iterator[Block]:
         figures.append(
             Entry("dispersion", (f"{c.dispersion:.4g} ({words})" if c.dispersion is not None else "none",))
         )
-        figures.append(Entry("p-value", (f"{c.p_value:.4g}; under 0.01 errors are called clustered",)))
+        p_value = f"{c.p_value:.4g}" if c.p_value > 1e-16 else "under 1e-16"
+        figures.append(Entry("p-value", (f"{p_value}; under 0.01 errors are called clustered",)))
     if c.events is not None:
         gap = c.more.get("event_gap_bits")
         rule = f"; errors at most {count(int(gap), 'bit')} apart are one event" if gap else ""

@@ -36,7 +36,7 @@ def deviation_section(material: Material) -> Section:
     if not groups:
         text = (
             "Nothing deviates: the profile was carried out as given, in one sitting, without overrides; this "
-            "computer kept up, the link stayed, no note was added."
+            "computer kept up, and no note was added."
         )
         return Section("What deviates", (Paragraph(text),))
     blocks: list[Block] = []

@@ -34,6 +34,8 @@ _METHODS = {
     ),
 }
 
+_BOUNDARIES = 200  # rows of a sequential plan's table
+
 
 def unit_section(material: Material) -> Section:
     """Give every free key of the device, as the profile and its overrides state them."""
@@ -179,16 +181,37 @@ def _bounds_of(material: Material, m: Measured) -> Table:
     b, t = p.bounds, p.tally
     assert b is not None
     name = ber_name(material)
+    decides = ": decides" if p.verdict in ("PASS", "FAIL") else ""
     rows = [
         (f"{name} measured", f"{digits(p.ber)}", f"{number(t.errors)} / {number(t.compared)} bits"),
         ("lower bound, two-sided", digits(b.lower), percent(b.confidence)),
         ("upper bound, two-sided", digits(b.upper), percent(b.confidence)),
-        (f"{b.side} bound, one-sided: decides", digits(b.value), percent(b.deciding_confidence)),
+        (f"{b.side} bound, one-sided{decides}", digits(b.value), percent(b.deciding_confidence)),
     ]
     if p.plan is not None:
         rows.append(("required, at most", digits(p.plan["ber"]), percent(p.plan["confidence"])))
     title = point_name(m) if len(material.points) > 1 else ""
     return Table(title, (Column("", False), Column(name), Column("from, or confidence")), tuple(rows))
+
+
+def boundaries_section(material: Material) -> Section | None:
+    """Give a sequential plan's table of boundaries; none for the other plans."""
+    m = next((m for m in material.points if m.plan is not None and m.plan.boundaries), None)
+    if m is None or m.plan is None:
+        return None
+    shown = m.plan.boundaries[:_BOUNDARIES]
+    rows = tuple(
+        (number(b.errors), number(b.accept_at), number(b.reject_at) if b.reject_at is not None else "never")
+        for b in shown
+    )
+    left = len(m.plan.boundaries) - len(shown)
+    columns = (
+        Column("errors so far"),
+        Column("passes from so many bits on"),
+        Column("fails if it comes at or before bit"),
+    )
+    note = f"{number(left)} more rows: `bitassay plan --json` gives all of them" if left else ""
+    return Section("Table of boundaries", (Table("", columns, rows, note),))
 
 
 def retest_section(material: Material) -> Section | None:
