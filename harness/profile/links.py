@@ -62,6 +62,11 @@ class LinkSettings(DrivenSection):
     """Wait this long for what is still on its way; after that it counts as lost."""
     reconnect_s: NotNegative = 0.0
     """Wait this long for a link that went away to come back; 0: do not wait."""
+    least_delay_s: NotNegative | None = None
+    """`check` takes what comes back sooner for a short at this end; 0: this path may answer at once.
+
+    Left out: a few milliseconds on links with hardware behind them.
+    """
     duplex: bool = False
     """Two ports: measure both directions at once, with two patterns and separate tallies."""
     direction: Literal["forward", "reverse"] = "forward"

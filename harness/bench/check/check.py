@@ -7,28 +7,46 @@ import shutil
 import tempfile
 import threading
 import time
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from pathlib import Path
 
 from drivers.contract import DriverError, Instrument
-from harness.assess.words import duration
-from harness.bench.check.findings import Finding, Report
+from harness.assess.words import duration, rate
+from harness.bench.check.findings import Finding, Outcome, Report
 from harness.bench.check.forecast import forecast, stop_problem
-from harness.bench.check.path import Line, PathCheck, lost_at_most
-from harness.bench.conditions import Conditions
+from harness.bench.check.path import Line, PathCheck, echo_on, listen_only, lost_at_most
+from harness.bench.conditions import Conditions, caution
 from harness.bench.session import Links, Way, ways_of
 from harness.bench.visits import visits_of
 from harness.profile import Profile
 
 SIMULATED = ("loopback", "process", "capture")
+LONG_S = 8.0  # a probe that takes longer says so beforehand
 ROOM = 3  # so many times the forecast must be free on the disk
 
 
 class Check:
-    """Checks one profile against the bench as it stands."""
+    """Checks one profile against the bench as it stands.
 
-    def __init__(self, profile: Profile, store_folder: Path, cancel: threading.Event) -> None:
+    Parameters
+    ----------
+    store_folder
+        Where the record will be kept.
+    cancel
+        Ends the check when set.
+    tell
+        Called with each finding as soon as it is there.
+    """
+
+    def __init__(
+        self,
+        profile: Profile,
+        store_folder: Path,
+        cancel: threading.Event,
+        tell: Callable[[Finding], None] = lambda _finding: None,
+    ) -> None:
         self._profile = profile
+        self._tell = tell
         self._folder = store_folder
         self._cancel = cancel
         self._links = Links(profile.need_link(), cancel)
@@ -37,15 +55,17 @@ class Check:
     def run(self) -> Report:
         """Check; a finding that makes the rest pointless ends it."""
         found: list[Finding] = []
-        ahead = {}
-        for finding in self._before():
-            found.append(finding)
-        rate = self._links.rate_bps
-        outlook = forecast(self._profile, rate)
-        ahead = outlook.to_json()
+
+        def take(findings: Iterator[Finding]) -> None:
+            for finding in findings:
+                self._tell(finding)
+                found.append(finding)
+
+        take(self._before())
+        ahead = forecast(self._profile, self._links.rate_bps).to_json()
         if all(finding.outcome != "bad" for finding in found):
-            found.extend(self._at_the_bench())
-        found.extend(self._time_and_disk(ahead))
+            take(self._at_the_bench())
+        take(self._time_and_disk(ahead))
         return Report(tuple(found), self._delay_s, ahead)
 
     # -- without touching anything
@@ -59,15 +79,19 @@ class Check:
             yield Finding("stop rules", "bad", problem, advice, usage=True)
         else:
             yield Finding("stop rules", "good", "the run ends by itself, and not before its plan")
+        if words := caution(self._profile):
+            yield Finding("caution", "note", words.removeprefix("caution: "))
         conditions = self._conditions()
         for name, instrument in conditions.instruments.items():
             if not instrument.unattended:
-                outcome: str = "bad" if self._profile.sweep is not None else "note"
+                swept = self._profile.sweep is not None or self._profile.search is not None
                 yield Finding(
                     "instruments",
-                    "bad" if outcome == "bad" else "note",
-                    f"{name} is set by hand: a sweep with it cannot be left alone",
-                    "use an instrument that can be set by the program, or stay beside it",
+                    "bad" if swept else "note",
+                    f"{name} is set by hand: what turns it cannot be left alone",
+                    "use an instrument that the program can set; `bitassay sweep` works with somebody beside it",
+                    usage=True,
+                    cause="manual",
                 )
         for line in conditions.level.overdue(datetime.date.today()):
             yield Finding("calibration", "note", line, "have it calibrated; the report will say it")
@@ -90,12 +114,18 @@ class Check:
                 self._set_best(conditions)
                 with self._links.opened():
                     for exchange in self._links.take_events():
-                        yield Finding("dialogue", "good", exchange.text)
+                        yield Finding("dialogue", "good", exchange.text.removeprefix("dialogue: "))
+                    well = True
                     for way in ways_of(self._profile, self._links):
-                        yield from self._path(way)
-                    yield from self._isolation(conditions)
+                        for finding in self._path(way):
+                            well = well and finding.outcome != "bad"
+                            yield finding
+                    if well:
+                        yield from self._isolation(conditions)
         except DriverError as error:
-            yield Finding("bench", "bad", error.what, error.advice)
+            yield Finding("bench", "bad", error.what, error.advice, cause="fault")
+        for event in self._links.take_events():
+            yield Finding("dialogue", "note", event.text.removeprefix("dialogue: "))
         for event in conditions.take_events():
             if "NOT" in event.text:
                 yield Finding(
@@ -149,6 +179,7 @@ class Check:
         if way.sending is None or way.receiving is None:
             return None
         link = self._profile.need_link()
+        at_once: Outcome = "bad" if way.sending is way.receiving else "note"
         return Line(
             sending=way.sending,
             receiving=way.receiving,
@@ -158,21 +189,30 @@ class Check:
             pace_bps=link.pace_bps,
             max_in_flight_bits=link.max_in_flight_bits,
             drain_s=link.drain_s,
-            wired=link.driver not in SIMULATED and way.sending is way.receiving,
+            at_once="good" if link.driver in SIMULATED else at_once,
+            least_delay_s=link.least_delay_s,
         )
 
     def _path(self, way: Way) -> Iterator[Finding]:
         line = self._line(way)
         if line is None:
-            yield Finding("path", "note", "one-way: the path can only be proven by the run itself")
+            if way.receiving is not None:
+                yield from listen_only(way.receiving, way.pattern, way.bit_order, self._cancel)
+            else:
+                yield Finding("path", "note", "one-way: what is sent can only be counted at the far end")
             return
+        if way.name:
+            yield Finding("path", "note", f"the {way.name} direction, {way.pattern.name}:")
+        if line.takes_s > LONG_S:
+            rate_words = rate(line.speed_bps)
+            yield Finding(
+                "path", "note", f"probing takes {duration(line.takes_s)} or somewhat more at {rate_words}"
+            )
         checking = PathCheck(line, self._cancel)
-        corrects = self._profile.device.get("error_control", "none") in ("fec", "arq")
-        for finding in checking.findings():
-            if corrects and finding.step == "known errors" and "known errors were sent" in finding.text:
-                finding = Finding(finding.step, "note", finding.text + ", as the profile says")
-            yield finding
+        yield from checking.findings()
         self._delay_s = checking.delay_s if self._delay_s is None else self._delay_s
+        if way.name and way.sending is not None and way.sending.traits.receives:
+            yield echo_on(way.sending, self._cancel)
 
     def _isolation(self, conditions: Conditions) -> Iterator[Finding]:
         highest = self._attenuators(conditions)

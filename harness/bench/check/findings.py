@@ -11,17 +11,35 @@ Outcome = Literal["good", "bad", "note"]
 
 @dataclass(frozen=True, slots=True)
 class Finding:
-    """One thing that was looked at."""
+    """One thing that was looked at.
+
+    Attributes
+    ----------
+    step
+        What was looked at.
+    cause
+        What was recognised, in one word for programs: ``short``, ``local_echo``, ``silence``,
+        ``other_generator`` ...; empty where nothing is wrong.
+    usage
+        Bad because of the profile, not of the path.
+    """
 
     step: str
     outcome: Outcome
     text: str
     advice: str = ""
-    usage: bool = False  # bad because of the profile, not of the path
+    usage: bool = False
+    cause: str = ""
 
     def to_json(self) -> dict[str, Any]:
         """JSON as `check` prints it."""
-        return {"step": self.step, "outcome": self.outcome, "text": self.text, "advice": self.advice}
+        return {
+            "step": self.step,
+            "outcome": self.outcome,
+            "cause": self.cause or None,
+            "text": self.text,
+            "advice": self.advice,
+        }
 
 
 @dataclass(frozen=True, slots=True)

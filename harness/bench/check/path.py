@@ -2,6 +2,10 @@
 
 Each probe has one answer that only a proper path gives: known errors come back at their places, a pause in
 sending silences reception, a jump in the pattern comes back. What answers otherwise is named.
+
+An answer at once comes from this end of the line. Short bursts tell: the best of many counts, so that a busy
+computer does not make a short look like a far end. Where the burst came back exactly and at once, the rest
+tells the two apart that answer so: a local echo is followed by the far end's copy, a short by nothing more.
 """
 
 from __future__ import annotations
@@ -16,19 +20,31 @@ from numpy.typing import NDArray
 
 from drivers.contract import Link
 from harness.assess.words import count, duration, percent
-from harness.bench.check.findings import Finding
+from harness.bench.check.answers import (
+    count_stretch,
+    is_text,
+    judge,
+    looks_like,
+    make_stretch,
+    shown,
+)
+from harness.bench.check.findings import Finding, Outcome
 from harness.bench.check.probe import Probe
-from harness.record import BitOrder, Segment
-from harness.signal.counter import Counter
+from harness.record import BitOrder
 from harness.signal.patterns import Pattern
 
 LISTEN_S = 1.0
-PING_BYTES = 16
-PINGS = 8
+LISTEN_LONGEST_S = 6.0  # where nothing is sent, for a pattern to come
+PAUSE_S = 0.5
+QUIET_S = 0.3
+PING_BYTES = 8
+PINGS = 40  # at most: on a busy computer only some of them show how fast the path is
+FEW_PINGS = 4  # where the answer is clearly slow
 AT_ONCE_S = 0.002  # beyond the time that the bits themselves take
-JUMP_BITS = 8 * 4_099
-FLIPS = (0.31, 0.37, 0.5, 0.66, 0.9)  # places of the known errors, as shares of the stretch
-LEAST_BYTES, MOST_BYTES = 2_048, 65_536
+ADAPTER_S = 0.020  # a USB adapter collects what came for up to 16 ms
+SLOW_S = 0.05  # beyond the limit: clearly slow
+JUMP_BITS = 8 * 4_099  # half a period, where that is less
+LEAST_BYTES, MOST_BYTES = 512, 65_536
 STRETCH_S = 2.0  # how long a stretch may take, where the rate allows
 
 
@@ -44,7 +60,36 @@ class Line:
     pace_bps: float | None
     max_in_flight_bits: int | None
     drain_s: float
-    wired: bool  # False: a simulated link, where an answer at once proves nothing
+    at_once: Outcome  # what an answer at once is: good where the path is simulated and proves nothing
+    least_delay_s: float | None = None  # what the profile says of an answer at once
+
+    @property
+    def speed_bps(self) -> float | None:
+        """The lower of pace and rate."""
+        known = [bps for bps in (self.pace_bps, self.rate_bps) if bps is not None]
+        return min(known) if known else None
+
+    @property
+    def stretch_bytes(self) -> int:
+        """Bytes of a stretch, so that it takes about `STRETCH_S`."""
+        size = MOST_BYTES if self.speed_bps is None else int(self.speed_bps * STRETCH_S / 8)
+        return max(LEAST_BYTES, min(MOST_BYTES, size))
+
+    @property
+    def takes_s(self) -> float:
+        """Seconds that probing takes at the least."""
+        bits = 8 * (2 * self.stretch_bytes + FEW_PINGS * PING_BYTES)
+        return LISTEN_S + PAUSE_S + 3 * QUIET_S + (bits / self.speed_bps if self.speed_bps else 0.0)
+
+    def probe(self, cancel: threading.Event) -> Probe:
+        """Make a probe of it."""
+        return Probe(
+            self.sending,
+            self.receiving,
+            pace_bps=self.pace_bps,
+            most_in_flight=self.max_in_flight_bits,
+            cancel=cancel,
+        )
 
 
 class PathCheck:
@@ -55,220 +100,261 @@ class PathCheck:
         self._cancel = cancel
         self._place = 0
         self._patience_s = max(2.0, line.drain_s)
+        self._unit = 8 if line.receiving.traits.whole_bytes else 1
+        self._unanswered = b""  # a short burst that did not come back by itself
         self.delay_s: float | None = None
 
     def findings(self) -> Iterator[Finding]:
         """Probe, step by step; stops at what makes further steps pointless."""
-        line = self._line
-        with Probe(
-            line.sending,
-            line.receiving,
-            pace_bps=line.pace_bps,
-            most_in_flight=line.max_in_flight_bits,
-            cancel=self._cancel,
-        ) as probe:
-            foreign = self._listen(probe)
-            yield foreign
-            if foreign.outcome == "bad":
-                return
-            for step in (self._known_errors, self._pause, self._jump, self._delay):
+        with self._line.probe(self._cancel) as probe:
+            for step in (self._listen, self._delay, self._known_errors, self._pause, self._jump):
                 found = step(probe)
+                if found is None:
+                    continue
                 yield found
                 if found.outcome == "bad":
                     return
+            if self.delay_s is None:
+                yield self._holds_back()
 
-    def _bytes(self) -> int:
-        rate = self._line.pace_bps or self._line.rate_bps
-        size = MOST_BYTES if rate is None else int(rate * STRETCH_S / 8)
-        return max(LEAST_BYTES, min(MOST_BYTES, size))
+    def _holds_back(self) -> Finding:
+        return Finding(
+            "delay",
+            "bad",
+            f"bursts of {PING_BYTES} bytes do not come back by themselves: the device waits for more to send",
+            "set the device's packet time-out; the last bits of every run would count as lost",
+            cause="holds_back",
+        )
 
     def _stretch(self, size: int) -> NDArray[np.uint8]:
         data = self._line.pattern.packed(self._place, size, self._line.bit_order)
         self._place += 8 * size
         return data
 
-    def _came(self, probe: Probe) -> bytes:
-        return b"".join(data for _at, data in probe.take())
-
     # -- the steps
 
     def _listen(self, probe: Probe) -> Finding:
         self._cancel.wait(LISTEN_S)
         probe.check()
-        heard = self._came(probe)
+        heard = probe.take_bytes()
         if not heard:
             return Finding("listen", "good", f"silent for {LISTEN_S:g} s while nothing was sent")
+        if is_text(heard):
+            return Finding(
+                "listen",
+                "bad",
+                f"the device talks by itself: {shown(heard)} came though nothing was sent",
+                "bring it into its data mode with [[link.before]], and switch its messages off",
+                cause="talks",
+            )
         return Finding(
             "listen",
             "bad",
             f"{count(len(heard), 'byte')} came in {LISTEN_S:g} s though nothing was sent: another generator is on "
-            f"the line ({self._looks_like(heard)})",
+            f"the line ({looks_like(heard)})",
             "disconnect the other generator, or end the device's own test mode",
+            cause="other_generator",
         )
 
-    def _looks_like(self, heard: bytes) -> str:
-        from harness.bench.identification import in_words
+    def _delay(self, probe: Probe) -> Finding | None:
+        """Measure the loop delay with short bursts; None where they do not come back by themselves."""
+        limit_s = self._at_once_s()
+        times: list[float] = []
+        sent = heard = 0
+        pings = PINGS if limit_s is not None else 2 * FEW_PINGS
+        while len(times) < pings:
+            data = self._stretch(PING_BYTES)
+            begun = time.monotonic_ns()
+            if not probe.send(data, self._patience_s):
+                return None
+            sent += PING_BYTES
+            came = probe.wait_until(lambda: probe.received_bytes >= PING_BYTES, self._patience_s)
+            pieces = probe.take()
+            answer = b"".join(piece for _at, piece in pieces)
+            heard += len(answer)
+            if not came:
+                self._unanswered = data.tobytes()
+                return None
+            times.append((pieces[-1][0] - begun) / 1e9)
+            exact = answer[:PING_BYTES] == data.tobytes()
+            if exact and limit_s is not None and times[-1] < limit_s:
+                return self._at_once(probe, times[-1], sent, heard)
+            probe.wait_for_quiet(0.02, 0.5)
+            if len(times) >= FEW_PINGS and min(times) > SLOW_S + (limit_s or 0.0):
+                break
+        probe.wait_for_quiet(max(QUIET_S, min(times)), self._patience_s)
+        heard += len(probe.take_bytes())
+        if heard >= 1.5 * sent:
+            return self._echoed(min(times))
+        self.delay_s = min(times)
+        spread = max(times) - self.delay_s
+        return Finding(
+            "delay", "good", f"loop delay {duration(self.delay_s)}, wandering by {duration(spread)}"
+        )
 
-        return in_words(np.frombuffer(heard, dtype=np.uint8))
+    def _at_once_s(self) -> float | None:
+        """What is at once, in seconds; None where an answer at once is as good as any."""
+        line = self._line
+        if line.least_delay_s is not None:
+            return line.least_delay_s or None
+        if line.at_once == "good":
+            return None
+        # A port that is read over USB hands over what came late, also what came from a short.
+        slack = ADAPTER_S if "adapter" in line.receiving.describe() else AT_ONCE_S
+        return slack + (8 * PING_BYTES / line.rate_bps if line.rate_bps else 0.0)
+
+    def _at_once(self, probe: Probe, took_s: float, sent: int, heard: int) -> Finding:
+        """Name what answered exactly and at once: the far end's copy follows a local echo, nothing a short."""
+        line = self._line
+        begun = time.monotonic()
+        probe.wait_until(lambda: heard + probe.received_bytes >= 2 * sent, self._patience_s)
+        far_s = time.monotonic() - begun
+        heard += len(probe.take_bytes())
+        if heard >= 1.5 * sent:
+            return self._echoed(took_s, far_s)
+        # A command interpreter's echo may have given so few bytes back unchanged: not so many more.
+        stretch = make_stretch(line.pattern, line.bit_order, self._place, LEAST_BYTES)
+        self._place += 8 * LEAST_BYTES
+        probe.send(stretch.data, self._patience_s)
+        probe.wait_for_bytes(LEAST_BYTES, self._patience_s)
+        probe.wait_for_quiet(QUIET_S, self._patience_s)
+        found = judge(stretch, probe.take_bytes(), self._unit)
+        if found.outcome == "bad":
+            return found
+        self.delay_s = took_s
+        if line.at_once != "bad" and line.least_delay_s is None:
+            return Finding(
+                "delay",
+                "note",
+                f"what is sent comes out of the other port at once (in {duration(took_s)})",
+                "be sure that the device is between the two ports, and no cable past it; link.least_delay_s makes "
+                "the check refuse an answer that comes too soon",
+                cause="at_once",
+            )
+        return Finding(
+            "delay",
+            "bad",
+            f"short: our own bytes come back at once (in {duration(took_s)}) and nothing follows: a shorted "
+            "connector, or a loop or an echo at this end of the line; the far end has no part in it",
+            "check plug and cable, take loops off at this end, loop back at the far end; if this path may answer "
+            "so soon (a simulator, a fibre), say link.least_delay_s = 0",
+            cause="short",
+        )
+
+    def _echoed(self, near_s: float, far_s: float | None = None) -> Finding:
+        again = "" if far_s is None else f" (after {duration(near_s + far_s)})"
+        return Finding(
+            "delay",
+            "bad",
+            f"local echo: each byte comes back from this end of the line (after {duration(near_s)}), and again from "
+            f"the far end{again}",
+            "switch the device's echo off in [[link.before]] (many modems: ATE0), or the adapter's (two-wire RS-485)",
+            cause="local_echo",
+        )
 
     def _known_errors(self, probe: Probe) -> Finding:
-        size = self._bytes()
-        data = self._stretch(size).copy()
-        flips = sorted({int(share * 8 * size) for share in FLIPS})
-        for bit in flips:
-            inside = bit % 8
-            data[bit // 8] ^= 1 << (inside if self._line.bit_order == "lsb" else 7 - inside)
-        if not probe.send(data, self._patience_s):
-            return Finding(
-                "known errors",
-                "bad",
-                "the port takes no bytes",
-                "check flow control (RTS/CTS wiring, XON/XOFF) and that the device is powered",
-            )
-        probe.wait_until(lambda: probe.received_bytes >= size, self._patience_s)
-        probe.wait_for_quiet(0.3, self._patience_s)
-        heard = self._came(probe)
-        if not heard:
-            return Finding(
-                "known errors",
-                "bad",
-                f"{count(size, 'byte')} were sent and not a single one came back",
-                "check power and cable, that the far end loops back, and that the device is in its data mode",
-            )
-        return self._judge_errors(heard, size, flips)
+        size = self._line.stretch_bytes
+        stretch = make_stretch(self._line.pattern, self._line.bit_order, self._place, size)
+        self._place += 8 * size
+        probe.take()
+        if not probe.send(stretch.data, self._patience_s):
+            return self._stuck(probe, size)
+        probe.wait_for_bytes(size, self._patience_s)
+        probe.wait_for_quiet(QUIET_S, self._patience_s)
+        heard = probe.take_bytes()
+        found = judge(stretch, heard, self._unit)
+        waits = self._unanswered and found.cause == "bytes_lost"
+        if waits and (self._unanswered + stretch.data.tobytes()).startswith(heard):
+            return self._holds_back()
+        return found
 
-    def _judge_errors(self, heard: bytes, size: int, flips: list[int]) -> Finding:
-        if len(heard) > 1.5 * size:
+    def _stuck(self, probe: Probe, size: int) -> Finding:
+        taken = probe.sent_bytes
+        if probe.held:
             return Finding(
                 "known errors",
                 "bad",
-                f"{count(size, 'byte')} were sent and {len(heard)} came back: each one more than once, so the "
-                "device's local echo is on beside the far end's loop",
-                "switch the local echo off in [[link.before]] (many modems: ATE0), then check again",
+                f"silence: {count(taken, 'byte')} were sent, and so little came back that "
+                "link.max_in_flight_bits holds the rest",
+                "check power and cables, that the far end loops back, and that the device is in its data mode",
+                cause="silence",
             )
-        segments = self._count(heard)
-        compared = sum(s.tally.compared for s in segments)
-        if compared < 4 * size:
-            return Finding(
-                "known errors",
-                "bad",
-                f"{count(len(heard), 'byte')} came back, but not our pattern ({self._looks_like(heard)})",
-                "check [pattern] bit_order, baud and framing, and that the device is in its data mode",
-            )
-        places = {p for s in segments if s.place is not None for p in _places(s)}
-        start = self._place - 8 * size
-        period = self._line.pattern.period
-        wanted = {(start + bit) % period if period else start + bit for bit in flips}
-        found = wanted & {place % period if period else place for place in places}
-        errors = sum(s.tally.errors for s in segments)
-        if len(found) < len(wanted):
-            return Finding(
-                "known errors",
-                "bad",
-                f"{len(wanted)} known errors were sent, and only {len(found)} came back at their places: the device "
-                "corrects errors, or makes the pattern anew",
-                'state device.error_control = "fec" or "arq" if that is so: the BER is then a residual one',
-            )
-        own = errors - len(wanted)
-        more = f"; beside them {count(own, 'error')} of the path's own" if own > 0 else ""
-        return Finding("known errors", "good", f"{len(wanted)} known errors came back at their places{more}")
-
-    def _count(self, heard: bytes) -> list[Segment]:
-        unit = 8 if self._line.receiving.traits.whole_bytes else 1
-        counter = Counter(self._line.pattern, bit_order=self._line.bit_order, slip_unit=unit)
-        return [*counter.feed(heard), *counter.finish()]
+        return Finding(
+            "known errors",
+            "bad",
+            f"the port takes no more: {count(taken, 'byte')} went out, and in {self._patience_s:g} s not one of the "
+            f"other {count(size - taken, 'byte')}",
+            "flow control holds: check that the device is on and in its data mode, the RTS/CTS wires, and link.flow",
+            cause="flow_control",
+        )
 
     def _pause(self, probe: Probe) -> Finding:
-        self._cancel.wait(0.5)
+        self._cancel.wait(PAUSE_S)
         probe.check()
-        heard = self._came(probe)
+        heard = probe.take_bytes()
         if not heard:
             return Finding("pause", "good", "nothing came while sending paused")
+        if is_text(heard):
+            return Finding(
+                "pause",
+                "bad",
+                f"the device talks by itself: {shown(heard)} came while sending paused",
+                "switch its messages off while it carries data",
+                cause="talks",
+            )
         return Finding(
             "pause",
             "bad",
-            f"{count(len(heard), 'byte')} came while sending paused: something else sends on this line",
+            f"{count(len(heard), 'byte')} came while sending paused: something else sends on this line "
+            f"({looks_like(heard)})",
             "look for a second generator, a repeater, or fill bytes of the device, and switch them off",
+            cause="other_generator",
         )
 
     def _jump(self, probe: Probe) -> Finding:
-        size = self._bytes() // 2
-        first = self._stretch(size)
-        self._place += JUMP_BITS
-        second = self._stretch(size)
-        data = np.concatenate([first, second])
-        if not probe.send(data, self._patience_s):
-            return Finding("jump", "bad", "the port stopped taking bytes", "check flow control and power")
-        probe.wait_until(lambda: probe.received_bytes >= len(data), self._patience_s)
-        heard = self._came(probe)
-        slips = [e for s in self._count(heard) for e in s.events if e.kind == "slip"]
         period = self._line.pattern.period
-        jumped = [s for s in slips if period is None or (int(s.data["bits"]) + JUMP_BITS) % period == 0]
-        if period is not None and JUMP_BITS % period == 0:
-            return Finding("jump", "note", f"{self._line.pattern.name} is too short for a jump to be seen")
-        if jumped:
+        jump = JUMP_BITS if period is None else min(JUMP_BITS, 8 * (period // 16))
+        if not jump:
+            return Finding(
+                "jump", "note", f"{self._line.pattern.name} repeats too soon for a jump in it to be seen"
+            )
+        size = self._line.stretch_bytes // 2
+        first = self._stretch(size)
+        self._place += jump
+        expected = self._place - 8 * size  # place less bits received, beyond the jump
+        data = np.concatenate([first, self._stretch(size)])
+        before = expected - jump
+        if not probe.send(data, self._patience_s):
+            return self._stuck(probe, len(data))
+        probe.wait_for_bytes(len(data), self._patience_s)
+        segments = count_stretch(self._line.pattern, self._line.bit_order, probe.take_bytes(), self._unit)
+        # A path that loses a byte now and then shifts the rest a little; the jump is far larger.
+        near = min(8 * max(2, size // 100), jump // 2)
+
+        def off(place: int, wanted: int) -> int:
+            distance = place - wanted
+            return distance if period is None else (distance + near) % period - near
+
+        aligned = [s.place - s.start for s in segments if s.aligned and s.place is not None]
+        if aligned and abs(off(aligned[-1], expected)) <= near and abs(off(aligned[0], before)) <= near:
             return Finding("jump", "good", "a jump in the pattern came back: it is our own stream")
         return Finding(
             "jump",
             "bad",
             "a jump in the pattern did not come back: what is received is not what we send",
-            "look for another generator with the same pattern on the line",
+            "look for another generator with the same pattern on the line, or the device's own test mode",
+            cause="other_generator",
         )
-
-    def _delay(self, probe: Probe) -> Finding:
-        """Measure the loop delay with short bursts; an answer at once comes from this end of the line."""
-        times = []
-        for _ in range(PINGS):
-            probe.wait_for_quiet(0.02, 1.0)
-            probe.take()
-            begun = time.monotonic_ns()
-            probe.send(self._stretch(PING_BYTES), self._patience_s)
-            if probe.wait_until(lambda: probe.received_bytes >= PING_BYTES, self._patience_s):
-                times.append((probe.take()[-1][0] - begun) / 1e9)
-        if not times:
-            return Finding(
-                "delay",
-                "bad",
-                f"bursts of {PING_BYTES} bytes do not come back by themselves",
-                "the device waits for more before it sends: set its packet time-out, or raise link.drain_s",
-            )
-        best = min(times)
-        self.delay_s = best
-        rate = self._line.rate_bps
-        own_s = 8 * PING_BYTES / rate if rate else 0.0
-        if self._line.wired and best < own_s + AT_ONCE_S:
-            return Finding(
-                "delay",
-                "bad",
-                f"our own bytes come back at once (in {duration(best)}): a shorted connector, or a loop at this end "
-                "of the line; they never reached the far end",
-                "check the connector and take the loop off at this end; the device must loop at its far end",
-            )
-        spread = max(times) - best
-        return Finding("delay", "good", f"loop delay {duration(best)}, wandering by {duration(spread)}")
-
-
-def _places(segment: Segment) -> Iterator[int]:
-    assert segment.place is not None
-    for position in segment.positions:
-        yield segment.place + int(position) - segment.start
 
 
 def lost_at_most(line: Line, cancel: threading.Event) -> Finding:
     """Prove that the link is lost: at the highest attenuation nothing may come around the attenuator."""
-    with Probe(
-        line.sending,
-        line.receiving,
-        pace_bps=line.pace_bps,
-        most_in_flight=line.max_in_flight_bits,
-        cancel=cancel,
-    ) as probe:
-        data = line.pattern.packed(0, LEAST_BYTES, line.bit_order)
+    with line.probe(cancel) as probe:
+        data = line.pattern.packed(0, max(2_048, line.stretch_bytes // 4), line.bit_order)
         probe.send(data, 1.0)
-        probe.wait_for_quiet(0.5, max(2.0, line.drain_s))
-        heard = b"".join(piece for _at, piece in probe.take())
-    counter = Counter(line.pattern, bit_order=line.bit_order, slip_unit=8)
-    segments = [*counter.feed(heard), *counter.finish()]
+        probe.wait_for_bytes(len(data), max(2.0, line.drain_s))
+        heard = probe.take_bytes()
+    segments = count_stretch(line.pattern, line.bit_order, heard, 8)
     compared = sum(s.tally.compared for s in segments)
     errors = sum(s.tally.errors for s in segments)
     if not compared:
@@ -279,4 +365,61 @@ def lost_at_most(line: Line, cancel: threading.Event) -> Finding:
         f"at the highest attenuation the pattern still came, with {percent(errors / compared)} errors: there is a "
         "path around the attenuator, or its range is too small",
         "look for leaking cables, open connectors, antennas too near; screen the device; add a fixed pad",
+        cause="leak",
     )
+
+
+def echo_on(link: Link, cancel: threading.Event) -> Finding:
+    """Look whether the port that has just sent also hears: both directions at once would count that."""
+    with Probe(None, link, pace_bps=None, most_in_flight=None, cancel=cancel) as probe:
+        cancel.wait(QUIET_S)
+        probe.check()
+        heard = probe.take_bytes()
+    if not heard:
+        return Finding("echo", "good", "the port that sent heard nothing of it")
+    return Finding(
+        "echo",
+        "bad",
+        f"local echo: the port that sent heard {count(len(heard), 'byte')} meanwhile, which would be counted in the "
+        "other direction",
+        "switch the echo off at that end",
+        cause="local_echo",
+    )
+
+
+def listen_only(
+    link: Link, pattern: Pattern, bit_order: BitOrder, cancel: threading.Event
+) -> Iterator[Finding]:
+    """Listen where nothing is sent: the pattern has to come by itself."""
+    with Probe(None, link, pace_bps=None, most_in_flight=None, cancel=cancel) as probe:
+        probe.wait_for_bytes(LEAST_BYTES, LISTEN_LONGEST_S)
+        if not link.traits.finite:
+            cancel.wait(LISTEN_S)
+        heard = probe.take_bytes()
+        if not heard:
+            probe.check()
+    if not heard:
+        yield Finding(
+            "listen",
+            "bad",
+            f"silence: nothing came in {LISTEN_LONGEST_S:g} s",
+            "start the transmitter at the far end, check power, cable and the device's data mode",
+            cause="silence",
+        )
+        return
+    segments = count_stretch(pattern, bit_order, heard, 8 if link.traits.whole_bytes else 1)
+    compared, errors = (sum(getattr(s.tally, what) for s in segments) for what in ("compared", "errors"))
+    if compared < 4 * len(heard):
+        yield Finding(
+            "listen",
+            "bad",
+            f"{count(len(heard), 'byte')} came, and they are not {pattern.name}, {bit_order} first "
+            f"({looks_like(heard)})",
+            "set [pattern] name and bit_order to what the far end sends; check baud, parity and data bits",
+            cause="other_pattern",
+        )
+        return
+    yield Finding(
+        "listen", "good", f"{pattern.name} comes, with {percent(errors / compared)} of its bits wrong"
+    )
+    yield Finding("path", "note", "one-way: where the pattern is made cannot be proven from here")

@@ -20,6 +20,8 @@ class Probe:
 
     Parameters
     ----------
+    sending
+        None where it only listens.
     pace_bps
         Never send faster; None: as fast as the port takes it.
     most_in_flight
@@ -28,7 +30,7 @@ class Probe:
 
     def __init__(
         self,
-        sending: Link,
+        sending: Link | None,
         receiving: Link,
         *,
         pace_bps: float | None,
@@ -46,7 +48,9 @@ class Probe:
         self._halt = threading.Event()
         self._thread = threading.Thread(target=self._listen, name="probe", daemon=True)
         self.fault: DriverError | None = None
+        self.ended = False  # a link that ends by itself is at its end
         self.sent_bytes = 0
+        self.held = False  # sending gave up since too much was on its way, not since the port took nothing
 
     def __enter__(self) -> Probe:
         self._thread.start()
@@ -68,6 +72,9 @@ class Probe:
                         if self._bytes > KEEP_BYTES:
                             return
         except EndOfStream:
+            self.ended = self._receiving.traits.finite
+            if self.ended:
+                return
             self.fault = LinkLost(
                 "the far side closed the connection during the check", "look why the device closed it"
             )
@@ -90,16 +97,25 @@ class Probe:
         self.sent_bytes = 0
         return heard
 
+    def take_bytes(self) -> bytes:
+        """Give the bytes that came since the last call."""
+        return b"".join(data for _at, data in self.take())
+
     def send(self, data: NDArray[np.uint8], patience_s: float) -> bool:
         """Send all of it at the pace; False where the port or the far side takes no more."""
+        assert self._sending is not None
         view = np.ascontiguousarray(data).data
         begun, done = time.monotonic(), 0
         stuck_since = begun
         step = 4096 if self._pace_bps is None else max(1, int(self._pace_bps * 0.02 / 8))
+        if self._most_in_flight is not None:
+            step = max(1, min(step, self._most_in_flight // 8))
+        self.held = False
         while done < len(view):
             self.check()
             if self._blocked(step):
                 if time.monotonic() - stuck_since > patience_s:
+                    self.held = True
                     return False
                 self._cancel.wait(0.005)
                 continue
@@ -129,6 +145,19 @@ class Probe:
             if time.monotonic() >= ends:
                 return False
             self._cancel.wait(0.002)
+        return True
+
+    def wait_for_bytes(self, size: int, patience_s: float) -> bool:
+        """Wait until so many bytes have come; False once nothing has come for `patience_s`."""
+        seen, since = self.received_bytes, time.monotonic()
+        while seen < size and not self.ended:
+            self.check()
+            self._cancel.wait(0.005)
+            now = self.received_bytes
+            if now != seen:
+                seen, since = now, time.monotonic()
+            elif time.monotonic() - since > patience_s:
+                return False
         return True
 
     def wait_for_quiet(self, quiet_s: float, longest_s: float) -> bool:
