@@ -97,6 +97,13 @@ class Segment:
         """Received bits up to and with its last."""
         return self.start + self.tally.received
 
+    @property
+    def known_bits(self) -> int:
+        """Bits from its beginning within which every error's position is known."""
+        if self.positions_complete or len(self.positions) == self.tally.errors:
+            return self.tally.received
+        return int(self.positions[-1]) + 1 - self.start if len(self.positions) else 0
+
     def split(self, bits: int) -> tuple[Segment, Segment]:
         """Cut into the first `bits` bits and the rest.
 
@@ -107,39 +114,46 @@ class Segment:
         """
         if not 0 <= bits <= self.tally.received:
             raise ValueError("the cut lies outside the segment")
+        if self.known_bits < bits < self.tally.received:
+            raise ValueError("positions beyond the limit are not known: this segment cannot be cut there")
         cut = self.start + bits
-        if bits and bits < self.tally.received and self.tally.errors and not self.positions_complete:
-            raise ValueError("positions beyond the limit are not known: this segment cannot be cut")
-        at = int(np.searchsorted(self.positions, cut))
-        if bits == 0:
-            at = 0
-        elif bits == self.tally.received:
-            at = len(self.positions)
-
-        def piece(start: int, length: int, lo: int, hi: int, tally: Tally | None) -> Segment:
-            if tally is None:
-                ones = int(np.count_nonzero(self.ones_lost[lo:hi]))
-                errors = hi - lo
-                compared = length if self.aligned else 0
-                tally = Tally(length, compared, length - compared, errors, ones, errors - ones)
-            place = None if self.place is None else self.place + (start - self.start)
-            return replace(
-                self,
-                start=start,
-                tally=tally,
-                place=place,
-                positions=self.positions[lo:hi],
-                ones_lost=self.ones_lost[lo:hi],
-                positions_complete=self.positions_complete or tally.errors == hi - lo,
-            )
-
-        whole = self.tally if bits in (0, self.tally.received) else None
-        head = piece(self.start, bits, 0, at, whole if bits else Tally())
-        tail = piece(
-            cut, self.tally.received - bits, at, len(self.positions), Tally() if whole and bits else whole
-        )
+        at = len(self.positions) if bits == self.tally.received else int(np.searchsorted(self.positions, cut))
         first = tuple(e for e in self.events if e.bit is None or e.bit <= cut)
-        return replace(head, events=first), replace(tail, events=self.events[len(first) :])
+        if bits == self.tally.received:
+            head = self.tally
+        else:
+            ones = int(np.count_nonzero(self.ones_lost[:at]))
+            compared = bits if self.aligned else 0
+            head = Tally(bits, compared, bits - compared, at, ones, at - ones)
+        whole = self.tally
+        tail = Tally(
+            whole.received - head.received,
+            whole.compared - head.compared,
+            whole.unaligned - head.unaligned,
+            whole.errors - head.errors,
+            whole.ones_as_zeros - head.ones_as_zeros,
+            whole.zeros_as_ones - head.zeros_as_ones,
+        )
+        return (
+            replace(
+                self,
+                tally=head,
+                positions=self.positions[:at],
+                ones_lost=self.ones_lost[:at],
+                positions_complete=self.positions_complete or head.errors == at,
+                events=first,
+            ),
+            replace(
+                self,
+                start=cut,
+                tally=tail,
+                place=None if self.place is None else self.place + bits,
+                positions=self.positions[at:],
+                ones_lost=self.ones_lost[at:],
+                positions_complete=self.positions_complete or tail.errors == len(self.positions) - at,
+                events=self.events[len(first) :],
+            ),
+        )
 
 
 @dataclass(frozen=True, slots=True, eq=False)

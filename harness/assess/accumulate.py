@@ -57,6 +57,7 @@ class Accumulator:
         self._positions: list[NDArray[np.int64]] = []
         self._kept = 0
         self._complete = True
+        self.known_compared = 0  # compared bits within which every error's position is known and kept
         self._step = step
         self._next: int | None = None
         self._early: list[tuple[int, Second]] = []
@@ -126,12 +127,16 @@ class Accumulator:
         self._advance_plan(second)
 
     def _keep_positions(self, second: Second, compared_before: int) -> None:
-        if not second.positions_complete:
-            self._complete = False
-        if not self._complete or not len(second.positions):
+        if not self._complete:
             return
         if self._kept + len(second.positions) > POSITIONS_KEPT:
             self._complete = False
+            return
+        self._complete = second.positions_complete
+        self.known_compared = compared_before + second.tally.compared
+        if not len(second.positions):
+            if not self._complete:
+                self.known_compared = compared_before
             return
         among_compared = np.array(second.positions, dtype=np.int64) + (compared_before - second.first_bit)
         at = second.first_bit
@@ -139,6 +144,8 @@ class Accumulator:
             at += bits
             if not aligned:
                 among_compared[second.positions >= at] -= bits
+        if not self._complete:
+            self.known_compared = int(among_compared[-1]) + 1
         self._positions.append(among_compared)
         self._kept += len(among_compared)
 
@@ -175,25 +182,12 @@ def _standards(requirement: Requirement | None, rate_bps: float | None) -> list[
 def segments_of(second: Second) -> list[Segment]:
     """Lay a second out as the segments that it was made of, adjacent ones joined.
 
-    Where positions were cut, the aligned bits become one segment that says so: a plan then decides at
-    its end, as it did on the bench.
+    Where positions were cut, the aligned bits behind the last one kept become one segment that says so: a plan
+    then decides at its end, as it did on the bench.
     """
-    if not second.positions_complete:
-        t = second.tally
-        tally = Tally(t.compared, t.compared, 0, t.errors, t.ones_as_zeros, t.zeros_as_ones)
-        return [
-            Segment(
-                second.first_bit,
-                tally,
-                aligned=True,
-                positions=second.positions,
-                ones_lost=second.ones_lost,
-                positions_complete=False,
-            )
-        ]
     segments = []
     at = second.first_bit
-    for bits, aligned in second.stretches:
+    for bits, aligned in _known_stretches(second):
         lo, hi = (int(i) for i in np.searchsorted(second.positions, (at, at + bits)))
         ones = int(np.count_nonzero(second.ones_lost[lo:hi]))
         compared = bits if aligned else 0
@@ -208,4 +202,32 @@ def segments_of(second: Second) -> list[Segment]:
             )
         )
         at += bits
-    return segments
+    if second.positions_complete:
+        return segments
+    seen = Tally()
+    for segment in segments:
+        seen += segment.tally
+    t = second.tally
+    rest = Tally(
+        t.compared - seen.compared,
+        t.compared - seen.compared,
+        0,
+        t.errors - seen.errors,
+        t.ones_as_zeros - seen.ones_as_zeros,
+        t.zeros_as_ones - seen.zeros_as_ones,
+    )
+    return [*segments, Segment(at, rest, aligned=True, positions_complete=False)]
+
+
+def _known_stretches(second: Second) -> list[tuple[int, bool]]:
+    """Give a second's stretches as far as every error's position is known: up to the last one kept."""
+    if second.positions_complete:
+        return list(second.stretches)
+    left = int(second.positions[-1]) + 1 - second.first_bit if len(second.positions) else 0
+    known = []
+    for bits, aligned in second.stretches:
+        if left <= 0:
+            break
+        known.append((min(bits, left), aligned))
+        left -= bits
+    return known

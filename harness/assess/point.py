@@ -10,7 +10,7 @@ from harness.assess.accumulate import Accumulator, Sums
 from harness.assess.assessment import Bounds, Clustered, PointAssessment
 from harness.assess.requirement import Requirement
 from harness.assess.verdict import Evidence, judge, unaligned_ratio
-from harness.assess.words import count
+from harness.assess.words import count, ratio
 from harness.record import EndedBy, Event, Status, Tally, Verdict
 from harness.statistics.bounds import clopper_pearson, upper_bound
 
@@ -162,14 +162,12 @@ def _plan(acc: Accumulator) -> dict[str, Any] | None:
 
 def _clustering(acc: Accumulator, requirement: Requirement | None) -> Clustered | None:
     positions = acc.positions()
-    if len(positions) < 2 or not acc.sums.positions_complete:
+    if len(positions) < 2:
         return None
     from harness.statistics.clustering import assess_clustering
 
     confidence = requirement.confidence if requirement else DEFAULT_CONFIDENCE
-    found = assess_clustering(
-        positions, acc.sums.tally.compared, share=CLUSTERED_SHARE, confidence=confidence
-    )
+    found = assess_clustering(positions, acc.known_compared, share=CLUSTERED_SHARE, confidence=confidence)
     bounds = None
     if found.bounds is not None:
         bounds = {
@@ -219,19 +217,23 @@ def _remarks(acc: Accumulator, sums: Sums, bits_lost: int, clustering: Clustered
             f"this computer could not keep up {len(overruns)} times: {count(lost, 'bit')} counted as "
             "unaligned, not the device's fault"
         )
-    if sums.tally.unaligned or bits_lost:
+    if (sums.tally.unaligned or bits_lost) and sums.tally.compared:
         half = _half_wrong(sums, bits_lost)
-        remarks.append(
-            f"{count(sums.tally.unaligned, 'bit')} unaligned and {count(bits_lost, 'bit')} lost are in no "
-            "BER; "
-            f"taken as half wrong they would make it {half:.3g}. A stretch without evidence of under 8 192 "
-            "bits after which the same place holds is a burst and is counted; a longer one is an outage, "
-            "unaligned"
-        )
+        parts = [(sums.tally.unaligned, "not aligned"), (bits_lost, "lost")]
+        missing = " and ".join(f"{count(bits, 'bit')} {what}" for bits, what in parts if bits)
+        remarks.append(f"{missing} are in no BER; taken as half wrong they would make it {ratio(half)}")
+        if sums.tally.unaligned:
+            remarks.append(
+                "a stretch without evidence of under 8 192 bits, after which the same place holds, is a burst and "
+                "is counted; a longer one is an outage and is not aligned"
+            )
     if clustering is not None and clustering.clustered and clustering.words:
         remarks.append(clustering.words)
     if not sums.positions_complete:
-        remarks.append("not every error position was kept: counts are exact, clustering is not judged")
+        remarks.append(
+            "not every error position was kept: counts are exact; whether errors cluster is judged by the first "
+            f"{count(acc.known_compared, 'compared bit')}"
+        )
     if acc.events_cut:
         remarks.append(f"{count(acc.events_cut, 'further event')} not listed; counts are exact")
     if acc.plan is not None:

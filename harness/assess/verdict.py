@@ -48,7 +48,7 @@ def judge(
     if doubts:
         return "UNDECIDED", doubts
     assert decision is not None
-    return "PASS", [_accepted(plan, decision)]
+    return "PASS", _accepted(plan, decision)
 
 
 def ruled_out(
@@ -66,19 +66,25 @@ def _failures(
     requirement: Requirement, plan: Plan, decision: Decision | None, evidence: Evidence
 ) -> list[str]:
     sums = evidence.sums
-    reasons = []
+    reasons: list[str] = []
     if decision is not None and not decision.accepted:
-        reasons.append(_rejected(plan, decision))
+        reasons += _rejected(plan, decision)
     elif decision is None and cannot_accept(plan, plan.errors):
         assert plan.accept_errors is not None
-        reasons.append(
+        reasons += [
             f"not demonstrated: {count(sums.tally.errors, 'error')} already in "
             f"{count(sums.tally.compared, 'bit')}, and the plan accepts at most {plan.accept_errors} "
-            f"in {count(plan.longest_bits, 'bit')}; {_good_unit(plan)}"
-        )
+            f"in {count(plan.longest_bits, 'bit')}",
+            _good_unit(plan),
+        ]
     if sums.slips > requirement.max_slips:
+        allowed = (
+            "none is allowed"
+            if requirement.max_slips == 0
+            else f"at most {requirement.max_slips} are allowed"
+        )
         reasons.append(
-            f"{count(sums.slips, 'slip')} where at most {requirement.max_slips} are allowed "
+            f"{count(sums.slips, 'slip')}, and {allowed} "
             f"({count(evidence.bits_lost, 'bit')} lost, {count(sums.bits_inserted, 'bit')} inserted)"
         )
     share = unaligned_ratio(sums, evidence.bits_lost)
@@ -132,16 +138,18 @@ def _good_unit(plan: Plan) -> str:
     )
 
 
-def _rejected(plan: Plan, decision: Decision) -> str:
-    return (
-        f"not demonstrated: {count(decision.errors, 'error')} in {count(decision.compared_bits, 'bit')} "
-        f"are more than the {plan.kind} plan accepts; {_good_unit(plan)}"
-    )
+def _rejected(plan: Plan, decision: Decision) -> list[str]:
+    most = "fewer" if plan.accept_errors is None else f"at most {plan.accept_errors}"
+    return [
+        f"not demonstrated: {count(decision.errors, 'error')} in {count(decision.compared_bits, 'bit')}, "
+        f"and the {plan.kind} plan accepts {most}",
+        _good_unit(plan),
+    ]
 
 
-def _accepted(plan: Plan, decision: Decision) -> str:
-    return (
-        f"demonstrated: {count(decision.errors, 'error')} in {count(decision.compared_bits, 'bit')}; "
+def _accepted(plan: Plan, decision: Decision) -> list[str]:
+    return [
+        f"demonstrated: {count(decision.errors, 'error')} in {count(decision.compared_bits, 'bit')}",
         f"a unit at BER {ratio(plan.ber)} or worse passes this test with probability "
-        f"{percent(plan.consumer_risk)} at most"
-    )
+        f"{percent(plan.consumer_risk)} at most",
+    ]

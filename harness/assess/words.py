@@ -38,6 +38,8 @@ def ratio(value: float | None) -> str:
 def percent(value: float) -> str:
     """Write a share as a percentage that never rounds to 0 or 100 what is not."""
     share = 100 * value
+    if 0 < share < 1e-3:
+        return "under 0.001 %"
     if share in (0, 100):
         return f"{share:.0f} %"
     for digits in range(1, 9):

@@ -230,6 +230,17 @@ class Consumer(threading.Thread):
         if segment.aligned and segment.tally.compared:
             self._follow(segment)
         plan = self._rules.plan
+        if plan is not None and not self._held and not segment.positions_complete and segment.known_bits:
+            known, segment = segment.split(segment.known_bits)
+            self._absorb_stamped(known)
+            if self.decision is not None:
+                self.after += segment.tally
+                return
+        self._absorb_stamped(segment)
+
+    def _absorb_stamped(self, segment: Segment) -> None:
+        """Let the plan see a segment: bit by bit where positions are known, else at the second's end."""
+        plan = self._rules.plan
         if plan is not None and (self._held or not segment.positions_complete):
             self._held.append(segment)
         elif plan is not None:
@@ -277,7 +288,8 @@ class Consumer(threading.Thread):
         self._never_returned(0, at)
         verb = "accepted" if decision.accepted else "rejected"
         text = (
-            f"the plan {verb} at compared bit {decision.compared_bits} with {count(decision.errors, 'error')}"
+            f"the plan decided: {verb} with {count(decision.errors, 'error')} in "
+            f"{count(decision.compared_bits, 'compared bit')}"
         )
         self._happened("decided", text, at, {"bits": decision.compared_bits}, bit=bit)
         self._book.cut(bit=bit, ends_ns=at, sent=max(0, self._traffic.sent_bits - self._sent_before))
@@ -360,7 +372,10 @@ class Consumer(threading.Thread):
         if lost:
             self._link_lost(first)
         if back:
-            self._happened("link_back", "the link is back", first, {}, bit=segment.start)
+            at = max(first, self._watch.lost_at_ns)
+            self._happened("link_back", "the link is back", at, {}, bit=segment.start)
+        if self._places is not None:
+            self._places.follow(segment.end, last)
 
     def _arrived(self, bit: int) -> int:
         """Monotonic time at which a received bit came."""

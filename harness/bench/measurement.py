@@ -140,7 +140,7 @@ class Measurement:
             first_index=setup.first_index,
             started_ns=self._started_ns,
             wall_ns=self._wall_ns,
-            keep_positions=setup.positions_per_second,
+            keep_positions=self._positions_a_second(),
             base_bit=setup.base_bit,
             step=setup.index_step,
         )
@@ -176,9 +176,7 @@ class Measurement:
             setup.pattern,
             bit_order=setup.bit_order,
             slip_unit=unit,
-            position_limit=max(
-                setup.positions_per_second, setup.plan.plan.positions_needed if setup.plan else 0
-            ),
+            position_limit=self._positions_a_second(),
             cut_compared=self._cut_compared(),
         )
         places = None
@@ -212,6 +210,11 @@ class Measurement:
             base_bit=setup.base_bit,
             base_compared=setup.base_compared,
         )
+
+    def _positions_a_second(self) -> int:
+        """Error positions kept a second: never fewer than the plan could need to decide at the very bit."""
+        plan = self._setup.plan
+        return max(self._setup.positions_per_second, plan.plan.positions_needed if plan is not None else 0)
 
     def _cut_compared(self) -> int | None:
         plan = self._setup.plan.plan if self._setup.plan else None

@@ -12,6 +12,8 @@ from dataclasses import dataclass
 
 from harness.bench.traffic import Traffic
 
+MOST_TURNS = 10_000  # periods that a slip may be looked for over
+
 
 @dataclass(frozen=True, slots=True)
 class Delay:
@@ -50,6 +52,8 @@ class Places:
         self._most = most_in_flight
         self._first_place = first_place
         self.ahead: int | None = None  # sent bit minus received bit, for the stretch that is aligned
+        self._least_out: int | None = None  # bits on their way when aligned bits came: least and most so far
+        self._most_out = 0
 
     def _window(self, received_bit: int, arrived_ns: int) -> tuple[int, int]:
         """Sent bits that the received bit can have been, [low, high)."""
@@ -66,7 +70,9 @@ class Places:
         pieces, and the last of a piece says best how many were on their way.
         """
         sent_by = self._traffic.sent_by(arrived_ns)
-        offset = place - self._first_place
+        # The last bit of the piece: the first ones of a stream may never have been sent.
+        last = max(came_with - 1, bit)
+        offset, bit = place - self._first_place + last - bit, last
         if self._period is None or self._modulo is None:
             sent_bit, modulo = offset, None
         else:
@@ -87,7 +93,23 @@ class Places:
         seconds = None if sent_at is None else max(0.0, (arrived_ns - sent_at) / 1e9)
         if sent_by <= sent_bit:
             return None
-        return Delay(max(0, sent_by - self.ahead - max(came_with, bit + 1)), seconds, modulo)
+        return Delay(max(0, sent_by - sent_bit - 1), seconds, modulo)
+
+    def follow(self, received_end: int, arrived_ns: int) -> None:
+        """Take how many bits were on their way when aligned bits, up to `received_end`, came."""
+        if self.ahead is None:
+            return
+        out = self._traffic.sent_by(arrived_ns) - (received_end + self.ahead)
+        if out < 0:
+            return
+        self._least_out = out if self._least_out is None else min(out, self._least_out)
+        self._most_out = max(out, self._most_out)
+
+    def _continues(self, out: int, modulo: int) -> bool:
+        """Whether so many bits on their way are as many as before, where that tells sizes apart at all."""
+        if self._least_out is None or 4 * (self._most_out - self._least_out) > modulo:
+            return False
+        return self._least_out - modulo // 4 <= out <= self._most_out + modulo // 4
 
     def slipped(self, bit: int, size: int, modulo: int | None, arrived_ns: int) -> tuple[int, int | None]:
         """Resolve a slip's size where bits sent and received decide it; returns (size, modulus or None)."""
@@ -95,9 +117,13 @@ class Places:
             self.ahead = None if self.ahead is None else self.ahead - size
             return size, modulo
         low, high = self._window(bit, arrived_ns)
-        options = [size + k * modulo for k in range(-3, 4)]
+        span = 3 + max(0, high - low) // modulo
+        options = [size + k * modulo for k in range(-span, 4)] if span < MOST_TURNS else [size]
         inside = [s for s in options if low <= bit + self.ahead - s < high]
-        if inside:
+        steady = [s for s in inside if self._continues(high - (bit + self.ahead - s), modulo)]
+        if len(steady) == 1:  # the loop delay says which
+            size, modulo = steady[0], None
+        elif inside:
             size = min(inside, key=abs)
             if len(inside) == 1:
                 modulo = None

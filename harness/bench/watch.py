@@ -23,6 +23,7 @@ class LinkWatch:
         self._due_since: int | None = None
         self._ever = False
         self.lost = False
+        self.lost_at_ns = 0
 
     def due(self, due: bool, now_ns: int, first_sent_ns: int | None, anything_came: bool) -> bool:
         """Say whether bits are being sent (or ought to be); returns whether they are due now."""
@@ -46,9 +47,13 @@ class LinkWatch:
         -------
         (lost before it, back with it)
         """
+        if self.lost and last_ns <= self.lost_at_ns:
+            return False, False  # old news: it came before the link was lost, and was decided only now
         gap = self._due_since is not None and first_ns - self._due_since >= LOST_NS
         newly_lost = gap and not self.lost
         back = self.lost or newly_lost
+        if newly_lost:
+            self.lost_at_ns = first_ns
         self.lost = False
         self._ever = True
         self._due_since = last_ns
@@ -59,6 +64,7 @@ class LinkWatch:
         if self.lost or self._due_since is None or now_ns - self._due_since < LOST_NS:
             return False
         self.lost = True
+        self.lost_at_ns = now_ns
         return True
 
 

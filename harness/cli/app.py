@@ -47,7 +47,12 @@ RunArgument = Annotated[
 
 def run_app(arguments: Sequence[str]) -> int:
     """Run the command line; returns the exit status."""
-    result = app(args=list(arguments), standalone_mode=False, prog_name="bitassay")
+    try:
+        result = app(args=list(arguments), standalone_mode=False, prog_name="bitassay")
+    except SystemExit as error:
+        if error.code == 1:  # how typer answers a reader that has gone (`| head`); here 1 means FAIL
+            return 0
+        raise
     return result if isinstance(result, int) else 0
 
 

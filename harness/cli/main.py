@@ -16,6 +16,9 @@ from harness.cli.failure import Failure, failure_of
 def main() -> None:
     """Run the command line and leave with its exit status."""
     debug = "--debug" in sys.argv
+    # A closed output (`1>&-`) leaves None behind: whoever closed it wants no words, the run goes on.
+    sys.stdout = sys.stdout or open(os.devnull, "w", encoding="utf-8")  # noqa: SIM115
+    sys.stderr = sys.stderr or open(os.devnull, "w", encoding="utf-8")  # noqa: SIM115
     try:
         from harness.cli.app import run_app
 

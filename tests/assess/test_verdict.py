@@ -34,7 +34,7 @@ def test_one_error_more_fails_and_says_what_that_means(record, second):
     a = assess(record(seconds(second, (5, 30_000, 50_000, 70_000))))
     assert a.verdict == "FAIL"
     assert "not demonstrated" in a.reasons[0]
-    assert "2 times better fails this test with probability" in a.reasons[0]
+    assert "2 times better fails this test with probability" in a.reasons[1]
 
 
 def test_one_bit_less_than_the_plan_asks_is_undecided(record, second):
