@@ -348,7 +348,7 @@ class Consumer(threading.Thread):
             self._unexplained -= explained
             self._traffic.lose(-size - explained)
         data = {**event.data, "bits": size, "modulo": modulo}
-        text = event.text if size == event.data["bits"] else slip_words(size)
+        text = slip_words(size) + (" over an outage" if "outage" in event.text else "")
         return replace(event, data=data, text=text)
 
     def _delay(self, bit: int, place: int, at: int) -> None:
