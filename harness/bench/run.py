@@ -3,28 +3,27 @@
 from __future__ import annotations
 
 import datetime
-import threading
 import time
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass, field, replace
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
 from drivers.contract import DriverError, Interrupted
-from harness.assess.accumulate import Accumulator
-from harness.assess.assessment import Assessment, PointAssessment
+from harness.assess.assessment import PointAssessment
 from harness.assess.feed import PlanFeed
-from harness.assess.point import Facts, assess_point
-from harness.assess.requirement import Requirement, requirement_at, requirement_of
+from harness.assess.point import Facts
+from harness.assess.requirement import requirement_at, requirement_of
 from harness.assess.run import assess
+from harness.bench.both import side_by_side, worst
 from harness.bench.conditions import Conditions
 from harness.bench.measurement import Defect, Measurement, Outcome, Setup, StopRules
-from harness.bench.outlook import Outlook, outlook_of
+from harness.bench.progress import Hooks, Live, Progress, RunResult
 from harness.bench.recorder import Recorder
 from harness.bench.resumption import instruments_of, points_done
 from harness.bench.schedule import Schedule
 from harness.bench.session import Links, bench_host, bench_versions, flush, status_of, ways_of
-from harness.bench.visits import Had, Visit, had_by, visits_of
+from harness.bench.visits import Had, Visit, had_by, visits_of, what_is_left
 from harness.profile import Profile
 from harness.record import EndedBy, Event, Run, Second, Sitting, Tally
 from harness.store import Store
@@ -33,74 +32,6 @@ TICK_S = 0.2
 SIGN_OF_LIFE_S = 30.0
 TRIES_KEPT = 20  # named in the record; all are counted
 Commit = Callable[[list[Second], list[Event], int], None]
-
-
-@dataclass(frozen=True, slots=True)
-class Progress:
-    """What a watcher is shown while a run goes on."""
-
-    run: str
-    title: str
-    device: Mapping[str, str]
-    point: PointAssessment
-    longest_bits: int | None
-    stop: StopRules
-    elapsed_s: float
-    waiting_writes: int = 0
-    outlook: Outlook = field(default_factory=Outlook)
-    number: int = 0  # of the visit under way
-    visits: int = 1
-    units: Mapping[str, str] = field(default_factory=dict)  # instrument -> unit
-    done: tuple[PointAssessment, ...] = ()  # a sweep's points so far
-    sensitivity_ber: float | None = None
-    until: float | None = None  # forecast of the end, seconds since the epoch
-
-
-@dataclass(frozen=True, slots=True)
-class Hooks:
-    """What the command line adds: a view, and a way to end the run."""
-
-    interrupted: threading.Event = field(default_factory=threading.Event)
-    started: Callable[[str], None] = lambda _key: None
-    tick: Callable[[Progress], None] = lambda _progress: None
-    log: Callable[[str], None] = lambda _line: None
-
-
-@dataclass(frozen=True, slots=True)
-class RunResult:
-    """A run that has ended: its record's assessment, and what failed."""
-
-    key: str
-    assessment: Assessment
-    fault: tuple[str, str] | None  # what, advice
-
-
-class Live:
-    """The accumulator that the screen is fed from, shared between the consumer and the main thread."""
-
-    def __init__(self, requirement: Requirement | None, about: Facts) -> None:
-        self._lock = threading.Lock()
-        self._acc = Accumulator(requirement, about.rate_bps, step=int(about.facts.get("index_step", 1)))
-        self._about = about
-        self.plan = self._acc.plan
-
-    def take(self, seconds: list[Second], events: list[Event]) -> None:
-        """Take what has just been committed."""
-        with self._lock:
-            for event in events:
-                self._acc.note(event)
-            for second in seconds:
-                self._acc.add(second)
-
-    def outlook(self) -> Outlook:
-        """Say what is ahead of the plan, and what speaks against a PASS already."""
-        with self._lock:
-            return outlook_of(self._acc, self._about.requirement)
-
-    def point(self) -> PointAssessment:
-        """Assess what is known so far."""
-        with self._lock:
-            return assess_point(self._acc, self._about, quick=True)
 
 
 class BenchRun:
@@ -305,7 +236,7 @@ class BenchRun:
                 facts = self._set(visit)
             self._pause(sweep.settle_s if sweep else 0.0)
             outcomes = self._measure(visit, facts, left_points=len(left) - place)
-            ended_by, fault = _worst(outcomes), next((o.fault for o in outcomes if o.fault), None)
+            ended_by, fault = worst(outcomes), next((o.fault for o in outcomes if o.fault), None)
             if ended_by in ("interrupted", "fault"):
                 return ended_by, fault
             hopeless = 0 if any(o.tally.compared for o in outcomes) else hopeless + 1
@@ -413,7 +344,7 @@ class BenchRun:
         plan = PlanFeed(requirement.make_plan(), requirement) if requirement else None
         if had is not None and had.plan is not None:
             plan = had.plan
-        stop = _what_is_left(self._profile, had, sends=chosen.sending is not None)
+        stop = what_is_left(self._profile, had, sends=chosen.sending is not None)
         stop = self._schedule.share(stop, left_points, self._done)
         setup = Setup(
             pattern=chosen.pattern,
@@ -497,56 +428,6 @@ class BenchRun:
             lambda store: store.end_run(key, ended, status, ended_by, assessment.verdict, stated)
         )
         return RunResult(key, assessment, fault)
-
-
-def _what_is_left(profile: Profile, had: Had | None, *, sends: bool) -> StopRules:
-    """Give the stop rules less what a cut point had already."""
-    stop = profile.stop
-    if had is None:
-        return StopRules(stop.bits, stop.seconds, stop.errors)
-    bits = stop.bits
-    if bits is not None:
-        bits = max(8, bits - had.received - (had.lost if sends else 0))
-    seconds = None if stop.seconds is None else max(0.001, stop.seconds - had.duration_s)
-    errors = None if stop.errors is None else max(1, stop.errors - had.errors)
-    return StopRules(bits, seconds, errors)
-
-
-def side_by_side(measurements: list[Measurement]) -> list[Outcome]:
-    """Run measurements at once; every one but the first has a thread of its own."""
-    answers: dict[int, Outcome | BaseException] = {}
-
-    def beside(number: int) -> None:
-        try:
-            answers[number] = measurements[number].run()
-        except BaseException as error:
-            answers[number] = error
-
-    threads = [
-        threading.Thread(target=beside, args=(number,), name=f"direction {number}", daemon=True)
-        for number in range(1, len(measurements))
-    ]
-    for thread in threads:
-        thread.start()
-    beside(0)
-    for thread in threads:
-        thread.join()
-    outcomes = []
-    for number in range(len(measurements)):
-        answer = answers[number]
-        if isinstance(answer, BaseException):
-            raise answer
-        outcomes.append(answer)
-    return outcomes
-
-
-def _worst(outcomes: list[Outcome]) -> EndedBy:
-    """What ended a point: a fault or an interruption in either direction, else what ended the first."""
-    reasons: list[EndedBy] = [outcome.ended_by for outcome in outcomes]
-    for bad in ("interrupted", "fault"):
-        if bad in reasons:
-            return bad
-    return reasons[0]
 
 
 __all__ = ["BenchRun", "Defect", "Hooks", "Live", "Progress", "RunResult"]

@@ -8,6 +8,7 @@ from dataclasses import dataclass, field
 from harness.assess.accumulate import accumulator_for
 from harness.assess.feed import PlanFeed
 from harness.assess.requirement import Requirement
+from harness.bench.measurement import StopRules
 from harness.profile import Profile
 from harness.record import Point
 
@@ -64,3 +65,16 @@ def had_by(point: Point, requirement: Requirement | None) -> Had:
         duration_s=sums.duration_ns / 1e9,
         plan=acc.feed,
     )
+
+
+def what_is_left(profile: Profile, had: Had | None, *, sends: bool) -> StopRules:
+    """Give the stop rules less what a cut point had already."""
+    stop = profile.stop
+    if had is None:
+        return StopRules(stop.bits, stop.seconds, stop.errors)
+    bits = stop.bits
+    if bits is not None:
+        bits = max(8, bits - had.received - (had.lost if sends else 0))
+    seconds = None if stop.seconds is None else max(0.001, stop.seconds - had.duration_s)
+    errors = None if stop.errors is None else max(1, stop.errors - had.errors)
+    return StopRules(bits, seconds, errors)
