@@ -111,4 +111,4 @@ def _widest(table: Table) -> int | None:
         for k, column in enumerate(table.columns)
     ]
     longest = max(lengths, default=0)
-    return lengths.index(longest) if longest > _LONG else None
+    return lengths.index(longest) if longest > _LONG and len(table.columns) > 2 else None

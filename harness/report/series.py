@@ -75,21 +75,27 @@ class Series:
     def outages(self) -> list[Outage]:
         """List unaligned stretches and silent seconds, neighbouring ones joined."""
         found: list[Outage] = []
+        reached = -1  # the second that the last outage lasted into
         for position, second in enumerate(self.seconds):
             for start, bits, silent in _out_of(second):
                 before = found[-1] if found else None
-                joined = (
+                if (
                     before is not None
                     and before.silent == silent
                     and before.bit + before.bits == start
-                    and _touches(self, before, position)
-                )
-                if joined and before is not None:
-                    longer = 1 + round((second.at - before.at) / _SECOND_NS)
-                    found[-1] = Outage(before.bit, before.bits + bits, before.at, longer, silent)
+                    and (reached == position or (reached == position - 1 and self._follows(position)))
+                ):
+                    seconds = before.seconds + (position - reached)
+                    found[-1] = Outage(before.bit, before.bits + bits, before.at, seconds, silent)
                 else:
                     found.append(Outage(start, bits, second.at, 1, silent))
+                reached = position
         return found
+
+    def _follows(self, position: int) -> bool:
+        """Whether a second begins where the one before it ends; after a cut it does not."""
+        before = self.seconds[position - 1]
+        return self.seconds[position].at < before.at + before.duration_ns + _SECOND_NS // 2
 
     def _unaligned_stretches(self) -> tuple[Ints, Ints]:
         rows = [
@@ -102,13 +108,6 @@ class Series:
             return empty, empty
         starts, lengths = np.array(rows, dtype=np.int64).T
         return starts, lengths
-
-
-def _touches(series: Series, outage: Outage, position: int) -> bool:
-    """Whether an outage lasted into the second before this one, or into this one."""
-    ended = outage.at + (outage.seconds - 1) * _SECOND_NS
-    reference = series.seconds[position - 1].at if position else series.seconds[position].at
-    return ended >= reference - _SECOND_NS // 2
 
 
 def _out_of(second: Second) -> Iterator[tuple[int, int, bool]]:

@@ -112,4 +112,4 @@ def _tall(table: Table) -> Iterator[str]:
 def _signatures(block: Signatures) -> Iterator[str]:
     for role, name in block.roles:
         yield ""
-        yield f"{role:<14}{name or '.' * 34:<36}  date {'.' * 12}  signature {'.' * 18}"
+        yield f"{role:<14}{name or '.' * 34:<36} date {'.' * 12} signature {'.' * 16}"

@@ -40,6 +40,7 @@ def bursts(drawing: Bursts) -> Sheet:
     made, axes = sheet(176)
     made.subplots_adjust(left=0.115, right=0.98, top=0.95, bottom=0.25)
     axes.bar(drawing.sizes, drawing.counted, width=0.7, color=BAR)
+    axes.set_xlim(0.3, max(float(drawing.sizes[-1]), 8.0) + 0.7)
     most = float(drawing.counted.max())
     if most > _MANY:
         axes.set_yscale("symlog", linthresh=1, linscale=0.5)
