@@ -1,0 +1,110 @@
+"""What the store holds, from outside: retests counted, runs compared, notes added, records moved and damaged."""
+
+from __future__ import annotations
+
+import sqlite3
+
+import pytest
+
+PROFILE = """
+title = "Wader-9, invented"
+[device]
+serial_number = "0031"
+[link]
+driver = "loopback"
+rate_bps = 1_000_000
+[[link.channel]]
+model = "independent"
+ber = {ber}
+seed = {seed}
+[requirement]
+ber = 1e-4
+accept_errors = 12
+"""
+
+
+@pytest.fixture
+def measured(bitassay, tmp_path):
+    """Measure once more; gives the JSON."""
+
+    def once(seed: int = 7, ber: str = "2e-5", *more: str):
+        (tmp_path / "unit.toml").write_text(PROFILE.format(ber=ber, seed=seed))
+        return bitassay("measure", "unit.toml", "--json", *more).json
+
+    return once
+
+
+def test_a_second_test_of_the_same_unit_is_counted_and_named(bitassay, measured):
+    first = measured()
+    assert first["earlier_tries"] == 0
+    bitassay("note", "last", "the cable was loose", "--void")
+    second = measured()
+    assert second["earlier_tries"] == 1
+    assert first["run"][-8:] in second["remarks"][0]
+    assert "9.75 %" in second["remarks"][0]
+    other = measured(7, "2e-5", "--set", "device.serial_number=0032")
+    assert other["earlier_tries"] == 0
+    assert bitassay("verify", "last").status == 0
+
+
+def test_two_runs_are_compared_and_their_conditions(bitassay, measured):
+    good, bad = measured(), measured(8, "3e-3")
+    assert (good["verdict"], bad["verdict"]) == ("PASS", "FAIL")
+    done = bitassay("compare", good["run"], bad["run"], "--json")
+    assert done.status == 0
+    assert done.json["errors"]["worse"] is True
+    assert any("ber" in line for line in done.json["conditions_differ"])
+    back = bitassay("compare", bad["run"], good["run"], "--json").json
+    assert back["errors"]["worse"] is False
+    same = bitassay("compare", good["run"], good["run"], "--json").json
+    assert same["conditions_differ"] == []
+    assert same["errors"]["worse"] is False
+
+
+def test_a_run_is_named_by_its_ending_and_unknown_ones_are_refused(bitassay, measured):
+    run = measured()["run"]
+    assert bitassay("show", run[-6:], "--json").json["run"] == run
+    assert bitassay("show", "zzzz").status == 2
+
+
+def test_one_changed_byte_is_found_and_named(bitassay, measured, tmp_path):
+    measured()
+    with sqlite3.connect(tmp_path / "results" / "runs.sqlite") as db:
+        changed = db.execute("update second set errors = errors + 1 where errors > 0").rowcount
+    assert changed >= 1
+    done = bitassay("verify", "last")
+    assert done.status == 4
+    assert "errors" in done.out
+    assert "NOT" in done.out
+
+
+def test_a_changed_profile_is_found_by_the_digest(bitassay, measured, tmp_path):
+    measured()
+    with sqlite3.connect(tmp_path / "results" / "runs.sqlite") as db:
+        db.execute("update run set profile_text = replace(profile_text, '0031', '0032')")
+    done = bitassay("verify", "last")
+    assert done.status == 4
+    assert "SHA-256" in done.out
+
+
+def test_records_are_copied_once_however_often_it_is_said(bitassay, measured, tmp_path):
+    run = measured()["run"]
+    for words in ("1 new run", "0 new runs"):
+        done = bitassay("store", "copy", "results/runs.sqlite", "other.sqlite")
+        assert done.status == 0
+        assert words in done.out
+    assert bitassay("show", run, "--store", "other.sqlite", "--json").json["run"] == run
+    assert bitassay("verify", run, "--store", "other.sqlite").status == 0
+    assert bitassay("store", "upgrade", "--store", "other.sqlite").status == 0
+
+
+def test_curtailed_and_sequential_plans_decide_on_the_bench_too(bitassay, measured):
+    sequential = measured(7, "2e-5", "--set", "requirement.plan=sequential", "--set", "requirement.margin=3")
+    assert sequential["verdict"] == "PASS"
+    assert sequential["bits_compared"] == sequential["plan"]["decided_at_bit"] < sequential["plan"]["bits"]
+    assert sequential["bounds"]["deciding"]["value"] <= 1e-4
+    curtailed = measured(7, "3e-3", "--set", "requirement.plan=curtailed")
+    assert curtailed["verdict"] == "FAIL"
+    assert curtailed["errors"] == 13
+    assert curtailed["bits_compared"] == curtailed["plan"]["decided_at_bit"] < 20_000
+    assert curtailed["after_decision"]["bits"] > 0
