@@ -257,3 +257,25 @@ def attenuated(tmp_path: Path) -> Iterator[Callable[..., AttenuatedDevice]]:
         process.wait()
         assert process.stdout is not None
         process.stdout.close()
+
+
+@pytest.fixture
+def bridge() -> Iterator[Callable[..., list[int]]]:
+    """Start a device with two ports, with the options of its program; gives the ports."""
+    running: list[subprocess.Popen[str]] = []
+    program = Path(__file__).parents[1] / "devices" / "bridge.py"
+
+    def start(**options: Any) -> list[int]:
+        process = subprocess.Popen(
+            [sys.executable, str(program), json.dumps(options)], stdout=subprocess.PIPE, text=True
+        )
+        running.append(process)
+        assert process.stdout is not None
+        return [int(port) for port in process.stdout.readline().split()]
+
+    yield start
+    for process in running:
+        process.kill()
+        process.wait()
+        assert process.stdout is not None
+        process.stdout.close()

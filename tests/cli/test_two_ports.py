@@ -2,32 +2,7 @@
 
 from __future__ import annotations
 
-import json
-import subprocess
-import sys
 from pathlib import Path
-
-import pytest
-
-DEVICE = Path(__file__).parent.parent / "devices" / "bridge.py"
-
-
-@pytest.fixture
-def bridge():
-    running = []
-
-    def start(**options):
-        process = subprocess.Popen(
-            [sys.executable, str(DEVICE), json.dumps(options)], stdout=subprocess.PIPE, text=True
-        )
-        running.append(process)
-        return [int(port) for port in process.stdout.readline().split()]
-
-    yield start
-    for process in running:
-        process.kill()
-        process.wait()
-        process.stdout.close()
 
 
 def profile(tmp_path: Path, ports: list[int], keys: str, rest: str) -> Path:

@@ -1,7 +1,8 @@
 """A device with two ports: what goes into one comes out of the other, both ways, with known bits turned over.
 
 Prints both ports. Options as JSON: `flip` (there) and `flip_back` are bit positions; `drop_after` closes both
-connections once, after so many bytes there, and listens again after `away_s`.
+connections once, after so many bytes there, and listens again after `away_s`; with `echo` the first port also
+gives back what goes into it.
 """
 
 from __future__ import annotations
@@ -14,7 +15,9 @@ import threading
 import time
 
 
-def carry(source: socket.socket, sink: socket.socket, flips: list[int], drop_after: int | None) -> None:
+def carry(
+    source: socket.socket, sink: socket.socket, flips: list[int], drop_after: int | None, echo: bool = False
+) -> None:
     seen = 0
     while True:
         try:
@@ -35,6 +38,8 @@ def carry(source: socket.socket, sink: socket.socket, flips: list[int], drop_aft
             return
         try:
             sink.sendall(data)
+            if echo:
+                source.sendall(data)
         except OSError:
             return
 
@@ -48,7 +53,7 @@ def main(options: dict) -> None:
         ends = [door.accept()[0] for door in doors]
         back = threading.Thread(target=carry, args=(ends[1], ends[0], options.get("flip_back", []), None))
         back.start()
-        carry(ends[0], ends[1], options.get("flip", []), drop_after)
+        carry(ends[0], ends[1], options.get("flip", []), drop_after, options.get("echo", False))
         back.join()
         if drop_after is not None:
             for door in doors:

@@ -102,7 +102,7 @@ def twice(sent: int, heard: int) -> Finding:
 
 def _errors_at_their_places(stretch: Stretch, heard: bytes, segments: Sequence[Segment]) -> Finding:
     size, wanted = len(stretch.data), len(stretch.flips)
-    found = _found(stretch, heard, segments)
+    found = _found(stretch, segments)
     errors = sum(s.tally.errors for s in segments)
     compared = sum(s.tally.compared for s in segments)
     lost = size - len(heard)
@@ -125,30 +125,28 @@ def _errors_at_their_places(stretch: Stretch, heard: bytes, segments: Sequence[S
             f"; beside them {count(own, 'error')} of the path's own ({percent(own / compared)} of the bits)"
         )
     if lost:
-        text += f"; {count(abs(lost), 'byte')} {'were lost' if lost > 0 else 'came beside'}"
+        text += f"; {count(abs(lost), 'byte')} {'lost' if lost > 0 else 'too many'}"
     if any(s.inverted for s in segments if s.aligned):
         text += "; every bit comes back inverted, and is counted so"
     return Finding(STEP, "good", text)
 
 
-def _found(stretch: Stretch, heard: bytes, segments: Sequence[Segment]) -> int:
-    """How many known errors came: by their bits where all bytes came, else by their places in the pattern."""
-    if len(heard) == len(stretch.data):
-        positions = {int(p) for s in segments for p in s.positions}
-        return len(positions & set(stretch.flips))
-    period = stretch.pattern.period
-
-    def place(bit: int) -> int:
-        return bit % period if period else bit
-
-    came = {place(p) for s in segments if s.place is not None for p in _places(s)}
-    return len(came & {place(stretch.place + bit) for bit in stretch.flips})
+def _found(stretch: Stretch, segments: Sequence[Segment]) -> int:
+    """How many known errors came, each at its place in what was sent, also where bytes are missing before."""
+    return len(
+        {bit for s in segments if s.place is not None for bit in _sent_bits(stretch, s)} & {*stretch.flips}
+    )
 
 
-def _places(segment: Segment) -> Iterator[int]:
+def _sent_bits(stretch: Stretch, segment: Segment) -> Iterator[int]:
+    """Which bits of the stretch a segment's errors were: the nearest that the pattern's place allows."""
     assert segment.place is not None
+    shift = segment.place - stretch.place - segment.start
+    period = stretch.pattern.period
+    if period is not None:
+        shift = (shift + period // 2) % period - period // 2
     for position in segment.positions:
-        yield segment.place + int(position) - segment.start
+        yield int(position) + shift
 
 
 def _bytes_missing(sent: int, heard: int) -> Finding:

@@ -247,7 +247,8 @@ class Check:
             return
         folder = self._folder if self._folder.exists() else Path.cwd()
         free = shutil.disk_usage(folder).free
-        text = f"its record takes about {need / 1e6:.1f} MB; {free / 1e9:.1f} GB are free"
+        most = "at most" if self._profile.sweep is not None or self._profile.search is not None else "about"
+        text = f"its record takes {most} {need / 1e6:.2g} MB; {free / 1e9:.3g} GB are free"
         if free < ROOM * need:
             yield Finding("disk", "bad", text, "free some space, or choose another --store")
         else:

@@ -263,8 +263,8 @@ class PathCheck:
         probe.wait_for_quiet(QUIET_S, self._patience_s)
         heard = probe.take_bytes()
         found = judge(stretch, heard, self._unit)
-        waits = self._unanswered and found.cause == "bytes_lost"
-        if waits and (self._unanswered + stretch.data.tobytes()).startswith(heard):
+        due = self._unanswered + stretch.data.tobytes()
+        if self._unanswered and heard and found.outcome == "bad" and due.startswith(heard):
             return self._holds_back()
         return found
 
