@@ -114,10 +114,9 @@ def fit_curve(
     sign = -1.0 if rising else 1.0
     counts, used, only_worse = _counts(points, sure, target_ber, sign)
     bracket = _bracket(points, sure, target_ber, sign)
-    if not used or (counts.errors.sum() == 0 and not only_worse):
-        return _without_fit(
-            target_ber, confidence, rising, bracket, used, only_worse, "No point near the target has errors"
-        )
+    why = _too_little(points, counts, used, only_worse)
+    if why:
+        return _without_fit(target_ber, confidence, rising, bracket, used, only_worse, why)
     plain = fit_plain(counts, target_ber)
     best, floor = _with_floor(counts, plain)
     goodness = _goodness(counts, best, floor, target_ber)
@@ -246,6 +245,17 @@ def _bracket(
     best_over = float(over.max()) if len(over) else -math.inf
     under = levels[(sure[:, 1] < target_ber) & (levels > best_over)]
     return (sign * best_over if len(over) else None), (sign * float(under.min()) if len(under) else None)
+
+
+def _too_little(
+    points: Sequence[CurvePoint], counts: Counts, used: tuple[int, ...], only_worse: tuple[int, ...]
+) -> str:
+    """Why no curve can be fitted, in words; empty where one can."""
+    if not used or (counts.errors.sum() == 0 and not only_worse):
+        return "No point near the target has errors"
+    if len({points[i].x for i in (*used, *only_worse)}) < 2:
+        return "All points lie at one value"
+    return ""
 
 
 def _with_floor(counts: Counts, plain: Best) -> tuple[Best, float]:

@@ -202,6 +202,12 @@ def test_no_errors_anywhere_give_no_sensitivity():
     assert fit.lower is None or fit.upper is None
 
 
+def test_one_value_gives_no_curve():
+    fit = fit_curve([CurvePoint(30, 10**7, 50), CurvePoint(30, 10**7, 60)], TARGET, rising=True)
+    assert (fit.value, fit.fitted, fit.lower, fit.upper) == (None, False, None, 30)
+    assert "one value" in fit.words
+
+
 def test_a_floor_over_the_target_leaves_no_sensitivity():
     rng = np.random.default_rng(6)
     fit = fit_curve(sweep(rng, lambda y: textbook(y) + 3e-6), TARGET)
