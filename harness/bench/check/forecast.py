@@ -114,6 +114,8 @@ def _disk(
     a_point = POINT_BYTES + INSTRUMENT_BYTES * len(profile.instruments)
     required = REQUIRED_BYTES if profile.requirement is not None else 0
     settings = len(profile.text) + len(json.dumps(profile.resolved()))
+    if profile.link is not None and profile.link.duplex:
+        points *= 2  # each direction has a point and rows of its own
     rows = math.ceil(each) * points
     return round(
         RUN_BYTES
