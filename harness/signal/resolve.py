@@ -134,6 +134,7 @@ class Resolver:
         settled = np.zeros(len(stretch.bits), dtype=np.bool_)  # stretches in which no place was found
         rule = rules.LEVELS[level]
         in_vain = 0
+        seen = {tuple(path.places)}
         while in_vain < _MOST_IN_VAIN and len(path.places) < _MOST_PLACES:
             left = wrong.along(path)
             left[settled] = 0
@@ -141,11 +142,15 @@ class Resolver:
             if excess < _CAREFUL * rule.alarm:
                 break
             longer = self._with_another(path, wrong, begin, end, rule.share)
-            if longer is None:
+            if longer is not None:
+                longer = self._without_unproven(longer, wrong, sure, rule.share)
+            # A place that is taken in only for it, or another, to be left out again would come back for ever.
+            if longer is None or tuple(longer.places) in seen:
                 settled[begin:end] = True
                 in_vain += 1
             else:
-                path = self._without_unproven(longer, wrong, sure, rule.share)
+                path = longer
+                seen.add(tuple(path.places))
         return Path(path.places, [stretch.first + cut for cut in path.cuts])
 
     def _with_another(self, path: Path, wrong: _Differing, begin: int, end: int, share: float) -> Path | None:
