@@ -93,8 +93,8 @@ def twice(sent: int, heard: int) -> Finding:
     return Finding(
         STEP,
         "bad",
-        f"local echo: {count(sent, 'byte')} were sent and {heard} came back, so each one comes more than once: "
-        "from this end of the line, and again from the far end",
+        f"local echo: {count(sent, 'byte')} were sent and {count(heard, 'byte')} came back: each one comes "
+        "more than once, from this end of the line, and again from the far end",
         "switch the device's echo off in [[link.before]] (many modems: ATE0), or the adapter's (two-wire RS-485)",
         cause="local_echo",
     )
@@ -154,14 +154,15 @@ def _bytes_missing(sent: int, heard: int) -> Finding:
         return Finding(
             STEP,
             "bad",
-            f"{count(heard - sent, 'byte')} more came than were sent ({sent}): the device puts in bytes of its own",
+            f"{count(heard - sent, 'byte')} more came than the {count(sent, 'byte')} that were sent: the device "
+            "puts in bytes of its own",
             "switch off its messages, its fill bytes and its command echo while it carries data",
             cause="bytes_added",
         )
     return Finding(
         STEP,
         "bad",
-        f"{count(sent - heard, 'byte')} of {sent} did not come back: bytes are sent faster than the device "
+        f"{_part(sent - heard, sent)} did not come back: bytes are sent faster than the device "
         "carries them, and nothing holds the sender back",
         "set link.pace_bps to the rate on the air, or link.max_in_flight_bits to what the device buffers, or use "
         'flow = "rtscts" with the wires for it',
@@ -198,6 +199,10 @@ def _mangled(sent: NDArray[np.uint8], heard: bytes) -> Finding | None:
 def _control_share(data: NDArray[np.uint8]) -> float:
     """Share of control characters, those that end a line left out."""
     return float(np.mean(((data < 32) & (data != 10) & (data != 13)) | (data == 127)))
+
+
+def _part(part: int, whole: int) -> str:
+    return f"{count(part, 'byte').rsplit(' ', 1)[0]} of {count(whole, 'byte')}"
 
 
 def _another_stream(stretch: Stretch, heard: bytes) -> Finding:

@@ -227,6 +227,14 @@ class Check:
 
     def _time_and_disk(self, ahead: dict[str, float | None]) -> Iterator[Finding]:
         longest, expected = ahead.get("longest_seconds"), ahead.get("expected_seconds")
+        if longest is None and self._profile.search is not None:
+            yield Finding(
+                "forecast",
+                "note",
+                "how long the search takes cannot be said beforehand",
+                "add search.max_seconds: an unattended search must end by itself",
+            )
+            return
         if longest is None:
             yield Finding(
                 "forecast",
@@ -248,7 +256,8 @@ class Check:
         folder = self._folder if self._folder.exists() else Path.cwd()
         free = shutil.disk_usage(folder).free
         most = "at most" if self._profile.sweep is not None or self._profile.search is not None else "about"
-        text = f"its record takes {most} {need / 1e6:.2g} MB; {free / 1e9:.3g} GB are free"
+        size = f"{need / 1e3:.0f} kB" if need < 1e6 else f"{need / 1e6:.3g} MB"
+        text = f"its record takes {most} {size}; {free / 1e9:.3g} GB are free"
         if free < ROOM * need:
             yield Finding("disk", "bad", text, "free some space, or choose another --store")
         else:

@@ -8,7 +8,7 @@ from dataclasses import dataclass
 from typing import Any
 
 from harness.assess.requirement import requirement_at, requirement_of
-from harness.assess.words import rate
+from harness.assess.words import duration, rate
 from harness.bench.schedule import seconds_until
 from harness.bench.visits import visits_of
 from harness.profile import Profile
@@ -23,6 +23,7 @@ REQUIRED_BYTES = 900  # of a requirement, in each point's and the run's assessme
 INSTRUMENT_BYTES = 250  # at each point: readings, and the event of its setting
 SECOND_ROW_BYTES = 44  # beside counts and positions
 SECOND_INDEX_BYTES = 13
+SEARCH_POINTS = 12  # that a search looks at, more or less
 COUNTS = 3  # of a second's bits: sent, received, compared
 
 
@@ -47,11 +48,15 @@ class Forecast:
 
 def forecast(profile: Profile, rate_bps: float | None, *, positions_per_second: int = 4096) -> Forecast:
     """Forecast a profile's run at a payload rate."""
+    visits = visits_of(profile)
+    if profile.search is not None:
+        most = _search_seconds(profile, rate_bps)
+        disk = _disk(profile, most, rate_bps, SEARCH_POINTS, positions_per_second)
+        return Forecast(most, None, len(visits), disk)
     settings = profile.resolved()
     requirement = requirement_of(settings)
     longest: float | None = 0.0
     expected: float | None = 0.0
-    visits = visits_of(profile)
     for visit in visits:
         asked = requirement_at(requirement, settings, visit.values)
         plan = asked.make_plan() if asked else None
@@ -87,11 +92,25 @@ def _point_seconds(
     return (min(limits) if limits else None), (min(means) if means else None)
 
 
+def _search_seconds(profile: Profile, rate_bps: float | None) -> float | None:
+    """Longest seconds of a search, as far as the profile limits it."""
+    search = profile.search
+    assert search is not None
+    limits = [] if search.max_seconds is None else [search.max_seconds]
+    if search.max_bits is not None and rate_bps:
+        limits.append(search.max_bits / rate_bps + SEARCH_POINTS * (search.settle_s + _settling(profile)))
+    return search.warm_up_s + min(limits) if limits else None
+
+
 def _overhead(profile: Profile) -> float:
-    settle = max(
+    return _settling(profile) + (profile.sweep.settle_s if profile.sweep else 0.0)
+
+
+def _settling(profile: Profile) -> float:
+    """Seconds that the slowest instrument takes to settle."""
+    return max(
         (float(getattr(i.options, "settle_s", 0.0)) for i in profile.instruments.values()), default=0.0
     )
-    return settle + (profile.sweep.settle_s if profile.sweep else 0.0)
 
 
 def _disk(
@@ -149,6 +168,8 @@ def _integer_bytes(value: float) -> int:
 
 def stop_problem(profile: Profile, rate_bps: float | None) -> str | None:
     """Say why the stop rules never let the plan decide, or that nothing ends the run."""
+    if profile.search is not None:
+        return None  # each of its looks ends by its own plan
     settings = profile.resolved()
     requirement = requirement_of(settings)
     stop = profile.stop
@@ -166,8 +187,8 @@ def stop_problem(profile: Profile, rate_bps: float | None) -> str | None:
     if stop.bits is not None and stop.bits < longest:
         return f"stop.bits is {stop.bits}, and the plan may need up to {longest} bits"
     if stop.seconds is not None and rate_bps and stop.seconds * rate_bps < longest:
-        needed = math.ceil(longest / rate_bps)
-        return f"stop.seconds is {stop.seconds:g}, and at {rate(rate_bps)} the plan may need up to {needed} s"
+        needed = duration(longest / rate_bps)
+        return f"stop.seconds is {stop.seconds:g}, and at {rate(rate_bps)} the plan may need up to {needed}"
     undecided = len(plan.boundaries) - 1 if plan.boundaries else (plan.accept_errors or 0)
     if stop.errors is not None and stop.errors <= undecided:
         return f"stop.errors is {stop.errors}, and the plan may still accept with {undecided} errors"

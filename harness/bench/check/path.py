@@ -189,7 +189,7 @@ class PathCheck:
         self.delay_s = min(times)
         spread = max(times) - self.delay_s
         return Finding(
-            "delay", "good", f"loop delay {duration(self.delay_s)}, wandering by {duration(spread)}"
+            "delay", "good", f"loop delay {duration(self.delay_s)}, at times {duration(spread)} more"
         )
 
     def _at_once_s(self) -> float | None:
