@@ -9,7 +9,7 @@ import io
 import logging
 import re
 import warnings
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from typing import Any
 
 import matplotlib
@@ -19,6 +19,8 @@ from matplotlib.figure import Figure as Sheet
 
 WIDTH_PX = 440.0  # small, so that a phone shows letters of a readable size
 LETTERS_PX = 10.5
+LETTER_PX = 5.6  # mean width of a letter in a legend
+KEY_PX = 33.0  # of a legend's key with the room around it
 
 # Stand-ins, one for each part that a colour plays.
 INK, SOFT, LINE, RED, BAR, PALE, PAPER, BLUE = (f"#01020{k}" for k in range(1, 9))
@@ -79,6 +81,26 @@ def sheet(height_px: float) -> tuple[Sheet, Axes]:
     axes = made.add_subplot()
     axes.spines[["top", "right"]].set_visible(False)
     return made, axes
+
+
+def legend(axes: Axes, handles: Sequence[Any], labels: Sequence[str], *, lift: float = 0.0) -> float:
+    """Set the legend above the axes, in as many rows as its words need; returns its height in px.
+
+    Parameters
+    ----------
+    lift
+        Axes' heights that it stands above the axes.
+    """
+    if not labels:
+        return 0.0
+    widest = max(len(label) for label in labels) * LETTER_PX + KEY_PX
+    whole = sum(len(label) * LETTER_PX + KEY_PX for label in labels)
+    columns = len(labels) if whole <= WIDTH_PX - 50 else max(1, int((WIDTH_PX - 50) // widest))
+    axes.legend(
+        handles, labels, loc="lower left", bbox_to_anchor=(-0.01, 1.01 + lift), ncols=columns, frameon=False,
+        handlelength=1.5, columnspacing=1.2, borderpad=0, handletextpad=0.5, labelspacing=0.3,
+    )  # fmt: skip
+    return 14.0 * -(-len(labels) // columns)
 
 
 def svg_of(made: Sheet) -> str:

@@ -6,7 +6,7 @@ import numpy as np
 from matplotlib.figure import Figure as Sheet
 from matplotlib.ticker import MaxNLocator
 
-from harness.report.figures.canvas import BAR, INK, RED, SOFT, sheet
+from harness.report.figures.canvas import BAR, INK, RED, legend, sheet
 from harness.report.figures.drawings import Bursts, Gaps
 from harness.report.figures.scales import octave, short_count
 
@@ -31,7 +31,7 @@ def gaps(drawing: Gaps) -> Sheet:
     axes.set_xlabel("gap, bits")
     axes.set_ylabel("gaps")
     _counts(axes)
-    _legend(axes)
+    legend(axes, *axes.get_legend_handles_labels())
     return made
 
 
@@ -65,10 +65,3 @@ def bursts(drawing: Bursts) -> Sheet:
 def _counts(axes: object) -> None:
     axes.yaxis.set_major_locator(MaxNLocator(5, integer=True, min_n_ticks=1))  # type: ignore[attr-defined]
     axes.yaxis.set_major_formatter(lambda value, _at: short_count(value))  # type: ignore[attr-defined]
-
-
-def _legend(axes: object) -> None:
-    axes.legend(  # type: ignore[attr-defined]
-        loc="lower left", bbox_to_anchor=(-0.01, 1.01), ncols=3, frameon=False, handlelength=1.4,
-        columnspacing=1.2, borderpad=0, handletextpad=0.5, labelcolor=SOFT,
-    )  # fmt: skip

@@ -8,7 +8,7 @@ from matplotlib.axes import Axes
 from matplotlib.figure import Figure as Sheet
 from matplotlib.ticker import LogLocator, NullFormatter
 
-from harness.report.figures.canvas import BLUE, INK, LINE, PALE, PAPER, RED, SOFT, sheet
+from harness.report.figures.canvas import BLUE, INK, LINE, PALE, PAPER, RED, SOFT, legend, sheet
 from harness.report.figures.drawings import Curve, CurvePoint, CurveSeries
 from harness.report.figures.scales import power
 
@@ -19,7 +19,6 @@ _LINES = ("-", "--", ":", "-.")
 def curve(drawing: Curve) -> Sheet:
     """Draw BER on a scale of decades against what was stepped."""
     made, axes = sheet(300)
-    made.subplots_adjust(left=0.125, right=0.975, top=0.88, bottom=0.15)
     points = [p for s in drawing.series for p in s.points]
     lowest = _lowest(drawing, points)
     axes.set_yscale("log")
@@ -46,10 +45,11 @@ def curve(drawing: Curve) -> Sheet:
     axes.set_axisbelow(True)
     axes.set_xlabel(drawing.axis)
     axes.set_ylabel("BER")
-    handles, _labels = axes.get_legend_handles_labels()
-    if handles:
-        axes.legend(loc="lower left", bbox_to_anchor=(-0.01, 1.01), ncols=min(4, len(handles)), frameon=False,
-                    handlelength=2.0, columnspacing=1.2, borderpad=0, handletextpad=0.5)  # fmt: skip
+    handles, labels = axes.get_legend_handles_labels()
+    above = 18 + legend(axes, handles, labels)
+    height = 246 + 45 + above
+    made.set_figheight(height / 72)
+    made.subplots_adjust(left=0.125, right=0.975, top=1 - above / height, bottom=45 / height)
     return made
 
 

@@ -9,18 +9,16 @@ from matplotlib.lines import Line2D
 from matplotlib.patches import Patch
 from matplotlib.ticker import MaxNLocator, SymmetricalLogLocator
 
-from harness.report.figures.canvas import BAR, BLUE, INK, LINE, PALE, RED, SOFT, sheet
+from harness.report.figures.canvas import BAR, BLUE, INK, LINE, PALE, RED, SOFT, legend, sheet
 from harness.report.figures.drawings import Course, Floats
 from harness.report.figures.scales import short_count, time_ticks
 
-_MARKS = 12
 _WIDE = 30.0  # times the median: beyond it the scale is logarithmic
 
 
 def course(drawing: Course) -> Sheet:
     """Draw errors a second, with slips, outages and gaps marked above and behind."""
     made, axes = sheet(214)
-    made.subplots_adjust(left=0.115, right=0.98, top=0.86, bottom=0.2)
     whole = float(drawing.ends[-1])
     ceiling = _scale(axes, drawing)
     edges, mean, most = _steps(drawing)
@@ -35,8 +33,9 @@ def course(drawing: Course) -> Sheet:
     )
     _bands(axes, drawing, keys)
     if len(drawing.slips):
-        axes.plot(drawing.slips, np.full(len(drawing.slips), 1.03), marker="v", markersize=5, color=RED,
-                  linestyle="none", transform=axes.get_xaxis_transform(), clip_on=False)  # fmt: skip
+        height = np.full(len(drawing.slips), 0.85 if drawing.marks else 1.03)
+        axes.plot(drawing.slips, height, marker="v", markersize=5, color=RED, linestyle="none",
+                  transform=axes.get_xaxis_transform(), clip_on=False)  # fmt: skip
         keys.append(Line2D([], [], marker="v", color=RED, linestyle="none", markersize=5, label="slip"))
     _name_marks(axes, drawing)
     places, labels, unit = time_ticks(whole)
@@ -44,9 +43,11 @@ def course(drawing: Course) -> Sheet:
     axes.set_xlabel(f"time from the start, {unit}")
     axes.set_xlim(0, whole)
     axes.set_ylim(0, ceiling)
-    axes.legend(handles=keys, loc="lower left", bbox_to_anchor=(-0.01, 1.04 if not drawing.marks else 1.08),
-                ncols=len(keys), frameon=False, handlelength=1.2, columnspacing=1.2, borderpad=0,
-                handletextpad=0.5)  # fmt: skip
+    lift = 0.09 if drawing.marks else 0.02
+    above = 16 + 160 * lift + legend(axes, keys, [str(key.get_label()) for key in keys], lift=lift)
+    height = 160 + 44 + above
+    made.set_figheight(height / 72)
+    made.subplots_adjust(left=0.115, right=0.98, top=1 - above / height, bottom=44 / height)
     return made
 
 
@@ -117,12 +118,16 @@ def _joined(drawing: Course, where: np.ndarray) -> list[tuple[float, float]]:
 
 def _name_marks(axes: Axes, drawing: Course) -> None:
     """Name what begins where, as far as there is room."""
-    step = max(1, -(-len(drawing.marks) // _MARKS))
-    for number, (at, label) in enumerate(drawing.marks):
+    whole = float(drawing.ends[-1])
+    free_from = 0.0
+    for at, label in drawing.marks:
         axes.axvline(at, color=LINE, linewidth=0.7, zorder=0)
-        if number % step == 0:
-            axes.text(at, 1.015, _short(label), transform=axes.get_xaxis_transform(), color=INK, ha="left",
-                      va="bottom", fontsize="small", clip_on=False)  # fmt: skip
+        text = _short(label)
+        room = whole * (len(text) * 0.0145 + 0.012)
+        if at >= free_from and at + room <= whole * 1.02:
+            free_from = at + room
+            axes.text(at, 1.015, text, transform=axes.get_xaxis_transform(), color=INK, ha="left",
+                      va="bottom", fontsize="small")  # fmt: skip
 
 
 def _short(label: str) -> str:

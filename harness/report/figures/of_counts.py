@@ -14,12 +14,13 @@ from harness.report.material import Material, Measured
 from harness.report.phrases import number, on_bits, point_label, point_name
 
 _PATH = 2_000  # corners drawn, at most
+_BARS = 24  # of a ruler; a sweep with more points has its curve
 
 
 def ruler_of(material: Material) -> Figure | None:
-    """Lay the bounds on the ruler: one bar for each point; none where no bit was compared."""
+    """Lay the bounds on the ruler: one bar for each point; none without a compared bit, or for many points."""
     points = [m for m in material.points if m.assessed.tally.compared]
-    if not points:
+    if not points or len(points) > _BARS:
         return None
     target, flag = _mark(material)
     several = len(points) > 1

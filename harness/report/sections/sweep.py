@@ -12,6 +12,8 @@ from harness.report.material import Material
 from harness.report.phrases import digits, number, point_label
 from harness.report.sections.conditions import point_level
 
+_ROWS = 400  # of the table of points
+
 
 def required_sensitivity(material: Material) -> str:
     """Say which sensitivity is required; empty where none is."""
@@ -106,7 +108,7 @@ def _points(material: Material) -> Table:
     columns += [Column("verdict", False)] if judged else []
     slips = any(m.assessed.slip_count for m in material.points)
     rows = []
-    for m in material.points:
+    for m in material.points[:_ROWS]:
         p = m.assessed
         reference = " (reference)" if m.facts.get("reference") else ""
         row = [f"{m.point.values[n]:g}" if n in m.point.values else "" for n in names]
@@ -124,6 +126,8 @@ def _points(material: Material) -> Table:
         rows.append(tuple(row))
     sure = next((m.assessed.bounds.confidence for m in material.points if m.assessed.bounds), None)
     note = f"bounds two-sided at {percent(sure)} confidence, each point by itself" if sure else ""
+    if len(material.points) > _ROWS:
+        note += f"; {number(len(material.points) - _ROWS)} more points stand in `bitassay export --points`"
     return Table("", tuple(columns), tuple(rows), note)
 
 
