@@ -275,14 +275,26 @@ class Counter:
 
     def _begin(self, run_on: Place | None, place: Place, end: int) -> int:
         """Begin to compare where the evidence of a first place begins, or before; where it begins."""
-        evidence = gap(self._reference, None, place, self._stretch(end), self._weights).end
+        stretch = self._stretch(end)
+        evidence = gap(self._reference, None, place, stretch, self._weights).end
         outage = self._lost_at is not None or evidence - self._written >= rules.OUTAGE_BITS
+        if outage and self._lost_at is None:
+            without = gap(self._reference, place, place, stretch, self._weights)
+            if self._held(place, without.begin):
+                self._begin(run_on, place, without.begin)
+                return self._pass_over(place, place, without.begin, end)
         if outage:
             self._write_unaligned(evidence)
         self._announce(place, self._stretch(end))
         if outage:
             self._turn(run_on, place, after_outage=True)
         return evidence
+
+    def _held(self, place: Place, end: int) -> bool:
+        """Whether a place gathers enough evidence before a bit to have been held there."""
+        height = evidence_walk(self._reference, place, self._stretch(end), self._weights)
+        rise = np.maximum.accumulate(height) - height
+        return int(rise.max()) >= rules.RESUMED_AFTER * self._weights.scale
 
     def _pass_over(self, before: Place, after: Place, cut: int, end: int) -> int:
         """Go over from one place to the next, by a cut or an outage; where the next one's evidence begins."""

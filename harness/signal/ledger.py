@@ -59,6 +59,8 @@ class Ledger:
         self._closed: list[Segment] = []
         self._waiting: list[Event] = []  # events that belong to the next bit
         self._listed = 0  # positions since the last mark
+        self._both = np.empty(0, dtype=np.uint8)
+        self._both_counts = np.empty(0, dtype=np.uint8)
         self.at = 0  # bits decided so far
         self.compared = 0
 
@@ -103,6 +105,8 @@ class Ledger:
         bits: int,
         place: int,
         inverted: bool,
+        counts: NDArray[np.uint8] | None = None,
+        wrong: NDArray[np.intp] | None = None,
     ) -> None:
         """Write down bits that were compared with the pattern from a place on.
 
@@ -114,11 +118,19 @@ class Ledger:
             The stretch of their bits that is meant.
         place, inverted
             What the first of these bits was compared with.
+        counts
+            ONEs of `differs` in each word of 64 bits, if there are none outside the stretch: saves time.
+        wrong
+            Words of which `counts` is not 0, ascending, if they are known: saves more.
         """
         while bits:
             segment = self._segment(True, place, inverted)
             count = min(bits, self._room(True))
-            self._count(segment, received, differs, first, count)
+            if counts is not None and count == bits:
+                self._count_words(segment, received, differs, counts, wrong, self.at - first)
+            else:
+                self._count(segment, received, differs, first, count)
+                counts = None
             segment.received += count
             first += count
             bits -= count
@@ -199,6 +211,50 @@ class Ledger:
         if len(at):
             segment.positions.append(at + (self.at - head))
             segment.ones_lost.append(kinds)
+
+    def _count_words(
+        self,
+        segment: _Open,
+        received: NDArray[np.uint8],
+        differs: NDArray[np.uint8],
+        counts: NDArray[np.uint8],
+        words: NDArray[np.intp] | None,
+        offset: int,
+    ) -> None:
+        """The same as `_count` for whole words of which `offset` is the first bit: only those with errors."""
+        errors = int((counts if words is None else counts[words]).sum(dtype=np.int64))
+        if not errors:
+            return
+        room = self._limit - self._listed
+        segment.errors += errors
+        if room < errors:
+            segment.complete = False
+            if room <= 0 and 16 * errors > len(counts):
+                segment.ones_as_zeros += errors - self._count_both(received, differs)
+                return
+        if words is None:
+            words = np.flatnonzero(counts != 0)
+        rows = differs.reshape(-1, 8)[words].reshape(-1)
+        seen = received.reshape(-1, 8)[words].reshape(-1)
+        at = positions_of_ones(rows, self._order)
+        kinds = _zeros_at(seen, at, self._order)
+        segment.ones_as_zeros += int(np.count_nonzero(kinds))
+        if room < errors:
+            at, kinds = at[: max(room, 0)], kinds[: max(room, 0)]
+        self._listed += len(at)
+        if len(at):
+            segment.positions.append(words[at >> 6] * 64 + (at & 63) + offset)
+            segment.ones_lost.append(kinds)
+
+    def _count_both(self, received: NDArray[np.uint8], differs: NDArray[np.uint8]) -> int:
+        """Count the bits that are ONE in both, of whole words, without new memory."""
+        if len(self._both) < len(differs):
+            self._both = np.empty(len(differs) // 8, dtype=np.uint64).view(np.uint8)
+            self._both_counts = np.empty(len(differs) // 8, dtype=np.uint8)
+        both, counts = self._both[: len(differs)], self._both_counts[: len(differs) // 8]
+        np.bitwise_and(received, differs, out=both)
+        np.bitwise_count(both.view(np.uint64), out=counts)
+        return int(counts.sum(dtype=np.int64))
 
     def _close(self) -> None:
         segment, self._open = self._open, None

@@ -62,7 +62,7 @@ class Level:
 
 
 LEVELS = (
-    Level(64, 0.25, 0.18, 5.0, 5.5, False),
+    Level(24, 0.25, 0.18, 5.0, 5.5, False),
     Level(260, 0.275, 0.20, 7.0, 9.5, False),
     Level(530, 0.31, 0.25, 9.0, 14.5, False),
     Level(940, 0.36, 0.31, 8.0, 0.36 * 64, True),

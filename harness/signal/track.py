@@ -15,9 +15,12 @@ from numpy.typing import NDArray
 from harness.signal import rules
 from harness.signal.bits import unpack
 from harness.signal.ledger import Ledger
+from harness.signal.levels import Levels, next_level
+from harness.signal.patterns.readers import ROW_BYTES
 from harness.signal.places import Place, Reference
 
 _WORD_BYTES = rules.WORD_BITS // 8
+_ROW_WORDS = ROW_BYTES // _WORD_BYTES
 SLAB_BYTES = 1 << 18  # compared at once, so that the work stays in the processor's cache
 
 
@@ -46,6 +49,8 @@ class Scratch:
     def __init__(self) -> None:
         self.differs = np.empty(SLAB_BYTES // 8, dtype=np.uint64).view(np.uint8)
         self.counts = np.empty(SLAB_BYTES // 8, dtype=np.uint8)
+        self.zeros = np.zeros(SLAB_BYTES, dtype=np.uint8)
+        self.no_errors = np.zeros(SLAB_BYTES // 8, dtype=np.uint8)
 
 
 class Track:
@@ -118,29 +123,39 @@ class Track:
             return 0, None
         data = data[: words * _WORD_BYTES]
         differs = self._scratch.differs[: len(data)]
-        self._reader.xor_into(data, differs)
+        touched = self._reader.compare(data, differs)
         if self.next_word * rules.WORD_BITS < self.start:
             self._blank(differs)
+        if not len(touched) and self._watched == self.next_word:
+            self._scan_clean(data, ledger)
+            return words, None
         counts = self._scratch.counts[:words]
-        if np.bitwise_or.reduce(differs.view(np.uint64)):
-            np.bitwise_count(differs.view(np.uint64), out=counts)
-        else:
-            counts[:] = 0
+        wrong = _count_words(differs.view(np.uint64), touched, counts)
         slab_first = self.next_word
         judged = max(self._watched - slab_first, 0)
         still_open = self._counts[self._watched - self._first :] if not judged else self._counts[:0]
-        trouble = self._watch(
-            np.concatenate([still_open, counts]) if len(still_open) else counts[judged:], differs, slab_first
-        )
+        if len(still_open):
+            trouble = self._watch(np.concatenate([still_open, counts]), None, differs, slab_first)
+        else:
+            trouble = self._watch(counts[judged:], wrong if not judged else None, differs, slab_first)
         self._settle(counts, slab_first)
-        self._write(data, differs, counts, slab_first, ledger)
+        self._write(data, differs, counts, slab_first, wrong, ledger)
         return words, trouble
+
+    def _scan_clean(self, data: NDArray[np.uint8], ledger: Ledger) -> None:
+        """The same for words without errors while nothing is open: the usual case, made short."""
+        words = len(data) // _WORD_BYTES
+        slab_first = self.next_word
+        differs, counts = self._scratch.zeros[: len(data)], self._scratch.no_errors[:words]
+        self._pass_clean(words)
+        self._settle(counts, slab_first)
+        self._write(data, differs, counts, slab_first, np.empty(0, dtype=np.intp), ledger)
 
     def decide_all(self, ledger: Ledger, end: int) -> None:
         """Write down everything up to a bit that has been scanned."""
         self._sure = max(self._sure, end)
         empty = np.empty(0, dtype=np.uint8)
-        self._write(empty, empty, empty, self.next_word, ledger)
+        self._write(empty, empty, empty, self.next_word, None, ledger)
 
     def held(self) -> tuple[int, NDArray[np.uint8]]:
         """The first bit of what was received and is not wholly written, and the bytes from there on."""
@@ -162,53 +177,39 @@ class Track:
     # ---- trouble
 
     def _watch(
-        self, counts: NDArray[np.uint8], differs: NDArray[np.uint8], slab_first: int
+        self,
+        counts: NDArray[np.uint8],
+        wrong: NDArray[np.intp] | None,
+        differs: NDArray[np.uint8],
+        slab_first: int,
     ) -> Trouble | None:
         """Look through the words from `_watched` on; move it to where nothing is open any more."""
-        if not len(counts):
-            return None
-        if counts.max() <= rules.FEW_IN_WORD:
-            self._pass(counts)
-            return None
-        levels, drifts = self._levels(counts)
-        above = np.cumsum(counts - drifts)
-        lowest = np.minimum.accumulate(np.minimum(above, 0.0))
-        excess = above - lowest
-        edges = np.flatnonzero(np.diff(excess > 0, prepend=False))
-        first = self._watched
-        for at in range(0, len(edges), 2):
-            begin = int(edges[at])
-            closed = at + 1 < len(edges)
-            end = int(edges[at + 1]) + 1 if closed else len(counts)
-            level = int(levels[begin])
-            rule = rules.LEVELS[level]
-            if rule.by_word:
-                peak = excess[begin:end] >= rule.alarm
-                if not peak.any():
-                    if not closed:
-                        self._pass(counts[:begin])
-                        return None
-                    continue
-                noticed = begin + int(np.argmax(peak)) + 1
-                trouble = Trouble(
-                    max((first + begin) * rules.WORD_BITS, self._watch_from),
-                    (first + noticed) * rules.WORD_BITS,
-                    level,
-                )
-            else:
-                found = self._look_closer(first + begin - 1, first + end, level, differs, slab_first)
-                if found is None:
-                    if not closed:
-                        self._pass(counts[:begin])
-                        return None
-                    continue
-                trouble = found
-            self._pass(counts[:begin])
-            return trouble
+        some = np.flatnonzero(counts > rules.FEW_IN_WORD) if wrong is None else wrong
+        high = some[counts[some] > rules.FEW_IN_WORD]
+        if len(high):
+            levels, first = self._levels(counts), self._watched
+            for begin, end, closed in levels.stretches_above(high):
+                level = levels.at(begin)
+                if rules.LEVELS[level].by_word:
+                    drifts = levels.drifts(begin, end)
+                    trouble = self._excess_in_words(counts[begin:end] - drifts, first + begin, level)
+                else:
+                    trouble = self._excess_in_bits(first + begin - 1, first + end, level, differs, slab_first)
+                if trouble is not None or not closed:
+                    self._pass(counts[:begin])
+                    return trouble
         self._pass(counts)
         return None
 
-    def _look_closer(
+    def _excess_in_words(self, over: NDArray[np.float64], first: int, level: int) -> Trouble | None:
+        """Look for an excess of errors by whole words, of which `first` is the first."""
+        enough = np.cumsum(over) >= rules.LEVELS[level].alarm
+        if not enough.any():
+            return None
+        noticed = first + int(np.argmax(enough)) + 1
+        return Trouble(max(first * rules.WORD_BITS, self._watch_from), noticed * rules.WORD_BITS, level)
+
+    def _excess_in_bits(
         self, begin: int, end: int, level: int, differs: NDArray[np.uint8], slab_first: int
     ) -> Trouble | None:
         """Look for an excess of errors bit by bit in the words from `begin` up to `end`."""
@@ -216,8 +217,15 @@ class Track:
         split = max(begin, slab_first)
         held = self._differs[(begin - self._first) * _WORD_BYTES : (split - self._first) * _WORD_BYTES]
         new = differs[(split - slab_first) * _WORD_BYTES : (end - slab_first) * _WORD_BYTES]
-        wrong = unpack(np.concatenate([held, new]), self._order)
-        offset = begin * rules.WORD_BITS
+        size = 16 * _WORD_BYTES
+        while True:  # an excess is met soon, if at all
+            some = np.concatenate([held, new[:size]])
+            trouble = self._excess(unpack(some, self._order), begin * rules.WORD_BITS, level)
+            if trouble is not None or size >= len(new):
+                return trouble
+            size *= 4
+
+    def _excess(self, wrong: NDArray[np.uint8], offset: int, level: int) -> Trouble | None:
         if offset < self._watch_from:
             wrong = wrong[self._watch_from - offset :]
             offset = self._watch_from
@@ -232,28 +240,24 @@ class Track:
         begins = noticed + 1 - int(np.argmin(before[::-1]))
         return Trouble(offset + begins, offset + noticed + 1, level)
 
-    def _levels(self, counts: NDArray[np.uint8]) -> tuple[NDArray[np.int64], NDArray[np.float64]]:
-        """Index of the level and drift for each word from `_watched` on."""
-        size = rules.BLOCK_WORDS
-        left = size - self._watched % size  # words up to the end of the current block
-        levels = np.full(len(counts), self.level, dtype=np.int64)
-        if len(counts) > left:
-            ends = np.arange(left, len(counts), size)
-            running = np.concatenate([[0], np.cumsum(counts, dtype=np.int64)])
-            errors = running[ends] - running[np.maximum(ends - size, 0)]
-            after = np.searchsorted(rules.LEVEL_MOST, errors)
-            after[0] = self._next_level(
-                self.level, self._block_errors + int(errors[0]), self._block_words + left
-            )
-            levels[left:] = np.repeat(after, size)[: len(counts) - left]
-        return levels, rules.LEVEL_DRIFT[levels]
+    def _levels(self, counts: NDArray[np.uint8]) -> Levels:
+        """The levels that stand for the words from `_watched` on."""
+        offset = self._watched % rules.BLOCK_WORDS
+        return Levels(counts, offset, self.level, self._block_errors, self._block_words)
 
-    @staticmethod
-    def _next_level(level: int, errors: int, words: int) -> int:
-        """The level after a block, of which so many words were seen; a small part of a block says nothing."""
-        if words < rules.BLOCK_WORDS // 4:
-            return level
-        return rules.level_of(errors, words * rules.WORD_BITS)
+    def _pass_clean(self, words: int) -> None:
+        """The same as `_pass` for words without errors."""
+        size = rules.BLOCK_WORDS
+        left = size - self._watched % size
+        self._watched += words
+        if words < left:
+            self._block_words += words
+            return
+        if words >= left + size:
+            self.level = 0
+        else:
+            self.level = next_level(self.level, self._block_errors, self._block_words + left)
+        self._block_errors, self._block_words = 0, (words - left) % size
 
     def _pass(self, counts: NDArray[np.uint8]) -> None:
         """Move `_watched` on over words, with the level that blocks leave behind."""
@@ -271,7 +275,7 @@ class Track:
             words = self._block_words + left
         else:
             errors, words = int(counts[whole - size : whole].sum(dtype=np.int64)), size
-        self.level = self._next_level(self.level, errors, words)
+        self.level = next_level(self.level, errors, words)
         self._block_errors = int(counts[whole:].sum(dtype=np.int64))
         self._block_words = tail
 
@@ -281,6 +285,10 @@ class Track:
         """Move the decided bit to where enough evidence follows before `_watched`."""
         upto = min(self._watched, slab_first + len(counts))
         earliest = max(self._first, -(-self.start // rules.WORD_BITS))  # the first whole word
+        if upto == slab_first + len(counts) and len(counts) >= 4 and not counts[-4:].any():
+            # The usual case: two words without errors are enough, one is not.
+            self._sure = max(self._sure, (upto - 2) * rules.WORD_BITS)
+            return
         size = 64
         while upto > earliest:
             first = max(earliest, upto - size)
@@ -306,15 +314,21 @@ class Track:
         differs: NDArray[np.uint8],
         counts: NDArray[np.uint8],
         slab_first: int,
+        wrong: NDArray[np.intp] | None,
         ledger: Ledger,
     ) -> None:
         """Write down what is decided, from the held words and then from the slab; hold the rest."""
         slab_bit = slab_first * rules.WORD_BITS
         held_until = min(self._sure, slab_bit)
         if held_until > self._written:
-            self._compare(self._received, self._differs, self._first * rules.WORD_BITS, held_until, ledger)
+            self._compare(self._received, self._differs, self._counts, self._first, held_until, ledger)
         if self._sure > max(self._written, slab_bit):
-            self._compare(data, differs, slab_bit, self._sure, ledger)
+            if wrong is not None and not len(wrong):
+                at = self._written
+                ledger.clean(self._sure - at, self.place.anchor + at, self.place.inverted)
+                self._written = self._sure
+            else:
+                self._compare(data, differs, counts, slab_first, self._sure, ledger, wrong)
         keep = max(self._first, self._written // rules.WORD_BITS)
         if keep >= slab_first:
             lead = keep - slab_first
@@ -332,16 +346,42 @@ class Track:
         self,
         received: NDArray[np.uint8],
         differs: NDArray[np.uint8],
-        first_bit: int,
+        counts: NDArray[np.uint8],
+        first_word: int,
         until: int,
         ledger: Ledger,
+        wrong: NDArray[np.intp] | None = None,
     ) -> None:
+        skip = self._written // rules.WORD_BITS - first_word
+        begin = self._written - (first_word + skip) * rules.WORD_BITS
+        whole = until % rules.WORD_BITS == 0
+        words = -(-until // rules.WORD_BITS) - first_word
+        # Bits before the track's start are blank in `differs` and `counts`.
         ledger.compare(
-            received,
-            differs,
-            self._written - first_bit,
+            received[skip * _WORD_BYTES : words * _WORD_BYTES],
+            differs[skip * _WORD_BYTES : words * _WORD_BYTES],
+            begin,
             until - self._written,
             self.place.anchor + self._written,
             self.place.inverted,
+            counts[skip:words] if whole and (not begin or self._written == self.start) else None,
+            None if wrong is None else wrong[(wrong >= skip) & (wrong < words)] - skip,
         )
         self._written = until
+
+
+def _count_words(
+    differs: NDArray[np.uint64], touched: NDArray[np.intp], counts: NDArray[np.uint8]
+) -> NDArray[np.intp] | None:
+    """Count the ONEs of each word, in the rows that have any; the words with any, where they are few."""
+    rows = -(-len(differs) // _ROW_WORDS)
+    if 2 * len(touched) > rows:
+        np.bitwise_count(differs, out=counts)
+        return None
+    counts[:] = 0
+    words = [np.empty(0, dtype=np.intp)]
+    for row in touched.tolist():
+        part = slice(row * _ROW_WORDS, (row + 1) * _ROW_WORDS)
+        np.bitwise_count(differs[part], out=counts[part])
+        words.append(np.flatnonzero(counts[part] != 0) + part.start)
+    return np.concatenate(words)
