@@ -57,16 +57,16 @@ def dispersion_test(positions: Counts, bits: int, seed: int, blocks: int | None 
     counts = np.bincount(block_of(positions, bits, used), minlength=used)
     mean = errors / used
     squares = _sum_of_squares(counts)
-    index = (squares - errors * mean) / mean / (used - 1)
+    index = float((squares - errors * mean) / mean / (used - 1))
     if errors > 20 * used and _far_beyond(index, used):
         # So far out that no simulation would come near: say what the full simulation would have said.
-        return Dispersion(float(index), used, 1 / (_SIMULATIONS + 1))
+        return Dispersion(index, used, 1 / (_SIMULATIONS + 1))
 
     def simulate(generator: np.random.RandomState, runs: int) -> NDArray[np.float64]:
         return _sum_of_squares(_spread(generator, errors, used, runs))
 
     p_value = _simulated_p(simulate, squares, seed, errors if errors <= 20 * used else 20 * used)
-    return Dispersion(float(index), used, p_value)
+    return Dispersion(index, used, p_value)
 
 
 def gap_test(positions: Counts, bits: int) -> tuple[float, int]:
@@ -120,7 +120,8 @@ def paired_blocks_test(positions: Counts, bits: int, seed: int) -> float:
 
     def simulate(generator: np.random.RandomState, runs: int) -> NDArray[np.float64]:
         left = generator.binomial(both, 0.5, size=(runs, len(both)))
-        return np.sum((2.0 * left - both) ** 2, axis=1)
+        squares: NDArray[np.float64] = np.sum((2.0 * left - both) ** 2, axis=1)
+        return squares
 
     return _simulated_p(simulate, observed, seed, len(both))
 
