@@ -1,19 +1,22 @@
-"""A sweep as a curve: its points in order of the condition, the fit, the sensitivity, drift and hysteresis."""
+"""A sweep or a search as a curve: points in order of the condition, fit, sensitivity, drift and hysteresis."""
 
 from __future__ import annotations
 
 import math
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
+from statistics import NormalDist
 from typing import Any
 
 from harness.assess.assessment import PointAssessment
 from harness.assess.words import percent
 from harness.record import Verdict
+from harness.statistics.bracket import Bracket, bracket_of
 from harness.statistics.comparing import compare_counts
 from harness.statistics.curve import CurveFit, CurvePoint, fit_curve
 
 DEFAULT_CONFIDENCE = 0.95
+RISES = ("attenuation", "loss")  # quantities with which the BER rises
 NOTICEABLE = 0.99  # confidence at which drift and hysteresis are called
 
 
@@ -29,8 +32,10 @@ class Curve:
     target_ber: float | None
     level_at_value: float | None = None  # dBm at the device's port at the sensitivity
     level_uncertainty_db: float | None = None  # standard uncertainty, of the set-up
+    level_bounds: tuple[float | None, float | None] = (None, None)  # dBm, the set-up's uncertainty included
     theory_db: float | None = None  # how far the sensitivity lies from the textbook curve; positive: worse
     remarks: tuple[str, ...] = field(default=())
+    bracket: Bracket | None = None  # of a search: what is sure without a curve
 
     def sensitivity(self) -> dict[str, Any] | None:
         """JSON of the sensitivity; None where no target was set."""
@@ -49,15 +54,24 @@ class Curve:
             "floor": self.fit.floor,
             "level_dbm": self.level_at_value,
             "level_uncertainty_db": self.level_uncertainty_db,
+            "level_lower_dbm": self.level_bounds[0],
+            "level_upper_dbm": self.level_bounds[1],
             "theory_distance_db": self.theory_db,
             "words": self.fit.words,
             **({"at": dict(self.at)} if self.at else {}),
+            **self._of_the_search(),
         }
+
+    def _of_the_search(self) -> dict[str, Any]:
+        if self.bracket is None:
+            return {}
+        sure = {"under": self.bracket.under, "over": self.bracket.over, "confidence": self.bracket.confidence}
+        return {"bits": sum(p.tally.received for p in self.points), "without_a_curve": sure}
 
 
 def curves_of(settings: Mapping[str, Any], points: Sequence[PointAssessment]) -> list[Curve]:
     """Sort a sweep's points into curves along its first axis, one for each setting of the others."""
-    sweep = settings.get("sweep") or {}
+    sweep = settings.get("sweep") or settings.get("search") or {}
     axes = sweep.get("axes") or [{"instrument": sweep.get("instrument")}]
     name = axes[0]["instrument"]
     if not name:
@@ -85,8 +99,13 @@ def _curve(
     target = sweep.get("sensitivity_ber")
     unit = str((points[0].facts.get("units") or {}).get(name, ""))
     confidence = float((settings.get("requirement") or {}).get("confidence") or DEFAULT_CONFIDENCE)
-    fit = None
-    if target is not None:
+    fit = bracket = None
+    search = settings.get("search")
+    if search:
+        target, confidence = search["ber"], float(search["confidence"])
+        rising = ((settings.get("instruments") or {}).get(name) or {}).get("quantity") in RISES
+        fit, bracket = _searched([_counted(p, name) for p in points], float(target), confidence, rising, unit)
+    elif target is not None:
         fit = fit_curve([_counted(p, name) for p in points], float(target), confidence, unit=unit or "dB")
     level, uncertainty = _level(points, name, fit.value if fit else None)
     return Curve(
@@ -98,9 +117,23 @@ def _curve(
         target_ber=target,
         level_at_value=level,
         level_uncertainty_db=uncertainty,
+        level_bounds=_level_bounds(points, name, fit) if fit else (None, None),
         theory_db=_theory_distance(sweep.get("theory"), fit),
-        remarks=(*_drift(points, name), *_hysteresis(points, name)),
+        bracket=bracket,
+        remarks=() if search else (*_drift(points, name), *_hysteresis(points, name)),
     )
+
+
+def _searched(
+    points: Sequence[CurvePoint], target: float, confidence: float, rising: bool, unit: str
+) -> tuple[CurveFit, Bracket]:
+    """Fit the points of a search; where no curve fits, what is sure without one bounds the crossing."""
+    fit = fit_curve(points, target, confidence, rising, unit=unit or "dB")
+    bracket = bracket_of(points, target, confidence, rising)
+    if fit.fitted:
+        return fit, bracket
+    lower, upper = (bracket.under, bracket.over) if rising else (bracket.over, bracket.under)
+    return replace(fit, lower=lower, upper=upper), bracket
 
 
 def _counted(point: PointAssessment, name: str) -> CurvePoint:
@@ -131,6 +164,23 @@ def _level(
     # Beyond the points the level runs on dB for dB, in the direction that the points show.
     falls = len(known) < 2 or known[-1][1] <= known[0][1]
     return near[1] + (near[0] - value if falls else value - near[0]), near[2]
+
+
+def _level_bounds(
+    points: Sequence[PointAssessment], name: str, fit: CurveFit
+) -> tuple[float | None, float | None]:
+    """Bounds on the sensitivity in dBm: those of the fit, and the set-up's uncertainty, added by squares."""
+    level, uncertainty = _level(points, name, fit.value)
+    if level is None or uncertainty is None:
+        return None, None
+    expanded = NormalDist().inv_cdf(0.5 + fit.confidence / 2) * uncertainty
+    ends = [_level(points, name, bound)[0] for bound in (fit.lower, fit.upper)]
+    low = min((end for end in ends if end is not None and end <= level), default=None)
+    high = max((end for end in ends if end is not None and end >= level), default=None)
+    return (
+        None if low is None else level - math.hypot(level - low, expanded),
+        None if high is None else level + math.hypot(high - level, expanded),
+    )
 
 
 def _theory_distance(mapping: Mapping[str, Any] | None, fit: CurveFit | None) -> float | None:

@@ -45,8 +45,8 @@ class Requirement:
 def requirement_at(
     requirement: Requirement | None, settings: Mapping[str, Any], values: Mapping[str, float]
 ) -> Requirement | None:
-    """Give the requirement where it holds at a point: in a plain run always, in a sweep where it is named."""
-    if requirement is None or not settings.get("sweep"):
+    """Give the requirement where it holds at a point: in a plain run always, else where it is named."""
+    if requirement is None or not (settings.get("sweep") or settings.get("search")):
         return requirement
     at = (settings.get("requirement") or {}).get("at") or {}
     named = bool(at) and all(values.get(name) == value for name, value in at.items())

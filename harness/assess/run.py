@@ -130,8 +130,14 @@ def _summed(first: PointAssessment, points: list[PointAssessment]) -> PointAsses
 def _common_remarks(points: list[PointAssessment], curves: list[Any]) -> tuple[str, ...]:
     """Collect what has to be said of a sweep as a whole: calibrations that ran out, the fit, drift, hysteresis."""
     overdue = dict.fromkeys(words for point in points for words in point.facts.get("overdue", ()))
-    fits = [curve.fit.words for curve in curves if curve.fit is not None and curve.fit.words]
-    return (*overdue, *fits, *(remark for curve in curves for remark in curve.remarks))
+    fits = [_beyond_the_value(curve.fit) for curve in curves if curve.fit is not None]
+    return (*overdue, *filter(None, fits), *(remark for curve in curves for remark in curve.remarks))
+
+
+def _beyond_the_value(fit: Any) -> str:
+    """Give a fit's words, without the sentence with the value, which stands elsewhere."""
+    words = str(fit.words)
+    return words if fit.value is None else words.partition(" %).")[2].strip()
 
 
 def _together(points: list[PointAssessment]) -> tuple[Verdict | None, list[str]]:

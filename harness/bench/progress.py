@@ -29,7 +29,8 @@ class Progress:
     waiting_writes: int = 0
     outlook: Outlook = field(default_factory=Outlook)
     number: int = 0  # of the visit under way
-    visits: int = 1
+    visits: int = 1  # in all; 0: not known beforehand, as in a search
+    seeking: str = ""  # what the visit under way is for, in a search
     units: Mapping[str, str] = field(default_factory=dict)  # instrument -> unit
     done: tuple[PointAssessment, ...] = ()  # a sweep's points so far
     sensitivity_ber: float | None = None

@@ -22,8 +22,9 @@ from harness.bench.progress import Hooks, Live, Progress, RunResult
 from harness.bench.recorder import Recorder
 from harness.bench.resumption import instruments_of, points_done
 from harness.bench.schedule import Schedule
+from harness.bench.search import route_of
 from harness.bench.session import Links, bench_host, bench_versions, flush, status_of, ways_of
-from harness.bench.visits import Had, Visit, had_by, visits_of, what_is_left
+from harness.bench.visits import Had, Visit, had_by, what_is_left
 from harness.profile import Profile
 from harness.record import EndedBy, Event, Run, Second, Sitting, Tally
 from harness.store import Store
@@ -64,7 +65,7 @@ class BenchRun:
         self._requirement = requirement_of(self._settings)
         self._links = Links(profile.need_link(), hooks.interrupted)
         self._ways = ways_of(profile, self._links)
-        self._visits = visits_of(profile)
+        self._route = route_of(profile, cut, len(self._ways))
         self._recorder = Recorder(store)
         self._started = time.time_ns()
         self._next_tick = 0.0
@@ -77,8 +78,8 @@ class BenchRun:
         self._next_place = 0
         self._sitting = len(cut.sittings) if cut else 0
         self._key = cut.key if cut else ""
-        self._now: Visit = self._visits[0]
-        self._schedule = Schedule(profile, len(self._visits))
+        self._now = Visit(0)
+        self._schedule = Schedule(profile)
 
     def run(self) -> RunResult:
         """Measure; whatever goes wrong on the bench ends in the record and in `fault`."""
@@ -146,13 +147,6 @@ class BenchRun:
             return None
         return had_by(point, requirement_at(self._requirement, self._settings, point.values))
 
-    def _is_done(self, visit: Visit) -> bool:
-        if self._cut is None:
-            return False
-        numbers = [self._point(visit, way) for way in range(len(self._ways))]
-        ended = {p.index for p in self._cut.points if p.ended_by not in (None, "interrupted", "fault")}
-        return all(number in ended for number in numbers)
-
     def _commit(self, number: int, live: Live | None) -> Commit:
         key = self._key
 
@@ -178,17 +172,17 @@ class BenchRun:
         """Visit all points; gives the fault that ended it, and what ended it."""
         fault: tuple[str, str] | None = None
         ended_by: EndedBy = "bits"
-        left = [visit for visit in self._visits if not self._is_done(visit)]
-        if not left:
+        first = self._route.next(self._done)
+        if first is None:
             return None, "bits"
-        self._now = left[0]
+        self._now = first
         try:
             with self._conditions.opened():
                 if self._cut is not None:
                     self._conditions.recognise(instruments_of(self._cut))
-                facts = self._set(left[0])
+                facts = self._set(first)
                 with self._links.opened():
-                    ended_by, failed = self._visit_all(left, facts)
+                    ended_by, failed = self._visit_all(first, facts)
                     if failed is not None:
                         fault = (failed.what, failed.advice)
         except Interrupted:
@@ -224,29 +218,24 @@ class BenchRun:
             facts["overdue"] = overdue
         return facts
 
-    def _visit_all(self, left: list[Visit], facts: dict[str, Any]) -> tuple[EndedBy, DriverError | None]:
-        sweep = self._profile.sweep
-        self._pause(sweep.warm_up_s if sweep else 0.0)
-        hopeless = 0
+    def _visit_all(self, first: Visit, facts: dict[str, Any]) -> tuple[EndedBy, DriverError | None]:
+        steps = self._profile.sweep or self._profile.search
+        self._pause(steps.warm_up_s if steps else 0.0)
+        visit: Visit | None = first
         ended_by: EndedBy = "bits"
-        for place, visit in enumerate(left):
+        while visit is not None:
             if self._hooks.interrupted.is_set():
                 return "interrupted", None
-            if place:
+            if visit is not first:
                 facts = self._set(visit)
-            self._pause(sweep.settle_s if sweep else 0.0)
-            outcomes = self._measure(visit, facts, left_points=len(left) - place)
+            self._pause(steps.settle_s if steps else 0.0)
+            outcomes = self._measure(visit, facts)
             ended_by, fault = worst(outcomes), next((o.fault for o in outcomes if o.fault), None)
             if ended_by in ("interrupted", "fault"):
                 return ended_by, fault
-            hopeless = 0 if any(o.tally.compared for o in outcomes) else hopeless + 1
-            if sweep and sweep.guard and hopeless >= sweep.guard and place + 1 < len(left):
-                text = (
-                    f"{hopeless} points in a row were never aligned: the climb ends here, "
-                    f"{len(left) - place - 1} points are left out"
-                )
-                self._note(self._point(visit, 0), [Event("guard", None, text, time.time_ns())])
-                break
+            here = self._point(visit, 0)
+            visit = self._route.next(self._done)
+            self._note(here, self._route.take_events())
         return ended_by, None
 
     def _pause(self, seconds: float) -> None:
@@ -264,7 +253,7 @@ class BenchRun:
                 lambda store: store.begin_point(key, number, {}, 0)
             )  # it goes on, facts and all
             return
-        about = {**self._ways[way].facts(self._links), **facts}
+        about = {**self._ways[way].facts(self._links), **facts, **visit.facts}
         values = dict(visit.values)
         if self._earlier:
             about["earlier_tries"] = self._earlier[-TRIES_KEPT:]
@@ -276,7 +265,7 @@ class BenchRun:
         now = time.time_ns()
         self._recorder.ask(lambda store: store.begin_point(key, number, values, now, about))
 
-    def _measure(self, visit: Visit, facts: dict[str, Any], left_points: int) -> list[Outcome]:
+    def _measure(self, visit: Visit, facts: dict[str, Any]) -> list[Outcome]:
         """Measure one point in all its directions."""
         for link in self._links.all:
             flush(link, self._profile.need_link().drain_s)
@@ -292,7 +281,7 @@ class BenchRun:
             if had is not None:  # the screen goes on from what the point had
                 live.take(list(had.point.seconds), list(had.point.events))
             lives.append(live)
-            measurements.append(self._measurement(visit, way, had, lives, left_points))
+            measurements.append(self._measurement(visit, way, had, lives))
             self._note(number, self._resumed(had))
         self._note(self._point(visit, 0), [*self._conditions.take_events(), *self._links.take_events()])
         outcomes = side_by_side(measurements)
@@ -336,16 +325,14 @@ class BenchRun:
             facts=facts,
         )
 
-    def _measurement(
-        self, visit: Visit, way: int, had: Had | None, lives: list[Live], left_points: int
-    ) -> Measurement:
+    def _measurement(self, visit: Visit, way: int, had: Had | None, lives: list[Live]) -> Measurement:
         link, chosen = self._profile.need_link(), self._ways[way]
         requirement = requirement_at(self._requirement, self._settings, visit.values)
         plan = PlanFeed(requirement.make_plan(), requirement) if requirement else None
         if had is not None and had.plan is not None:
             plan = had.plan
-        stop = what_is_left(self._profile, had, sends=chosen.sending is not None)
-        stop = self._schedule.share(stop, left_points, self._done)
+        stop = what_is_left(self._profile, visit, had, sends=chosen.sending is not None)
+        stop = self._schedule.share(stop, visit, self._route.ahead, self._done, planned=plan is not None)
         setup = Setup(
             pattern=chosen.pattern,
             bit_order=chosen.bit_order,
@@ -362,7 +349,7 @@ class BenchRun:
             index_step=len(self._ways),
             base_bit=had.received if had else 0,
             base_compared=had.compared if had else 0,
-            silence_is_a_result=self._profile.sweep is not None,
+            silence_is_a_result=self._profile.sweep is not None or self._profile.search is not None,
         )
         return Measurement(
             chosen.sending,
@@ -380,7 +367,7 @@ class BenchRun:
         if now < self._next_tick:
             return
         self._next_tick = now + TICK_S
-        sweep = self._profile.sweep
+        sweep, search = self._profile.sweep, self._profile.search
         self._hooks.tick(
             Progress(
                 run=self._key,
@@ -393,11 +380,12 @@ class BenchRun:
                 waiting_writes=self._recorder.waiting,
                 outlook=lives[0].outlook(),
                 number=self._now.number,
-                visits=len(self._visits),
+                visits=self._route.total,
+                seeking=self._route.words,
                 units=self._conditions.units(),
                 done=tuple(self._done),
-                sensitivity_ber=sweep.sensitivity_ber if sweep else None,
-                until=self._schedule.until(self._done, len(self._visits)),
+                sensitivity_ber=search.ber if search else sweep.sensitivity_ber if sweep else None,
+                until=self._schedule.until(self._done, len(self._route.ahead)) if sweep else None,
             )
         )
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
+from typing import Any, TypeVar
 
 from harness.assess.accumulate import accumulator_for
 from harness.assess.feed import PlanFeed
@@ -34,10 +35,15 @@ class Visit:
     number: int
     values: Mapping[str, float] = field(default_factory=dict)
     reference: bool = False
+    stop: StopRules | None = None  # beside the profile's; whichever comes first
+    facts: Mapping[str, Any] = field(default_factory=dict)  # kept with the point
 
 
 def visits_of(profile: Profile) -> list[Visit]:
-    """List what a profile visits: its sweep's points, or one point without settings."""
+    """List what a profile visits: its sweep's points, a search's two ends, or one point without settings."""
+    if profile.search is not None:
+        search = profile.search
+        return [Visit(k, {search.instrument: end}) for k, end in enumerate((search.low, search.high))]
     if profile.sweep is None:
         return [Visit(0)]
     sweep = profile.sweep
@@ -67,14 +73,24 @@ def had_by(point: Point, requirement: Requirement | None) -> Had:
     )
 
 
-def what_is_left(profile: Profile, had: Had | None, *, sends: bool) -> StopRules:
+def what_is_left(profile: Profile, visit: Visit, had: Had | None, *, sends: bool) -> StopRules:
     """Give the stop rules less what a cut point had already."""
-    stop = profile.stop
+    stop, own = profile.stop, visit.stop or StopRules()
+    bits = _first(stop.bits, own.bits)
+    seconds = _first(stop.seconds, own.seconds)
+    errors = _first(stop.errors, own.errors)
     if had is None:
-        return StopRules(stop.bits, stop.seconds, stop.errors)
-    bits = stop.bits
+        return StopRules(bits, seconds, errors)
     if bits is not None:
         bits = max(8, bits - had.received - (had.lost if sends else 0))
-    seconds = None if stop.seconds is None else max(0.001, stop.seconds - had.duration_s)
-    errors = None if stop.errors is None else max(1, stop.errors - had.errors)
+    seconds = None if seconds is None else max(0.001, seconds - had.duration_s)
+    errors = None if errors is None else max(1, errors - had.errors)
     return StopRules(bits, seconds, errors)
+
+
+Limit = TypeVar("Limit", int, float)
+
+
+def _first(a: Limit | None, b: Limit | None) -> Limit | None:
+    limits = [limit for limit in (a, b) if limit is not None]
+    return min(limits) if limits else None

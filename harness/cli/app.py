@@ -104,7 +104,7 @@ def sweep(
     quiet: QuietOption = False,
     log: LogOption = None,
 ) -> int:
-    """Carry out a run with several points: conditions are stepped, each point is measured.
+    """Carry out a run with several points: a sweep steps through them, a search chooses them.
 
     Example: bitassay sweep profiles/sweep-loopback.toml
     """

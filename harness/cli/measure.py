@@ -135,18 +135,23 @@ def measure(profile: str, overrides: Sequence[str], manner: Manner) -> int:
     from harness.profile import load_profile
 
     loaded = load_profile(Path(profile), overrides)
-    if loaded.sweep is not None:
-        raise UserError(f"{profile} has a [sweep]: it is more than one point", "use `bitassay sweep` for it")
+    if loaded.sweep is not None or loaded.search is not None:
+        section = "sweep" if loaded.sweep is not None else "search"
+        raise UserError(
+            f"{profile} has a [{section}]: it is more than one point", "use `bitassay sweep` for it"
+        )
     return carry_out(loaded, "measure", manner)
 
 
 def sweep(profile: str, overrides: Sequence[str], manner: Manner) -> int:
-    """Carry out a sweep and print its result."""
+    """Carry out a sweep or a search and print its result."""
     from harness.profile import load_profile
 
     loaded = load_profile(Path(profile), overrides)
-    if loaded.sweep is None:
-        raise UserError(f"{profile} has no [sweep]", "use `bitassay measure` for one point, or add a [sweep]")
+    if loaded.sweep is None and loaded.search is None:
+        raise UserError(
+            f"{profile} has no [sweep] and no [search]", "use `bitassay measure` for one point, or add one"
+        )
     return carry_out(loaded, "sweep", manner)
 
 

@@ -152,7 +152,8 @@ def progress_line(progress: Progress, now_ns: int, events_said: int = 0) -> str:
 
     p = progress.point
     t = p.tally
-    point = f"point {progress.number + 1} of {progress.visits}, " if progress.visits > 1 else ""
+    of_all = f" of {progress.visits}" if progress.visits else ""
+    point = f"point {progress.number + 1}{of_all}, " if progress.visits != 1 else ""
     parts = [
         f"{point}{duration(round(progress.elapsed_s))}",
         f"{count(t.errors, 'error')} in {count(t.compared, 'bit')}",

@@ -12,6 +12,9 @@ from .problems import ProfileError, nearest
 from .profile import Profile
 from .requirement import PatternChoice
 
+RISES = ("attenuation", "loss")  # the more of it, the more errors
+FALLS = ("level", "power", "gain", "ebn0", "snr")
+
 
 def check(profile: Profile) -> None:
     """Check the profile as a whole.
@@ -141,6 +144,21 @@ def _within(profile: Profile, name: str, values: tuple[float, ...], path: str) -
             )
 
 
+def _searched(profile: Profile, name: str) -> None:
+    options = profile.instruments[name].options
+    quantity, unit = getattr(options, "quantity", ""), getattr(options, "unit", "")
+    if quantity not in (*RISES, *FALLS) or unit not in ("dB", "dBm", "dBW"):
+        raise ProfileError(
+            f"a search goes along decibels, and {name} sets {quantity or 'something'} in {unit or 'no unit'}",
+            "search over an attenuation, a level, a gain or a signal-to-noise ratio; sweep over the rest",
+        )
+    if profile.link is not None and profile.link.duplex:
+        raise ProfileError(
+            "a search looks at one direction, and link.duplex measures both",
+            "set link.duplex = false, and search once for each direction",
+        )
+
+
 def _level(profile: Profile, name: str, source_dbm: float | None) -> None:
     """Only what is known to take away from a level, or to set one in dBm, can be reckoned with."""
     options = _known_instrument(profile, name, "level.instrument").options
@@ -170,6 +188,7 @@ def _conditions(profile: Profile) -> None:
             _within(profile, sweep.all_axes()[0].instrument, (sweep.reference,), "sweep.reference")
     if search is not None:
         _within(profile, search.instrument, (search.low, search.high), "search")
+        _searched(profile, search.instrument)
     if profile.level is not None and profile.level.instrument is not None:
         _level(profile, profile.level.instrument, profile.level.source_dbm)
     if profile.correction is not None:

@@ -186,6 +186,12 @@ class Search(ProfileSection):
     """Most bits in all."""
     max_seconds: Positive | None = None
     """Longest time in all."""
+    step: Positive | None = None
+    """The instrument is set in steps of this, from `low` on; left out: a power of ten under the resolution."""
+    warm_up_s: NotNegative = 0.0
+    """Wait before the first point."""
+    settle_s: NotNegative = 0.0
+    """Wait at each point, beyond the instrument's own settling, before bits count."""
 
     @model_validator(mode="after")
     def _a_stretch(self) -> Search:

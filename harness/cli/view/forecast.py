@@ -63,7 +63,7 @@ def until(seconds: float, now_ns: int) -> str:
 
 def elapsed_s(progress: Progress, now_ns: int) -> float:
     """Say how long the point under way has been going on, s."""
-    return progress.elapsed_s if progress.visits < 2 else max(0.0, (now_ns - progress.point.started) / 1e9)
+    return progress.elapsed_s if progress.visits == 1 else max(0.0, (now_ns - progress.point.started) / 1e9)
 
 
 def still_to_do(progress: Progress, now_ns: int, *, behind_s: int = 0) -> list[str]:

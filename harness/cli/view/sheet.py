@@ -287,6 +287,8 @@ def _why(a: Assessment) -> str:
         return fault
     if a.status in ("cut", "running"):
         return NOT_ENDED[a.status]
+    if found := next((e.text for e in reversed(a.whole.events) if e.kind == "search"), ""):
+        return found
     return ENDED_BY.get(a.ended_by or "", "") or NOT_ENDED.get(a.status, "")
 
 
@@ -302,22 +304,21 @@ def _foot(run: str) -> str:
 
 
 def _point_under_way(progress: Progress) -> str:
-    if progress.visits < 2:
+    if progress.visits == 1:
         return ""
     p = progress.point
     units = progress.units
     values = ", ".join(f"{name} {value:g} {units.get(name, '')}".strip() for name, value in p.values.items())
-    return (
-        f"{progress.number + 1} of {progress.visits}: {values}"
-        if values
-        else f"{progress.number + 1} of {progress.visits}"
-    )
+    place = f"{progress.number + 1} of {progress.visits}" if progress.visits else f"{progress.number + 1}"
+    return f"{place}: {values}" if values else place
 
 
 def _to_do(progress: Progress, now_ns: int, behind_s: int) -> list[str]:
     lines = still_to_do(progress, now_ns, behind_s=behind_s)
-    if progress.visits < 2:
+    if progress.visits == 1:
         return lines
+    if not progress.visits:
+        return [*lines[:1], progress.seeking]
     left = progress.visits - progress.number - 1
     words = f"then {count(left, 'more point')}" if left else "this is the last point"
     if progress.until is not None:
