@@ -43,7 +43,7 @@ def check(profile: str, overrides: Sequence[str], store: str | None, *, as_json:
         report = Check(loaded, lock_folder(store_url(store)), ending.event, tell).run()
     if as_json:
         print_json(report.to_json())
-    else:
+    elif ending.status is None:
         print()
         print(
             "ready: an unattended run may start" if report.ready else "NOT ready: mend what is not ok first"

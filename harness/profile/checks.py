@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from pathlib import Path
 from typing import Any
 
 from drivers.instruments.condition import QUANTITIES
@@ -54,9 +55,12 @@ def _pattern(choice: PatternChoice, path: str) -> Any:
     from harness.signal.patterns import PatternError, parse_pattern
 
     try:
-        return parse_pattern(choice.name)
+        return parse_pattern(choice.name, read=lambda file: Path(file).read_bytes())
     except PatternError as error:
         raise ProfileError(f"{path}.name: {error.what}", error.advice) from None
+    except OSError as error:
+        why = (error.strerror or str(error)).lower()
+        raise ProfileError(f"{path}.name: {choice.name} cannot be read: {why}", "check the path") from None
 
 
 def _no_transparent(patterns: list[Any], section: str) -> None:

@@ -158,3 +158,11 @@ def test_text_and_digest_are_those_of_the_file(tmp_path: Path) -> None:
 def test_a_profile_is_frozen() -> None:
     with pytest.raises(ValueError, match="frozen"):
         parse_profile(EVERYTHING).title = "another"  # type: ignore[misc]
+
+
+def test_a_pattern_from_a_file_is_read_and_a_missing_one_is_named(tmp_path: Path) -> None:
+    (tmp_path / "reference.bin").write_bytes(bytes(range(200)))
+    text = '[link]\ndriver = "loopback"\n[pattern]\nname = "file:{}"\n'
+    parse_profile(text.format(tmp_path / "reference.bin"))
+    with pytest.raises(ProfileError, match=r"missing\.bin cannot be read"):
+        parse_profile(text.format(tmp_path / "missing.bin"))

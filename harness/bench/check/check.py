@@ -10,7 +10,7 @@ import time
 from collections.abc import Callable, Iterator
 from pathlib import Path
 
-from drivers.contract import DriverError, Instrument
+from drivers.contract import DriverError, Instrument, Interrupted
 from harness.assess.words import duration, rate
 from harness.bench.check.findings import Finding, Outcome, Report
 from harness.bench.check.forecast import forecast, stop_problem
@@ -65,7 +65,8 @@ class Check:
         ahead = forecast(self._profile, self._links.rate_bps).to_json()
         if all(finding.outcome != "bad" for finding in found):
             take(self._at_the_bench())
-        take(self._time_and_disk(ahead))
+        if not self._cancel.is_set():
+            take(self._time_and_disk(ahead))
         return Report(tuple(found), self._delay_s, ahead)
 
     # -- without touching anything
@@ -122,6 +123,8 @@ class Check:
                             yield finding
                     if well:
                         yield from self._isolation(conditions)
+        except Interrupted:
+            yield Finding("bench", "bad", "interrupted: the rest was not looked at", cause="interrupted")
         except DriverError as error:
             yield Finding("bench", "bad", error.what, error.advice, cause="fault")
         for event in self._links.take_events():

@@ -18,7 +18,7 @@ from harness.statistics.plans import Plan
 # tests/bench/test_forecast.py measures them again.
 PAGE_BYTES = 4096
 RUN_BYTES = 1_700  # beside the profile's text and settings
-POINT_BYTES = 2_650  # its row, its first events, and its share of the stated assessment
+POINT_BYTES = 2_250  # its row, its first events, and its share of the stated assessment
 REQUIRED_BYTES = 900  # of a requirement, in each point's and the run's assessment
 INSTRUMENT_BYTES = 250  # at each point: readings, and the event of its setting
 SECOND_ROW_BYTES = 44  # beside counts and positions
