@@ -49,19 +49,16 @@ def bitassay(tmp_path: Path) -> Callable[..., Finished]:
 
 
 @pytest.fixture
-def device() -> Iterator[Callable[..., int]]:
-    """Start a TCP device that misbehaves as it is told; gives its port."""
+def program() -> Iterator[Callable[..., subprocess.Popen[str]]]:
+    """Start a program of tests/devices with its options; its first line says where to reach it."""
     running: list[subprocess.Popen[str]] = []
 
-    def start(**options: Any) -> int:
+    def start(name: str, **options: Any) -> subprocess.Popen[str]:
         process = subprocess.Popen(
-            [sys.executable, str(DEVICES / "tcp_device.py"), json.dumps(options)],
-            stdout=subprocess.PIPE,
-            text=True,
+            [sys.executable, str(DEVICES / name), json.dumps(options)], stdout=subprocess.PIPE, text=True
         )
         running.append(process)
-        assert process.stdout is not None
-        return int(process.stdout.readline())
+        return process
 
     yield start
     for process in running:
@@ -72,24 +69,18 @@ def device() -> Iterator[Callable[..., int]]:
 
 
 @pytest.fixture
-def modem() -> Iterator[Callable[..., str]]:
+def device(program: Callable[..., Any]) -> Callable[..., int]:
+    """Start a TCP device that misbehaves as it is told; gives its port."""
+    return lambda **options: int(program("tcp_device.py", **options).stdout.readline())
+
+
+@pytest.fixture
+def modem(program: Callable[..., Any]) -> Callable[..., str]:
     """Start a modem over a pseudo-terminal, a socket or RFC 2217; gives what link.port names in a profile."""
-    running: list[subprocess.Popen[str]] = []
     urls = {"pty": "{}", "socket": "socket://127.0.0.1:{}", "rfc2217": "rfc2217://127.0.0.1:{}"}
 
     def start(**options: Any) -> str:
-        process = subprocess.Popen(
-            [sys.executable, str(DEVICES / "modem.py"), json.dumps(options)],
-            stdout=subprocess.PIPE,
-            text=True,
-        )
-        running.append(process)
-        assert process.stdout is not None
-        return urls[options.get("over", "pty")].format(process.stdout.readline().strip())
+        where = program("modem.py", **options).stdout.readline().strip()
+        return urls[options.get("over", "pty")].format(where)
 
-    yield start
-    for process in running:
-        process.kill()
-        process.wait()
-        assert process.stdout is not None
-        process.stdout.close()
+    return start

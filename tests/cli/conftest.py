@@ -2,11 +2,11 @@
 
 from __future__ import annotations
 
+import itertools
 import json
 import socket
 import subprocess
-import sys
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -233,49 +233,21 @@ drain_s = 2
 
 
 @pytest.fixture
-def attenuated(tmp_path: Path) -> Iterator[Callable[..., AttenuatedDevice]]:
+def attenuated(tmp_path: Path, program: Callable[..., Any]) -> Callable[..., AttenuatedDevice]:
     """Start a device behind a SCPI attenuator, with the options of its program."""
-    running: list[subprocess.Popen[str]] = []
-    program = Path(__file__).parents[1] / "devices" / "attenuated_device.py"
+    logs = (tmp_path / f"attenuator-{number}.log" for number in itertools.count())
 
     def start(**options: Any) -> AttenuatedDevice:
-        log = tmp_path / f"attenuator-{len(running)}.log"
+        log = next(logs)
         log.touch()
-        process = subprocess.Popen(
-            [sys.executable, str(program), json.dumps({"log": str(log), **options})],
-            stdout=subprocess.PIPE,
-            text=True,
-        )
-        running.append(process)
-        assert process.stdout is not None
+        process = program("attenuated_device.py", log=str(log), **options)
         scpi, echo = (int(word) for word in process.stdout.readline().split())
         return AttenuatedDevice(scpi, echo, log, process)
 
-    yield start
-    for process in running:
-        process.kill()
-        process.wait()
-        assert process.stdout is not None
-        process.stdout.close()
+    return start
 
 
 @pytest.fixture
-def bridge() -> Iterator[Callable[..., list[int]]]:
+def bridge(program: Callable[..., Any]) -> Callable[..., list[int]]:
     """Start a device with two ports, with the options of its program; gives the ports."""
-    running: list[subprocess.Popen[str]] = []
-    program = Path(__file__).parents[1] / "devices" / "bridge.py"
-
-    def start(**options: Any) -> list[int]:
-        process = subprocess.Popen(
-            [sys.executable, str(program), json.dumps(options)], stdout=subprocess.PIPE, text=True
-        )
-        running.append(process)
-        assert process.stdout is not None
-        return [int(port) for port in process.stdout.readline().split()]
-
-    yield start
-    for process in running:
-        process.kill()
-        process.wait()
-        assert process.stdout is not None
-        process.stdout.close()
+    return lambda **options: [int(port) for port in program("bridge.py", **options).stdout.readline().split()]
