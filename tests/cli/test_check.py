@@ -201,20 +201,26 @@ def test_what_comes_one_way_has_to_be_the_pattern(bitassay, look, tmp_path):
 # -- stop rules
 
 
-@pytest.mark.parametrize(
-    ("stop", "words"),
-    [
-        ("seconds = 2", "stop.seconds"),
-        ("bits = 1000", "stop.bits"),
-        ("errors = 2", "stop.errors"),
-    ],
-)
-def test_a_stop_before_the_plans_end_is_refused_before_anything_is_opened(bitassay, profile, stop, words):
-    rest = f"[requirement]\nber = 1e-6\naccept_errors = 3\n[stop]\n{stop}\n"
-    done = bitassay("check", profile("/dev/ttyWader9", "rate_bps = 48_000", rest))
+REQUIRED = "[requirement]\nber = 1e-6\naccept_errors = 3\n[stop]\n"
+
+
+def test_a_stop_before_the_plans_end_is_refused_before_anything_is_opened(bitassay, profile):
+    done = bitassay("check", profile("/dev/ttyWader9", "rate_bps = 48_000", REQUIRED + "seconds = 2\n"))
     assert done.status == 2, done.out
-    assert words in done.out
+    assert "stop.seconds is 2" in done.out
     assert "ttyWader9" not in done.out + done.err, "the port was opened"
+
+
+@pytest.mark.parametrize("stop", ["seconds = 161", "bits = 7_753_000", "errors = 3"])
+def test_every_stop_rule_is_held_against_the_plan(look, profile, stop):
+    report = look(profile("/dev/ttyWader9", "rate_bps = 48_000", REQUIRED + stop))
+    assert [(f.step, f.usage) for f in report.findings if f.outcome == "bad"] == [("stop rules", True)]
+
+
+def test_a_stop_beyond_the_plans_end_is_good(look, profile):
+    stop = "seconds = 162\nbits = 7_754_000\nerrors = 4"
+    report = look(profile("/dev/ttyWader9", "rate_bps = 48_000", REQUIRED + stop))
+    assert [f.step for f in report.findings if f.outcome == "bad"] == ["bench"]
 
 
 def test_a_run_that_nothing_ends_is_refused(look, profile):
@@ -240,13 +246,11 @@ def test_instruments_are_stepped_within_their_limits_and_the_link_is_lost_at_the
     assert settings[-1] == 80, "safe is the last word"
 
 
-def test_a_path_around_the_attenuator_is_found(bitassay, attenuated, tmp_path):
+def test_a_path_around_the_attenuator_is_found(look, attenuated, tmp_path):
     bench = attenuated(x0_db=40, delay_s=0.05, leak=True)
     path = tmp_path / "sweep.toml"
     path.write_text(bench.profile('[sweep]\ninstrument = "attenuator"\nvalues = [20, 25, 30]\n'))
-    done = bitassay("check", path, "--json")
-    assert done.status == 4
-    assert [f["cause"] for f in done.json["findings"] if f["outcome"] == "bad"] == ["leak"]
+    assert bad(look(path)) == [("isolation", "leak")]
     assert bench.settings()[-1] == 80
 
 
@@ -264,8 +268,7 @@ values = [20, 30]
 """
 
 
-def test_a_sweep_by_hand_cannot_be_left_alone(bitassay, profile):
-    done = bitassay("check", profile("/dev/ttyWader9", rest="[stop]\nseconds = 5\n" + MANUAL))
-    assert done.status == 2, done.out
-    assert "set by hand" in done.out
-    assert "ttyWader9" not in done.out + done.err
+def test_a_sweep_by_hand_cannot_be_left_alone(look, profile):
+    report = look(profile("/dev/ttyWader9", rest="[stop]\nseconds = 5\n" + MANUAL))
+    assert bad(report) == [("instruments", "manual")], "and the port was not opened"
+    assert all(f.usage for f in report.findings if f.outcome == "bad")
