@@ -69,8 +69,7 @@ class Series:
         if places is not None and len(places) <= most:
             return places + 1, np.arange(1, len(places) + 1)
         bits, errors = np.cumsum(self.compared), np.cumsum(self.errors)
-        step = max(1, -(-len(bits) // most))
-        return bits[step - 1 :: step], errors[step - 1 :: step]
+        return thinned(bits, errors, most)
 
     def outages(self) -> list[Outage]:
         """List unaligned stretches and silent seconds, neighbouring ones joined."""
@@ -108,6 +107,13 @@ class Series:
             return empty, empty
         starts, lengths = np.array(rows, dtype=np.int64).T
         return starts, lengths
+
+
+def thinned(bits: Ints, errors: Ints, most: int) -> tuple[Ints, Ints]:
+    """Leave out corners of a path until at most about `most` are left, the last one among them."""
+    step = max(1, -(-len(bits) // most))
+    kept = np.arange(len(bits) - 1, -1, -step)[::-1]
+    return bits[kept], errors[kept]
 
 
 def _out_of(second: Second) -> Iterator[tuple[int, int, bool]]:

@@ -70,7 +70,43 @@ def test_a_sweeps_ruler_has_a_bar_for_each_aligned_point(cases):
     assert [bar.label for bar in bars] == ["56 dB", "58 dB", "60 dB", "62 dB"]
 
 
-@pytest.mark.parametrize("kind", ["pass", "undecided", "sequential pass", "outages"])
+def test_the_path_ends_where_the_plan_decided_although_more_came(records):
+    material = records.make([[1, 0, 1, 0, 0, 9, 9, "unaligned"]], FIXED)
+    (m,) = material.points
+    assert m.assessed.verdict == "FAIL"  # for the unaligned bits; the plan itself accepted
+    figure = stairs_of(material, m)
+    assert figure.drawing.decided == "accepted"
+    assert figure.drawing.path_bits[-1] == m.assessed.plan["decided_at_bit"] == 194_422
+    counted = int(np.count_nonzero(m.series.compared_positions() < 194_422))
+    assert figure.drawing.path_errors[-1] == figure.drawing.total_errors == counted == 2
+    assert "the plan accepted there" in figure.words
+    (bar,) = ruler_of(material).drawing.bars
+    assert not bar.against  # its BER speaks for the unit
+
+
+def test_a_rejected_path_ends_at_the_error_too_many(cases):
+    material = cases["fail"]()
+    (m,) = material.points
+    stairs = stairs_of(material, m).drawing
+    assert stairs.decided == "rejected"
+    assert stairs.total_errors == 13
+    assert stairs.path_bits[-1] == m.series.compared_positions()[12] + 1
+
+
+@pytest.mark.parametrize("kind", ["fixed", "sequential"])
+def test_thousands_of_errors_make_a_path_of_few_corners_with_the_right_end(records, kind):
+    asked = (
+        {"ber": 1e-2, "plan": kind, "accept_errors": 5000} if kind == "fixed" else {"ber": 1e-2, "plan": kind}
+    )
+    material = records.make([[900] * 7], asked)
+    (m,) = material.points
+    stairs = stairs_of(material, m).drawing
+    end = m.assessed.plan["decided_at_bit"] or m.assessed.tally.compared
+    assert len(stairs.path_bits) <= 2_010
+    assert stairs.path_errors[-1] == np.count_nonzero(m.series.compared_positions() < end)
+
+
+@pytest.mark.parametrize("kind", ["undecided", "outages"])
 def test_the_path_ends_where_the_count_ends(cases, kind):
     material = cases[kind]()
     (m,) = material.points
@@ -78,7 +114,7 @@ def test_the_path_ends_where_the_count_ends(cases, kind):
     assert stairs.path_errors[-1] == m.assessed.tally.errors
     assert stairs.path_bits[-1] == m.assessed.tally.compared
     assert (np.diff(stairs.path_bits) >= 0).all()
-    assert stairs.decided == ("accepted" if m.assessed.verdict == "PASS" else "")
+    assert stairs.decided == ""
 
 
 def test_the_stairs_are_the_plans(cases):
@@ -90,9 +126,8 @@ def test_the_stairs_are_the_plans(cases):
 
 
 def test_where_events_are_counted_the_path_counts_events(records):
-    material = records.make(
-        [["burst", 0, "burst", 0, 1]], {**FIXED, "count": "events", "event_gap_bits": 64, "ber": 1e-3}
-    )
+    asked = {**FIXED, "count": "events", "event_gap_bits": 64}
+    material = records.make([["burst", 0, "burst", 1, 0]], asked)
     figure = stairs_of(material, material.points[0])
     assert figure.drawing.total_errors == 3
     assert "3 error events" in figure.words

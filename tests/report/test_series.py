@@ -69,10 +69,10 @@ def test_the_path_rises_by_one_at_each_error(seed):
 
 def test_a_path_with_too_many_errors_goes_by_seconds_and_ends_at_the_total():
     rng = np.random.default_rng(1)
-    seconds = [second(k, 100 * k, [(100, True)], rng) for k in range(50)]
+    seconds = [second(k, 100 * k, [(100, True)], rng) for k in range(53)]
     bits, errors = series_of(point(seconds)).path(10)
     assert len(bits) <= 10
-    assert (bits[-1], errors[-1]) == (5_000, sum(s.tally.errors for s in seconds))
+    assert (bits[-1], errors[-1]) == (5_300, sum(s.tally.errors for s in seconds))
 
 
 def test_places_are_not_given_where_not_all_are_known():
@@ -108,3 +108,9 @@ def test_outages_far_apart_are_two():
     rng = np.random.default_rng(3)
     seconds = [second(0, 0, [(9, False)], rng), second(30, 9, [(9, False)], rng)]
     assert len(series_of(point(seconds)).outages()) == 2
+
+
+def test_silence_right_after_unaligned_bits_is_an_outage_of_its_own():
+    rng = np.random.default_rng(3)
+    seconds = [second(0, 0, [(5, True), (9, False)], rng), second(1, 14, [], rng)]
+    assert [(o.bits, o.silent) for o in series_of(point(seconds)).outages()] == [(9, False), (0, True)]

@@ -33,8 +33,8 @@ def course(drawing: Course) -> Sheet:
     )
     _bands(axes, drawing, keys)
     if len(drawing.slips):
-        height = np.full(len(drawing.slips), 0.85 if drawing.marks else 1.03)
-        axes.plot(drawing.slips, height, marker="v", markersize=5, color=RED, linestyle="none",
+        at_height = np.full(len(drawing.slips), 0.85 if drawing.marks else 1.03)
+        axes.plot(drawing.slips, at_height, marker="v", markersize=5, color=RED, linestyle="none",
                   transform=axes.get_xaxis_transform(), clip_on=False)  # fmt: skip
         keys.append(Line2D([], [], marker="v", color=RED, linestyle="none", markersize=5, label="slip"))
     _name_marks(axes, drawing)

@@ -9,9 +9,11 @@ import numpy as np
 from harness.assess.assessment import PointAssessment
 from harness.assess.words import count, percent, ratio
 from harness.report.document import Figure
-from harness.report.figures.drawings import Bar, Ruler, Stairs
+from harness.report.figures.drawings import Bar, Floats, Ruler, Stairs
 from harness.report.material import Material, Measured
 from harness.report.phrases import number, on_bits, point_label, point_name
+from harness.report.series import Ints, thinned
+from harness.statistics.plans import Plan
 
 _PATH = 2_000  # corners drawn, at most
 _BARS = 24  # of a ruler; a sweep with more points has its curve
@@ -66,13 +68,13 @@ def _bar(p: PointAssessment, label: str, target: float | None, *, judged: bool) 
     if b is None:
         return Bar(label, 0.0, 1.0)
     lower, upper, fades = b.lower, b.upper, None
-    if judged and p.verdict == "PASS" and b.side == "upper":
-        lower, upper, fades = 0.0, b.value, b.lower or b.value / 100
-    elif judged and p.verdict == "FAIL" and b.side == "lower":
+    decided = judged and p.verdict in ("PASS", "FAIL")
+    if decided and b.side == "lower":
         lower = b.value
-    elif judged and p.verdict == "FAIL":
-        upper = max(b.value, b.upper)
-    against = judged and p.verdict == "FAIL" and target is not None
+    elif decided and target is not None and b.value <= target:
+        # Demonstrated, whatever else may have failed: one-sided, nothing is said of how good the unit is.
+        lower, upper, fades = 0.0, b.value, b.lower or b.value / 100
+    against = decided and target is not None and upper > target
     return Bar(label, lower, upper, p.ber if p.tally.errors else None, fades, against)
 
 
@@ -89,14 +91,14 @@ def stairs_of(material: Material, m: Measured) -> Figure | None:
         # A fixed plan rejects at its end; an error too many is one wherever it falls.
         rows = [*((k, plan.longest_bits, -1) for k in shown), (last, plan.longest_bits, plan.longest_bits)]
     errors, accept, reject = np.array(rows, dtype=np.int64).T
-    bits, so_far = _path(m)
     decided = p.plan.get("decided_at_bit")
+    end = int(decided) if decided is not None else p.tally.compared
+    bits, so_far = _path(m, end)
+    total = int(so_far[-1])
     outcome: Literal["accepted", "rejected", ""] = ""
     if decided is not None:
-        outcome = "accepted" if _accepted(m) else "rejected"
+        outcome = "accepted" if _accepted(plan, int(decided), total) else "rejected"
     counted = "error events" if _events(m) else "errors"
-    end = int(decided) if decided is not None else p.tally.compared
-    total = int(so_far[-1]) if len(so_far) else 0
     drawing = Stairs(plan.kind, plan.longest_bits, errors, accept, reject, bits, so_far, outcome, total)
     words = (
         f"{count(total, counted[:-1])} in {count(end, 'compared bit')}; "
@@ -108,37 +110,40 @@ def stairs_of(material: Material, m: Measured) -> Figure | None:
     return Figure(title, words, drawing)
 
 
-def _accepted(m: Measured) -> bool:
-    """Whether the plan itself accepted: a FAIL may have another reason."""
-    return any(e.kind == "decided" and "accepted" in e.text for e in m.assessed.events) or (
-        m.assessed.verdict == "PASS"
-    )
+def _accepted(plan: Plan, bits: int, errors: int) -> bool:
+    """Whether a plan that decided at so many bits accepted: a FAIL may have another reason."""
+    if plan.boundaries:
+        return errors < len(plan.boundaries) and bits >= plan.boundaries[errors].accept_at
+    return errors <= (plan.accept_errors or 0)
 
 
 def _events(m: Measured) -> bool:
     return m.requirement is not None and m.requirement.count == "events"
 
 
-def _path(m: Measured) -> tuple[np.ndarray, np.ndarray]:
-    """Give the path's corners, beginning at nothing and ending where the count ended."""
-    series = m.series
-    compared = int(series.compared.sum())
-    if _events(m):
-        bits, errors = _event_path(m)
-    else:
-        bits, errors = series.path(_PATH)
-    last = errors[-1] if len(errors) else 0
-    bits = np.concatenate(([0], bits, [max(compared, int(bits[-1]) if len(bits) else 0)]))
-    return bits.astype(np.float64), np.concatenate(([0], errors, [last])).astype(np.float64)
-
-
-def _event_path(m: Measured) -> tuple[np.ndarray, np.ndarray]:
+def _places(m: Measured) -> Ints | None:
+    """Give the compared bits, counted from 1, at which the count of the plan rose; None where not all are known."""
     places = m.series.compared_positions()
-    gap = m.requirement.event_gap_bits if m.requirement is not None else 0
     if places is None:
-        return m.series.path(_PATH)
-    first = np.diff(places, prepend=-gap - 1) > gap
-    bits = places[first] + 1
-    errors = np.arange(1, len(bits) + 1)
-    step = max(1, -(-len(bits) // _PATH))
-    return bits[step - 1 :: step], errors[step - 1 :: step]
+        return None
+    if _events(m):
+        gap = (m.requirement.event_gap_bits if m.requirement is not None else 0) or 0
+        places = places[np.diff(places, prepend=-gap - 1) > gap]
+    return np.asarray(places + 1)
+
+
+def _path(m: Measured, end: int) -> tuple[Floats, Floats]:
+    """Give the path's corners, beginning at nothing and ending at so many compared bits."""
+    places = _places(m)
+    if places is None:
+        bits, errors = m.series.path(_PATH)
+        kept = bits <= end
+        bits, errors = bits[kept], errors[kept]
+    else:
+        places = places[places <= end]
+        bits, errors = thinned(places, np.arange(1, len(places) + 1), _PATH)
+    last = errors[-1] if len(errors) else 0
+    return (
+        np.concatenate(([0], bits, [end])).astype(np.float64),
+        np.concatenate(([0], errors, [last])).astype(np.float64),
+    )

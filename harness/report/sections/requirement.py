@@ -132,8 +132,9 @@ def verdict_section(material: Material) -> Section:
         blocks.append(Listing(tuple(a.reasons)))
     for m in material.points:
         p = m.assessed
-        if p.plan is not None and p.verdict is not None and len(material.points) > 1:
-            blocks.append(Paragraph(f"{point_name(m)}: {p.verdict}; {'; '.join(p.reasons)}"))
+        if p.verdict is not None and len(material.points) > 1:
+            why = f": {'; '.join(p.reasons)}" if p.verdict != a.verdict else ""  # else said above
+            blocks.append(Paragraph(f"{point_name(m)}: {p.verdict}{why}"))
     for m in material.points:
         figure = stairs_of(material, m)
         if figure is not None:
