@@ -53,7 +53,7 @@ def program() -> Iterator[Callable[..., subprocess.Popen[str]]]:
     """Start a program of tests/devices with its options; its first line says where to reach it."""
     running: list[subprocess.Popen[str]] = []
 
-    def start(name: str, **options: Any) -> subprocess.Popen[str]:
+    def start(name: str, /, **options: Any) -> subprocess.Popen[str]:
         process = subprocess.Popen(
             [sys.executable, str(DEVICES / name), json.dumps(options)], stdout=subprocess.PIPE, text=True
         )
