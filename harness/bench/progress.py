@@ -35,6 +35,7 @@ class Progress:
     done: tuple[PointAssessment, ...] = ()  # a sweep's points so far
     sensitivity_ber: float | None = None
     until: float | None = None  # forecast of the end, seconds since the epoch
+    elsewhere: bool = False  # another process measures, and this one only watches
 
 
 @dataclass(frozen=True, slots=True)

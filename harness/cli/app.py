@@ -359,6 +359,17 @@ def export(
 
 
 @app.command()
+def follow(run: RunArgument = "last", store: StoreOption = None, json: JsonOption = False) -> int:
+    """Watch a run that another terminal or computer measures, until it ends; reads only the store.
+
+    Example: bitassay follow last
+    """
+    from harness.cli.follow import follow as carry_out
+
+    return carry_out(run, store, as_json=json)
+
+
+@app.command()
 def verify(run: RunArgument = "last", store: StoreOption = None, json: JsonOption = False) -> int:
     """Derive every number of a run again from its record and compare.
 

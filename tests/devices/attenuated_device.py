@@ -11,6 +11,7 @@ Options are one JSON object on the command line:
   lag_s          the echo follows the attenuator so much later
   leak           the echo takes no notice of the attenuator
   scatter_db     level scatter: each setting is off by a normal error of its own
+  drift_db       with every setting the device gets worse by so much
   seed           of errors and scatter (default 1)
   identity       what *IDN? is answered with
   late_s         every answer comes so much later
@@ -103,7 +104,8 @@ class Bench:
         now = time.monotonic() - self.options.get("lag_s", 0.0)
         with self.lock:
             value = next(value for at, value in reversed(self.history) if at <= now)
-        amplitude = 10 ** ((self.options.get("x0_db", 40.0) - value) / 20)
+        x0 = self.options.get("x0_db", 40.0) - self.settings * self.options.get("drift_db", 0.0)
+        amplitude = 10 ** ((x0 - value) / 20)
         return 0.5 * math.erfc(amplitude)
 
     def through(self, data: bytes) -> bytes:

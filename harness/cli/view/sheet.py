@@ -111,7 +111,7 @@ def sheet_of_progress(progress: Progress, now_ns: int, *, closing: str = "", beh
     reasons = against_words(progress)
     looked_for = progress.sensitivity_ber
     done = [(point_label(d), _bar(d, decided=False, looked_for=looked_for)) for d in progress.done]
-    foot = [_foot(progress.run)]
+    foot = [_foot(progress.run, elsewhere=progress.elsewhere)]
     if progress.waiting_writes > 2:
         foot.insert(
             0, f"the store is slow: {progress.waiting_writes} seconds wait to be written; none is lost"
@@ -298,9 +298,11 @@ def _strip_ends(a: Assessment) -> tuple[str, str]:
     return moment(a.ended - 60 * SECOND_NS, a.ended), moment(a.ended, a.ended)
 
 
-def _foot(run: str) -> str:
+def _foot(run: str, *, elsewhere: bool = False) -> str:
     key = f"run {run}; " if run else ""
-    return f"{key}Ctrl-C ends and keeps it"
+    return (
+        f"{key}Ctrl-C ends the watching; the run goes on" if elsewhere else f"{key}Ctrl-C ends and keeps it"
+    )
 
 
 def _point_under_way(progress: Progress) -> str:
