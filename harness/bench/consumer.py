@@ -347,6 +347,8 @@ class Consumer(threading.Thread):
             explained = min(-size, self._unexplained)
             self._unexplained -= explained
             self._traffic.lose(-size - explained)
+        else:
+            self._traffic.invent(size)
         data = {**event.data, "bits": size, "modulo": modulo}
         text = slip_words(size) + (" over an outage" if "outage" in event.text else "")
         return replace(event, data=data, text=text)

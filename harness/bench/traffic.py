@@ -23,6 +23,8 @@ class Traffic:
         self._offered = 0
         self._received = 0
         self._written_off = 0
+        self._invented = 0
+        self._taken_back = 0  # given up, then received after all, or so it seemed
         self._sent_at: deque[tuple[int, int]] = deque(maxlen=HISTORY)  # (bits, ns)
         self.first_sent_ns: int | None = None
         self.last_received_ns: int | None = None
@@ -44,9 +46,12 @@ class Traffic:
         return self._written_off
 
     def in_flight(self) -> int:
-        """Bits sent, neither received nor given up."""
+        """Bits sent, neither received nor given up; what was invented on the way does not count as received."""
         with self._lock:
-            return max(0, self._sent - self._received - self._written_off)
+            return max(0, self._out())
+
+    def _out(self) -> int:
+        return self._sent - (self._received - self._invented) - self._written_off
 
     def offered(self, bits: int) -> None:
         """Say that so many more bits are being handed to the link: some may come back before it says so."""
@@ -66,16 +71,18 @@ class Traffic:
         with self._changed:
             self._received += bits
             # More came back than was thought to be out: it had been given up too early.
-            over = self._received + self._written_off - max(self._sent, self._offered)
-            if over > 0 and self._written_off:
-                self._written_off = max(0, self._written_off - over)
+            over = self._received - self._invented + self._written_off - max(self._sent, self._offered)
+            if over > 0:
+                back = min(over, self._written_off)
+                self._written_off -= back
+                self._taken_back += back
             self.last_received_ns = now_ns
             self._changed.notify_all()
 
     def write_off(self) -> int:
         """Give up what is on its way; returns how many bits that was."""
         with self._changed:
-            bits = max(0, self._sent - self._received - self._written_off)
+            bits = max(0, self._out())
             self._written_off += bits
             self._changed.notify_all()
             return bits
@@ -84,15 +91,24 @@ class Traffic:
         """Give up bits that a slip has shown to be lost."""
         with self._changed:
             # Bits may be back before the link has said that it took them: then those offered are out.
-            out = max(0, max(self._sent, self._offered) - self._received - self._written_off)
+            out = max(0, self._out() + max(0, self._offered - self._sent))
             self._written_off += min(bits, out)
             self._changed.notify_all()
+
+    def invent(self, bits: int) -> None:
+        """Say that so many of the bits received were never sent: a slip has shown it."""
+        with self._changed:
+            self._invented += bits
+            # Too many may have come because of them, and not because some had been given up too early.
+            again = min(bits, self._taken_back)
+            self._taken_back -= again
+            self._written_off += again
 
     def wait_for_room(self, most_in_flight: int, bits: int, timeout: float) -> bool:
         """Wait until `bits` more may be sent without more than `most_in_flight` under way."""
 
         def fits() -> bool:
-            return self._sent - self._received - self._written_off + bits <= most_in_flight
+            return self._out() + bits <= most_in_flight
 
         with self._changed:
             return self._changed.wait_for(fits, timeout)
@@ -100,9 +116,7 @@ class Traffic:
     def wait_for_quiet(self, timeout: float) -> bool:
         """Wait until nothing is on its way; False at time-out."""
         with self._changed:
-            return self._changed.wait_for(
-                lambda: self._sent - self._received - self._written_off <= 0, timeout
-            )
+            return self._changed.wait_for(lambda: self._out() <= 0, timeout)
 
     def sent_by(self, at_ns: int) -> int:
         """Bits sent up to a time."""

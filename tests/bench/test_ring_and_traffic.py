@@ -98,6 +98,33 @@ def test_a_loss_shown_before_the_link_says_that_it_took_the_bits_is_counted_once
     assert traffic.written_off_bits == 8
 
 
+def test_invented_bits_do_not_stand_in_for_lost_ones():
+    traffic = Traffic()
+    traffic.sent(1000, 1)
+    traffic.received(992, 2)
+    traffic.invent(8)  # among the 992: 984 came back
+    assert traffic.in_flight() == 16
+    traffic.lose(8)
+    assert traffic.in_flight() == 8
+    assert not traffic.wait_for_quiet(0)
+    assert not traffic.wait_for_room(15, 8, 0)
+    assert traffic.wait_for_room(16, 8, 0)
+    traffic.received(8, 3)
+    assert traffic.in_flight() == 0
+
+
+def test_a_loss_stays_one_when_an_invented_bit_comes_in_its_stead_before_it_is_noticed():
+    traffic = Traffic()
+    traffic.sent(1000, 1)
+    traffic.received(900, 2)
+    traffic.lose(8)
+    traffic.received(100, 3)  # eight of them invented, which shows only now
+    assert traffic.written_off_bits == 0
+    traffic.invent(8)
+    assert traffic.written_off_bits == 8
+    assert traffic.in_flight() == 0
+
+
 def test_times_of_sending_are_found_again():
     traffic = Traffic()
     for n in range(1, 100):
