@@ -12,9 +12,10 @@ from pathlib import Path
 
 from drivers.contract import DriverError, Instrument, Interrupted
 from harness.assess.words import duration, rate
+from harness.bench.check.beside import echo_on, listen_only, lost_at_most
 from harness.bench.check.findings import Finding, Outcome, Report
 from harness.bench.check.forecast import forecast, stop_problem
-from harness.bench.check.path import Line, PathCheck, echo_on, listen_only, lost_at_most
+from harness.bench.check.path import Line, PathCheck
 from harness.bench.conditions import Conditions, caution
 from harness.bench.session import Links, Way, ways_of
 from harness.bench.visits import visits_of
