@@ -9,6 +9,7 @@ import pytest
 
 from harness.record import Event, Note, Tally
 from harness.report import assemble, material_of
+from harness.report.document import Verdict
 from harness.report.sections.deviations import deviations
 from harness.report.text import to_text
 from harness.store import digest_of, open_store
@@ -18,6 +19,10 @@ FIXED = {"ber": 1e-4, "confidence": 0.95, "plan": "fixed", "accept_errors": 12}
 
 def said(material) -> str:
     return " | ".join(f"{title}: {item}" for title, items in deviations(material) for item in items)
+
+
+def verdict_of(document) -> str:
+    return next(block.word for block in document.sections[0].blocks if isinstance(block, Verdict))
 
 
 def test_a_run_as_the_profile_has_it_deviates_in_nothing(cases):
@@ -107,6 +112,7 @@ def test_a_void_mark_stands_above_everything_with_who_and_why(records):
     assert material.assessment.verdict == "PASS"
     assert "VOID: “wrong antenna” — bell" in document.banners[0]
     assert "VOID" in to_text(document).split("In short")[0]
+    assert verdict_of(document) == "VOID"
 
 
 def test_a_run_that_goes_on_is_called_preliminary(cases):
@@ -149,6 +155,7 @@ def test_a_record_that_was_changed_says_so_above_everything(records, change):
     document = assemble(material)
     assert "THE RECORD DOES NOT HOLD" in document.banners[0]
     assert "it holds" not in to_text(document)
+    assert verdict_of(document) == "NOT VALID"
 
 
 def test_numbers_that_do_not_follow_from_the_record_are_named(records):

@@ -74,6 +74,11 @@ def _required(material: Material) -> Iterator[str]:
 def _verdict(material: Material) -> Verdict:
     a = material.assessment
     words = "; ".join(a.reasons)
+    stated = f"; the verdict stated was {a.verdict}: {words}" if a.verdict else ""
+    if material.broken:
+        return Verdict("NOT VALID", f"the record does not hold{stated}", "fail")
+    if material.void_notes:
+        return Verdict("VOID", f"{material.void_notes[0].text}{stated}", "open")
     if a.verdict == "PASS":
         return Verdict("PASS", words, "pass")
     if a.verdict == "FAIL":
