@@ -316,6 +316,12 @@ def test_unaligned_bits_mark_the_blocks_they_touch():
     assert (result.background_errors, result.unplaced) == (2, 0)
 
 
+def test_unaligned_bits_up_to_a_blocks_end_do_not_touch_the_next():
+    """Bits 6 398 and 6 399 are the last two of the first block."""
+    second = blocks_second(unaligned=2, stretches=((6_398, True), (2, False), (57_600, True)))
+    assert g826(second).background_errors == 1
+
+
 def test_a_slip_marks_one_block_and_lost_blocks_are_errored():
     """12 800 bits lost are two blocks; with the one where they were lost 3 of 12: 25 %, not severe."""
     result = g826(blocks_second(slips=1, lost=12_800))

@@ -265,6 +265,30 @@ def test_tests_within_a_drift_stay_within_their_share():
     assert gaps <= most(1_000, 0.05)
 
 
+def test_paired_blocks_p_value_is_that_of_fair_coins():
+    """Two pairs of two errors, each pair in one block: by fair coins 1/2 each. The estimates scatter."""
+    positions = np.array([10, 20, 910, 920])  # blocks of 100 bits: the first, and the tenth
+    estimates = [paired_blocks_test(positions, 1_000, seed) for seed in range(100)]
+    assert np.mean(estimates) == pytest.approx(0.25, rel=0.2)
+    assert (
+        paired_blocks_test(100 * np.arange(10) + 50, 1_000, 1) == 1.0
+    )  # evenly spread: nothing could be less
+
+
+def test_what_is_called_clustered_follows_from_the_p_value():
+    rng = np.random.default_rng(13)
+    called = set()
+    for errors in (30, 60, 90):
+        for extra in (0, 2, 4, 8):
+            lone = independent(rng, errors, 10**8)
+            result = assess_clustering(np.union1d(lone, lone[:extra] + 3), 10**8)
+            assert result.p_value == min(1, 2 * min(result.dispersion_p_value, result.gap_p_value))
+            if not result.trend:
+                assert result.clustered == (result.p_value <= 0.01)
+                called.add(result.clustered)
+    assert called == {True, False}
+
+
 @given(st.sets(st.integers(0, 5_000), max_size=60), st.integers(1, 300))
 @settings(max_examples=60)
 def test_events_agree_with_walking_along_the_errors(places, gap):

@@ -36,6 +36,7 @@ def search(rng, space, scatter_db=0.0, most=80):
         if isinstance(step, Found):
             return step, points
         assert space.low <= step.value <= space.high
+        assert step.bits <= math.ceil(3 * step.errors / TARGET)  # no point waits longer, come what may
         points.append(measured(rng, step.value, step.errors, step.bits, scatter_db))
     raise AssertionError("the search does not end")
 
