@@ -9,7 +9,7 @@ from statistics import NormalDist
 from typing import Any
 
 from harness.assess.assessment import PointAssessment
-from harness.assess.words import percent
+from harness.assess.words import percent, ratio
 from harness.record import Verdict
 from harness.statistics.bracket import Bracket, bracket_of
 from harness.statistics.comparing import compare_counts
@@ -57,7 +57,7 @@ class Curve:
             "level_lower_dbm": self.level_bounds[0],
             "level_upper_dbm": self.level_bounds[1],
             "theory_distance_db": self.theory_db,
-            "words": self.fit.words,
+            "words": " ".join([self.fit.words, *(r for r in self.remarks if "extrapolated" in r)]),
             **({"at": dict(self.at)} if self.at else {}),
             **self._of_the_search(),
         }
@@ -120,7 +120,9 @@ def _curve(
         level_bounds=_level_bounds(points, name, fit) if fit else (None, None),
         theory_db=_theory_distance(sweep.get("theory"), fit),
         bracket=bracket,
-        remarks=() if search else (*_drift(points, name), *_hysteresis(points, name)),
+        remarks=()
+        if search
+        else (*_beyond(points, name, fit), *_drift(points, name), *_hysteresis(points, name)),
     )
 
 
@@ -192,6 +194,19 @@ def _theory_distance(mapping: Mapping[str, Any] | None, fit: CurveFit | None) ->
     needed = theory.ebn0_db(str(mapping["modulation"]), fit.target_ber)
     has = float(mapping["ebn0_db"]) + float(mapping["slope"]) * (fit.value - float(mapping["value"]))
     return has - needed if math.isfinite(has - needed) else None
+
+
+def _beyond(points: Sequence[PointAssessment], name: str, fit: CurveFit | None) -> list[str]:
+    """Say where a sensitivity lies outside of what was measured."""
+    if fit is None or fit.value is None:
+        return []
+    values = [p.values[name] for p in points]
+    if min(values) <= fit.value <= max(values):
+        return []
+    return [
+        f"no point reached BER {ratio(fit.target_ber)}: the sensitivity is extrapolated beyond the values measured "
+        f"({min(values):g} to {max(values):g})"
+    ]
 
 
 def _drift(points: Sequence[PointAssessment], name: str) -> list[str]:

@@ -10,6 +10,7 @@ from harness.assess.accumulate import Accumulator, accumulator_for
 from harness.assess.assessment import Assessment, PointAssessment
 from harness.assess.point import DEFAULT_CONFIDENCE, Facts, assess_point
 from harness.assess.requirement import Requirement, requirement_at, requirement_of
+from harness.assess.words import iso
 from harness.record import Event, Point, Run, Tally, Verdict
 
 
@@ -57,8 +58,16 @@ def assess(run: Run) -> Assessment:
         sweep=several,
         sensitivity=sensitivities[0] if len(sensitivities) == 1 else None,
         curves=tuple(curves),
-        more={"sensitivities": sensitivities} if len(sensitivities) > 1 else {},
+        more={**({"sensitivities": sensitivities} if len(sensitivities) > 1 else {}), **_notes(run)},
     )
+
+
+def _notes(run: Run) -> dict[str, Any]:
+    """Give what was noted afterwards; nothing where nothing was, as when the numbers were stated."""
+    if not run.notes:
+        return {}
+    notes = [{"at": iso(n.at), "who": n.who, "text": n.text, "void": n.void} for n in run.notes]
+    return {"void": any(note.void for note in run.notes), "notes": notes}
 
 
 def accumulate(run: Run, point: Point, requirement: Requirement | None) -> Accumulator:

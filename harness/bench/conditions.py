@@ -200,3 +200,8 @@ def caution(profile: Profile) -> str:
     if level is not None and level.damage_dbm is not None:
         words += f" (this one's damage level is stated as {level.damage_dbm:g} dBm)"
     return f"{words}; transmit only into a shielded set-up, or where licence and local rules permit it"
+
+
+def attended(profile: Profile) -> bool:
+    """Whether somebody has to stand beside it: an instrument asks a person to set it."""
+    return any(not instrument_class(s.driver).unattended for s in profile.instruments.values())

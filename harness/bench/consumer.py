@@ -92,6 +92,7 @@ class Consumer(threading.Thread):
         self.after = Tally()
         self.decision: Decision | None = None
         self.defect: BaseException | None = None
+        self.waited_for_the_rest = True  # False: broken off, so that what was on its way tells nothing
         self.last_aligned_ns: int | None = None
 
     def post(self, event: Event) -> None:
@@ -142,7 +143,12 @@ class Consumer(threading.Thread):
         if self.decision is not None:
             self._missing_at_the_decision(now)
         else:
-            self._never_returned(self._traffic.in_flight() if self._sends else 0, now)
+            left = self._traffic.in_flight() if self._sends else 0
+            if self.waited_for_the_rest:
+                self._never_returned(left, now)
+            else:
+                self._never_returned(0, now)
+                self._on_their_way(left, now)
             sent = self._traffic.sent_bits - self._sent_before
             self._book.end(ends_ns=now, received_bits=self._counter.received, sent=sent, due=self._due(now))
         self._flush()
@@ -295,6 +301,12 @@ class Consumer(threading.Thread):
         self._book.cut(bit=bit, ends_ns=at, sent=max(0, self._traffic.sent_bits - self._sent_before))
         self._flush()
         self._ask_stop("plan")
+
+    def _on_their_way(self, bits: int, at: int) -> None:
+        """Say what was still out when the point was broken off: that is not the device's loss."""
+        if bits:
+            text = f"{count(bits, 'bit')} were on their way when it was broken off and are in no figure"
+            self._happened("broken_off", text, at, {"bits": bits})
 
     def _missing_at_the_decision(self, at: int) -> None:
         """Say what had gone missing before the decision without a slip that shows it.

@@ -36,7 +36,8 @@ def identify_capture(
     """Find pattern and order; raises `PatternError` for a name that is none."""
     found = identify(data, pattern, order, read=read)
     if found.pattern is None or found.bit_order is None:
-        return Identified(None, f"no known pattern fits: {describe(found)}", 0.0)
+        what = "no known pattern fits" if pattern.lower() == "auto" else f"it is not {pattern}"
+        return Identified(None, f"{what}: {describe(found)}", 0.0)
     named = parse_pattern(found.pattern, bit_order=found.bit_order, read=read)
     capture = Capture(data, named, found.bit_order, rate_bps, tuple(found.alternatives))
     return Identified(capture, describe(found), found.confidence)

@@ -244,6 +244,7 @@ class Measurement:
                 thread.start()
         ended_by, fault = self._wait()
         self._draining = True
+        self._consumer.waited_for_the_rest = ended_by not in ("interrupted", "fault")
         self._stop_sending(ended_by)
         if ended_by in ("bits", "seconds", "errors", "plan"):
             self._wait_for_the_rest()

@@ -131,7 +131,7 @@ class BenchRun:
             return []
         asked, model = self._settings["requirement"], self._profile.device.get("model")
         return [
-            {"run": r.run, "status": r.status, "verdict": r.verdict}
+            {"run": r.run, "status": r.status, "verdict": "VOID" if r.void else r.verdict}
             for r in store.earlier_runs(serial, key, asked, model)
         ]
 
@@ -162,9 +162,9 @@ class BenchRun:
 
         return commit
 
-    def _note(self, number: int, events: list[Event]) -> None:
+    def _note(self, number: int, events: list[Event], live: Live | None = None) -> None:
         if events:
-            self._commit(number, None)([], events, self._undecided.get(number, 0))
+            self._commit(number, live)([], events, self._undecided.get(number, 0))
 
     # -- the bench
 
@@ -282,8 +282,9 @@ class BenchRun:
                 live.take(list(had.point.seconds), list(had.point.events))
             lives.append(live)
             measurements.append(self._measurement(visit, way, had, lives))
-            self._note(number, self._resumed(had))
-        self._note(self._point(visit, 0), [*self._conditions.take_events(), *self._links.take_events()])
+            self._note(number, self._resumed(had), live)
+        before = [*self._conditions.take_events(), *self._links.take_events()]
+        self._note(self._point(visit, 0), before, lives[0])
         outcomes = side_by_side(measurements)
         self._next_index = max(o.next_index for o in outcomes)
         self._next_place = outcomes[0].next_place

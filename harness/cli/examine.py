@@ -77,7 +77,10 @@ def examine(
     sys.stdout.flush()
     if found.capture is None:
         warn(f"{file}: {found.words}")
-        print("  name the pattern with --pattern if you know what was sent", file=sys.stderr)
+        advice = "name the pattern with --pattern if you know what was sent"
+        if pattern.lower() != "auto":
+            advice = "leave out --pattern to have it looked for among all that are known"
+        print(f"  {advice}", file=sys.stderr)
     else:
         warn(f"{file} was never aligned to {found.capture.pattern.name}")
         print("  try --pattern auto, the other --bit-order, or a longer capture", file=sys.stderr)

@@ -77,6 +77,8 @@ class Follower:
         number = now.index // ways
         sweep: Mapping[str, Any] = settings.get("sweep") or {}
         search: Mapping[str, Any] = settings.get("search") or {}
+        done = self._done()
+        visits = _visits(self.run) if sweep else 0 if search else 1
         began = self.run.sittings[-1].started if self.run.sittings else self.run.started
         return Progress(
             run=self.run.key,
@@ -88,13 +90,22 @@ class Follower:
             elapsed_s=(now_ns - began) / 1e9,
             outlook=live.outlook(),
             number=number,
-            visits=_visits(self.run) if sweep else 0 if search else 1,
+            visits=visits,
             seeking=str((now.facts.get("search") or {}).get("why", "")),
             units=dict(now.facts.get("units") or {}),
-            done=tuple(self._done()),
+            done=tuple(done),
             sensitivity_ber=search.get("ber") or sweep.get("sensitivity_ber"),
+            until=self._until(now_ns, visits * ways),
             elsewhere=True,
         )
+
+    def _until(self, now_ns: int, points: int) -> float | None:
+        """Forecast a sweep's end, seconds since the epoch, from how long its points took so far."""
+        over = [p for p in self.run.points if p.ended is not None]
+        if not over or points < 2:
+            return None
+        each = max(p.ended or 0 for p in over) - min(p.started for p in over)
+        return (now_ns + each / len(over) * (points - len(over))) / 1e9
 
     def _done(self) -> list[PointAssessment]:
         ended = [p for p in self.run.points if p.ended_by is not None]

@@ -183,7 +183,7 @@ def _print_again(record: Run, manner: Manner) -> int:
 
 def carry_out(loaded: Profile, command: str, manner: Manner, cut: Run | None = None) -> int:
     """Carry out a profile, watched, and print its result."""
-    from harness.bench.conditions import caution
+    from harness.bench.conditions import attended, caution
     from harness.bench.run import BenchRun, Hooks
     from harness.cli.watch import watcher
 
@@ -199,6 +199,7 @@ def carry_out(loaded: Profile, command: str, manner: Manner, cut: Run | None = N
                 title=loaded.title,
                 device=loaded.device,
                 interrupted=ending.event,
+                plain=attended(loaded),
             ) as view:
                 log_file.line(f"begins: {loaded.title or loaded.name}; store {where}")
                 hooks = Hooks(

@@ -23,6 +23,7 @@ def runs(store: str | None, limit: int | None, *, as_json: bool) -> int:
                 "started": iso(r.started),
                 "status": r.status,
                 "verdict": r.verdict,
+                "void": r.void,
                 "serial_number": r.serial_number,
             }
             for r in lines
@@ -35,10 +36,14 @@ def runs(store: str | None, limit: int | None, *, as_json: bool) -> int:
     print(f"{'run':<36}  {'started':<25}  {'status':<11} {'verdict':<9}  {'unit':<10}  title")
     for r in lines:
         print(
-            f"{r.run:<36}  {local_date(r.started):<25}  {r.status:<11} {r.verdict or '-':<9}  "
+            f"{r.run:<36}  {local_date(r.started):<25}  {r.status:<11} {_verdict(r.verdict, r.void):<9}  "
             f"{r.serial_number or '-':<10}  {r.title}"
         )
     return 0
+
+
+def _verdict(verdict: str | None, void: bool) -> str:
+    return "VOID" if void else verdict or "-"
 
 
 def show(run: str, store: str | None, *, as_json: bool) -> int:

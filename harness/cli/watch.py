@@ -76,15 +76,16 @@ class LineWatcher(Watcher):
             events_said = 0
             next_at = time.monotonic() + self._every_s
             over = False
+            shown: Progress | None = None
             while not over:
                 over = self._over.wait(0.05)
                 if self._key and not said:
                     said = True
                     self._say(f"run {self._key}")
                 now = time.monotonic()
-                if self._latest is not None and now >= next_at and not over:
-                    next_at = now + self._every_s
-                    latest = self._latest
+                latest = self._latest
+                if latest is not None and latest is not shown and now >= next_at and not over:
+                    next_at, shown = now + self._every_s, latest
                     self._say(progress_line(latest, time.time_ns(), events_said))
                     events_said = len(latest.point.events)
         except (OSError, ValueError):
@@ -178,9 +179,13 @@ def watcher(
     title: str = "",
     device: Mapping[str, str] | None = None,
     interrupted: threading.Event | None = None,
+    plain: bool = False,
 ) -> Iterator[Watcher]:
-    """Choose what watches a run: nothing, the terminal view, or plain lines on standard error."""
-    view = _chosen(quiet, title, device or {}, interrupted or threading.Event())
+    """Choose what watches a run: nothing, the terminal view, or plain lines on standard error.
+
+    `plain`: lines also on a terminal, where a person is asked things that a page would hide.
+    """
+    view = _chosen(quiet, plain, title, device or {}, interrupted or threading.Event())
     view.start()
     try:
         yield view
@@ -188,10 +193,12 @@ def watcher(
         view.stop()
 
 
-def _chosen(quiet: bool, title: str, device: Mapping[str, str], interrupted: threading.Event) -> Watcher:
+def _chosen(
+    quiet: bool, plain: bool, title: str, device: Mapping[str, str], interrupted: threading.Event
+) -> Watcher:
     if quiet:
         return Watcher()
-    terminal = terminal_among(sys.stderr, sys.stdout)
+    terminal = None if plain else terminal_among(sys.stderr, sys.stdout)
     if terminal is None:
         return Watcher() if sys.stderr is None else LineWatcher(sys.stderr)
     return PageWatcher(terminal, title, device, interrupted)

@@ -26,6 +26,7 @@ def check(profile: Profile) -> None:
         The first thing that does not fit.
     """
     _one_source(profile)
+    _device(profile)
     patterns = [_pattern(profile.pattern, "pattern")]
     if profile.pattern.reverse is not None:
         patterns.append(_pattern(profile.pattern.reverse, "pattern.reverse"))
@@ -38,6 +39,17 @@ def check(profile: Profile) -> None:
     for name, instrument in profile.instruments.items():
         _instrument(name, instrument)
     _conditions(profile)
+
+
+def _device(profile: Profile) -> None:
+    """Refuse what looks like a misspelt serial number: a run would be filed under the wrong unit."""
+    slips = ("serial", "serialnumber", "serialno", "serialnr", "sn", "serialnum")
+    for key in profile.device:
+        plain = key.lower().replace("-", "").replace("_", "")
+        if key != "serial_number" and plain in slips:
+            raise ProfileError(
+                f"device.{key} is not where a serial number is looked for", "write device.serial_number"
+            )
 
 
 def _one_source(profile: Profile) -> None:

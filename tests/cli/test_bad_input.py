@@ -76,3 +76,11 @@ def test_a_store_that_is_no_database_is_status_4(bitassay, tmp_path):
 def test_runs_before_anything_was_measured_is_an_empty_list(bitassay):
     assert bitassay("runs", "--json").json["runs"] == []
     assert bitassay("runs").status == 0
+
+
+@pytest.mark.parametrize("key", ["serial", "serialnumber", "serial_no", "SN"])
+def test_a_misspelt_serial_number_is_refused_or_the_wrong_unit_would_be_named(bitassay, tmp_path, key):
+    (tmp_path / "unit.toml").write_text(GOOD + f'[device]\n{key} = "0032"\n')
+    done = bitassay("measure", "unit.toml")
+    assert done.status == 2
+    assert "serial_number" in done.err

@@ -113,6 +113,7 @@ def test_a_device_that_closes_half_way_ends_in_status_4_and_the_record_is_kept(
     assert shown["status"] == "failed"
     assert shown["ended_by"] == "fault"
     assert shown["bits_compared"] >= 8 * 19_000
+    assert shown["bits_lost"] == 0  # what was on its way when it closed says nothing of the device
     with sqlite3.connect(tmp_path / "results" / "runs.sqlite") as db:
         assert db.execute("select sum(errors), count(*) from second").fetchone()[1] >= 1
 

@@ -41,6 +41,13 @@ def test_a_second_test_of_the_same_unit_is_counted_and_named(bitassay, measured)
     second = measured()
     assert second["earlier_tries"] == 1
     assert first["run"][-8:] in second["remarks"][0]
+    assert "VOID" in second["remarks"][0]
+    shown = bitassay("show", first["run"], "--json").json
+    assert shown["void"] is True
+    assert shown["notes"][0]["text"] == "the cable was loose"
+    assert "VOID" in bitassay("show", first["run"]).out
+    assert "VOID" in bitassay("runs").out
+    assert bitassay("verify", first["run"]).status == 0
     assert "9.75 %" in second["remarks"][0]
     other = measured(7, "2e-5", "--set", "device.serial_number=0032")
     assert other["earlier_tries"] == 0

@@ -144,7 +144,12 @@ def sheet_of_assessment(a: Assessment, where: str = "") -> Sheet:
     """Fill a page from a record."""
     p = a.whole
     decided = a.verdict in ("PASS", "FAIL")
-    verdict = a.verdict or ("none: nothing was required" if p.plan is None else "none yet: the run goes on")
+    void = bool(a.more.get("void"))
+    verdict = (
+        f"VOID (it was {a.verdict or 'without a verdict'})"
+        if void
+        else a.verdict or ("none: nothing was required" if p.plan is None else "none yet: the run goes on")
+    )
     ended = [f"record in {where}"] if where else []
     sheet = Sheet(
         unit=unit_name(a.device),
