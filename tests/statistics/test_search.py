@@ -43,11 +43,11 @@ def search(rng, space, scatter_db=0.0, most=80):
 
 @pytest.mark.parametrize("resolution", [0.0, 0.5])
 def test_the_crossing_is_found_within_the_width_asked(resolution):
-    """Seven searches: at a true 0.95, 4 or fewer that hold the truth come once in 250."""
+    """Five searches: at a true 0.95, 2 or fewer that hold the truth come once in 900."""
     rng = np.random.default_rng(1)
     space = SearchSpace(20, 60, TARGET, width=0.5, rising=True, resolution=resolution)
     held = 0
-    for _ in range(7):
+    for _ in range(5):
         found, points = search(rng, space)
         assert found.complete
         assert found.fit.upper - found.fit.lower <= 0.5
@@ -55,7 +55,7 @@ def test_the_crossing_is_found_within_the_width_asked(resolution):
         held += found.fit.lower <= TRUTH <= found.fit.upper
         if resolution:
             assert all(abs((p.x - 20) / resolution - round((p.x - 20) / resolution)) < 1e-6 for p in points)
-    assert held >= 5
+    assert held >= 3
 
 
 def test_it_needs_less_than_half_of_the_bits_of_a_sweep():
@@ -66,11 +66,11 @@ def test_it_needs_less_than_half_of_the_bits_of_a_sweep():
     rng = np.random.default_rng(2)
     width = 0.4
     space = SearchSpace(34, 44, TARGET, width=width, rising=True)
-    spent = np.median([search(rng, space, scatter_db=0.03)[0].bits for _ in range(5)])
+    spent = np.median([search(rng, space, scatter_db=0.03)[0].bits for _ in range(3)])
     cheapest = math.inf
-    for errors, bits in ((300, 10**7), (300, 3 * 10**7), (1_000, 3 * 10**7), (100, 10**8)):
+    for errors, bits in ((300, 10**7), (300, 3 * 10**7), (100, 10**8)):
         widths, costs = [], []
-        for _ in range(5):
+        for _ in range(3):
             points = [measured(rng, x, errors, bits, 0.03) for x in np.linspace(34, 44, 15).tolist()]
             fit = fit_curve(points, TARGET, rising=True)
             widths.append(math.inf if fit.lower is None or fit.upper is None else fit.upper - fit.lower)
