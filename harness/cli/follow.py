@@ -36,6 +36,7 @@ class Follower:
         self._seen: set[int] = set()  # those beyond it
         self._events = 0
         self._lives: dict[int, Live] = {}
+        self._total: int | None = None
         self.run = store.load_head(key)
         self._requirement = requirement_of(self.run.settings)
 
@@ -78,7 +79,7 @@ class Follower:
         sweep: Mapping[str, Any] = settings.get("sweep") or {}
         search: Mapping[str, Any] = settings.get("search") or {}
         done = self._done()
-        visits = _visits(self.run) if sweep else 0 if search else 1
+        visits = self._visits()
         began = self.run.sittings[-1].started if self.run.sittings else self.run.started
         return Progress(
             run=self.run.key,
@@ -98,6 +99,15 @@ class Follower:
             until=self._until(now_ns, visits * ways),
             elsewhere=True,
         )
+
+    def _visits(self) -> int:
+        """How many points there are in all, as the profile says; 0: not known beforehand."""
+        if self._total is None:
+            settings = self.run.settings
+            self._total = (
+                _points_of(self.run) if settings.get("sweep") else 0 if settings.get("search") else 1
+            )
+        return self._total
 
     def _until(self, now_ns: int, points: int) -> float | None:
         """Forecast a sweep's end, seconds since the epoch, from how long its points took so far."""
@@ -122,8 +132,8 @@ def _stop_rules(settings: Mapping[str, Any], point: Point) -> StopRules:
     return StopRules(least("bits"), least("seconds"), least("errors"))
 
 
-def _visits(run: Run) -> int:
-    """How many points a sweep has in all, as its profile says."""
+def _points_of(run: Run) -> int:
+    """Count a sweep's points, as its profile lists them."""
     from harness.bench.visits import visits_of
     from harness.profile import ProfileError, parse_profile
 
