@@ -204,13 +204,16 @@ class Counter:
                 return False
             end = self._stream.end
         hit = search.look(self._stream, end)
-        if hit is None and final and end == self._stream.end and search.old is None:
+        if hit is None and final and end == self._stream.end and self._unknown(search):
             hit = search.last_look(self._stream)
         if hit is not None:
             self._found(search, hit)
         elif not final:
             self._consider_loss(search, end)
         return True
+
+    def _unknown(self, search: Search) -> bool:
+        return search.old is None or self._lost_at is not None
 
     def _consider_loss(self, search: Search, end: int) -> None:
         """State that alignment is lost, once no place can come any more that makes a burst of it."""
@@ -244,14 +247,16 @@ class Counter:
         old = search.old if self._lost_at is None else None
         stretch = self._stretch(hit.end)
         path = self._path(old, hit, stretch)
-        edges = [stretch.first, *path.cuts, stretch.end]
+        places, cuts = path.places, path.cuts
         if old is None:
-            evidence = self._begin(search.old, path.places[0], edges[1])
-        elif len(path.places) == 1:
+            evidence = self._begin(search.old, places[0], [*cuts, stretch.end][0])
+        elif places == [old]:
             evidence = self._pass_over(old, old, stretch.first, stretch.end)
-        for before, after, cut, end in zip(
-            path.places[:-1], path.places[1:], edges[1:-1], edges[2:], strict=True
-        ):
+        elif places[0] != old:
+            # The old place holds nowhere in the stretch: the stream slipped where it begins.
+            places, cuts = [old, *places], [stretch.first, *cuts]
+        ends = [*cuts, stretch.end][1:]
+        for before, after, cut, end in zip(places[:-1], places[1:], cuts, ends, strict=True):
             evidence = self._pass_over(before, after, cut, end)
         place = path.places[-1]
         level = self._level(place, Stretch(evidence, stretch.bits[evidence - stretch.first :]))

@@ -30,7 +30,7 @@ FALSE_IN_BURST = 1e-8  # of a short place, entered and left again, in a burst
 
 RADIUS_BITS = 8192  # places up to so far from the one expected are all tried
 LONGEST_WINDOW = 8192  # bits searched at once
-KEPT_BITS = 1 << 18  # searches of a long outage are never further apart
+KEPT_BITS = 1 << 20  # searches of a long outage are never further apart
 
 
 @dataclass(frozen=True, slots=True)
@@ -87,11 +87,6 @@ class Weights:
     zero: int = 1
     one: int = 1
     scale: int = 1
-
-    @property
-    def heaviest(self) -> int:
-        """The larger weight."""
-        return max(self.zero, self.one)
 
 
 def weights_of(pattern: Pattern) -> Weights:

@@ -13,7 +13,6 @@ from numpy.typing import NDArray
 
 from harness.signal import rules
 from harness.signal.acquire import Acquirer
-from harness.signal.evidence import repeats_as_the_pattern
 from harness.signal.nearby import Nearby, agrees, log_candidates
 from harness.signal.places import Place, Reference
 from harness.signal.stream import Undecided
@@ -21,6 +20,8 @@ from harness.signal.stream import Undecided
 _LEAST_BLIND = 128  # bits from which on a place can be acquired
 _NEARBY_FOR = 5 * rules.LONGEST_WINDOW  # bits after trouble in which places nearby are tried
 _FIRST_NEARBY = 1024
+_LEAST_AFTER_TROUBLE = 512  # bits from which on a place far from the old one is thought of
+_HALF = rules.LONGEST_WINDOW // 2
 _FEW_WRONG = 0.02  # with so few wrong no other place can be right
 
 
@@ -85,8 +86,7 @@ class Search:
     @property
     def spacing(self) -> int:
         """Bits between looks once the longest window has been reached; it grows with the outage."""
-        half = rules.LONGEST_WINDOW // 2
-        return min(max((self._looked - self.begin) // 64 // half * half, half), rules.KEPT_BITS)
+        return min(max((self._looked - self.begin) // 16 // _HALF * _HALF, _HALF), rules.KEPT_BITS)
 
     def look(self, stream: Undecided, end: int) -> Hit | None:
         """Look for a place in the bits up to `end`; later ones are not touched."""
@@ -97,9 +97,13 @@ class Search:
                 hit = self._nearby(stream, self.old, before, end)
             if hit is not None:
                 return hit
+        done = end - self.begin
         longest = max(self.begin, end - rules.LONGEST_WINDOW)
         windows = [longest]
-        if before > longest and end - self.begin <= rules.LONGEST_WINDOW:
+        often = self.spacing == _HALF and done > rules.LONGEST_WINDOW
+        if self.old is not None and (done < _LEAST_AFTER_TROUBLE or (often and done // _HALF % 2)):
+            windows = []  # places nearby are tried anyway, and the longest windows need not overlap
+        elif longest < before and 2 * _LEAST_AFTER_TROUBLE <= done <= rules.LONGEST_WINDOW:
             windows.append(before)
         for begin in windows:
             hit = self._anywhere(stream, begin, end)
@@ -109,10 +113,11 @@ class Search:
 
     def last_look(self, stream: Undecided) -> Hit | None:
         """Look for a place in any part of a stream that ends without one."""
-        size = min(stream.end - self.begin, rules.LONGEST_WINDOW)
+        earliest = max(self.begin, 8 * stream.first, stream.end - _NEARBY_FOR)
+        size = min(stream.end - earliest, rules.LONGEST_WINDOW)
         while size >= 2 * _LEAST_BLIND:
             size //= 2
-            for end in range(stream.end, self.begin + size - 1, -(size // 2)):
+            for end in range(stream.end, earliest + size - 1, -(size // 2)):
                 hit = self._anywhere(stream, end - size, end)
                 if hit is not None:
                     return hit
@@ -121,6 +126,10 @@ class Search:
     def _resumed(self, stream: Undecided, old: Place, before: int, end: int) -> Hit | None:
         """Whether the old place gathers evidence again in what is new since the last look."""
         begin = max(self.begin, before - 2 * _FIRST_NEARBY)
+        if end - begin > 2 * rules.LONGEST_WINDOW:
+            begin = self._likely_from(stream, old, begin, end)
+        if begin >= end:
+            return None
         bits = stream.bits(begin, end)
         expected = self._reference.bits(old, begin, end - begin)
         height = rules.walk(bits ^ expected, expected, self._weights)
@@ -130,23 +139,32 @@ class Search:
             return None
         to = int(np.argmax(enough))
         first = int(np.argmax(height[: to + 1]))
-        if not repeats_as_the_pattern(
-            self._reference.pattern,
-            expected[first:],
-            bits[first:],
-            old.anchor + begin + first,
-            rules.FALSE_ALARM,
-        ):
+        # A dead line agrees with a stretch of the pattern that is nearly all ONEs or ZEROs: that is nothing.
+        if not agrees(self._reference, old, bits[first:to], begin + first, math.log(rules.FALSE_ALARM)):
             return None
         return Hit(old, begin + first, end)
+
+    def _likely_from(self, stream: Undecided, old: Place, begin: int, end: int) -> int:
+        """A bit from which on the old place may hold again, found by whole words; the end if there is none."""
+        first = -(-begin // rules.WORD_BITS) * rules.WORD_BITS
+        received = stream.bytes(first, end - (end - first) % rules.WORD_BITS)
+        differs = np.empty(len(received) // 8, dtype=np.uint64)
+        self._reference.reader(old, first).compare(received, differs.view(np.uint8))
+        steps = rules.AGREES * rules.WORD_BITS + (rules.DIFFERS - rules.AGREES) * np.bitwise_count(
+            differs
+        ).astype(np.int64)
+        height = np.cumsum(steps)
+        enough = np.maximum.accumulate(height) - height >= rules.RESUMED_AFTER // 2
+        if not enough.any():
+            return end
+        return max(begin, first + rules.WORD_BITS * int(np.argmax(height[: int(np.argmax(enough)) + 1])) - 64)
 
     def _nearby(self, stream: Undecided, old: Place, before: int, end: int) -> Hit | None:
         """Try all places near the old one on what is new, and on that together with the half before."""
         words = (end - before) // rules.WORD_BITS
         if not words:
             return None
-        half = rules.LONGEST_WINDOW // 2
-        words = min(words, half // rules.WORD_BITS)
+        words = min(words, _HALF // rules.WORD_BITS)
         first = end - (end - before) % rules.WORD_BITS - words * rules.WORD_BITS
         if self._unit > 1:
             first -= (first - self.begin) % self._unit

@@ -20,6 +20,8 @@ from harness.signal.patterns.readers import ROW_BYTES
 from harness.signal.places import Place, Reference
 
 _WORD_BYTES = rules.WORD_BITS // 8
+_FULL_GAIN = -rules.AGREES * rules.WORD_BITS  # of evidence, by a word without errors
+_LOSS = rules.DIFFERS - rules.AGREES  # by an error in it
 _ROW_WORDS = ROW_BYTES // _WORD_BYTES
 SLAB_BYTES = 1 << 18  # compared at once, so that the work stays in the processor's cache
 
@@ -41,6 +43,15 @@ class Trouble:
     begins: int
     noticed: int
     level: int
+
+
+@dataclass(frozen=True, slots=True)
+class _Slab:
+    """What is being scanned: words from `first` on, as received and where they differ."""
+
+    first: int
+    received: NDArray[np.uint8]
+    differs: NDArray[np.uint8]
 
 
 class Scratch:
@@ -82,9 +93,7 @@ class Track:
         self.start = start
         self.level = level
         self._watch_from = watch_from
-        self._full_gain = -rules.AGREES * rules.WORD_BITS * weights.scale  # of a word without errors
-        self._loss = (rules.DIFFERS - rules.AGREES) * weights.heaviest  # of an error, at most
-        self._enough = rules.DECIDED_AFTER * weights.scale
+        self._weights = weights
         self._scratch = scratch
         self._order = reference.order
         self._first = start // rules.WORD_BITS  # word that is first in the held arrays
@@ -131,15 +140,17 @@ class Track:
             return words, None
         counts = self._scratch.counts[:words]
         wrong = _count_words(differs.view(np.uint64), touched, counts)
-        slab_first = self.next_word
+        slab = _Slab(self.next_word, data, differs)
+        slab_first = slab.first
+        weighed = self._weighed(slab, counts)
         judged = max(self._watched - slab_first, 0)
         still_open = self._counts[self._watched - self._first :] if not judged else self._counts[:0]
         if len(still_open):
-            trouble = self._watch(np.concatenate([still_open, counts]), None, differs, slab_first)
+            trouble = self._watch(np.concatenate([still_open, weighed]), None, slab)
         else:
-            trouble = self._watch(counts[judged:], wrong if not judged else None, differs, slab_first)
-        self._settle(counts, slab_first)
-        self._write(data, differs, counts, slab_first, wrong, ledger)
+            trouble = self._watch(weighed[judged:], wrong if not judged else None, slab)
+        self._settle(weighed, slab_first)
+        self._write(slab, counts, weighed, wrong, ledger)
         return words, trouble
 
     def _scan_clean(self, data: NDArray[np.uint8], ledger: Ledger) -> None:
@@ -149,13 +160,14 @@ class Track:
         differs, counts = self._scratch.zeros[: len(data)], self._scratch.no_errors[:words]
         self._pass_clean(words)
         self._settle(counts, slab_first)
-        self._write(data, differs, counts, slab_first, np.empty(0, dtype=np.intp), ledger)
+        slab = _Slab(slab_first, data, differs)
+        self._write(slab, counts, counts, np.empty(0, dtype=np.intp), ledger)
 
     def decide_all(self, ledger: Ledger, end: int) -> None:
         """Write down everything up to a bit that has been scanned."""
         self._sure = max(self._sure, end)
         empty = np.empty(0, dtype=np.uint8)
-        self._write(empty, empty, empty, self.next_word, None, ledger)
+        self._write(_Slab(self.next_word, empty, empty), empty, empty, None, ledger)
 
     def held(self) -> tuple[int, NDArray[np.uint8]]:
         """The first bit of what was received and is not wholly written, and the bytes from there on."""
@@ -180,8 +192,7 @@ class Track:
         self,
         counts: NDArray[np.uint8],
         wrong: NDArray[np.intp] | None,
-        differs: NDArray[np.uint8],
-        slab_first: int,
+        slab: _Slab,
     ) -> Trouble | None:
         """Look through the words from `_watched` on; move it to where nothing is open any more."""
         some = np.flatnonzero(counts > rules.FEW_IN_WORD) if wrong is None else wrong
@@ -194,7 +205,7 @@ class Track:
                     drifts = levels.drifts(begin, end)
                     trouble = self._excess_in_words(counts[begin:end] - drifts, first + begin, level)
                 else:
-                    trouble = self._excess_in_bits(first + begin - 1, first + end, level, differs, slab_first)
+                    trouble = self._excess_in_bits(first + begin - 1, first + end, level, slab)
                 if trouble is not None or not closed:
                     self._pass(counts[:begin])
                     return trouble
@@ -209,23 +220,39 @@ class Track:
         noticed = first + int(np.argmax(enough)) + 1
         return Trouble(max(first * rules.WORD_BITS, self._watch_from), noticed * rules.WORD_BITS, level)
 
-    def _excess_in_bits(
-        self, begin: int, end: int, level: int, differs: NDArray[np.uint8], slab_first: int
-    ) -> Trouble | None:
+    def _excess_in_bits(self, begin: int, end: int, level: int, slab: _Slab) -> Trouble | None:
         """Look for an excess of errors bit by bit in the words from `begin` up to `end`."""
         begin = max(begin, self._first)
-        split = max(begin, slab_first)
-        held = self._differs[(begin - self._first) * _WORD_BYTES : (split - self._first) * _WORD_BYTES]
-        new = differs[(split - slab_first) * _WORD_BYTES : (end - slab_first) * _WORD_BYTES]
-        size = 16 * _WORD_BYTES
+        upto = begin + 16
         while True:  # an excess is met soon, if at all
-            some = np.concatenate([held, new[:size]])
-            trouble = self._excess(unpack(some, self._order), begin * rules.WORD_BITS, level)
-            if trouble is not None or size >= len(new):
+            upto = min(upto, end)
+            wrong = unpack(self._between(self._differs, slab.differs, slab.first, begin, upto), self._order)
+            if self._weights.scale != 1:
+                received = self._between(self._received, slab.received, slab.first, begin, upto)
+                expected = unpack(received, self._order) ^ wrong
+                weights = np.where(expected, self._weights.one, self._weights.zero)
+                trouble = self._excess(wrong * weights / self._weights.scale, begin * rules.WORD_BITS, level)
+            else:
+                trouble = self._excess(wrong, begin * rules.WORD_BITS, level)
+            if trouble is not None or upto == end:
                 return trouble
-            size *= 4
+            upto = begin + 4 * (upto - begin)
 
-    def _excess(self, wrong: NDArray[np.uint8], offset: int, level: int) -> Trouble | None:
+    def _between(
+        self, held: NDArray[np.uint8], new: NDArray[np.uint8], slab_first: int, begin: int, end: int
+    ) -> NDArray[np.uint8]:
+        """Words from `begin` up to `end`, of which some are held and some new."""
+        split = min(max(begin, slab_first), end)
+        return np.concatenate(
+            [
+                held[(begin - self._first) * _WORD_BYTES : (split - self._first) * _WORD_BYTES],
+                new[max(split - slab_first, 0) * _WORD_BYTES : max(end - slab_first, 0) * _WORD_BYTES],
+            ]
+        )
+
+    def _excess(
+        self, wrong: NDArray[np.uint8] | NDArray[np.float64], offset: int, level: int
+    ) -> Trouble | None:
         if offset < self._watch_from:
             wrong = wrong[self._watch_from - offset :]
             offset = self._watch_from
@@ -239,6 +266,14 @@ class Track:
         before = np.concatenate([[0.0], above[: noticed + 1]])
         begins = noticed + 1 - int(np.argmin(before[::-1]))
         return Trouble(offset + begins, offset + noticed + 1, level)
+
+    def _weighed(self, slab: _Slab, counts: NDArray[np.uint8]) -> NDArray[np.uint8]:
+        """Errors in each word with the weights of a pattern that is not balanced."""
+        if self._weights.scale == 1:
+            return counts
+        lost = np.bitwise_count((slab.differs & ~slab.received).view(np.uint64)).astype(np.int64)
+        weighed = lost * self._weights.one + (counts - lost) * self._weights.zero
+        return np.minimum(weighed // self._weights.scale, 255).astype(np.uint8)
 
     def _levels(self, counts: NDArray[np.uint8]) -> Levels:
         """The levels that stand for the words from `_watched` on."""
@@ -296,11 +331,11 @@ class Track:
             held = self._counts[first - self._first : split - self._first]
             new = counts[split - slab_first : max(upto - slab_first, 0)]
             part = np.concatenate([held, new])[: upto - first].astype(np.int64)
-            gains = self._full_gain - self._loss * part
+            gains = _FULL_GAIN - _LOSS * part
             total = np.zeros(len(gains) + 1, dtype=np.int64)
             np.cumsum(gains, out=total[1:])
             best = np.maximum.accumulate(total[::-1])[::-1]
-            enough = np.flatnonzero(best - total >= self._enough)
+            enough = np.flatnonzero(best - total >= rules.DECIDED_AFTER)
             if len(enough):
                 self._sure = max(self._sure, (first + int(enough[-1])) * rules.WORD_BITS)
                 return
@@ -310,18 +345,19 @@ class Track:
 
     def _write(
         self,
-        data: NDArray[np.uint8],
-        differs: NDArray[np.uint8],
+        slab: _Slab,
         counts: NDArray[np.uint8],
-        slab_first: int,
+        weighed: NDArray[np.uint8],
         wrong: NDArray[np.intp] | None,
         ledger: Ledger,
     ) -> None:
         """Write down what is decided, from the held words and then from the slab; hold the rest."""
+        data, differs, slab_first = slab.received, slab.differs, slab.first
         slab_bit = slab_first * rules.WORD_BITS
         held_until = min(self._sure, slab_bit)
         if held_until > self._written:
-            self._compare(self._received, self._differs, self._counts, self._first, held_until, ledger)
+            held = self._counts if self._weights.scale == 1 else None
+            self._compare(self._received, self._differs, held, self._first, held_until, ledger)
         if self._sure > max(self._written, slab_bit):
             if wrong is not None and not len(wrong):
                 at = self._written
@@ -334,19 +370,19 @@ class Track:
             lead = keep - slab_first
             self._received = data[lead * _WORD_BYTES :].copy()
             self._differs = differs[lead * _WORD_BYTES :].copy()
-            self._counts = counts[lead:].copy()
+            self._counts = weighed[lead:].copy()
         else:
             lead = keep - self._first
             self._received = np.concatenate([self._received[lead * _WORD_BYTES :], data])
             self._differs = np.concatenate([self._differs[lead * _WORD_BYTES :], differs])
-            self._counts = np.concatenate([self._counts[lead:], counts])
+            self._counts = np.concatenate([self._counts[lead:], weighed])
         self._first = keep
 
     def _compare(
         self,
         received: NDArray[np.uint8],
         differs: NDArray[np.uint8],
-        counts: NDArray[np.uint8],
+        counts: NDArray[np.uint8] | None,
         first_word: int,
         until: int,
         ledger: Ledger,
@@ -354,7 +390,7 @@ class Track:
     ) -> None:
         skip = self._written // rules.WORD_BITS - first_word
         begin = self._written - (first_word + skip) * rules.WORD_BITS
-        whole = until % rules.WORD_BITS == 0
+        exact = until % rules.WORD_BITS == 0 and (not begin or self._written == self.start)
         words = -(-until // rules.WORD_BITS) - first_word
         # Bits before the track's start are blank in `differs` and `counts`.
         ledger.compare(
@@ -364,7 +400,7 @@ class Track:
             until - self._written,
             self.place.anchor + self._written,
             self.place.inverted,
-            counts[skip:words] if whole and (not begin or self._written == self.start) else None,
+            None if counts is None or not exact else counts[skip:words],
             None if wrong is None else wrong[(wrong >= skip) & (wrong < words)] - skip,
         )
         self._written = until

@@ -1,0 +1,111 @@
+"""The counter equals the oracle's minimum: errors, slips and places, on random streams; and the truth nearly."""
+
+from collections import Counter as Tallied
+
+import numpy as np
+import pytest
+
+BATCH = 64
+
+
+def _expected(stream, cuts):
+    """Events and where they lie by the oracle."""
+    out = [("aligned", 0, None)]
+    for (old, was), (new, turned), cut in zip(stream.offsets, stream.offsets[1:], cuts, strict=False):
+        if old != new:
+            out.append(("slip", cut, old - new))
+        if was != turned:
+            out.append(("inversion", cut, None))
+    return out
+
+
+def _near_truth(made, stream, cuts):
+    """Whether no burst let the oracle explain more away than happened."""
+    off = made.by_ber(made.TOLERANCE, stream.ber)
+    clean = np.ones(len(stream.received) + 1, dtype=bool)
+    for begin, end in stream.bursts:
+        clean[max(0, begin - int(off)) : end + int(off)] = False
+    return all(
+        abs(cut - true) <= off or not clean[true] or not clean[min(cut, len(clean) - 1)]
+        for cut, true in zip(cuts, stream.changes, strict=True)
+    )
+
+
+def _compare(counting, made, stream, errors, cuts):
+    """Class of the stream and whether the counter equals the oracle; invariants are asserted for all."""
+    rng = np.random.default_rng(stream.seed + 1)
+    chunks = made.cuts_into_chunks(rng, len(stream.received) // 8)
+    segments = counting.run(stream.name, stream.received, chunks, slip_unit=stream.unit)
+    got = [(e.kind, e.bit, e.data["bits"] if e.kind == "slip" else None) for e in counting.events(segments)]
+    tally = counting.total(segments)
+    same = tally.errors == errors and tally.unaligned == 0 and got == _expected(stream, cuts)
+    if same:
+        places = [s for s in segments if s.aligned]
+        cut_at = [0, *cuts, len(stream.received)]
+        for s in places:
+            at = max(k for k, cut in enumerate(cut_at[:-1]) if cut <= s.start)
+            index, turned = stream.offsets[at]
+            assert s.inverted == bool(turned)
+            assert (s.place - (stream.origin + index + s.start)) % counting.Counter_period(stream.name) == 0
+    return same
+
+
+@pytest.fixture(scope="session")
+def judged(counting, made, oracle, parse):
+    counting.Counter_period = lambda name: parse(name).period
+
+    def judge(seeds, **how):
+        result, failed = Tallied(), []
+        for at in range(0, len(seeds), BATCH):
+            streams = [made.make(parse, seed, **how) for seed in seeds[at : at + BATCH]]
+            answers = oracle.count_many([(s.received, s.master, s.offsets) for s in streams])
+            for stream, (errors, cuts) in zip(streams, answers, strict=True):
+                same = _compare(counting, made, stream, errors, cuts)
+                kind = "burst" if stream.bursts else "inversion" if any(t for _, t in stream.offsets) else ""
+                kind = kind or ("slips" if stream.changes else "plain")
+                near_truth = _near_truth(made, stream, cuts)
+                if stream.closest < 1 or not near_truth:
+                    result["closer than stated", kind] += 1
+                    continue
+                result["equal" if same else "not equal", kind] += 1
+                if not same:
+                    failed.append(stream.seed)
+                    continue
+                # What can be explained away near a cut, 1.27 errors on average at a BER of 0.3.
+                assert stream.bursts or stream.errors - errors <= 6 * (len(cuts) + 1) * max(
+                    stream.ber * 10, 0.3
+                )
+        return result, failed
+
+    return judge
+
+
+def test_the_quick_oracle_equals_the_plain_one(oracle, made, parse):
+    streams = [made.make(parse, seed, slips=seed % 4, spread=0.02, near=64) for seed in range(24)]
+    taken = [(s.received[:900], s.master, s.offsets) for s in streams]
+    assert oracle.count_many(taken) == [oracle.count(*stream) for stream in taken]
+
+
+def test_the_independent_register_equals_the_pattern(made, parse):
+    for seed in range(12):
+        stream = made.make(parse, seed, ber=0.0, slips=0, bursts=0, spread=0.1)
+        expected = parse(stream.name).bits(stream.origin, len(stream.received))
+        assert np.array_equal(stream.received, expected), stream.name
+
+
+def test_random_streams_equal_the_oracle(judged):
+    result, failed = judged(range(96), spread=0.6)
+    assert not failed, (result, failed)
+    assert sum(n for (verdict, _), n in result.items() if verdict == "equal") >= 45
+
+
+@pytest.mark.campaign
+@pytest.mark.parametrize("part", range(20))
+def test_campaign(judged, part):
+    # Where two slips lie hardly further apart than the stated spacing, or a burst covers one, chance may
+    # hide a place that the oracle is told of: at most 1 stream in 200.
+    seeds = range(1_000_000 + 512 * part, 1_000_000 + 512 * (part + 1))
+    result, failed = judged(seeds)
+    print(f"part {part}: {dict(result)}, not equal: {failed}")
+    equal = sum(n for (verdict, _), n in result.items() if verdict == "equal")
+    assert len(failed) <= (equal + len(failed)) / 200
