@@ -23,7 +23,7 @@ _WORD_BYTES = rules.WORD_BITS // 8
 _FULL_GAIN = -rules.AGREES * rules.WORD_BITS  # of evidence, by a word without errors
 _LOSS = rules.DIFFERS - rules.AGREES  # by an error in it
 _ROW_WORDS = ROW_BYTES // _WORD_BYTES
-SLAB_BYTES = 1 << 18  # compared at once, so that the work stays in the processor's cache
+SLAB_BYTES = 1 << 20  # compared at once, so that the work stays in the processor's cache
 
 
 @dataclass(frozen=True, slots=True)
@@ -273,7 +273,8 @@ class Track:
             return counts
         lost = np.bitwise_count((slab.differs & ~slab.received).view(np.uint64)).astype(np.int64)
         weighed = lost * self._weights.one + (counts - lost) * self._weights.zero
-        return np.minimum(weighed // self._weights.scale, 255).astype(np.uint8)
+        capped: NDArray[np.uint8] = np.minimum(weighed // self._weights.scale, 255).astype(np.uint8)
+        return capped
 
     def _levels(self, counts: NDArray[np.uint8]) -> Levels:
         """The levels that stand for the words from `_watched` on."""
