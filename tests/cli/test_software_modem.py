@@ -126,7 +126,7 @@ class Bench:
         profile = self._folder / "unit.toml"
         profile.write_text(
             'title = "Wader-9, invented, as tones"\n[device]\nserial_number = "0031"\n'
-            f'[link]\ndriver = "process"\ncommand = {json.dumps(command)}\n'
+            f'[link]\ndriver = "process"\ncommand = {json.dumps(command)}\ndrain_s = 3\n'
             f'[pattern]\nname = "{pattern}"\n[stop]\nbits = {bits}\n'
         )
         done = self._bitassay("measure", profile, "--json", timeout=120)
@@ -155,7 +155,9 @@ class Bench:
             errors = int(np.count_nonzero((positions >= first) & (positions < last)))
             here = [slip for slip in slips if first <= slip[0] < last]
             truth = [8 * (a.lost - b.lost) for a, b in pairwise(places)]
-            assert sum(bits for _, bits in here) == sum(truth), (first, last, here, truth)
+            # A place that holds for less than the spacing where the stream begins or ends cannot be known.
+            if min(places[0].framed, places[-1].framed) >= need:
+                assert sum(bits for _, bits in here) == sum(truth), (first, last, here, truth)
             result.pieces += 1
             if min(held.framed for held in places) < need:
                 result.close += 1
@@ -202,10 +204,13 @@ def test_at_a_high_level_everything_comes_back(bench, independent):
 
 
 def test_at_a_low_level_every_loss_is_found_and_the_errors_between_are_exact(bench, bitassay):
-    got, way = bench.measure(200_000, 10.8, "--gap-every", "64", "--gap-bits", "15", seed=3)
+    got, way = bench.measure(160_000, 10.8, "--gap-every", "64", "--gap-bits", "15", seed=99)
     compared = bench.hold(got, way)
     assert compared.slips >= 30
     assert compared.close <= 3
+    # Some are lost at the very end, where no slip can show it, and one was invented before: neither hides the other.
+    assert len(way.sent) - len(way.received) - way.held[-1].lost == 3
+    assert got["bits_inserted"] == 8
     assert got["errors"] > 400
     assert bitassay("verify", "last").status == 0
 
@@ -260,11 +265,13 @@ def test_at_many_levels_every_loss_is_found_and_the_errors_between_are_exact(ben
     total = Compared()
     for number, (pattern, ebn0_db, more) in enumerate(
         (pattern, ebn0_db, more)
-        for pattern in ("PRBS15", "PRBS23", "PRBS31-reversed", "QRSS")
-        for ebn0_db in (12.0, 11.0, 10.0, 9.0)
+        for pattern in ("QRSS", "PRBS31-reversed", "PRBS23", "PRBS15")
+        for ebn0_db in (9.0, 10.0, 11.0, 12.0)
         for more in ((), ("--keep-misframed",), ("--gap-every", "64", "--gap-bits", "15"))
     ):
-        got, way = bench.measure(300_000, ebn0_db, *more, pattern=pattern, seed=100 + number)
+        # Positions are kept of 4096 errors a second, and all may come in one.
+        bits = 300_000 if ebn0_db > 9 else 120_000
+        got, way = bench.measure(bits, ebn0_db, *more, pattern=pattern, seed=100 + number)
         here = bench.hold(got, way)
         print(f"{pattern} {ebn0_db} dB {' '.join(more)}: {here}")
         assert bitassay("verify", "last").status == 0

@@ -6,7 +6,8 @@ are orthogonal whatever the phase. White Gaussian noise is added; each tone's en
 without knowing the phase, at every sample; a receiver looks for the edge of a start bit, samples in the middle
 of each bit and checks the stop bit. Where noise hides a start bit, or makes one, bytes are lost and invented.
 
-The same seed and bytes give the same bytes back, however they are cut into pieces. A folder named by `--log`
+The same seed and bytes give the same bytes back, however they are cut into pieces, as long as the input is not
+silent for more than a second: then the line is idle for a while. A folder named by `--log`
 holds `in` and `out` (the bytes), and `sent_at` and `received_at` (int64: the sample at which the start bit of each
 of them begins, as sent and as received).
 """
@@ -16,6 +17,7 @@ from __future__ import annotations
 import argparse
 import math
 import os
+import select
 from pathlib import Path
 
 import numpy as np
@@ -24,6 +26,7 @@ FRAME_BITS = 10
 PIECE_BYTES = 4096
 LEAD_BITS = 20  # of idle line before the first byte
 TRAIL_BITS = 40  # and after the last one
+SILENCE_S = 1.5  # without input: then the line is idle so that the last byte comes out, too
 
 
 class Transmitter:
@@ -183,7 +186,7 @@ class Modem:
         self._log.write("sent_at", begins.astype("<i8").tobytes())
         return self._through(samples)
 
-    def end(self) -> bytes:
+    def idle(self) -> bytes:
         return self._through(self._transmitter.idle(TRAIL_BITS))
 
     def _through(self, samples: np.ndarray) -> bytes:
@@ -216,9 +219,15 @@ def main() -> None:
     modem = Modem(options_of())
     try:
         write_all(modem.begin())
-        while data := os.read(0, PIECE_BYTES):
+        while True:
+            if not select.select([0], [], [], SILENCE_S)[0]:
+                write_all(modem.idle())
+                select.select([0], [], [])
+            data = os.read(0, PIECE_BYTES)
+            if not data:
+                break
             write_all(modem.pass_on(data))
-        write_all(modem.end())
+        write_all(modem.idle())
     except BrokenPipeError:  # nobody listens any more
         pass
 
