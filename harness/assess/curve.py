@@ -221,7 +221,7 @@ def _hysteresis(points: Sequence[PointAssessment], name: str) -> list[str]:
     """Compare points that were visited on the way up and on the way down."""
     visited: dict[float, list[PointAssessment]] = {}
     for point in points:
-        if point.tally.compared and not point.facts.get("reference"):
+        if point.tally.compared and not (point.facts.get("reference") or point.facts.get("again")):
             visited.setdefault(point.values[name], []).append(point)
     words = []
     for value, group in sorted(visited.items()):

@@ -8,9 +8,10 @@ from collections.abc import Sequence
 
 from harness.assess.assessment import PointAssessment
 from harness.assess.words import count
+from harness.bench.spare import visit_again
 from harness.bench.visits import Visit, visits_of
 from harness.profile import Profile
-from harness.record import Event
+from harness.record import Event, Point
 
 
 class Route(ABC):
@@ -45,6 +46,11 @@ class Route(ABC):
         """What comes after the visit given last, as far as it is known."""
         return ()
 
+    def again(self, done: Sequence[PointAssessment], seconds: float | None) -> Visit | None:
+        """Choose a point to be visited again in the time that is left over; None: none."""
+        del done, seconds
+        return None
+
     def take_events(self) -> list[Event]:
         """Give what there was to say since the last call."""
         events, self._events = self._events, []
@@ -61,13 +67,22 @@ class ListRoute(Route):
     ----------
     finished
         Numbers of visits that an earlier sitting has to their end.
+    unfinished
+        A point beyond the list, visited again when the run was cut: it is gone on with at the end.
     """
 
-    def __init__(self, profile: Profile, finished: Sequence[int] = ()) -> None:
+    def __init__(
+        self, profile: Profile, finished: Sequence[int] = (), unfinished: Point | None = None
+    ) -> None:
         super().__init__()
         visits = visits_of(profile)
         self.total = len(visits)
+        self._profile = profile
+        self._highest = max((len(visits) - 1, *finished))
         self._left = [visit for visit in visits if visit.number not in finished]
+        if unfinished is not None and unfinished.index >= len(visits):
+            self._highest = max(self._highest, unfinished.index)
+            self._left.append(Visit(unfinished.index, dict(unfinished.values), facts={"again": True}))
         self._guard = profile.sweep.guard if profile.sweep is not None else 0
         self._axis = profile.sweep.all_axes()[0].instrument if profile.sweep is not None else ""
 
@@ -89,6 +104,17 @@ class ListRoute(Route):
     def ahead(self) -> Sequence[Visit]:
         """What comes after the visit given last."""
         return self._left
+
+    def again(self, done: Sequence[PointAssessment], seconds: float | None) -> Visit | None:
+        """Choose a point to be visited again, where the curve is worth it."""
+        sweep, link = self._profile.sweep, self._profile.link
+        if sweep is None or seconds is None or (link is not None and link.duplex):
+            return None
+        visit = visit_again(sweep, done, seconds, self._highest + 1, self._profile.stop.errors)
+        if visit is not None:
+            self._highest = visit.number
+            self.words = "there is time left before the sweep shall be over"
+        return visit
 
     def _is_hopeless(self, visit: Visit, done: Sequence[PointAssessment]) -> bool:
         """Whether enough points that lie between it and every aligned one were never aligned themselves.

@@ -235,6 +235,8 @@ class BenchRun:
                 return ended_by, fault
             here = self._point(visit, 0)
             visit = self._route.next(self._done)
+            if visit is None:
+                visit = self._route.again(self._done, self._schedule.left_over(self._done))
             self._note(here, self._route.take_events())
         return ended_by, None
 
@@ -311,7 +313,9 @@ class BenchRun:
         self._ended.add(number)
 
     def _about(self, visit: Visit, way: int) -> Facts:
-        facts = {**self._ways[way].facts(self._links), "index_step": len(self._ways)}
+        facts = {**self._ways[way].facts(self._links), "index_step": len(self._ways), **visit.facts}
+        if visit.reference:
+            facts["reference"] = True
         return Facts(
             values=visit.values,
             status="running",

@@ -84,6 +84,12 @@ class Schedule:
         errors = ENOUGH_ERRORS if stop.errors is None else stop.errors
         return replace(_no_longer(stop, left * shares[0] / sum(shares)), errors=errors)
 
+    def left_over(self, done: Sequence[PointAssessment]) -> float | None:
+        """Seconds that are left after the last point, less what a point takes beside; None: no budget."""
+        if self.deadline is None:
+            return None
+        return self.deadline - self._clock() - self._overhead(done)
+
     def _overhead(self, done: Sequence[PointAssessment]) -> float:
         """Seconds that a point takes beside measuring, as seen so far."""
         own = done[self._done_before or 0 :]

@@ -37,7 +37,8 @@ def route_of(profile: Profile, cut: Run | None, ways: int = 1) -> Route:
         return SearchRoute(profile, profile.search, points)
     ended = {p.index for p in points if p.ended_by not in UNFINISHED}
     visits = {index // ways for index in ended}
-    return ListRoute(profile, [v for v in visits if all(v * ways + way in ended for way in range(ways))])
+    finished = [v for v in visits if all(v * ways + way in ended for way in range(ways))]
+    return ListRoute(profile, finished, next((p for p in points if p.ended_by in UNFINISHED), None))
 
 
 class SearchRoute(Route):

@@ -153,7 +153,7 @@ def progress_line(progress: Progress, now_ns: int, events_said: int = 0) -> str:
 
     p = progress.point
     t = p.tally
-    of_all = f" of {progress.visits}" if progress.visits else ""
+    of_all = f" of {progress.visits}" if progress.visits > progress.number else ""
     point = f"point {progress.number + 1}{of_all}, " if progress.visits != 1 else ""
     parts = [
         f"{point}{duration(round(progress.elapsed_s))}",

@@ -117,7 +117,8 @@ class Sweep(ProfileSection):
     guard: CountOrZero = 3
     """End a climb after this many points in a row that never aligned, and say so; 0: never."""
     finish_by: Clock | None = None
-    """Local time of day, "HH:MM", at which the sweep shall be over; bits are shared out accordingly."""
+    """Local time of day, "HH:MM", at which the sweep shall be over. Time is shared out among the points, more
+    where the sensitivity is decided; what is left over at the end goes to such points once more."""
     sensitivity_ber: Annotated[float, Field(gt=0, lt=0.5)] | None = None
     """The bit error ratio that defines the sensitivity."""
     theory: TheoryMap | None = None

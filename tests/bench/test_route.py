@@ -199,3 +199,20 @@ def test_a_search_over_what_is_not_in_decibels_is_refused():
         parse_profile(
             BENCH.replace('"attenuation_db"', '"ber"\nquantity = "temperature"\nunit = "K"') + SEARCH
         )
+
+
+def test_a_point_that_was_visited_again_when_the_run_was_cut_is_gone_on_with(measured):
+    profile = sweep("values = [10, 20]\nfinish_by = '07:00'")
+    ended = [Point(k, {"attenuator": v}, 0, 1, "bits", (), ()) for k, v in enumerate((10.0, 20.0))]
+    again = Point(2, {"attenuator": 20.0}, 0, None, None, (), (), facts={"again": True})
+    cut = Run("", "", "sweep", 0, None, "cut", None, None, "", (), {}, {}, (), (*ended, again), None)
+    route = route_of(profile, cut)
+    visit = route.next([])
+    assert visit is not None
+    assert (visit.number, visit.values, visit.facts) == (2, {"attenuator": 20.0}, {"again": True})
+    done = [measured({"attenuator": 20.0}, 1000, 3)]
+    assert route.next(done) is None
+    after = route.again(done, 100.0)
+    assert after is not None
+    assert after.number == 3
+    assert route.again(done, None) is None  # without a time to finish by nothing is left over

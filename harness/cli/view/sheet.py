@@ -317,6 +317,8 @@ def _point_under_way(progress: Progress) -> str:
     units = progress.units
     values = ", ".join(f"{name} {value:g} {units.get(name, '')}".strip() for name, value in p.values.items())
     place = f"{progress.number + 1} of {progress.visits}" if progress.visits else f"{progress.number + 1}"
+    if 0 < progress.visits <= progress.number:
+        place = "once more"
     return f"{place}: {values}" if values else place
 
 
@@ -327,7 +329,9 @@ def _to_do(progress: Progress, now_ns: int, behind_s: int) -> list[str]:
     if not progress.visits:
         return [*lines[:1], progress.seeking]
     left = progress.visits - progress.number - 1
-    words = f"then {count(left, 'more point')}" if left else "this is the last point"
+    words = f"then {count(left, 'more point')}" if left > 0 else "this is the last point"
+    if left < 0:
+        words = progress.seeking
     if progress.until is not None:
         words += f"; the whole until about {moment(progress.until * 1e9, now_ns)}"
     return [*lines[:1], words]
