@@ -8,7 +8,7 @@ from collections.abc import Sequence
 
 from harness.assess.assessment import PointAssessment
 from harness.assess.words import count
-from harness.bench.spare import visit_again
+from harness.bench.spare import AGAIN, visit_again
 from harness.bench.visits import Visit, visits_of
 from harness.profile import Profile
 from harness.record import Event, Point
@@ -113,7 +113,7 @@ class ListRoute(Route):
         visit = visit_again(sweep, done, seconds, self._highest + 1, self._profile.stop.errors)
         if visit is not None:
             self._highest = visit.number
-            self.words = "there is time left before the sweep shall be over"
+            self.words = AGAIN
         return visit
 
     def _is_hopeless(self, visit: Visit, done: Sequence[PointAssessment]) -> bool:

@@ -12,6 +12,7 @@ from harness.bench.schedule import ENOUGH_ERRORS
 from harness.bench.visits import Visit
 from harness.profile.sweeps import Sweep
 
+AGAIN = "there is time left before the sweep shall be over"
 LEAST_S = 10.0  # less is not worth a visit
 AT_ONCE = 4  # the time is shared among so many points at most
 SURELY_UNDER = 30.0  # bits over the target BER without an error: more tell nothing of the sensitivity

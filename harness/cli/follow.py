@@ -12,6 +12,7 @@ from harness.assess.requirement import requirement_at, requirement_of
 from harness.assess.run import assess, facts_of
 from harness.bench.measurement import StopRules
 from harness.bench.progress import Live, Progress
+from harness.bench.spare import AGAIN
 from harness.cli.output import open_reading, print_json, store_place
 from harness.cli.page import print_page
 from harness.cli.watch import watcher
@@ -92,7 +93,7 @@ class Follower:
             outlook=live.outlook(),
             number=number,
             visits=visits,
-            seeking=str((now.facts.get("search") or {}).get("why", "")),
+            seeking=AGAIN if now.facts.get("again") else str((now.facts.get("search") or {}).get("why", "")),
             units=dict(now.facts.get("units") or {}),
             done=tuple(done),
             sensitivity_ber=search.get("ber") or sweep.get("sensitivity_ber"),
