@@ -23,7 +23,7 @@ LEAST_STRETCH, MOST_STRETCH = 0.25, 4.0
 _NODES, _GAUSS = hermgauss(12)
 _LOG_WEIGHTS = np.log(_GAUSS) + _NODES**2
 _STEPS = 3  # of scoring, from a good start to where a point's integrand is largest
-_TELLING = 50.0  # per dB squared
+_TELLING = 200.0  # per dB squared
 _SOFT_DB = 0.1  # of a point that says only "worse than": keeps its edge differentiable
 
 
@@ -91,7 +91,7 @@ def log_likelihood(counts: Counts, shape: Shape) -> tuple[float, Array]:
 
 
 def telling_points(counts: Counts, shape: Shape) -> int:
-    """How many points fix their own level well enough (to 0.14 dB) to say something of the scatter.
+    """How many points fix their own level well enough (to 0.07 dB) to say something of the scatter.
 
     Points without errors and points on the floor do not.
     """
