@@ -160,7 +160,7 @@ class Counter:
         if len(data) < 8:
             self._stream.append(data)
             return len(data)
-        words, trouble = self._track.scan(data[:SLAB_BYTES], self._ledger)
+        words, trouble = self._track.scan(data[: self._track.appetite], self._ledger)
         self._stream.first += 8 * words
         if trouble is not None:
             self._meet(trouble)
@@ -171,7 +171,7 @@ class Counter:
         """Follow and search in turn through what is at hand."""
         while True:
             if self._track is not None:
-                words, trouble = self._track.scan(self._stream.data[:SLAB_BYTES], self._ledger)
+                words, trouble = self._track.scan(self._stream.data[: self._track.appetite], self._ledger)
                 self._stream.drop_until(self._stream.first * 8 + 64 * words)
                 if trouble is not None:
                     self._meet(trouble)

@@ -19,10 +19,11 @@ from harness.signal.slips import Gap, gap_between, split_path, worst_stretch
 
 _MOST_PLACES = 24  # in one stretch of trouble
 _MOST_IN_VAIN = 4  # stretches of a trouble in which places are looked for and none is found
-_CAREFUL = 0.6  # of the alarm: once there is trouble, less of it is looked into
+_CAREFUL = 0.5  # of the alarm: once there is trouble, less of it is looked into
 _AROUND = 512  # bits around trouble in which a place is looked for as well, at most
 _FILLS = 0.75  # a place that holds for so much of the trouble was not picked out of many stretches
 _GUARD = 0.75  # of the evidence must remain when the shares of ONEs are taken into account
+_LOG_BETTER = math.log(3e-4)  # chance of being better than what explained the bits before
 _LEAST_GAIN = 5  # mismatches that a place more must save
 _TRIED = 6  # places that explain a stretch best are tried
 
@@ -159,7 +160,8 @@ class Resolver:
         end_at = int(np.searchsorted(path.cuts, end, side="left"))
         known = {path.places[begin_at], path.places[end_at]}
         beside = set(path.places[max(begin_at - 1, 0) : end_at + 2])
-        best, least = None, int(wrong.along(path).sum()) - _LEAST_GAIN
+        old = wrong.along(path)
+        best, least = None, int(old.sum()) - _LEAST_GAIN
         for centre in dict.fromkeys([path.places[begin_at], path.places[end_at]]):
             for place in self._best_between(centre, (known, beside), wrong.stretch, begin, end, share):
                 for longer, at in _ways_in(path, place, begin, end):
@@ -168,9 +170,24 @@ class Resolver:
                         continue
                     first, last = Path(longer, cuts).edges(len(wrong.stretch.bits))[at : at + 2]
                     limit = self._limit(longer[at - 1 : at], longer[at + 1 : at + 2])
-                    if self._proven(place, wrong, first, last, share, limit, end - begin):
+                    better = self._better(place, wrong, old, first, last, share)
+                    if better and self._proven(place, wrong, first, last, share, limit, end - begin):
                         best, least = longer, total - 1
         return None if best is None else _cut(best, wrong)
+
+    def _better(
+        self, place: Place, wrong: _Differing, old: NDArray[np.uint8], first: int, last: int, share: float
+    ) -> bool:
+        """Whether a place agrees where the path so far does not, rather than the other way round.
+
+        Places of a register may be alike for a while: then both agree with the stream, and only the bits in
+        which they differ can tell which of them it follows.
+        """
+        new = wrong[place]
+        begin, end, _ = worst_stretch(1 - new[first:last], 1 - share)
+        begin, end = first + begin, first + end
+        other = old[begin:end] != new[begin:end]
+        return log_tail(int(np.count_nonzero(other)), int(new[begin:end][other].sum())) <= _LOG_BETTER
 
     def _limit(self, before: list[Place], after: list[Place]) -> float:
         """What chance a place between two others may have: more where the stream is known to slip there."""

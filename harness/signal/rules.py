@@ -48,7 +48,8 @@ class Level:
     alarm
         So many errors in excess, over any stretch, are trouble.
     word_drift
-        Errors in a word of 64 bits above which a closer look is taken.
+        Errors in a word of 64 bits above which a closer look is taken; a multiple of one half, so that sums
+        are exact wherever they begin.
     by_word
         Excess is counted by whole words, which is enough where only long stretches stand out.
     """
@@ -65,8 +66,8 @@ LEVELS = (
     Level(24, 0.25, 0.18, 5.0, 5.5, False),
     Level(260, 0.275, 0.20, 7.0, 9.5, False),
     Level(530, 0.31, 0.25, 9.0, 14.5, False),
-    Level(940, 0.36, 0.31, 8.0, 0.36 * 64, True),
-    Level(4096, 0.40, 0.36, 14.0, 0.40 * 64, True),
+    Level(940, 0.36, 0.31, 8.0, 23.0, True),
+    Level(4096, 0.40, 0.36, 14.0, 25.5, True),
 )
 LEVEL_MOST = np.array([level.most for level in LEVELS[:-1]])
 LEVEL_DRIFT = np.array([level.word_drift for level in LEVELS])

@@ -22,8 +22,9 @@ from harness.signal.places import Place, Reference
 _WORD_BYTES = rules.WORD_BITS // 8
 _FULL_GAIN = -rules.AGREES * rules.WORD_BITS  # of evidence, by a word without errors
 _LOSS = rules.DIFFERS - rules.AGREES  # by an error in it
+_FIRST_SLAB_BYTES = 1 << 15  # at first, as there is often trouble again soon
 _ROW_WORDS = ROW_BYTES // _WORD_BYTES
-SLAB_BYTES = 1 << 20  # compared at once, so that the work stays in the processor's cache
+SLAB_BYTES = 1 << 19  # compared at once, so that the work stays in the processor's cache
 
 
 @dataclass(frozen=True, slots=True)
@@ -104,6 +105,7 @@ class Track:
         self._watched = -(-watch_from // rules.WORD_BITS)  # words before it are beyond doubt or were judged
         self._block_errors = 0  # in the words of the current block before `_watched`
         self._block_words = 0
+        self.appetite = _FIRST_SLAB_BYTES  # bytes that it is worth while to scan at once
         self._sure = start  # bits before it are decided
         self._written = start  # bits before it are in the ledger
 
@@ -131,6 +133,7 @@ class Track:
         if not words:
             return 0, None
         data = data[: words * _WORD_BYTES]
+        self.appetite = min(4 * self.appetite, SLAB_BYTES)
         differs = self._scratch.differs[: len(data)]
         touched = self._reader.compare(data, differs)
         if self.next_word * rules.WORD_BITS < self.start:

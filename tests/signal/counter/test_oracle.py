@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 
 BATCH = 64
+HARDLY = 1.25  # times the spacing that tells two slips apart; up to there chance may hide a place
 
 
 def _expected(stream, cuts):
@@ -19,15 +20,11 @@ def _expected(stream, cuts):
     return out
 
 
-def _near_truth(made, stream, cuts):
-    """Whether no burst let the oracle explain more away than happened."""
+def _led_astray(made, stream, cuts):
+    """Whether a burst let the oracle explain more away than happened: a cut far from the true one."""
     off = made.by_ber(made.TOLERANCE, stream.ber)
-    clean = np.ones(len(stream.received) + 1, dtype=bool)
-    for begin, end in stream.bursts:
-        clean[max(0, begin - int(off)) : end + int(off)] = False
-    return all(
-        abs(cut - true) <= off or not clean[true] or not clean[min(cut, len(clean) - 1)]
-        for cut, true in zip(cuts, stream.changes, strict=True)
+    return bool(stream.bursts) and any(
+        abs(cut - true) > off for cut, true in zip(cuts, stream.changes, strict=True)
     )
 
 
@@ -63,14 +60,19 @@ def judged(counting, made, oracle, parse):
                 same = _compare(counting, made, stream, errors, cuts)
                 kind = "burst" if stream.bursts else "inversion" if any(t for _, t in stream.offsets) else ""
                 kind = kind or ("slips" if stream.changes else "plain")
-                near_truth = _near_truth(made, stream, cuts)
-                if stream.closest < 1 or not near_truth:
+                if stream.closest < HARDLY and not same:
+                    result["hardly further than stated, not equal", kind] += stream.closest >= 1
+                    result["closer than stated", kind] += stream.closest < 1
+                    continue
+                if stream.closest < 1 or _led_astray(made, stream, cuts):
                     result["closer than stated", kind] += 1
                     continue
                 result["equal" if same else "not equal", kind] += 1
                 if not same:
                     failed.append(stream.seed)
                     continue
+                off = made.by_ber(made.TOLERANCE, stream.ber)
+                assert all(abs(a - b) <= off for a, b in zip(cuts, stream.changes, strict=True))
                 # What can be explained away near a cut, 1.27 errors on average at a BER of 0.3.
                 assert stream.bursts or stream.errors - errors <= 6 * (len(cuts) + 1) * max(
                     stream.ber * 10, 0.3
@@ -102,10 +104,12 @@ def test_random_streams_equal_the_oracle(judged):
 @pytest.mark.campaign
 @pytest.mark.parametrize("part", range(20))
 def test_campaign(judged, part):
-    # Where two slips lie hardly further apart than the stated spacing, or a burst covers one, chance may
-    # hide a place that the oracle is told of: at most 1 stream in 200.
+    # Chance that errors hide a place, or lend one to a burst, leaves a few: at most 1 stream in 400.
     seeds = range(1_000_000 + 512 * part, 1_000_000 + 512 * (part + 1))
     result, failed = judged(seeds)
     print(f"part {part}: {dict(result)}, not equal: {failed}")
     equal = sum(n for (verdict, _), n in result.items() if verdict == "equal")
-    assert len(failed) <= (equal + len(failed)) / 200
+    hardly = sum(n for (verdict, _), n in result.items() if verdict.startswith("hardly"))
+    assert equal >= 250
+    assert len(failed) <= 1 + equal // 400
+    assert hardly <= 10
