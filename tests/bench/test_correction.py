@@ -10,6 +10,7 @@ import pytest
 
 from drivers.contract import OutOfLimits
 from drivers.registry import link_class
+from harness.bench.check.check import Check
 from harness.bench.conditions import Conditions, caution
 from harness.bench.correction import PortLevel
 from harness.profile import ProfileError, parse_profile
@@ -172,3 +173,13 @@ def test_a_caution_is_said_where_power_flows_and_not_where_all_is_simulated():
     stated = caution(parse_profile(BENCH + "[level]\nsource_dbm = 0\ndamage_dbm = 20\n"))
     assert "damage level is stated as 20 dBm" in stated
     assert "licence and local rules" in stated
+
+
+def test_the_check_says_the_caution_and_what_is_overdue_before_it_touches_anything(tmp_path):
+    text = LOSSES.replace("[correction]", "damage_dbm = 20\n[correction]", 1).replace(
+        "2026-03-01", "2020-03-01"
+    )
+    report = Check(parse_profile(BENCH + text), tmp_path, threading.Event()).run()
+    said = {finding.step: finding.text for finding in report.findings if finding.outcome == "note"}
+    assert "damage level is stated as 20 dBm" in said["caution"]
+    assert said["calibration"] == "the calibration of cable to the box (loss) ran out on 2020-03-01"

@@ -5,6 +5,7 @@ from __future__ import annotations
 import itertools
 import os
 import random
+import signal
 import subprocess
 import sys
 import time
@@ -135,6 +136,27 @@ def test_a_run_is_not_resumed_with_another_attenuator_and_that_one_is_not_touche
         assert point.facts["units"] == {"attenuator": "dB"}
     assert any(e["kind"] == "resumed" for p in done.json["points"] for e in p["events"])
     assert bitassay("verify", "last").status == 0
+
+
+def test_a_sweep_ended_by_ctrl_c_is_safe_at_once_and_can_go_on(bitassay, attenuated, tmp_path):
+    device = attenuated()
+    (tmp_path / "sweep.toml").write_text(
+        device.profile(
+            "[sweep]\ninstrument = 'attenuator'\nvalues = [33, 34]\n",
+            stop="bits = 800_000",
+            link="pace_bps = 400_000",
+        )
+    )
+    process = start(tmp_path, "sweep", "sweep.toml")
+    wait_for_seconds(tmp_path, 1)
+    process.send_signal(signal.SIGINT)
+    assert process.wait(timeout=60) == 130
+    assert device.settings() == [33, SAFE]
+    done = bitassay("resume", "last", "--json", timeout=120)
+    assert done.status == 0, done.err
+    assert [p["bits_compared"] for p in done.json["points"]] == [800_000, 800_000]
+    # Whether the first point was over by then is a matter of the machine's load.
+    assert device.settings() in ([33, SAFE, 33, 34, SAFE], [33, SAFE, 34, SAFE])
 
 
 @pytest.mark.campaign
