@@ -9,7 +9,9 @@ from harness.signal.counter import Counter
 LOSS_WITHIN = 32_768  # bits after the last evidence: what is fed until loss is stated and handed out
 
 
-@pytest.mark.parametrize("name", ["PRBS7", "PRBS9", "PRBS15", "PRBS23", "PRBS31", "QRSS", "word:1000"])
+@pytest.mark.parametrize(
+    "name", ["PRBS7", "PRBS9", "PRBS15", "PRBS23", "PRBS31", "QRSS", "word:1000", "word:0x8000"]
+)
 @pytest.mark.parametrize("kind", ["zeros", "ones", "noise"])
 def test_loss_is_stated_within_a_number_of_bits(counting, parse, name, kind):
     rng = np.random.default_rng(1)

@@ -48,13 +48,17 @@ def test_an_outage_that_ends_inside_a_word_loses_no_byte(counting, parse, extra)
     counting.run("PRBS15", bits[: len(bits) // 8 * 8], [len(bits) // 16, len(bits) // 8 - len(bits) // 16])
 
 
-@pytest.mark.parametrize("tail", range(1, 80, 7))
-def test_trouble_in_the_last_word_is_settled(counting, parse, tail):
+@pytest.mark.parametrize("after", range(24, 136, 8))
+def test_trouble_in_the_last_word_is_settled(counting, parse, after):
     # The filling of the last word was taken for received bits when trouble was met in it.
-    bits = np.concatenate([parse("PRBS31").bits(0, 8000), parse("PRBS31").bits(9000, 200 + 8 * tail)])
+    bits = np.concatenate([parse("PRBS31").bits(0, 8000), parse("PRBS31").bits(9000, after)])
     segments = counting.run("PRBS31", bits)
-    assert _slips(counting, segments)[0][2] == -1000
-    assert counting.total(segments).errors <= 1
+    if after > 64:
+        assert _slips(counting, segments)[0][2] == -1000
+        assert counting.total(segments).errors == 0
+    else:  # too few bits to prove a place: they count against the old one, which is the stated rule
+        wrong = bits != parse("PRBS31").bits(0, len(bits))
+        assert counting.total(segments).errors in (0, wrong.sum())
 
 
 def test_a_short_place_at_the_start_is_found_from_the_next_one(counting, parse):

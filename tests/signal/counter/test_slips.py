@@ -3,8 +3,6 @@
 import numpy as np
 import pytest
 
-from harness.signal import rules
-
 
 def _join(parse, name, parts):
     """Stretches of a pattern: (place, bits, turned)."""
@@ -97,7 +95,7 @@ def test_an_inversion_is_neither_a_slip_nor_a_burst(counting, parse, name):
     assert [s.inverted for s in segments if s.events] == [False, True, False]
 
 
-@pytest.mark.parametrize("length", [30, 300, 3000, rules.OUTAGE_BITS - 200])
+@pytest.mark.parametrize("length", [30, 300, 3000, 8192 - 200])
 @pytest.mark.parametrize("kind", ["noise", "zeros", "ones"])
 def test_a_burst_is_counted(counting, parse, kind, length):
     rng = np.random.default_rng(length)
@@ -111,11 +109,20 @@ def test_a_burst_is_counted(counting, parse, kind, length):
     assert (tally.errors, tally.unaligned) == (wrong, 0)
 
 
+def test_no_place_is_found_in_a_burst_of_noise(counting, parse):
+    # One false place in 1e6 such bursts is what the rules allow.
+    for seed in range(25):
+        rng = np.random.default_rng(seed)
+        received = parse("PRBS23").bits(seed, 16_000)
+        received[6000:8500] = rng.integers(0, 2, 2500)
+        assert _kinds(counting, counting.run("PRBS23", received)) == [("aligned", 0)]
+
+
 @pytest.mark.parametrize(
     ("kind", "length", "shift"),
     [
-        ("noise", rules.OUTAGE_BITS + 200, 777),
-        ("zeros", rules.OUTAGE_BITS + 200, 0),
+        ("noise", 8192 + 200, 777),
+        ("zeros", 8192 + 200, 0),
         ("noise", 50_000, 0),
         ("ones", 50_000, 777),
         ("zeros", 3_000_000, 777),
@@ -150,7 +157,7 @@ def test_an_outage_at_the_start_is_unaligned_and_a_short_one_is_counted(counting
         noise = rng.integers(0, 2, length).astype(np.uint8)
         received = np.concatenate([noise, parse("PRBS15").bits(0, 40_000)])
         tally = counting.total(counting.run("PRBS15", received))
-        if length < rules.OUTAGE_BITS:
+        if length < 8192:
             assert tally.unaligned == 0
             assert abs(tally.errors - length / 2) < 5 * np.sqrt(length) / 2
         else:
@@ -165,7 +172,7 @@ def test_an_outage_at_the_end_is_unaligned_and_a_short_one_is_counted(counting, 
         received = np.concatenate([parse("PRBS15").bits(0, 40_000), noise])
         segments = counting.run("PRBS15", received)
         tally = counting.total(segments)
-        if length < rules.OUTAGE_BITS:
+        if length < 8192:
             assert tally.unaligned == 0
         else:
             assert abs(tally.unaligned - length) <= 150
