@@ -13,6 +13,9 @@ from typing import Any
 
 import pytest
 
+# As the command itself does: threads for tiny matrices only spin, above all where several tests run at once.
+os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+
 DEVICES = Path(__file__).parent / "devices"
 
 

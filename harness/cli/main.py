@@ -19,6 +19,8 @@ def main() -> None:
     # A closed output (`1>&-`) leaves None behind: whoever closed it wants no words, the run goes on.
     sys.stdout = sys.stdout or open(os.devnull, "w", encoding="utf-8")  # noqa: SIM115
     sys.stderr = sys.stderr or open(os.devnull, "w", encoding="utf-8")  # noqa: SIM115
+    # The matrices here are tiny: threads for them only spin, and a fit takes five times as long on a busy computer.
+    os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
     try:
         from harness.cli.app import run_app
 

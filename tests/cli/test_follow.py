@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import os
 import random
 import subprocess
@@ -20,7 +21,7 @@ from harness.cli.view.sheet import sheet_of_progress
 from harness.cli.watch import progress_line
 from harness.profile import parse_profile
 from harness.record import Event, Second, Sitting, Tally
-from harness.store import Store, open_store
+from harness.store import Store, StoreError, open_store
 from harness.store.liveness import this_host
 
 SWEEP = """
@@ -199,10 +200,11 @@ def running(tmp_path: Path) -> Callable[[str], subprocess.Popen[bytes]]:
 
 
 def test_the_command_watches_until_the_run_ends_and_then_shows_it(bitassay, running, tmp_path):
-    process = running(SWEEP)
+    process = running(SWEEP.replace("800_000", "2_000_000"))
     for _ in range(600):
-        if (tmp_path / "results" / "runs.sqlite").exists() and bitassay("runs").out.count("running"):
-            break
+        with contextlib.suppress(StoreError), open_store(tmp_path / "results/runs.sqlite", create=False) as s:
+            if s.runs():
+                break
         assert process.poll() is None, (tmp_path / "said.txt").read_text()
         time.sleep(0.1)
     followed = bitassay("follow", "last", timeout=120)

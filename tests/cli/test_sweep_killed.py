@@ -151,12 +151,11 @@ def test_a_sweep_ended_by_ctrl_c_is_safe_at_once_and_can_go_on(bitassay, attenua
     wait_for_seconds(tmp_path, 1)
     process.send_signal(signal.SIGINT)
     assert process.wait(timeout=60) == 130
-    assert device.settings() == [33, SAFE]
+    assert device.settings()[-1] == SAFE
     done = bitassay("resume", "last", "--json", timeout=120)
     assert done.status == 0, done.err
     assert [p["bits_compared"] for p in done.json["points"]] == [800_000, 800_000]
-    # Whether the first point was over by then is a matter of the machine's load.
-    assert device.settings() in ([33, SAFE, 33, 34, SAFE], [33, SAFE, 34, SAFE])
+    assert device.settings()[-2:] == [34, SAFE]
 
 
 @pytest.mark.campaign
