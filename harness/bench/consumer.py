@@ -312,9 +312,13 @@ class Consumer(threading.Thread):
         """Say what had gone missing before the decision without a slip that shows it.
 
         A loss of whole periods leaves no trace in a periodic stream: only the count of bits tells. Of what was
-        out at the decision and never came, so much is taken to be on its way as was when the stream began.
+        out at the decision and never came, so much is taken to be on its way as ever was at the least: a start
+        that was held up by this computer must not hide a loss.
         """
-        missing = min(self._traffic.in_flight(), self._out_at_decision) - (self._first_delay_bits or 0)
+        usual = self._first_delay_bits or 0
+        if self._places is not None and self._places.least_out is not None:
+            usual = min(usual, self._places.least_out)
+        missing = min(self._traffic.in_flight(), self._out_at_decision) - usual
         if self._sends and missing > 0:
             text = f"{count(missing, 'bit')} sent before the decision never came back"
             self._happened("never_returned", text, at, {"bits": missing})

@@ -95,6 +95,11 @@ class Places:
             return None
         return Delay(max(0, sent_by - sent_bit - 1), seconds, modulo)
 
+    @property
+    def least_out(self) -> int | None:
+        """The fewest bits on their way when aligned bits came; None before any came."""
+        return self._least_out
+
     def follow(self, received_end: int, arrived_ns: int) -> None:
         """Take how many bits were on their way when aligned bits, up to `received_end`, came."""
         if self.ahead is None:
