@@ -264,7 +264,7 @@ class Counter:
             level = max(level, self._trouble.level)
         if search.old is not None:
             # Trouble that was judged is not met again, so every search is further on than the last.
-            evidence = max(evidence, self._trouble.noticed if old == place else search.begin + 64)
+            evidence = max(evidence, self._trouble.noticed if old == place else search.begin + 8)
         self._follow(place, self._written, max(evidence, self._written), level)
 
     def _path(self, old: Place | None, hit: Hit, stretch: Stretch) -> Path:

@@ -113,10 +113,12 @@ class Search:
 
     def last_look(self, stream: Undecided) -> Hit | None:
         """Look for a place in any part of a stream that ends without one."""
-        earliest = max(self.begin, 8 * stream.first, stream.end - _NEARBY_FOR)
+        earliest = max(self.begin, 8 * stream.first, stream.end - 2 * rules.LONGEST_WINDOW)
         size = min(stream.end - earliest, rules.LONGEST_WINDOW)
-        while size >= 2 * _LEAST_BLIND:
+        for _ in range(3):
             size //= 2
+            if size < _LEAST_BLIND:
+                break
             for end in range(stream.end, earliest + size - 1, -(size // 2)):
                 hit = self._anywhere(stream, end - size, end)
                 if hit is not None:

@@ -13,7 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from harness.signal import rules
-from harness.signal.bits import unpack
+from harness.signal.bits import pack, unpack
 from harness.signal.ledger import Ledger
 from harness.signal.levels import Levels, next_level
 from harness.signal.patterns.readers import ROW_BYTES
@@ -102,7 +102,8 @@ class Track:
         self._received = np.empty(0, dtype=np.uint8)  # held: words not yet handed out
         self._differs = np.empty(0, dtype=np.uint8)
         self._counts = np.empty(0, dtype=np.uint8)
-        self._watched = -(-watch_from // rules.WORD_BITS)  # words before it are beyond doubt or were judged
+        self._watched = watch_from // rules.WORD_BITS  # words before it are beyond doubt or were judged
+        self._plain = weights.scale == 1 and not watch_from % rules.WORD_BITS  # held counts are errors
         self._block_errors = 0  # in the words of the current block before `_watched`
         self._block_words = 0
         self.appetite = _FIRST_SLAB_BYTES  # bytes that it is worth while to scan at once
@@ -271,13 +272,28 @@ class Track:
         return Trouble(offset + begins, offset + noticed + 1, level)
 
     def _weighed(self, slab: _Slab, counts: NDArray[np.uint8]) -> NDArray[np.uint8]:
-        """Errors in each word with the weights of a pattern that is not balanced."""
-        if self._weights.scale == 1:
-            return counts
-        lost = np.bitwise_count((slab.differs & ~slab.received).view(np.uint64)).astype(np.int64)
+        """Errors in each word as trouble is looked for: with weights, from where it is looked for on."""
+        weighed = counts
+        if self._weights.scale != 1:
+            weighed = self._with_weights(slab.received, slab.differs, counts)
+        at = self._watch_from // rules.WORD_BITS - slab.first
+        if self._watch_from % rules.WORD_BITS and 0 <= at < len(counts):
+            # Errors before the bit from which on trouble is looked for were judged and are not met again.
+            word = slice(at * _WORD_BYTES, (at + 1) * _WORD_BYTES)
+            bits = unpack(slab.differs[word], self._order)
+            bits[: self._watch_from % rules.WORD_BITS] = 0
+            later = pack(bits, self._order)
+            one = np.array([bits.sum()], dtype=np.uint8)
+            weighed = weighed.copy()
+            weighed[at : at + 1] = self._with_weights(slab.received[word], later, one)
+        return weighed
+
+    def _with_weights(
+        self, received: NDArray[np.uint8], differs: NDArray[np.uint8], counts: NDArray[np.uint8]
+    ) -> NDArray[np.uint8]:
+        lost = np.bitwise_count((differs & ~received).view(np.uint64)).astype(np.int64)
         weighed = lost * self._weights.one + (counts - lost) * self._weights.zero
-        capped: NDArray[np.uint8] = np.minimum(weighed // self._weights.scale, 255).astype(np.uint8)
-        return capped
+        return np.minimum(weighed // self._weights.scale, 255).astype(np.uint8)
 
     def _levels(self, counts: NDArray[np.uint8]) -> Levels:
         """The levels that stand for the words from `_watched` on."""
@@ -360,7 +376,7 @@ class Track:
         slab_bit = slab_first * rules.WORD_BITS
         held_until = min(self._sure, slab_bit)
         if held_until > self._written:
-            held = self._counts if self._weights.scale == 1 else None
+            held = self._counts if self._plain else None
             self._compare(self._received, self._differs, held, self._first, held_until, ledger)
         if self._sure > max(self._written, slab_bit):
             if wrong is not None and not len(wrong):

@@ -37,11 +37,13 @@ def parse():
     return cache(parse_pattern)
 
 
-def _merged(segments):
+def _merged(segments, period):
     """Neighbours that differ in nothing but the cut between them, as plain values."""
     out = []
     for s in segments:
         place = None if s.place is None else s.place - s.start
+        if place is not None and period is not None:
+            place %= period
         one = [
             s.start,
             s.tally,
@@ -67,11 +69,8 @@ def _merged(segments):
 
 
 def _same(segments, period):
-    """What may not depend on chunks: places modulo the period, everything else as it is."""
-    return [
-        ((None if place is None else place % period if period else place), one, events)
-        for place, one, events in _merged(segments)
-    ]
+    """What may not depend on chunks: everything, places modulo the period."""
+    return _merged(segments, period)
 
 
 def _check(segments, received):

@@ -151,11 +151,15 @@ def make(parse, seed, *, name=None, ber=None, unit=None, slips=None, near=4096, 
     clean = np.ones(total, dtype=bool)
     for begin, end in where:
         clean[begin:end] = False
-    closest = 1e9
+    closest, longest = 1e9, 0.0
     for a, b in pairwise(edges):
         # Beside a burst a place must be picked out of more stretches.
         need = spacing if clean[a:b].all() else 2 * spacing
         closest = min(closest, int(clean[a:b].sum()) / need)
+        runs = np.diff(np.flatnonzero(np.concatenate([[True], ~clean[a:b], [True]])))
+        longest = max(longest, int(runs.max()) - 1)
+    if longest < by_ber(ACQUIRED, ber):
+        closest = 0.0  # bursts leave nothing that could be found
     return Made(
         name,
         seed,

@@ -96,7 +96,7 @@ def test_the_independent_register_equals_the_pattern(made, parse):
 
 
 def test_random_streams_equal_the_oracle(judged):
-    result, failed = judged(range(96), spread=0.6)
+    result, failed = judged(range(128), spread=0.6)
     assert not failed, (result, failed)
     assert sum(n for (verdict, _), n in result.items() if verdict == "equal") >= 45
 
