@@ -16,7 +16,9 @@ def profile(tmp_path: Path, ports: list[int], keys: str, rest: str) -> Path:
 
 def test_one_direction_is_counted_exactly(bitassay, bridge, tmp_path):
     ports = bridge(flip=[9, 4_000, 70_000], flip_back=[1])
-    got = bitassay("measure", profile(tmp_path, ports, "", "[stop]\nbits = 800_000\n"), "--json").json
+    done = bitassay("measure", profile(tmp_path, ports, "", "[stop]\nbits = 800_000\n"), "--json")
+    assert done.status == 0, done.err
+    got = done.json
     assert (got["errors"], got["bits_compared"]) == (3, 800_000)
 
 

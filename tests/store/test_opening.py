@@ -12,7 +12,7 @@ from collections.abc import Callable, Iterator
 from pathlib import Path
 
 import pytest
-from sqlalchemy import text
+from sqlalchemy import make_url, text
 
 from harness.record import Second
 from harness.store import Store, StoreError, StoreLost, WrongRevision, default_url, open_store
@@ -266,7 +266,7 @@ def test_a_reader_of_ones_own_needs_rights_to_read_only(postgres: str, filled: B
             connection.execute(text(f"GRANT USAGE ON SCHEMA {name} TO {name}_reader"))
             connection.execute(text(f"GRANT SELECT ON ALL TABLES IN SCHEMA {name} TO {name}_reader"))
         try:
-            reader = postgres.replace("//postgres@", f"//{name}_reader@")
+            reader = make_url(postgres).set(username=f"{name}_reader").render_as_string(hide_password=False)
             with open_store(reader, create=False) as readers:
                 assert readers.find("last") == key
                 assert readers.load(key).status == "completed"
