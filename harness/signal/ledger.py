@@ -222,7 +222,8 @@ class Ledger:
         offset: int,
     ) -> None:
         """The same as `_count` for whole words of which `offset` is the first bit: only those with errors."""
-        errors = int((counts if words is None else counts[words]).sum(dtype=np.int64))
+        # A slab has 2^22 bits, so 32 are enough for its errors, and are summed twice as fast as 64.
+        errors = int((counts if words is None else counts[words]).sum(dtype=np.uint32))
         if not errors:
             return
         room = self._limit - self._listed
@@ -254,7 +255,7 @@ class Ledger:
         both, counts = self._both[: len(differs)], self._both_counts[: len(differs) // 8]
         np.bitwise_and(received, differs, out=both)
         np.bitwise_count(both.view(np.uint64), out=counts)
-        return int(counts.sum(dtype=np.int64))
+        return int(counts.sum(dtype=np.uint32))
 
     def _close(self) -> None:
         segment, self._open = self._open, None
