@@ -167,6 +167,7 @@ class Assessment:
     sensitivity: Mapping[str, Any] | None = None
     curves: Sequence[Any] = ()  # harness.assess.curve.Curve, one for each setting of a sweep's other axes
     more: Mapping[str, Any] = field(default_factory=dict)
+    required_sensitivity: str = ""  # in words; not in JSON, whose `reasons` say it
 
     def to_json(self) -> dict[str, Any]:
         """JSON as `measure`, `examine`, `sweep` and `show` print it; never NaN."""

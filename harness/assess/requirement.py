@@ -6,6 +6,8 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Any, Literal
 
+from harness.assess.words import ratio
+from harness.record import Run
 from harness.statistics.objectives import Objectives
 from harness.statistics.plans import Plan, make_plan
 
@@ -68,3 +70,26 @@ def requirement_of(settings: Mapping[str, Any]) -> Requirement | None:
         values["standard"] = asked.get("standard", "G.821")
         values["block_bits"] = asked.get("block_bits")
     return Requirement(**values)
+
+
+def units_of(run: Run) -> dict[str, str]:
+    """Give each instrument's unit, as found at the points or else as the profile states it."""
+    sections = run.settings.get("instruments") or {}
+    units = {name: str(section.get("unit") or "") for name, section in sections.items()}
+    for point in run.points:
+        units.update({name: str(unit) for name, unit in (point.facts.get("units") or {}).items() if unit})
+    return units
+
+
+def required_sensitivity(run: Run) -> str:
+    """Say which sensitivity is required: ``sensitivity at BER 1e-6 at least 54 dB``; empty where none is."""
+    asked = (run.settings.get("requirement") or {}).get("sensitivity_at_least")
+    if asked is None:
+        return ""
+    sweep: Mapping[str, Any] = run.settings.get("sweep") or {}
+    search: Mapping[str, Any] = run.settings.get("search") or {}
+    axes = sweep.get("axes") or [sweep]
+    unit = units_of(run).get(axes[0].get("instrument") or search.get("instrument") or "", "")
+    ber = sweep.get("sensitivity_ber") or search.get("ber")
+    at = f" at BER {ratio(float(ber))}" if ber else ""
+    return f"sensitivity{at} at least {float(asked):g} {unit}".rstrip()

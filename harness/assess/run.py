@@ -9,7 +9,12 @@ from typing import Any
 from harness.assess.accumulate import Accumulator, accumulator_for
 from harness.assess.assessment import Assessment, PointAssessment
 from harness.assess.point import DEFAULT_CONFIDENCE, Facts, assess_point
-from harness.assess.requirement import Requirement, requirement_at, requirement_of
+from harness.assess.requirement import (
+    Requirement,
+    required_sensitivity,
+    requirement_at,
+    requirement_of,
+)
 from harness.assess.words import iso
 from harness.record import Event, Point, Run, Tally, Verdict
 
@@ -59,6 +64,7 @@ def assess(run: Run) -> Assessment:
         sensitivity=sensitivities[0] if len(sensitivities) == 1 else None,
         curves=tuple(curves),
         more={**({"sensitivities": sensitivities} if len(sensitivities) > 1 else {}), **_notes(run)},
+        required_sensitivity=required_sensitivity(run),
     )
 
 

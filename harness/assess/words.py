@@ -3,7 +3,30 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Mapping
 from datetime import UTC, datetime
+
+ENDED_BY: Mapping[str, str] = {
+    "plan": "its plan decided",
+    "bits": "the profile's limit of bits was reached",
+    "seconds": "the profile's limit of time was reached",
+    "errors": "the profile's limit of errors was reached",
+    "end_of_data": "the data came to their end",
+    "interrupted": "it was interrupted",
+    "fault": "something failed",
+}
+STATUS: Mapping[str, str] = {
+    "running": "the run goes on",
+    "cut": "the run was cut: the process that measured is gone",
+    "failed": "something failed",
+    "interrupted": "the run was interrupted",
+    "completed": "the run was completed",
+}
+
+
+def how_it_ended(status: str, ended_by: str | None) -> str:
+    """Say why a run is over, or that it is not."""
+    return ENDED_BY.get(ended_by or "", "") if status == "completed" else STATUS[status]
 
 
 def count(number: int, noun: str) -> str:

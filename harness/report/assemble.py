@@ -4,9 +4,10 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 
+from harness.assess.words import STATUS
 from harness.report.document import Document, Entries, Section, harmless
 from harness.report.material import Material
-from harness.report.phrases import STATUS, moment, unit_name
+from harness.report.phrases import moment, unit_name
 from harness.report.sections.conditions import conditions_section, link_section
 from harness.report.sections.counts import (
     availability_section,

@@ -9,7 +9,7 @@ from functools import cached_property
 from typing import Any
 
 from harness.assess.assessment import Assessment, PointAssessment
-from harness.assess.requirement import Requirement, requirement_at, requirement_of
+from harness.assess.requirement import Requirement, requirement_at, requirement_of, units_of
 from harness.assess.run import assess
 from harness.record import Note, Point, Run
 from harness.report.series import Series, series_of
@@ -108,21 +108,12 @@ def material_of(
     """
     assessment = assess(run)
     requirement = requirement_of(run.settings)
-    units = _units(run)
+    units = units_of(run)
     points = tuple(
         Measured(point, assessed, requirement_at(requirement, run.settings, point.values), units)
         for point, assessed in zip(run.points, assessment.points, strict=True)
     )
     return Material(run, assessment, points, kept_digest, digest, written, program, units)
-
-
-def _units(run: Run) -> dict[str, str]:
-    """Give each instrument's unit, as found at the points or else as the profile states it."""
-    sections = run.settings.get("instruments") or {}
-    units = {name: str(section.get("unit") or "") for name, section in sections.items()}
-    for point in run.points:
-        units.update({name: str(unit) for name, unit in (point.facts.get("units") or {}).items() if unit})
-    return units
 
 
 def _differences(run: Run, derived: Assessment) -> list[str]:

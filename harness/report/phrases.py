@@ -9,23 +9,6 @@ from harness.assess.assessment import PointAssessment
 from harness.assess.words import count, duration, local_date, percent, ratio
 from harness.report.material import Material, Measured
 
-ENDED_BY = {
-    "plan": "the plan decided",
-    "bits": "the profile's limit of bits was reached",
-    "seconds": "the profile's limit of time was reached",
-    "errors": "the profile's limit of errors was reached",
-    "end_of_data": "the data came to their end",
-    "interrupted": "it was interrupted",
-    "fault": "something failed",
-}
-STATUS = {
-    "running": "the run goes on",
-    "cut": "the run was cut: the process that measured is gone",
-    "failed": "something failed",
-    "interrupted": "the run was interrupted",
-    "completed": "the run was completed",
-}
-
 
 def number(value: int) -> str:
     """Write a count with its digits in threes."""

@@ -335,3 +335,17 @@ def test_a_far_end_loop_is_called_both_directions_in_series(making):
     point = making.point(acc, None, facts={"link": link})
     text = text_of(sheet_of_progress(making.progress([0], point=point), making.start), 140, 40)
     assert "serial /dev/ttyUSB0; far-end loop, both directions in series" in text
+
+
+def test_a_void_sweep_is_void_on_the_page_whatever_its_verdict_was(making):
+    judged = making.assessment([0] * 5, verdict="PASS", reasons=["at least 54 dB as required"])
+    void = replace(judged, points=[judged.whole] * 2, sweep=True, more={"void": True})
+    assert sheet_of_assessment(void).verdict == "VOID (it was PASS)"
+
+
+def test_a_sensitivity_that_is_required_stands_under_required(making):
+    measured = making.assessment([0] * 5)
+    asked = "sensitivity at BER 1e-6 at least 54 dB"
+    swept = replace(measured, points=[measured.whole] * 2, sweep=True, required_sensitivity=asked)
+    assert sheet_of_assessment(swept).required == [asked]
+    assert "nothing was required" not in sheet_of_assessment(swept).verdict

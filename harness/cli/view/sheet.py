@@ -11,7 +11,7 @@ from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 from harness.assess.assessment import Assessment, PointAssessment
-from harness.assess.words import count, duration, local_date, percent, rate
+from harness.assess.words import count, duration, how_it_ended, local_date, percent, rate
 from harness.cli.view.entries import (
     ber_decided,
     ber_so_far,
@@ -35,22 +35,6 @@ if TYPE_CHECKING:
     from harness.bench.run import Progress
 
 SECOND_NS = 1_000_000_000
-ENDED_BY = {
-    "plan": "its plan decided",
-    "bits": "the profile's limit of bits was reached",
-    "seconds": "the profile's limit of time was reached",
-    "errors": "the profile's limit of errors was reached",
-    "end_of_data": "the data came to their end",
-    "interrupted": "it was interrupted",
-    "fault": "something failed",
-}
-NOT_ENDED = {
-    "running": "it goes on",
-    "cut": "it was cut: the process that measured is gone",
-    "failed": "something failed",
-    "interrupted": "it was interrupted",
-    "completed": "",
-}
 
 
 @dataclass(frozen=True, slots=True)
@@ -144,20 +128,14 @@ def sheet_of_assessment(a: Assessment, where: str = "") -> Sheet:
     """Fill a page from a record."""
     p = a.whole
     decided = a.verdict in ("PASS", "FAIL")
-    void = bool(a.more.get("void"))
-    verdict = (
-        f"VOID (it was {a.verdict or 'without a verdict'})"
-        if void
-        else a.verdict or ("none: nothing was required" if p.plan is None else "none yet: the run goes on")
-    )
     ended = [f"record in {where}"] if where else []
     sheet = Sheet(
         unit=unit_name(a.device),
         title=a.title,
         corner=local_date(a.started)[:16],
-        required=required_words(p),
+        required=_required(a),
         risks=risk_words(p),
-        verdict=verdict,
+        verdict=_verdict(a),
         stamped=a.verdict is not None,
         against=a.verdict == "FAIL",
         reasons=a.reasons,
@@ -179,9 +157,6 @@ def sheet_of_assessment(a: Assessment, where: str = "") -> Sheet:
     looked_for = a.sensitivity["ber"] if a.sensitivity else None
     return replace(
         sheet,
-        required=next((required_words(p) for p in a.points if p.plan), sheet.required),
-        verdict=a.verdict
-        or ("none yet: the run goes on" if a.status == "running" else "none: nothing was required"),
         ber=sensitivity_words(a.sensitivity),
         bars=[(point_label(p), _bar(p, decided=False, looked_for=looked_for)) for p in a.points],
         bits=(),
@@ -191,6 +166,24 @@ def sheet_of_assessment(a: Assessment, where: str = "") -> Sheet:
         to_do=[_took_in_all(a)],
         events=[event for p in a.points for event in p.events],
     )
+
+
+def _required(a: Assessment) -> list[str]:
+    """Say what is required of the run: a sensitivity, a BER at the points that are judged, or nothing."""
+    judged = next((p for p in (a.whole, *a.points) if p.plan), None)
+    said = [a.required_sensitivity] if a.required_sensitivity else []
+    return said + required_words(judged or a.whole) if judged or not said else said
+
+
+def _verdict(a: Assessment) -> str:
+    if a.more.get("void"):
+        return f"VOID (it was {a.verdict or 'without a verdict'})"
+    if a.verdict:
+        return a.verdict
+    if a.status == "running":
+        return "none yet: the run goes on"
+    asked = a.required_sensitivity or any(p.plan for p in (a.whole, *a.points))
+    return "none: the run has not come to one" if asked else "none: nothing was required"
 
 
 def _state(progress: Progress, now_ns: int, closing: str) -> tuple[str, bool]:
@@ -291,10 +284,10 @@ def _why(a: Assessment) -> str:
     if a.status == "failed" and fault:
         return fault
     if a.status in ("cut", "running"):
-        return NOT_ENDED[a.status]
+        return how_it_ended(a.status, None)
     if found := next((e.text for e in reversed(a.whole.events) if e.kind == "search"), ""):
         return found
-    return ENDED_BY.get(a.ended_by or "", "") or NOT_ENDED.get(a.status, "")
+    return how_it_ended(a.status, a.ended_by)
 
 
 def _strip_ends(a: Assessment) -> tuple[str, str]:

@@ -11,11 +11,10 @@ from dataclasses import dataclass
 from typing import Literal, TextIO
 from xml.etree import ElementTree as ET
 
-from harness.assess.words import iso
+from harness.assess.words import STATUS, iso
 from harness.report.harmless import plain
 from harness.report.material import Material, Measured
 from harness.report.phrases import (
-    STATUS,
     bounds_words,
     deciding_words,
     digits,

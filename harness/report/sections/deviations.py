@@ -5,11 +5,11 @@ from __future__ import annotations
 from collections.abc import Iterator
 from itertools import pairwise
 
-from harness.assess.words import count, duration
+from harness.assess.words import STATUS, count, duration
 from harness.record import Event
 from harness.report.document import Block, Listing, Paragraph, Section
 from harness.report.material import Material
-from harness.report.phrases import STATUS, moment, point_name
+from harness.report.phrases import moment, point_name
 
 _LISTED = 12  # of a kind
 

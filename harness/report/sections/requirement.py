@@ -10,7 +10,6 @@ from harness.report.document import Block, Column, Entries, Entry, Listing, Para
 from harness.report.figures.of_counts import stairs_of
 from harness.report.material import Material, Measured
 from harness.report.phrases import ber_name, digits, number, point_name
-from harness.report.sections.sweep import required_sensitivity
 from harness.statistics.objectives import Objectives
 from harness.statistics.plans import describe
 
@@ -52,7 +51,7 @@ def unit_section(material: Material) -> Section:
 def requirement_section(material: Material) -> Section:
     """Say what is required and how it is decided, in plain words."""
     judged = [m for m in material.points if m.plan is not None]
-    sensitivity = required_sensitivity(material)
+    sensitivity = material.assessment.required_sensitivity
     blocks: list[Block] = []
     if sensitivity:
         blocks.append(Paragraph(f"Requirement: {sensitivity}."))

@@ -5,13 +5,11 @@ from __future__ import annotations
 from collections.abc import Iterator
 
 from harness.assess.assessment import PointAssessment
-from harness.assess.words import count, duration, percent, ratio
+from harness.assess.words import STATUS, count, duration, how_it_ended, percent, ratio
 from harness.report.document import Block, Entries, Entry, Section, Verdict
 from harness.report.figures.of_counts import ruler_of
 from harness.report.material import Material, Measured
 from harness.report.phrases import (
-    ENDED_BY,
-    STATUS,
     ber_name,
     bounds_words,
     deciding_words,
@@ -21,7 +19,7 @@ from harness.report.phrases import (
     unit_name,
 )
 from harness.report.sections.deviations import deviations
-from harness.report.sections.sweep import required_sensitivity, sensitivity_words
+from harness.report.sections.sweep import sensitivity_words
 
 
 def summary(material: Material) -> Section:
@@ -53,7 +51,7 @@ def _unit(material: Material) -> Iterator[str]:
 
 def _required(material: Material) -> Iterator[str]:
     judged = [m for m in material.points if m.assessed.plan]
-    sensitivity = required_sensitivity(material)
+    sensitivity = material.assessment.required_sensitivity
     if sensitivity:
         yield sensitivity
     if not judged:
@@ -151,7 +149,7 @@ def _bits(material: Material) -> Iterator[str]:
 
 def _meanwhile(material: Material, found: list[str]) -> Iterator[str]:
     a = material.assessment
-    why = ENDED_BY.get(a.ended_by or "", "") if a.status == "completed" else STATUS[a.status]
+    why = how_it_ended(a.status, a.ended_by)
     yield span(a.started, a.ended) + (f"; {why}" if why else "")
     yield ", ".join(found) if found else "no slip, no unaligned bit, no lost link"
     said = sum(len(items) for _title, items in deviations(material))

@@ -15,21 +15,6 @@ from harness.report.sections.conditions import point_level
 _ROWS = 400  # of the table of points
 
 
-def required_sensitivity(material: Material) -> str:
-    """Say which sensitivity is required; empty where none is."""
-    asked = material.section("requirement").get("sensitivity_at_least")
-    if asked is None:
-        return ""
-    sweep = material.section("sweep")
-    axes = sweep.get("axes") or [sweep]
-    unit = material.units.get(
-        axes[0].get("instrument") or material.section("search").get("instrument") or "", ""
-    )
-    ber = sweep.get("sensitivity_ber") or material.section("search").get("ber")
-    at = f" at BER {ratio(float(ber))}" if ber else ""
-    return f"sensitivity{at} at least {float(asked):g} {unit}".rstrip()
-
-
 def sensitivity_words(material: Material) -> list[str]:
     """Say where the BER that was looked for is reached, for each curve; nothing where none was looked for."""
     a = material.assessment
