@@ -10,13 +10,13 @@ from typing import Any
 
 from harness.assess.assessment import PointAssessment
 from harness.assess.words import percent, ratio
-from harness.record import Verdict
 from harness.statistics.bracket import Bracket, bracket_of
 from harness.statistics.comparing import compare_counts
 from harness.statistics.curve import CurveFit, CurvePoint, fit_curve
 
 DEFAULT_CONFIDENCE = 0.95
 RISES = ("attenuation", "loss")  # quantities with which the BER rises
+FALLS = ("level", "power", "gain", "ebn0", "snr")  # and with which it falls
 NOTICEABLE = 0.99  # confidence at which drift and hysteresis are called
 
 
@@ -36,6 +36,8 @@ class Curve:
     theory_db: float | None = None  # how far the sensitivity lies from the textbook curve; positive: worse
     remarks: tuple[str, ...] = field(default=())
     bracket: Bracket | None = None  # of a search: what is sure without a curve
+    sure: Bracket | None = None  # the same of every curve with a target, at its confidence
+    contrary: str = ""  # why its direction cannot be believed; no verdict rests on it then
 
     def sensitivity(self) -> dict[str, Any] | None:
         """JSON of the sensitivity; None where no target was set."""
@@ -99,14 +101,19 @@ def _curve(
     target = sweep.get("sensitivity_ber")
     unit = str((points[0].facts.get("units") or {}).get(name, ""))
     confidence = float((settings.get("requirement") or {}).get("confidence") or DEFAULT_CONFIDENCE)
-    fit = bracket = None
-    search = settings.get("search")
+    fit = bracket = sure = None
+    search, rising, contrary = settings.get("search"), rises_with(settings, name), ""
+    counted = [_counted(p, name) for p in points]
     if search:
         target, confidence = search["ber"], float(search["confidence"])
-        rising = ((settings.get("instruments") or {}).get(name) or {}).get("quantity") in RISES
-        fit, bracket = _searched([_counted(p, name) for p in points], float(target), confidence, rising, unit)
+        fit, bracket = _searched(counted, float(target), confidence, rising is True, unit)
+        sure = bracket
     elif target is not None:
-        fit = fit_curve([_counted(p, name) for p in points], float(target), confidence, unit=unit or "dB")
+        fit = fit_curve(counted, float(target), confidence, unit=unit or "dB")
+        if fit.rising is None and rising is not None:  # too few points that differ: what it sets says it
+            fit = fit_curve(counted, float(target), confidence, rising, unit=unit or "dB")
+        contrary = _contrary(fit, rising, name)
+        sure = bracket_of(counted, float(target), confidence, bool(fit.rising))
     level, uncertainty = _level(points, name, fit.value if fit else None)
     return Curve(
         instrument=name,
@@ -120,9 +127,33 @@ def _curve(
         level_bounds=_level_bounds(points, name, fit) if fit else (None, None),
         theory_db=_theory_distance(sweep.get("theory"), fit),
         bracket=bracket,
+        sure=sure,
+        contrary=contrary,
         remarks=()
         if search
-        else (*_beyond(points, name, fit), *_drift(points, name), *_hysteresis(points, name)),
+        else (
+            *([contrary] if contrary else []),
+            *_beyond(points, name, fit),
+            *_drift(points, name),
+            *_hysteresis(points, name),
+        ),
+    )
+
+
+def rises_with(settings: Mapping[str, Any], name: str) -> bool | None:
+    """Whether the BER rises with what an instrument sets; None where its quantity does not say."""
+    quantity = str(((settings.get("instruments") or {}).get(name) or {}).get("quantity") or "").casefold()
+    return True if quantity in RISES else False if quantity in FALLS else None
+
+
+def _contrary(fit: CurveFit, rising: bool | None, name: str) -> str:
+    """Say that the BER goes the other way than it should; empty where it does not."""
+    if rising is None or fit.rising is None or fit.rising == rising:
+        return ""
+    ways = ("falls", "rise") if rising else ("rises", "fall")
+    return (
+        f"the BER {ways[0]} as {name} goes up, and ought to {ways[1]}: the receiver is overloaded, or something "
+        "else changed from point to point; no verdict rests on this sensitivity"
     )
 
 
@@ -204,8 +235,8 @@ def _beyond(points: Sequence[PointAssessment], name: str, fit: CurveFit | None) 
     if min(values) <= fit.value <= max(values):
         return []
     return [
-        f"no point reached BER {ratio(fit.target_ber)}: the sensitivity is extrapolated beyond the values measured "
-        f"({min(values):g} to {max(values):g})"
+        f"the curve reaches BER {ratio(fit.target_ber)} outside of the values measured ({min(values):g} to "
+        f"{max(values):g}): the sensitivity is extrapolated"
     ]
 
 
@@ -236,26 +267,3 @@ def _differ(a: PointAssessment, b: PointAssessment, what: str, verb: str) -> lis
         return []
     chance = 2 * min(compared.p_value, compared.p_value_better)
     return [f"{what} {verb}: BER {a.ber:.3g}, then {b.ber:.3g} (by chance alone {percent(min(1.0, chance))})"]
-
-
-def judge_sensitivity(curve: Curve | None, least: float) -> tuple[Verdict, list[str]]:
-    """Give the verdict on ``requirement.sensitivity_at_least``: the bound on the unfavourable side decides."""
-    fit = curve.fit if curve is not None else None
-    if curve is None or fit is None or fit.value is None:
-        why = fit.words if fit is not None else "no point was measured"
-        return "UNDECIDED", [f"the sensitivity could not be determined: {why}"]
-    unit = curve.unit
-    about = f"the sensitivity is {fit.value:.2f} {unit}"
-    between = f"(between {_bound(fit.lower)} and {_bound(fit.upper)} {unit} at {percent(fit.confidence)})"
-    # More attenuation is better where BER rises with it; less level is better where BER falls with it.
-    good, bad = (fit.lower, fit.upper) if fit.rising else (fit.upper, fit.lower)
-    sign = 1 if fit.rising else -1
-    if good is not None and sign * good >= sign * least:
-        return "PASS", [f"{about} {between}, at least {least:g} {unit} as required"]
-    if bad is not None and sign * bad < sign * least:
-        return "FAIL", [f"{about} {between}, and {least:g} {unit} is required"]
-    return "UNDECIDED", [f"{about} {between}: whether it reaches {least:g} {unit} is open"]
-
-
-def _bound(value: float | None) -> str:
-    return "no bound" if value is None else f"{value:.2f}"

@@ -35,13 +35,14 @@ def assess(run: Run) -> Assessment:
         verdict, reasons = _together(points)
         whole = _summed(whole, points)
     if sweep and run.status != "running":
-        from harness.assess.curve import curves_of, judge_sensitivity
+        from harness.assess.curve import curves_of
+        from harness.assess.sensitivity import judge_sensitivity
 
         curves = curves_of(run.settings, points)
         least = (run.settings.get("requirement") or {}).get("sensitivity_at_least")
-        if least is not None:
-            judged = [judge_sensitivity(curve, float(least)) for curve in curves] or [
-                judge_sensitivity(None, float(least))
+        if least is not None and requirement is not None:
+            judged = [judge_sensitivity(c, float(least), requirement) for c in curves] or [
+                judge_sensitivity(None, float(least), requirement)
             ]
             verdict, reasons = _worst([*judged, *([(verdict, reasons)] if verdict is not None else [])])
     if several:

@@ -1,0 +1,144 @@
+"""The verdict on a required sensitivity never rests on a curve that goes the wrong way, nor on nothing."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable, Mapping
+from dataclasses import replace
+from typing import Any
+
+import pytest
+
+from harness.assess.run import assess
+from harness.record import Event, Point, Run, Second, Tally
+
+BITS = 1_000_000
+X0_DB = 40.0  # attenuation at which Eb/N0 is 0 dB; BER 1e-3 is reached 6.79 dB before it, at 33.21 dB
+CROSSING = 33.21
+
+
+def ber_at(attenuation_db: float) -> float:
+    return 0.5 * math.erfc(10 ** ((X0_DB - attenuation_db) / 20))
+
+
+def counts_of(values: list[float], ber: Callable[[float], float] = ber_at) -> dict[float, int | None]:
+    return {value: round(BITS * ber(value)) for value in values}
+
+
+@pytest.fixture
+def sweep(record: Callable[..., Run], second: Callable[..., Second]) -> Callable[..., Run]:
+    """A sweep of one second a point: attenuation -> errors, or None where nothing was ever aligned."""
+
+    def make(
+        errors: Mapping[float, int | None],
+        least: float | None = None,
+        quantity: str = "attenuation",
+        unit: str = "dB",
+        more: Mapping[float, Mapping[str, Any]] | None = None,
+        **requirement: Any,
+    ) -> Run:
+        points = []
+        for number, (value, k) in enumerate(errors.items()):
+            own = dict((more or {}).get(value, {}))
+            unaligned = own.pop("unaligned", 0 if k is not None else BITS)
+            tally = Tally(BITS, BITS - unaligned, unaligned, k or 0, k or 0, 0)
+            stretches = tuple(s for s in ((BITS - unaligned, True), (unaligned, False)) if s[0])
+            row = replace(
+                second(number, bits=BITS, first_bit=0),
+                point=number,
+                tally=tally,
+                stretches=stretches,
+                positions_complete=False,
+                **own,
+            )
+            facts = {"units": {"att": unit}, "rate_bps": float(BITS)}
+            events = (Event("aligned", 0, "the pattern was found", 0),) if k is not None else ()
+            points.append(Point(number, {"att": value}, 0, 1, "seconds", (row,), events, facts=facts))
+        return replace(
+            record(),
+            command="sweep",
+            settings={
+                "requirement": {
+                    "ber": 1e-3,
+                    "confidence": 0.95,
+                    **requirement,
+                    "sensitivity_at_least": least,
+                },
+                "instruments": {"att": {"quantity": quantity, "unit": unit}},
+                "sweep": {"instrument": "att", "sensitivity_ber": 1e-3},
+            },
+            points=tuple(points),
+        )
+
+    return make
+
+
+STEPS = [30 + k / 2 for k in range(13)]
+
+
+@pytest.mark.parametrize(("least", "verdict"), [(32.5, "PASS"), (34, "FAIL"), (CROSSING, "UNDECIDED")])
+def test_the_bound_on_the_unfavourable_side_decides(sweep, least, verdict):
+    found = assess(sweep(counts_of(STEPS), least))
+    assert found.verdict == verdict, found.reasons
+    assert found.sensitivity["value"] == pytest.approx(CROSSING, abs=0.1)
+
+
+@pytest.mark.parametrize(("least", "verdict"), [(-32.5, "PASS"), (-34, "FAIL")])
+def test_of_a_level_less_is_better(sweep, least, verdict):
+    """A receiver that needs -33.21 dBm does not need -32.5 dBm, and does not get along with -34 dBm."""
+    errors = {-value: k for value, k in counts_of(STEPS).items()}
+    found = assess(sweep(errors, least, "level", "dBm"))
+    assert found.verdict == ("PASS" if least > -CROSSING else "FAIL"), found.reasons
+    assert found.verdict == verdict
+
+
+def test_a_curve_that_goes_the_wrong_way_gives_no_verdict(sweep):
+    """An attenuator that works backwards, or another run on it: 'more is better' would turn round."""
+    errors = counts_of(STEPS, lambda value: ber_at(66 - value))  # crosses at 32.79, getting better upwards
+    for least in (31.0, 35.0):
+        found = assess(sweep(errors, least))
+        assert found.verdict == "UNDECIDED"
+        assert "falls as att goes up, and ought to rise" in found.reasons[0]
+    assert any("no verdict rests on this" in remark for remark in found.whole.remarks)
+
+
+def test_no_verdict_rests_on_values_beyond_those_measured(sweep):
+    easy = counts_of([28, 29, 30, 31, 31.5, 32])
+    assert assess(sweep(easy, 31.0)).verdict == "PASS"
+    beyond = assess(sweep(counts_of([30, 31, 31.5, 32, 32.5]), 32.8))
+    assert beyond.verdict == "UNDECIDED"
+    assert "only 30 to 32.5 dB was measured" in " ".join(beyond.reasons) or beyond.sensitivity["lower"] < 32.8
+    hard = assess(sweep(counts_of([34, 34.5, 35, 35.5, 36]), 33.9))
+    assert hard.verdict == "UNDECIDED"
+    assert "only 34 to 36 dB was measured" in hard.reasons[0]
+
+
+def test_without_a_curve_what_is_sure_decides(sweep):
+    """A unit so good that no error came at any value measured, and one that was never found at the lowest."""
+    good = assess(sweep(dict.fromkeys([30.0, 32.0, 34.0], 0), 33))
+    assert good.verdict == "PASS"
+    assert "under 1e-3 as far as 34 dB" in good.reasons[0]
+    few = assess(sweep(dict.fromkeys([30.0, 32.0, 34.0], 0), 35))
+    assert few.verdict == "UNDECIDED"
+    lost = assess(sweep(dict.fromkeys([30.0, 32.0, 34.0], None), 33))
+    assert lost.verdict == "FAIL"
+    assert "att 30: nothing was ever aligned" in lost.reasons
+    kind = assess(sweep({30.0: 0, 32.0: None, 34.0: 0}, 33, lost_link="undecided"))
+    assert kind.verdict == "UNDECIDED"
+
+
+@pytest.mark.parametrize(
+    ("more", "words"),
+    [
+        ({"slips": 1, "bits_lost": 8}, "1 slip, where at most 0 are allowed"),
+        ({"unaligned": 5000}, "0.5 % of the bits were unaligned or lost, where at most 0.1 % are allowed"),
+    ],
+)
+def test_slips_and_unaligned_bits_count_where_the_device_has_to_work(sweep, more, words):
+    # At 36 dB it need not work: what happens there is no matter.
+    assert assess(sweep(counts_of(STEPS), 32.5, more={36.0: more})).verdict == "PASS"
+    found = assess(sweep(counts_of(STEPS), 32.5, more={31.0: more}))
+    assert found.verdict == "FAIL"
+    assert f"att 31: {words}" in found.reasons
+    allowed = assess(sweep(counts_of(STEPS), 32.5, more={31.0: more}, max_slips=1, max_unaligned_ratio=0.01))
+    assert allowed.verdict == "PASS"
