@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import threading
 
-from harness.bench.measurement import Measurement, Outcome
+from harness.bench.measurement import Measurement
+from harness.bench.terms import Outcome
 from harness.record import EndedBy
 
 

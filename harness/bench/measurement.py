@@ -6,10 +6,8 @@ import contextlib
 import threading
 import time
 from collections.abc import Callable
-from dataclasses import dataclass
 
 from drivers.contract import DriverError, Link
-from harness.assess.feed import PlanFeed
 from harness.bench.book import Book
 from harness.bench.consumer import Consumer, Rules
 from harness.bench.line import LineCounts
@@ -17,71 +15,14 @@ from harness.bench.places import Places
 from harness.bench.receiver import Receiver
 from harness.bench.ring import Ring
 from harness.bench.sender import Sender
+from harness.bench.terms import Defect, Outcome, Setup
 from harness.bench.traffic import Traffic
 from harness.bench.watch import LinkWatch, hopeless
-from harness.record import BitOrder, EndedBy, Event, Second, Tally
+from harness.record import EndedBy, Event, Second, Tally
 from harness.signal.counter import Counter
-from harness.signal.patterns import Pattern
-from harness.statistics.plans import Decision
 
 POLL_S = 0.05
 RETRY_S = 0.5
-
-
-@dataclass(frozen=True, slots=True)
-class StopRules:
-    """Whichever comes first."""
-
-    bits: int | None = None  # sent; received where nothing is sent
-    seconds: float | None = None
-    errors: int | None = None
-
-    @property
-    def any(self) -> bool:
-        """Whether there is one at all."""
-        return (self.bits, self.seconds, self.errors) != (None, None, None)
-
-
-@dataclass(frozen=True, slots=True)
-class Setup:
-    """What a point is measured with."""
-
-    pattern: Pattern
-    bit_order: BitOrder
-    plan: PlanFeed | None
-    stop: StopRules
-    pace_bps: float | None = None
-    max_in_flight_bits: int | None = None
-    drain_s: float = 5.0
-    positions_per_second: int = 4096
-    reconnect_s: float = 0.0
-    first_place: int = 0
-    point: int = 0
-    sitting: int = 0
-    first_index: int = 0
-    base_bit: int = 0  # received bits that the point had in earlier sittings
-    base_compared: int = 0
-    index_step: int = 1  # two directions at once number their seconds in turns
-    silence_is_a_result: bool = False  # a sweep's point without a bit: a result, not a fault
-
-
-@dataclass(frozen=True, slots=True)
-class Outcome:
-    """What came of a point."""
-
-    ended_by: EndedBy
-    decision: Decision | None
-    tally: Tally
-    after: Tally
-    sent_bits: int
-    received_bits: int
-    next_index: int
-    next_place: int  # of the bit that would have been sent next
-    fault: DriverError | None
-
-
-class Defect(Exception):
-    """A thread of ours failed: a defect in bitassay itself."""
 
 
 class Measurement:

@@ -10,8 +10,8 @@ from harness.assess.accumulate import Accumulator
 from harness.assess.assessment import Assessment, PointAssessment
 from harness.assess.point import Facts, assess_point
 from harness.assess.requirement import Requirement
-from harness.bench.measurement import StopRules
 from harness.bench.outlook import Outlook, outlook_of
+from harness.bench.terms import StopRules
 from harness.record import Event, Second
 
 

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import datetime
 import time
-from collections.abc import Callable, Mapping
+from collections.abc import Mapping
 from dataclasses import replace
 from pathlib import Path
 from typing import Any
@@ -14,25 +14,23 @@ from harness.assess.assessment import PointAssessment
 from harness.assess.feed import PlanFeed
 from harness.assess.point import Facts
 from harness.assess.requirement import requirement_at, requirement_of
-from harness.assess.run import assess
 from harness.bench.both import side_by_side, worst
 from harness.bench.conditions import Conditions
-from harness.bench.measurement import Defect, Measurement, Outcome, Setup, StopRules
+from harness.bench.measurement import Measurement
 from harness.bench.progress import Hooks, Live, Progress, RunResult
-from harness.bench.recorder import Recorder
+from harness.bench.record_keeping import RecordKeeping
 from harness.bench.resumption import instruments_of, points_done
 from harness.bench.schedule import Schedule
 from harness.bench.search import route_of
-from harness.bench.session import Links, bench_host, bench_versions, flush, status_of, ways_of
+from harness.bench.session import Links, flush, ways_of
+from harness.bench.terms import Defect, Outcome, Setup, StopRules
 from harness.bench.visits import Had, Visit, had_by, what_is_left
 from harness.profile import Profile
-from harness.record import EndedBy, Event, Run, Second, Sitting, Tally
+from harness.record import EndedBy, Event, Run, Tally
 from harness.store import Store
 
 TICK_S = 0.2
 SIGN_OF_LIFE_S = 30.0
-TRIES_KEPT = 20  # named in the record; all are counted
-Commit = Callable[[list[Second], list[Event], int], None]
 
 
 class BenchRun:
@@ -58,7 +56,6 @@ class BenchRun:
     ) -> None:
         self._profile = profile
         self._hooks = hooks
-        self._command = command
         self._cut = cut
         self._lock = lock
         self._settings = profile.resolved()
@@ -66,74 +63,35 @@ class BenchRun:
         self._links = Links(profile.need_link(), hooks.interrupted)
         self._ways = ways_of(profile, self._links)
         self._route = route_of(profile, cut, len(self._ways))
-        self._recorder = Recorder(store)
-        self._started = time.time_ns()
+        self._record = RecordKeeping(profile, store, hooks, command=command, cut=cut)
         self._next_tick = 0.0
-        self._undecided: dict[int, int] = {}  # point -> bits received and not decided
-        self._earlier: list[dict[str, str | None]] = []
-        self._begun: set[int] = set()
-        self._ended: set[int] = set()
         self._done: list[PointAssessment] = points_done(cut) if cut else []
         self._next_index = 1 + max((s.index for p in cut.points for s in p.seconds), default=-1) if cut else 0
         self._next_place = 0
-        self._sitting = len(cut.sittings) if cut else 0
-        self._key = cut.key if cut else ""
         self._now = Visit(0)
         self._schedule = Schedule(profile)
 
     def run(self) -> RunResult:
         """Measure; whatever goes wrong on the bench ends in the record and in `fault`."""
-        self._recorder.start()
         try:
             self._begin()
             fault, ended_by = self._carry_out()
-            if self._recorder.defect is not None:
-                raise Defect(str(self._recorder.defect)) from self._recorder.defect
-            if self._recorder.fault is not None:
-                raise self._recorder.fault
-            return self._end(fault, ended_by)
+            return RunResult(self._record.key, self._record.end(ended_by), fault)
         except BaseException:
-            self._abandon()
+            self._record.abandon()
             raise
         finally:
-            self._recorder.finish()
-
-    # -- the record
+            self._record.finish()
 
     def _begin(self) -> None:
-        profile = self._profile
-        sitting = Sitting(self._sitting, self._started, None, bench_host(), bench_versions())
-
-        def job(store: Store) -> str:
-            key = self._key or store.begin_run(
-                title=profile.title,
-                command=self._command,
-                started=self._started,
-                profile_text=profile.text,
-                overrides=profile.overrides,
-                settings=self._settings,
-                device=profile.device,
-            )
-            store.begin_sitting(key, sitting)
-            self._earlier = self._earlier_tries(store, key)
-            return key
-
-        self._key = self._recorder.ask(job)
+        self._record.begin()
         self._conditions = Conditions(
-            profile, self._links.main, self._lock / f"guardian-{self._key}.log", self._hooks.interrupted
+            self._profile,
+            self._links.main,
+            self._lock / f"guardian-{self._record.key}.log",
+            self._hooks.interrupted,
         )
-        self._hooks.started(self._key)
-
-    def _earlier_tries(self, store: Store, key: str) -> list[dict[str, str | None]]:
-        """List this unit's earlier runs against the same requirement: each of them was a try."""
-        serial = self._profile.device.get("serial_number")
-        if self._requirement is None or not serial:
-            return []
-        asked, model = self._settings["requirement"], self._profile.device.get("model")
-        return [
-            {"run": r.run, "status": r.status, "verdict": "VOID" if r.void else r.verdict}
-            for r in store.earlier_runs(serial, key, asked, model)
-        ]
+        self._hooks.started(self._record.key)
 
     def _point(self, visit: Visit, way: int) -> int:
         return visit.number * len(self._ways) + way
@@ -146,25 +104,6 @@ class BenchRun:
         if point is None:
             return None
         return had_by(point, requirement_at(self._requirement, self._settings, point.values))
-
-    def _commit(self, number: int, live: Live | None) -> Commit:
-        key = self._key
-
-        def commit(seconds: list[Second], events: list[Event], undecided: int) -> None:
-            for event in events:
-                self._hooks.log(event.text)
-            self._undecided[number] = undecided
-            waiting = sum(self._undecided.values())
-            placed = [(number, event) for event in events]
-            self._recorder.put(lambda store: store.commit(key, seconds, placed, waiting))
-            if live is not None:
-                live.take(seconds, events)
-
-        return commit
-
-    def _note(self, number: int, events: list[Event], live: Live | None = None) -> None:
-        if events:
-            self._commit(number, live)([], events, self._undecided.get(number, 0))
 
     # -- the bench
 
@@ -198,9 +137,9 @@ class BenchRun:
 
     def _make_sure_of(self, number: int, events: list[Event]) -> None:
         """Enter events that came outside of a point's measurement, beginning the point where need be."""
-        if number not in self._begun:
+        if not self._record.begun(number):
             self._begin_point(self._now, 0, {})
-        self._note(number, events)
+        self._record.note(number, events)
 
     def _set(self, visit: Visit) -> dict[str, Any]:
         """Set a point's conditions; nothing is being sent meanwhile."""
@@ -237,35 +176,22 @@ class BenchRun:
             visit = self._route.next(self._done)
             if visit is None:
                 visit = self._route.again(self._done, self._schedule.left_over(self._done))
-            self._note(here, self._route.take_events())
+            self._record.note(here, self._route.take_events())
         return ended_by, None
 
     def _pause(self, seconds: float) -> None:
-        key, ends = self._key, time.monotonic() + seconds
+        ends = time.monotonic() + seconds
         while (left := ends - time.monotonic()) > 0 and not self._hooks.interrupted.is_set():
-            # Other hosts take a run that says nothing for two minutes to be cut.
-            self._recorder.put(lambda store: store.commit(key, [], [], 0))
+            self._record.sign_of_life()
             self._hooks.interrupted.wait(min(left, SIGN_OF_LIFE_S))
 
     def _begin_point(self, visit: Visit, way: int, facts: Mapping[str, Any]) -> None:
-        number, key = self._point(visit, way), self._key
-        self._begun.add(number)
-        if self._cut is not None and any(p.index == number for p in self._cut.points):
-            self._recorder.ask(
-                lambda store: store.begin_point(key, number, {}, 0)
-            )  # it goes on, facts and all
-            return
         about = {**self._ways[way].facts(self._links), **facts, **visit.facts}
-        values = dict(visit.values)
-        if self._earlier:
-            about["earlier_tries"] = self._earlier[-TRIES_KEPT:]
-            about["earlier_tries_count"] = len(self._earlier)
         if visit.reference:
             about["reference"] = True
         if len(self._ways) > 1:
             about["index_step"] = len(self._ways)
-        now = time.time_ns()
-        self._recorder.ask(lambda store: store.begin_point(key, number, values, now, about))
+        self._record.begin_point(self._point(visit, way), visit.values, about)
 
     def _measure(self, visit: Visit, facts: dict[str, Any]) -> list[Outcome]:
         """Measure one point in all its directions."""
@@ -284,14 +210,14 @@ class BenchRun:
                 live.take(list(had.point.seconds), list(had.point.events))
             lives.append(live)
             measurements.append(self._measurement(visit, way, had, lives))
-            self._note(number, self._resumed(had), live)
+            self._record.note(number, self._resumed(had), live)
         before = [*self._conditions.take_events(), *self._links.take_events()]
-        self._note(self._point(visit, 0), before, lives[0])
+        self._record.note(self._point(visit, 0), before, lives[0])
         outcomes = side_by_side(measurements)
         self._next_index = max(o.next_index for o in outcomes)
         self._next_place = outcomes[0].next_place
         for way, outcome in enumerate(outcomes):
-            self._close_point(self._point(visit, way), outcome)
+            self._record.close_point(self._point(visit, way), outcome)
             self._done.append(replace(lives[way].point(), values=visit.values, ended_by=outcome.ended_by))
         return outcomes
 
@@ -301,16 +227,6 @@ class BenchRun:
         missing = max(0, had.sent - had.received - had.lost)
         text = f"the run goes on after it was cut; {missing} bits were on their way then and are not counted"
         return [Event("resumed", had.received, text, time.time_ns(), {"bits": missing})]
-
-    def _close_point(self, number: int, outcome: Outcome) -> None:
-        key, now = self._key, time.time_ns()
-        if outcome.ended_by in ("interrupted", "fault"):
-            return  # `_end` closes it, with how the run ended
-        self._recorder.put(
-            lambda store: store.end_point(key, number, now, outcome.ended_by, outcome.after, {})
-        )
-        self._undecided.pop(number, None)
-        self._ended.add(number)
 
     def _about(self, visit: Visit, way: int) -> Facts:
         facts = {**self._ways[way].facts(self._links), "index_step": len(self._ways), **visit.facts}
@@ -349,7 +265,7 @@ class BenchRun:
             reconnect_s=link.reconnect_s,
             first_place=self._next_place,
             point=self._point(visit, way),
-            sitting=self._sitting,
+            sitting=self._record.sitting,
             first_index=self._next_index + way,
             index_step=len(self._ways),
             base_bit=had.received if had else 0,
@@ -360,9 +276,9 @@ class BenchRun:
             chosen.sending,
             chosen.receiving,
             setup,
-            commit=self._commit(self._point(visit, way), lives[way]),
+            commit=self._record.commit_to(self._point(visit, way), lives[way]),
             interrupted=self._hooks.interrupted,
-            broken=lambda: self._recorder.failed,
+            broken=lambda: self._record.failed,
             tick=(lambda: self._tick(lives, stop)) if way == 0 else (lambda: None),
             reopen=self._links.reopen if len(self._ways) == 1 else None,
         )
@@ -375,14 +291,14 @@ class BenchRun:
         sweep, search = self._profile.sweep, self._profile.search
         self._hooks.tick(
             Progress(
-                run=self._key,
+                run=self._record.key,
                 title=self._profile.title,
                 device=self._profile.device,
                 point=lives[0].point(),
                 longest_bits=lives[0].plan.longest_bits if lives[0].plan else None,
                 stop=stop,
-                elapsed_s=(time.time_ns() - self._started) / 1e9,
-                waiting_writes=self._recorder.waiting,
+                elapsed_s=(time.time_ns() - self._record.started) / 1e9,
+                waiting_writes=self._record.waiting,
                 outlook=lives[0].outlook(),
                 number=self._now.number,
                 visits=self._route.total,
@@ -393,34 +309,6 @@ class BenchRun:
                 until=self._schedule.until(self._done, len(self._route.ahead)) if sweep else None,
             )
         )
-
-    # -- the end
-
-    def _abandon(self) -> None:
-        """After a defect: close the record as failed, as far as that goes; what was committed stays."""
-        if not self._key:
-            return
-        key, now = self._key, time.time_ns()
-        self._recorder.put(lambda store: store.end_run(key, now, "failed", "fault", None, None))
-
-    def _end(self, fault: tuple[str, str] | None, ended_by: EndedBy) -> RunResult:
-        ended = time.time_ns()
-        status = status_of(ended_by)
-        key = self._key
-
-        def close(store: Store) -> Run:
-            for number in sorted(self._begun - self._ended):
-                store.end_point(key, number, ended, ended_by, Tally(), {})
-            store.end_sitting(key, self._sitting, ended, status)
-            return store.load(key)
-
-        run = replace(self._recorder.ask(close), status=status, ended=ended, ended_by=ended_by)
-        assessment = assess(run)
-        stated = assessment.to_json()
-        self._recorder.ask(
-            lambda store: store.end_run(key, ended, status, ended_by, assessment.verdict, stated)
-        )
-        return RunResult(key, assessment, fault)
 
 
 __all__ = ["BenchRun", "Defect", "Hooks", "Live", "Progress", "RunResult"]

@@ -14,7 +14,7 @@ from collections.abc import Callable, Sequence
 from dataclasses import replace
 
 from harness.assess.assessment import PointAssessment
-from harness.bench.measurement import StopRules
+from harness.bench.terms import StopRules
 from harness.bench.visits import Visit
 from harness.profile import Profile
 from harness.statistics.gaussian import inverse_q

@@ -9,8 +9,8 @@ from decimal import Decimal
 
 from harness.assess.assessment import PointAssessment
 from harness.assess.words import count
-from harness.bench.measurement import StopRules
 from harness.bench.route import ListRoute, Route
+from harness.bench.terms import StopRules
 from harness.bench.visits import Visit
 from harness.profile import Profile
 from harness.profile.checks import RISES

@@ -7,8 +7,8 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 from harness.assess.assessment import PointAssessment
-from harness.bench.measurement import StopRules
 from harness.bench.schedule import ENOUGH_ERRORS
+from harness.bench.terms import StopRules
 from harness.bench.visits import Visit
 from harness.profile.sweeps import Sweep
 

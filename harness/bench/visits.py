@@ -9,7 +9,7 @@ from typing import Any, TypeVar
 from harness.assess.accumulate import accumulator_for
 from harness.assess.feed import PlanFeed
 from harness.assess.requirement import Requirement
-from harness.bench.measurement import StopRules
+from harness.bench.terms import StopRules
 from harness.profile import Profile
 from harness.record import Point
 

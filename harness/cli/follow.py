@@ -10,9 +10,9 @@ from typing import Any
 from harness.assess.assessment import PointAssessment
 from harness.assess.requirement import requirement_at, requirement_of
 from harness.assess.run import assess, facts_of
-from harness.bench.measurement import StopRules
 from harness.bench.progress import Live, Progress
 from harness.bench.spare import AGAIN
+from harness.bench.terms import StopRules
 from harness.cli.output import open_reading, print_json, store_place
 from harness.cli.page import print_page
 from harness.cli.watch import watcher

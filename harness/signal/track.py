@@ -293,7 +293,8 @@ class Track:
     ) -> NDArray[np.uint8]:
         lost = np.bitwise_count((differs & ~received).view(np.uint64)).astype(np.int64)
         weighed = lost * self._weights.one + (counts - lost) * self._weights.zero
-        return np.minimum(weighed // self._weights.scale, 255).astype(np.uint8)
+        capped: NDArray[np.uint8] = np.minimum(weighed // self._weights.scale, 255).astype(np.uint8)
+        return capped
 
     def _levels(self, counts: NDArray[np.uint8]) -> Levels:
         """The levels that stand for the words from `_watched` on."""

@@ -6,8 +6,8 @@ import datetime
 
 import pytest
 
-from harness.bench.measurement import StopRules
 from harness.bench.schedule import ENOUGH_ERRORS, Schedule, seconds_until
+from harness.bench.terms import StopRules
 from harness.bench.visits import Visit, visits_of
 from harness.profile import Profile, parse_profile
 

@@ -18,9 +18,9 @@ from harness.assess.accumulate import Accumulator
 from harness.assess.assessment import Assessment, PointAssessment
 from harness.assess.point import Facts, assess_point
 from harness.assess.requirement import Requirement
-from harness.bench.measurement import StopRules
 from harness.bench.outlook import outlook_of
 from harness.bench.run import Progress
+from harness.bench.terms import StopRules
 from harness.record import Event, Second, Tally
 
 BITS = 48_000  # of a second

@@ -5,8 +5,8 @@ from __future__ import annotations
 import pytest
 
 from harness.assess.requirement import Requirement
-from harness.bench.measurement import StopRules
 from harness.bench.outlook import Outlook
+from harness.bench.terms import StopRules
 from harness.cli.view.forecast import moment, rates, still_to_do
 
 SECOND_NS = 10**9

@@ -10,7 +10,7 @@ from rich.cells import cell_len
 from rich.console import Console, Group
 
 from harness.assess.requirement import Requirement
-from harness.bench.measurement import StopRules
+from harness.bench.terms import StopRules
 from harness.cli.view.ink import LETTERS, LINES
 from harness.cli.view.notebook import Notebook, wrap
 from harness.cli.view.sheet import Sheet, sheet_before, sheet_of_assessment, sheet_of_progress
