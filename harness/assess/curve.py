@@ -245,25 +245,47 @@ def _drift(points: Sequence[PointAssessment], name: str) -> list[str]:
     visits = [p for p in points if p.facts.get("reference") and p.tally.compared]
     if len(visits) < 2:
         return []
-    return _differ(visits[0], visits[-1], f"the reference point at {visits[0].values[name]:g}", "drifted")
+    chance = _chance(visits[0], visits[-1])
+    if chance > 1 - NOTICEABLE:
+        return []
+    return [
+        f"the reference point at {visits[0].values[name]:g} drifted: {_then(visits[0], visits[-1], chance)}"
+    ]
 
 
 def _hysteresis(points: Sequence[PointAssessment], name: str) -> list[str]:
-    """Compare points that were visited on the way up and on the way down."""
+    """Compare points that were visited on the way up and on the way down.
+
+    The risk of calling hysteresis where there is none is shared among the values, however many there are.
+    """
     visited: dict[float, list[PointAssessment]] = {}
     for point in points:
         if point.tally.compared and not (point.facts.get("reference") or point.facts.get("again")):
             visited.setdefault(point.values[name], []).append(point)
-    words = []
-    for value, group in sorted(visited.items()):
-        if len(group) == 2:
-            words += _differ(group[0], group[1], f"{value:g}, up against down,", "shows hysteresis")
-    return words
-
-
-def _differ(a: PointAssessment, b: PointAssessment, what: str, verb: str) -> list[str]:
-    compared = compare_counts(a.tally.errors, a.tally.compared, b.tally.errors, b.tally.compared, NOTICEABLE)
-    if not (compared.worse or compared.better):
+    pairs = {value: (group[0], group[1]) for value, group in sorted(visited.items()) if len(group) == 2}
+    chances = {value: _chance(*pair) for value, pair in pairs.items()}
+    called = [value for value, chance in chances.items() if chance <= (1 - NOTICEABLE) / len(pairs)]
+    if not called:
         return []
-    chance = 2 * min(compared.p_value, compared.p_value_better)
-    return [f"{what} {verb}: BER {a.ber:.3g}, then {b.ber:.3g} (by chance alone {percent(min(1.0, chance))})"]
+    worst = max(called, key=lambda value: _apart(*pairs[value]))
+    words = _then(*pairs[worst], chances[worst])
+    if len(called) == 1:
+        return [f"{worst:g}, up against down, shows hysteresis: {words}"]
+    return [
+        f"{len(called)} of {len(pairs)} values, up against down, show hysteresis, most at {worst:g}: {words}"
+    ]
+
+
+def _chance(a: PointAssessment, b: PointAssessment) -> float:
+    """Probability that two visits with one BER differ as much or more."""
+    compared = compare_counts(a.tally.errors, a.tally.compared, b.tally.errors, b.tally.compared, NOTICEABLE)
+    return min(1.0, 2 * min(compared.p_value, compared.p_value_better))
+
+
+def _apart(a: PointAssessment, b: PointAssessment) -> float:
+    first, second = ((p.tally.errors + 0.5) / p.tally.compared for p in (a, b))
+    return abs(math.log(first / second))
+
+
+def _then(a: PointAssessment, b: PointAssessment, chance: float) -> str:
+    return f"BER {ratio(a.ber)}, then {ratio(b.ber)} (by chance alone {percent(chance)})"

@@ -251,6 +251,8 @@ def _too_little(
     points: Sequence[CurvePoint], counts: Counts, used: tuple[int, ...], only_worse: tuple[int, ...]
 ) -> str:
     """Why no curve can be fitted, in words; empty where one can."""
+    if not any(point.aligned for point in points):
+        return "No point was ever aligned"
     if not used or (counts.errors.sum() == 0 and not only_worse):
         return "No point near the target has errors"
     if len({points[i].x for i in (*used, *only_worse)}) < 2:

@@ -147,6 +147,8 @@ def _halving(space: SearchSpace, points: Sequence[CurvePoint]) -> Step | None:
 
 def _nowhere(space: SearchSpace, points: Sequence[CurvePoint]) -> str:
     over, under = _bracket(space, points)
+    if not any(point.aligned for point in points):
+        return "nothing was ever aligned at any value tried, up to the limit"
     if under is None:
         return "the BER is over the target at every value tried, up to the limit"
     if over is None:

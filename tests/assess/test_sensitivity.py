@@ -1,4 +1,4 @@
-"""The verdict on a required sensitivity never rests on a curve that goes the wrong way, nor on nothing."""
+"""What is said of a sweep: the verdict on its sensitivity rests on something, and a change meanwhile is called."""
 
 from __future__ import annotations
 
@@ -27,18 +27,22 @@ def counts_of(values: list[float], ber: Callable[[float], float] = ber_at) -> di
 
 @pytest.fixture
 def sweep(record: Callable[..., Run], second: Callable[..., Second]) -> Callable[..., Run]:
-    """A sweep of one second a point: attenuation -> errors, or None where nothing was ever aligned."""
+    """A sweep of one second a point: attenuation -> errors, or None where nothing was ever aligned.
+
+    Pairs where a value is visited twice.
+    """
 
     def make(
-        errors: Mapping[float, int | None],
+        errors: Mapping[float, int | None] | list[tuple[float, int | None]],
         least: float | None = None,
         quantity: str = "attenuation",
         unit: str = "dB",
         more: Mapping[float, Mapping[str, Any]] | None = None,
+        sensitivity: bool = True,
         **requirement: Any,
     ) -> Run:
         points = []
-        for number, (value, k) in enumerate(errors.items()):
+        for number, (value, k) in enumerate(dict(errors).items() if isinstance(errors, Mapping) else errors):
             own = dict((more or {}).get(value, {}))
             unaligned = own.pop("unaligned", 0 if k is not None else BITS)
             tally = Tally(BITS, BITS - unaligned, unaligned, k or 0, k or 0, 0)
@@ -65,7 +69,7 @@ def sweep(record: Callable[..., Run], second: Callable[..., Second]) -> Callable
                     "sensitivity_at_least": least,
                 },
                 "instruments": {"att": {"quantity": quantity, "unit": unit}},
-                "sweep": {"instrument": "att", "sensitivity_ber": 1e-3},
+                "sweep": {"instrument": "att", "sensitivity_ber": 1e-3 if sensitivity else None},
             },
             points=tuple(points),
         )
@@ -142,3 +146,27 @@ def test_slips_and_unaligned_bits_count_where_the_device_has_to_work(sweep, more
     assert f"att 31: {words}" in found.reasons
     allowed = assess(sweep(counts_of(STEPS), 32.5, more={31.0: more}, max_slips=1, max_unaligned_ratio=0.01))
     assert allowed.verdict == "PASS"
+
+
+def test_hysteresis_is_called_once_however_many_values_differ(sweep):
+    up, down = [*range(30, 36)], [*range(35, 29, -1)]
+    there = [(float(v), round(BITS * ber_at(v))) for v in up]
+    back = [(float(v), round(BITS * ber_at(v + 0.3))) for v in down]
+    remarks = [r for r in assess(sweep(there + back)).whole.remarks if "hysteresis" in r]
+    assert len(remarks) == 1
+    assert remarks[0].startswith("4 of 6 values, up against down, show hysteresis, most at 32: BER 1.91e-4")
+    one = [(v, k) if v != 32 else (v, 2 * k) for v, k in there[::-1]]
+    remarks = [r for r in assess(sweep(there + one)).whole.remarks if "hysteresis" in r]
+    assert len(remarks) == 1
+    assert remarks[0].startswith("32, up against down, shows hysteresis")
+
+
+def test_one_difference_of_three_in_a_thousand_is_hysteresis_alone_and_chance_among_forty(sweep):
+    def remarks(values: list[float]) -> list[str]:
+        there = [(value, 400) for value in values]
+        back = [(value, 488 if value == 30 else 400) for value in values[::-1]]
+        found = assess(sweep(there + back, sensitivity=False))
+        return [remark for remark in found.whole.remarks if "hysteresis" in remark]
+
+    assert len(remarks([30.0])) == 1
+    assert remarks([30 + k / 4 for k in range(40)]) == []

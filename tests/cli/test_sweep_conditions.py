@@ -57,7 +57,7 @@ losses = [{ name = "cable", loss_db = 2.0, uncertainty_db = 0.3, due = "2020-01-
     assert "damage level is stated as -20 dBm" in done.err
     assert "the calibration of cable (loss) ran out on 2020-01-31" in done.out
     assert "the reference point at 35 drifted" in done.out
-    assert "33, up against down, shows hysteresis" in done.out
+    assert "2 of 2 values, up against down, show hysteresis, most at 33: BER " in done.out
     got = bitassay("show", "last", "--json").json
     assert any("ran out on 2020-01-31" in remark for p in got["points"] for remark in p["remarks"])
     assert len(got["curve_remarks"]) >= 2
