@@ -9,6 +9,7 @@ from typing import Annotated
 import typer
 
 from harness.cli.app_store import profile_app, store_app
+from harness.cli.numbers import count_of, number
 
 app = typer.Typer(
     name="bitassay",
@@ -172,9 +173,13 @@ def examine(
     ] = "auto",
     rate: Annotated[
         float | None,
-        typer.Option("--rate", metavar="BIT/S", help="Payload rate, for seconds and availability."),
+        typer.Option(
+            "--rate", parser=number, metavar="BIT/S", help="Payload rate, for seconds and availability."
+        ),
     ] = None,
-    confidence: Annotated[float, typer.Option("--confidence", metavar="C", help="Of the bounds.")] = 0.95,
+    confidence: Annotated[
+        float, typer.Option("--confidence", parser=number, metavar="C", help="Of the bounds.")
+    ] = 0.95,
     store: StoreOption = None,
     json: JsonOption = False,
 ) -> int:
@@ -192,7 +197,7 @@ def emit(
     pattern: Annotated[
         str, typer.Option("--pattern", metavar="NAME", help="`bitassay patterns` lists them.")
     ],
-    number: Annotated[int, typer.Option("--bytes", metavar="N", min=0, help="Bytes to write.")],
+    number: Annotated[int, typer.Option("--bytes", parser=count_of, metavar="N", help="Bytes to write.")],
     bit_order: Annotated[
         str, typer.Option("--bit-order", metavar="lsb|msb", help="Which bit of a byte comes first.")
     ] = "lsb",
@@ -209,11 +214,13 @@ def emit(
     return carry_out(pattern, number, bit_order, output)
 
 
-@app.command()
+@app.command(context_settings={"ignore_unknown_options": True})  # so that -1 is read, and refused, as a count
 def bounds(
-    errors: Annotated[int, typer.Argument(metavar="ERRORS", help="Errors counted.")],
-    bits: Annotated[int, typer.Argument(metavar="BITS", help="Bits compared.")],
-    confidence: Annotated[float, typer.Option("--confidence", metavar="C", help="Between 0 and 1.")] = 0.95,
+    errors: Annotated[int, typer.Argument(parser=count_of, metavar="ERRORS", help="Errors counted.")],
+    bits: Annotated[int, typer.Argument(parser=count_of, metavar="BITS", help="Bits compared.")],
+    confidence: Annotated[
+        float, typer.Option("--confidence", parser=number, metavar="C", help="Between 0 and 1.")
+    ] = 0.95,
     json: JsonOption = False,
 ) -> int:
     """Bounds on the BER for a count, exact (Clopper and Pearson).
@@ -227,26 +234,36 @@ def bounds(
 
 @app.command()
 def plan(
-    ber: Annotated[float, typer.Option("--ber", metavar="P", help="The required BER.")],
+    ber: Annotated[float, typer.Option("--ber", parser=number, metavar="P", help="The required BER.")],
     confidence: Annotated[
-        float, typer.Option("--confidence", metavar="C", help="1 - consumer's risk.")
+        float, typer.Option("--confidence", parser=number, metavar="C", help="1 - consumer's risk.")
     ] = 0.95,
     accept_errors: Annotated[
         int | None,
-        typer.Option("--accept-errors", metavar="E", help="fixed, curtailed: accept at most E errors."),
+        typer.Option(
+            "--accept-errors", parser=count_of, metavar="E", help="fixed, curtailed: accept at most E errors."
+        ),
     ] = None,
     kind: Annotated[
         str, typer.Option("--kind", metavar="fixed|curtailed|sequential", help="The rule that decides.")
     ] = "fixed",
     margin: Annotated[
-        float, typer.Option("--margin", metavar="D", help="Good units are D times better than required.")
+        float,
+        typer.Option(
+            "--margin", parser=number, metavar="D", help="Good units are D times better than required."
+        ),
     ] = 2.0,
     producer_risk: Annotated[
-        float,
-        typer.Option("--producer-risk", metavar="A", help="sequential: probability that a good unit fails."),
-    ] = 0.05,
+        float | None,
+        typer.Option(
+            "--producer-risk",
+            parser=number,
+            metavar="A",
+            help="sequential: probability that a good unit fails (default 0.05).",
+        ),
+    ] = None,
     rate: Annotated[
-        float | None, typer.Option("--rate", metavar="BIT/S", help="For the time needed.")
+        float | None, typer.Option("--rate", parser=number, metavar="BIT/S", help="For the time needed.")
     ] = None,
     json: JsonOption = False,
 ) -> int:
@@ -264,9 +281,11 @@ def theory(
     modulation: Annotated[
         str, typer.Option("--modulation", metavar="M", help="`--modulation list` lists them.")
     ],
-    ebn0: Annotated[float | None, typer.Option("--ebn0", metavar="DB", help="Eb/N0, dB.")] = None,
+    ebn0: Annotated[
+        float | None, typer.Option("--ebn0", parser=number, metavar="DB", help="Eb/N0, dB.")
+    ] = None,
     ber: Annotated[
-        float | None, typer.Option("--ber", metavar="P", help="A BER; gives the Eb/N0 for it.")
+        float | None, typer.Option("--ber", parser=number, metavar="P", help="A BER; gives the Eb/N0 for it.")
     ] = None,
     fading: Annotated[str | None, typer.Option("--fading", metavar="rayleigh", help="Flat fading.")] = None,
     json: JsonOption = False,
@@ -385,7 +404,9 @@ def compare(
     a: Annotated[str, typer.Argument(metavar="A", help="A run: its key, a unique ending of it, or `last`.")],
     b: Annotated[str, typer.Argument(metavar="B", help="Another run.")],
     store: StoreOption = None,
-    confidence: Annotated[float, typer.Option("--confidence", metavar="C", help="Between 0 and 1.")] = 0.95,
+    confidence: Annotated[
+        float, typer.Option("--confidence", parser=number, metavar="C", help="Between 0 and 1.")
+    ] = 0.95,
     json: JsonOption = False,
 ) -> int:
     """Is B worse than A? An exact test on the two counts, and the ratio of the BERs with bounds.

@@ -8,7 +8,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, BinaryIO, Literal
 
 from harness.cli.failure import FAULT, PASS, UNDECIDED, UserError, warn
-from harness.cli.output import open_writing, print_json, store_place
+from harness.cli.output import open_writing, print_json, store_place, tell_new_store
 
 if TYPE_CHECKING:
     import numpy as np
@@ -38,7 +38,8 @@ def examine(
 
     _check(bit_order, rate_bps, confidence)
     if not file.is_file():
-        raise UserError(f"{file}: no such file", "name a file of captured bytes")
+        what = "is a folder" if file.is_dir() else "is no regular file" if file.exists() else "no such file"
+        raise UserError(f"{file}: {what}", "name a file of captured bytes")
     try:
         data = map_file(file)
     except OSError as error:
@@ -58,6 +59,8 @@ def examine(
     settings = {**record.settings, "confidence": confidence, "file": str(file)}
     record = replace(record, title=f"capture {file.name}", settings=settings)
     if store is not None:
+        if not as_json:
+            tell_new_store(store)
         record = _keep(record, store)
     assessment = assess(record)
     if not record.key:
@@ -178,4 +181,5 @@ def emit(pattern: str, number: int, bit_order: str, output: Path | None) -> int:
             write(file)
     except OSError as error:
         raise UserError(f"{output}: {error.strerror}", "choose a file that can be written") from error
+    print(f"wrote {output}", file=sys.stderr)
     return 0

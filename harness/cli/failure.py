@@ -66,6 +66,10 @@ def failure_of(error: BaseException) -> Failure:
 
 def _usage(error: BaseException) -> Failure | None:
     names = {kind.__name__ for kind in type(error).__mro__}
+    if "NoArgsIsHelpError" in names:
+        context = getattr(error, "ctx", None)
+        path = context.command_path if context is not None else "bitassay"
+        return Failure("no command was given", f"`{path} --help` lists them, each with an example", USAGE)
     if "ClickException" in names:
         message = getattr(error, "format_message", lambda: str(error))()
         context = getattr(error, "ctx", None)

@@ -2,11 +2,14 @@
 
 from __future__ import annotations
 
+import re
 from typing import Any
 
 from harness.assess.words import count, duration, percent, ratio
-from harness.cli.failure import UserError
+from harness.cli.failure import UserError, warn
 from harness.cli.output import print_json
+
+LEAST_RATIO = 1e-300  # what is said of a ratio too small for a double
 
 
 def bounds(errors: int, bits: int, confidence: float, *, as_json: bool) -> int:
@@ -36,8 +39,8 @@ def bounds(errors: int, bits: int, confidence: float, *, as_json: bool) -> int:
         return 0
     print(f"{count(errors, 'error')} in {count(bits, 'bit')}: BER {ratio(ber)}")
     print(f"at {percent(confidence)} confidence (Clopper-Pearson):")
-    print(f"  two-sided   {both.lower:.6g} to {both.upper:.6g}")
-    print(f"  one-sided   at least {low:.6g}; or at most {high:.6g}")
+    print(f"  two-sided   {_six_digits(both.lower)} to {_six_digits(both.upper)}")
+    print(f"  one-sided   at least {_six_digits(low)}; or at most {_six_digits(high)}")
     return 0
 
 
@@ -47,7 +50,7 @@ def plan(
     accept_errors: int | None,
     kind: str,
     margin: float,
-    producer_risk: float,
+    producer_risk: float | None,
     rate_bps: float | None,
     *,
     as_json: bool,
@@ -64,15 +67,17 @@ def plan(
             "a sequential plan finds for itself how many errors to accept",
             "leave out --accept-errors, or choose --kind fixed or curtailed",
         )
-    if accept_errors is not None and accept_errors < 0:
-        raise UserError(f"{accept_errors} errors cannot be accepted", "give --accept-errors 0 or more")
+    if producer_risk is not None and kind in ("fixed", "curtailed"):
+        warn(
+            f"--producer-risk is for sequential plans: that of a {kind} plan follows from --accept-errors and --margin"
+        )
     made = make_plan(
         kind,
         ber,
         confidence=confidence,
         accept_errors=accept_errors or 0,
         margin=margin,
-        producer_risk=producer_risk,
+        producer_risk=0.05 if producer_risk is None else producer_risk,
     )
     document: dict[str, Any] = {
         "schema": 1,
@@ -151,10 +156,29 @@ def theory(
             assert ber is not None
             ebn0 = curve.ebn0_db(modulation, ber, fading)
     except ValueError as error:
-        raise UserError(str(error), "`bitassay theory --modulation list` lists the modulations") from error
+        advice = "`bitassay theory --modulation list` lists the modulations"
+        if "modulation" not in str(error):
+            advice = "`bitassay theory --help` shows an example"
+        raise UserError(str(error), advice) from error
+    least = (
+        None if ber else LEAST_RATIO
+    )  # what a double cannot hold is not nought: no Eb/N0 gives none at all
     if as_json:
-        print_json({"schema": 1, "modulation": named.name, "fading": fading, "ebn0_db": ebn0, "ber": ber})
+        document = {
+            "modulation": named.name,
+            "fading": fading,
+            "ebn0_db": ebn0,
+            "ber": ber,
+            "ber_under": least,
+        }
+        print_json({"schema": 1, **document})
         return 0
     over = f" over {fading} fading" if fading else ""
-    print(f"{named.title}{over}: BER {ber:.6g} at Eb/N0 {ebn0:.4f} dB")
+    said = f"under {ratio(least)}" if least else _six_digits(ber)
+    print(f"{named.title}{over}: BER {said} at Eb/N0 {ebn0:.4f} dB")
     return 0
+
+
+def _six_digits(value: float) -> str:
+    """Write a figure with six digits, and powers of ten as everywhere else: ``1e-6``, not ``1e-06``."""
+    return re.sub(r"e([+-])0+(?=\d)", lambda found: f"e{found[1].strip('+')}", f"{value:.6g}")

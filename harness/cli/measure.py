@@ -19,10 +19,11 @@ from harness.cli.failure import FAIL, FAULT, INTERRUPTED, PASS, TERMINATED, UNDE
 from harness.cli.output import (
     lock_folder,
     open_for_measuring,
-    open_writing,
+    open_reading,
     print_json,
     store_place,
     store_url,
+    tell_new_store,
 )
 
 if TYPE_CHECKING:
@@ -159,7 +160,7 @@ def resume(run: str, manner: Manner) -> int:
     """Go on with a run that was cut; one that is completed is printed again."""
     from harness.bench.resumption import prepare
 
-    with open_writing(manner.store) as opened:
+    with open_reading(manner.store) as opened:
         record = opened.load(opened.find(run))
         if record.status == "completed":
             return _print_again(record, manner)
@@ -192,6 +193,8 @@ def carry_out(loaded: Profile, command: str, manner: Manner, cut: Run | None = N
     as_json, quiet = manner.as_json, manner.quiet
     ending, log_file = Ending(), Log(manner.log)
     where = store_place(manner.store)
+    if not (quiet or as_json):
+        tell_new_store(manner.store)
     with open_for_measuring(manner.store) as opened, ending.caught():
         try:
             with watcher(

@@ -61,6 +61,20 @@ def store_place(option: str | None) -> str:
     return make_url(url).render_as_string(hide_password=True)
 
 
+def new_store(option: str | None) -> Path | None:
+    """Say which store will be made though it was named, so that a mistyped name is seen; None where none is."""
+    if option is None and not os.environ.get("BITASSAY_STORE"):
+        return None
+    path = store_url(option).removeprefix("sqlite:///")
+    return None if "://" in path or Path(path).exists() else Path(path)
+
+
+def tell_new_store(option: str | None) -> None:
+    """Say it on standard error."""
+    if path := new_store(option):
+        print(f"new store at {path}", file=sys.stderr)
+
+
 def lock_folder(url: str) -> Path:
     """Say where guardians keep their files: beside a SQLite store, else in results/ here."""
     path = url.removeprefix("sqlite:///") if url.startswith("sqlite:///") else url

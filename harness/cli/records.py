@@ -2,9 +2,11 @@
 
 from __future__ import annotations
 
+import sys
+
 from harness.assess.words import count, local_date
 from harness.cli.failure import FAULT
-from harness.cli.output import missing_default, open_reading, print_json, store_place, store_url
+from harness.cli.output import missing_default, new_store, open_reading, print_json, store_place, store_url
 
 
 def runs(store: str | None, limit: int | None, *, as_json: bool) -> int:
@@ -107,7 +109,10 @@ def copy(source: str, target: str) -> int:
     """Copy records between stores."""
     from harness.store import copy as carry_out
 
+    new = new_store(target)
     done = carry_out(source, target)
+    if new is not None:
+        print(f"new store at {new}", file=sys.stderr)
     print(
         f"{count(len(done.new), 'new run')}, {len(done.continued)} continued, {done.unchanged} unchanged; "
         f"{count(done.seconds, 'second')} and {count(done.events, 'event')} copied"

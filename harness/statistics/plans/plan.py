@@ -21,6 +21,7 @@ from harness.statistics.least_bits import risk_of
 
 Ended = Literal["plan", "limit", "operator"]
 _SLACK = 1e-9  # relative: what rounding may put between a bound and the ratio that it must not pass
+LEAST_BER = 1e-30  # no test reaches it, and counts stay in what a double can hold
 
 
 class PlanError(ValueError):
@@ -298,6 +299,11 @@ def check_requirement(ber: float, confidence: float, margin: float, producer_ris
         raise PlanError(
             f"a required bit error ratio of {ber!r} is outside 0 to 1",
             "state the requirement as a ratio over 0 and under 1, for example 1e-6",
+        )
+    if ber < LEAST_BER:
+        raise PlanError(
+            f"a required bit error ratio of {ber!r} is beyond every test",
+            f"state {LEAST_BER:g} or more, for example 1e-6",
         )
     if not 0 < confidence < 1:
         raise PlanError(
