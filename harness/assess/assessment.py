@@ -42,7 +42,7 @@ class Bounds:
 class Clustered:
     """Whether the errors come in clusters, and what may be said then."""
 
-    clustered: bool
+    clustered: bool | None  # None: not judged
     dispersion: float | None
     p_value: float | None
     events: int | None
@@ -62,6 +62,12 @@ class Clustered:
             "words": self.words,
             **self.more,
         }
+
+
+def _not_judged(errors: int) -> Clustered:
+    """Say that nothing is known of clusters; with fewer than two errors there is none."""
+    few = errors < 2
+    return Clustered(False if few else None, None, None, errors if few else None, None)
 
 
 @dataclass(frozen=True, slots=True)
@@ -103,6 +109,11 @@ class PointAssessment:
     recent: Sequence[tuple[int, Tally]] = ()  # seconds of the last minute, for the strip; not in JSON
     facts: Mapping[str, Any] = field(default_factory=dict)
 
+    @property
+    def moved(self) -> Sequence[str]:
+        """What did not stay where it was set while this was counted, in words: nothing may rest on it then."""
+        return tuple(self.facts.get("moved", ()))
+
     def to_json(self) -> dict[str, Any]:
         """JSON of a point; the run's keys stand above it."""
         t = self.tally
@@ -111,7 +122,7 @@ class PointAssessment:
             "ended_by": self.ended_by,
             "started": iso(self.started),
             "ended": iso(self.ended),
-            "seconds": self.seconds,
+            "seconds": self.seconds if self.timed else None,
             "rate_bps": self.rate_bps,
             "measured_bps": self.measured_bps,
             "pattern": self.pattern,
@@ -143,8 +154,13 @@ class PointAssessment:
             "earlier_tries": int(self.facts.get("earlier_tries_count", 0)),
             "after_decision": {"bits": self.after_decision.received, "errors": self.after_decision.errors},
             "availability": [availability_json(a) for a in self.availability],
-            "clustering": self.clustering.to_json() if self.clustering else None,
+            "clustering": (self.clustering or _not_judged(t.errors)).to_json(),
         }
+
+    @property
+    def timed(self) -> bool:
+        """Whether its seconds are known: those of a capture without a rate are not."""
+        return not self.facts.get("untimed")
 
 
 @dataclass(frozen=True, slots=True)

@@ -52,11 +52,13 @@ def assess_point(acc: Accumulator, about: Facts, *, quick: bool = False) -> Poin
             sums,
             bits_lost,
             links_lost,
-            clustering is not None and clustering.clustered,
+            clustering is not None and bool(clustering.clustered),
             clustering is not None and clustering.too_few_events,
             availability[0].objectives_met if availability else None,
         )
         verdict, reasons = judge(requirement, plan, acc.decision, evidence)
+        if moved := about.facts.get("moved"):
+            verdict, reasons = "UNDECIDED", [*moved, *reasons]
     bounds = _bounds(acc, about, quick)
     aligned = next((e for e in acc.events if e.kind == "aligned"), None)
     tally = sums.tally
@@ -69,7 +71,7 @@ def assess_point(acc: Accumulator, about: Facts, *, quick: bool = False) -> Poin
         ended=about.ended,
         seconds=seconds,
         rate_bps=about.rate_bps,
-        measured_bps=tally.received / seconds if seconds > 0 else None,
+        measured_bps=tally.received / seconds if seconds > 0 and not about.facts.get("untimed") else None,
         pattern=about.pattern,
         alternatives=tuple(about.facts.get("alternatives", ())),
         inverted=_inverted(about, aligned),
@@ -96,6 +98,7 @@ def assess_point(acc: Accumulator, about: Facts, *, quick: bool = False) -> Poin
         remarks=(
             *_retests(acc, about),
             *about.facts.get("overdue", ()),
+            *about.facts.get("moved", ()),
             *bounds.remarks,
             *_remarks(acc, sums, bits_lost, clustering),
         ),

@@ -102,6 +102,8 @@ def _joints(point: int, seconds: Sequence[Second], step: int) -> Iterator[str]:
 
 def _compare(stated: Any, derived: Any, path: str) -> Iterator[str]:
     """Walk both documents; keys that only one of them has are differences too."""
+    if _said_otherwise(path, stated, derived):
+        return
     if isinstance(stated, Mapping) and isinstance(derived, Mapping):
         for key in {**stated, **derived}:
             yield from _compare(stated.get(key), derived.get(key), f"{path}.{key}" if path else str(key))
@@ -116,6 +118,17 @@ def _compare(stated: Any, derived: Any, path: str) -> Iterator[str]:
             yield f"{path}: {stated} was stated, {derived} follows from the record"
     elif stated != derived:
         yield f"{path}: {stated} was stated, {derived} follows from the record"
+
+
+def _said_otherwise(path: str, stated: Any, derived: Any) -> bool:
+    """Whether an earlier version said the same in other words: it stated null for clusters not judged.
+
+    It also stated 0 seconds for a capture without a rate.
+    """
+    key = path.rpartition(".")[2]
+    if key == "clustering" and stated is None:
+        return isinstance(derived, Mapping) and not derived["clustered"]
+    return key == "seconds" and derived is None and stated == 0
 
 
 def _close(one: Any, other: Any) -> bool:

@@ -141,11 +141,32 @@ class Examination:
 
 def nothing_found(data: NDArray[np.uint8], rate_bps: float | None, asked: str) -> Run:
     """Give the record of a capture in which no pattern was found: all of it unaligned."""
-    bits = 8 * len(data)
-    duration_ns = 0 if rate_bps is None else round(bits / rate_bps * 1e9)
-    whole = Second(0, 0, 0, 0, duration_ns, 0, Tally(bits, 0, bits), stretches=((bits, False),))
-    facts = {"pattern": None, "bit_order": None, "rate_bps": rate_bps, "untimed": True, "asked": asked}
-    return _run({"pattern": {"name": asked}}, facts, [whole], [])
+    book = Book(point=0, sitting=0, first_index=0, started_ns=0, wall_ns=0, keep_positions=0)
+    at = 0
+    for stop, ends_ns in _ends(len(data), rate_bps):
+        book.add(Segment(at, Tally(8 * stop - at, 0, 8 * stop - at), aligned=False))
+        at = 8 * stop
+        if stop < len(data):
+            book.close_second(ends_ns=ends_ns, received_bits=at, sent=0, due=True)
+        else:
+            book.end(ends_ns=ends_ns, received_bits=at, sent=0, due=True)
+    facts = {
+        "pattern": None,
+        "bit_order": None,
+        "rate_bps": rate_bps,
+        "untimed": rate_bps is None,
+        "asked": asked,
+    }
+    return _run({"pattern": {"name": asked}}, facts, book.take_complete(), [])
+
+
+def _ends(size: int, rate_bps: float | None) -> Iterator[tuple[int, int]]:
+    """Where seconds end in `size` bytes: (bytes before it, ns); the last is where the bytes end."""
+    number = 1
+    while rate_bps is not None and (end := math.ceil(rate_bps * number / 8)) < size:
+        yield end, number * 1_000_000_000
+        number += 1
+    yield size, 0 if rate_bps is None else round(8 * size / rate_bps * 1e9)
 
 
 def _run(settings: dict[str, Any], facts: dict[str, Any], seconds: list[Second], events: list[Event]) -> Run:

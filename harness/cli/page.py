@@ -107,7 +107,8 @@ def _numbers(p: PointAssessment, sheet: Sheet) -> Iterator[str]:
         also = f"; fits as well: {', '.join(p.alternatives)}" if p.alternatives else ""
         yield from _entry("pattern", [f"{p.pattern}{order}{inverted}{also}"])
     nominal = f"; nominal rate {rate(p.rate_bps)}" if p.rate_bps else ""
-    yield from _entry("began", [f"{local_date(p.started)}{nominal}"])
+    label = "examined" if "untimed" in p.facts else "began"  # when bytes in a file came, nobody knows
+    yield from _entry(label, [f"{local_date(p.started)}{nominal}"])
     yield from _entry("loop delay", _delay(p))
     if p.after_decision.received:
         after = p.after_decision

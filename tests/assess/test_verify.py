@@ -80,3 +80,16 @@ def test_a_slip_event_without_its_second_is_named(good):
     slip = Event("slip", 5, "one byte lost", 0, {"bits": -8, "modulo": None})
     run = replace(good, points=(replace(point, events=(*point.events, slip)),))
     assert any("slips" in line for line in differences(run))
+
+
+def test_what_an_earlier_version_stated_as_null_for_clusters_not_judged_is_no_difference(record, second):
+    run = record([second(0, (3,)), second(1)], ended_by="bits")
+    stated = assess(run).to_json()
+    assert stated["clustering"]["clustered"] is False
+    assert differences(replace(run, stated={**stated, "clustering": None})) == []
+
+
+def test_clusters_that_were_judged_cannot_be_stated_as_null(record, second):
+    burst = record([second(0, tuple(range(100, 160))), second(1)], ended_by="bits")
+    stated = {**assess(burst).to_json(), "clustering": None}
+    assert any("clustering" in line for line in differences(replace(burst, stated=stated)))

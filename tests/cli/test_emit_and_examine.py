@@ -124,3 +124,34 @@ def test_what_no_pattern_fits_is_said_and_ends_in_status_3(bitassay, tmp_path, c
     assert done.json["bits_unaligned"] == 8 * len(content)
     assert done.json["bits_compared"] == 0
     assert "no known pattern" in done.json["identification"]
+
+
+def test_without_a_rate_no_time_is_made_up(bitassay, tmp_path):
+    (tmp_path / "got.bin").write_bytes(packed(shift_register("PRBS15", 80_000), "lsb"))
+    got = bitassay("examine", "got.bin", "--json").json
+    assert (got["seconds"], got["measured_bps"]) == (None, None)
+    page = bitassay("examine", "got.bin").out
+    assert "no time is known without a rate" in page
+    assert "bit/s" not in page
+
+
+def test_with_a_rate_what_no_pattern_fits_is_unavailable_second_by_second(bitassay, tmp_path):
+    (tmp_path / "got.bin").write_bytes(random.Random(3).randbytes(6_000 * 12 + 600))
+    done = bitassay("examine", "got.bin", "--rate", "48000", "--json")
+    g821 = done.json["availability"][0]
+    assert done.status == 3
+    assert (g821["seconds"], g821["unavailable"], g821["partial"]) == (12, 12, 1)
+    assert done.json["seconds"] == pytest.approx(12.1)
+    assert done.json["bits_unaligned"] == 8 * 6_000 * 12 + 4_800
+
+
+def test_a_folder_is_not_called_missing(bitassay, tmp_path):
+    done = bitassay("examine", tmp_path)
+    assert done.status == 2
+    assert "is a folder" in done.err
+
+
+def test_clustering_is_an_object_also_where_there_is_nothing_to_judge(bitassay, tmp_path):
+    (tmp_path / "got.bin").write_bytes(packed(shift_register("PRBS15", 80_000), "lsb"))
+    got = bitassay("examine", "got.bin", "--json").json["clustering"]
+    assert (got["clustered"], got["events"], got["bounds"]) == (False, 0, None)

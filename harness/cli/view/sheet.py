@@ -269,11 +269,13 @@ def _labelled(ber: str, device: Mapping[str, str]) -> str:
 
 def _took(a: Assessment) -> str:
     p = a.whole
+    if not p.timed:  # bytes in a file, of which nobody said how fast they came
+        return f"no time is known without a rate; {_why(a)}"
     speed = rates(p.recent, None).received_bps if p.measured_bps is None else p.measured_bps
     words = duration(p.seconds if p.seconds < 10 else round(p.seconds)) + (
         f" at {rate(speed)}" if speed else ""
     )
-    if a.ended is not None:
+    if a.ended is not None and a.command != "examine":
         words += f", until {local_date(a.ended)[11:19]}"
     return f"{words}; {_why(a)}" if _why(a) else words
 
