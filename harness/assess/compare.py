@@ -8,6 +8,7 @@ from typing import Any
 
 from harness.assess.assessment import Assessment
 from harness.assess.run import assess
+from harness.assess.words import value_words
 from harness.record import Run
 from harness.statistics.comparing import Comparison, compare_counts, compare_seconds
 
@@ -60,7 +61,7 @@ def compare(a: Run, b: Run, confidence: float = 0.95) -> SideBySide:
         other,
         errors,
         _seconds(one, other, confidence),
-        tuple(_differences(a.settings, b.settings)),
+        tuple(condition_differences(a.settings, b.settings)),
         tuple(_warnings(one, other)),
     )
 
@@ -74,25 +75,29 @@ def _seconds(a: Assessment, b: Assessment, confidence: float) -> Comparison | No
     return compare_seconds(sa.errored, sa.available, sb.errored, sb.available, confidence)
 
 
-def _differences(a: Mapping[str, Any], b: Mapping[str, Any]) -> Iterator[str]:
+def condition_differences(
+    a: Mapping[str, Any], b: Mapping[str, Any], names: tuple[str, str] = ("A", "B")
+) -> Iterator[str]:
+    """Say in which settings two runs differ that make their counts differ for more reasons than the device."""
     for section in _CONDITIONS:
-        yield from _walk(a.get(section), b.get(section), section)
+        yield from _walk(a.get(section), b.get(section), section, names)
 
 
-def _walk(a: Any, b: Any, path: str) -> Iterator[str]:
-    if isinstance(a, Mapping) and isinstance(b, Mapping):
-        for key in sorted({*a, *b}):
+def _walk(a: Any, b: Any, path: str, names: tuple[str, str]) -> Iterator[str]:
+    if isinstance(a, Mapping) or isinstance(b, Mapping):
+        one, other = (x if isinstance(x, Mapping) else {} for x in (a, b))
+        for key in sorted({*one, *other}):
             if key not in _PLACES:
-                yield from _walk(a.get(key), b.get(key), f"{path}.{key}")
-    elif isinstance(a, list) and isinstance(b, list) and len(a) == len(b):
-        for number, (one, other) in enumerate(zip(a, b, strict=True)):
-            yield from _walk(one, other, f"{path}[{number + 1}]")
+                yield from _walk(one.get(key), other.get(key), f"{path}.{key}", names)
+    elif isinstance(a, list | tuple) and isinstance(b, list | tuple) and len(a) == len(b):
+        for number, (first, second) in enumerate(zip(a, b, strict=True)):
+            yield from _walk(first, second, f"{path}[{number + 1}]", names)
     elif a != b:
-        yield f"{path}: {_word(a)} in A, {_word(b)} in B"
+        yield f"{path}: {_word(a)} in {names[0]}, {_word(b)} in {names[1]}"
 
 
 def _word(value: Any) -> str:
-    return "nothing" if value is None else str(value)
+    return "nothing" if value is None else value_words(value)
 
 
 def _warnings(a: Assessment, b: Assessment) -> Iterator[str]:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping
 from datetime import UTC, datetime
+from typing import Any
 
 ENDED_BY: Mapping[str, str] = {
     "plan": "its plan decided",
@@ -119,3 +120,16 @@ def local_date(at_ns: int | None) -> str:
     if at_ns is None:
         return ""
     return datetime.fromtimestamp(at_ns / 1e9).astimezone().strftime("%Y-%m-%d %H:%M:%S %z")
+
+
+def value_words(value: Any) -> str:
+    """Write a setting's value for people: no braces, and powers of ten as everywhere else."""
+    if isinstance(value, bool):
+        return "yes" if value else "no"
+    if isinstance(value, float):
+        return ratio(value) if 0 < abs(value) < 0.01 else f"{value:g}"
+    if isinstance(value, Mapping):
+        return ", ".join(f"{k} {value_words(v)}" for k, v in value.items() if v is not None)
+    if isinstance(value, list | tuple):
+        return ", ".join(value_words(v) for v in value) or "none"
+    return "nothing" if value is None else str(value)

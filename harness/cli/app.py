@@ -41,6 +41,14 @@ LogOption = Annotated[
 ProfileArgument = Annotated[
     str, typer.Argument(metavar="PROFILE", help="A TOML file, or a ready profile's name.")
 ]
+HtmlOption = Annotated[
+    Path | None, typer.Option("--html", metavar="FILE", help="Write the report as a page.")
+]
+PdfOption = Annotated[
+    Path | None,
+    typer.Option("--pdf", metavar="FILE", help="Write the report as a PDF (needs the extra `pdf`)."),
+]
+PaperOption = Annotated[str, typer.Option("--paper", metavar="a4|letter", help="Of the PDF.")]
 RunArgument = Annotated[
     str, typer.Argument(metavar="RUN", help="A run's key, any unique ending of it, or `last`.")
 ]
@@ -119,18 +127,28 @@ def sweep(
 def lot(
     profile: ProfileArgument,
     set_: SetOption = None,
+    html: HtmlOption = None,
+    pdf: PdfOption = None,
+    text: Annotated[
+        bool, typer.Option("--text", help="Print the lot's report as text, in place of the lot at a glance.")
+    ] = False,
+    paper: PaperOption = "a4",
     store: StoreOption = None,
     json: JsonOption = False,
     log: LogOption = None,
 ) -> int:
     """Measure many units, one after another: asks for each serial number; ends with the lot at a glance.
 
-    Example: bitassay lot my-lot.toml
+    An empty line ends it; the lot goes on another day, and `bitassay report --lot NAME` reports it again
+    without measuring.
+
+    Example: bitassay lot my-lot.toml --pdf lot.pdf
     """
     from harness.cli.lot import lot as carry_out
     from harness.cli.measure import Manner
+    from harness.cli.report import Forms
 
-    return carry_out(profile, set_ or [], Manner(store, json, False, log))
+    return carry_out(profile, set_ or [], Manner(store, json, False, log), Forms(html, pdf, text, paper))
 
 
 @app.command()
@@ -329,25 +347,36 @@ def show(run: RunArgument = "last", store: StoreOption = None, json: JsonOption 
 
 @app.command()
 def report(
-    run: RunArgument = "last",
-    html: Annotated[Path | None, typer.Option("--html", metavar="FILE", help="Write a page.")] = None,
-    pdf: Annotated[
-        Path | None, typer.Option("--pdf", metavar="FILE", help="Write a PDF (needs the extra `pdf`).")
+    run: Annotated[
+        str | None,
+        typer.Argument(
+            metavar="[RUN]", help="A run's key, any unique ending of it, or `last` (the default)."
+        ),
     ] = None,
+    lot: Annotated[
+        str | None,
+        typer.Option(
+            "--lot", metavar="NAME", help="Report a whole lot instead, by its name; `last`: the newest."
+        ),
+    ] = None,
+    html: HtmlOption = None,
+    pdf: PdfOption = None,
     text: Annotated[
         bool, typer.Option("--text", help="Print it as text; so without --html and --pdf.")
     ] = False,
-    paper: Annotated[str, typer.Option("--paper", metavar="a4|letter", help="Of the PDF.")] = "a4",
+    paper: PaperOption = "a4",
     store: StoreOption = None,
 ) -> int:
-    """Write a run's report: a page, a PDF, or text.
+    """Write the report of a run, or of a lot with all its units: a page, a PDF, or text.
+
+    An earlier report is replaced; any other file that stands there is left alone.
 
     Example: bitassay report last --html report.html --pdf report.pdf
     """
     from harness.cli.report import Forms
     from harness.cli.report import report as carry_out
 
-    return carry_out(run, Forms(html, pdf, text, paper), store)
+    return carry_out(run, Forms(html, pdf, text, paper), store, lot)
 
 
 @app.command()

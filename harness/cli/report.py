@@ -12,10 +12,14 @@ from pathlib import Path
 from typing import TYPE_CHECKING, TextIO
 
 from harness.cli.failure import UserError, warn
+from harness.cli.files import may_write, write_whole
 from harness.cli.output import open_reading
 
 if TYPE_CHECKING:
+    from harness.report.document import Document
+    from harness.report.lot import LotMaterial
     from harness.report.material import Material
+    from harness.store import Store
 
 FORMATS = ("csv", "json", "junit")
 PAPERS = {"a4": "a4", "letter": "us-letter"}
@@ -30,6 +34,11 @@ class Forms:
     text: bool = False
     paper: str = "a4"
 
+    @property
+    def any(self) -> bool:
+        """Whether a report is asked for at all."""
+        return self.text or self.html is not None or self.pdf is not None
+
 
 @dataclass(frozen=True, slots=True)
 class Export:
@@ -41,15 +50,47 @@ class Export:
     schema: bool = False
 
 
-def report(run: str, forms: Forms, store: str | None) -> int:
-    """Write a report; without a file to write it is printed as text."""
+def report(run: str | None, forms: Forms, store: str | None, lot: str | None = None) -> int:
+    """Write the report of a run or of a lot; without a file to write it is printed as text."""
+    ready(forms)
+    if lot is not None:
+        if run is not None:
+            raise UserError("a report is of a run or of a lot", "leave out RUN or --lot")
+        write_lot(_lot_named(lot, store), forms)
+        return 0
     from harness.report.assemble import assemble
 
+    _write_forms(assemble(_material(run or "last", store)), forms)
+    return 0
+
+
+def ready(forms: Forms) -> None:
+    """See that all forms can be written, before anything else is done.
+
+    Raises
+    ------
+    UserError
+    """
     if forms.paper not in PAPERS:
         raise UserError(f'there is no paper "{forms.paper}" here', f"choose one of {', '.join(PAPERS)}")
+    if forms.html is not None and forms.pdf is not None and forms.html.absolute() == forms.pdf.absolute():
+        raise UserError(f"--html and --pdf both name {forms.html}", "give them different names")
+    for path in (forms.html, forms.pdf):
+        if path is not None:
+            may_write(path)
     if forms.pdf is not None:
         _need_typst()
-    document = assemble(_material(run, store))
+
+
+def write_lot(material: LotMaterial, forms: Forms, *, aside: bool = False) -> None:
+    """Write a lot's report; `aside` keeps standard output free."""
+    from harness.report.lot import assemble_lot
+
+    _write_forms(assemble_lot(material), forms, aside=aside)
+
+
+def _write_forms(document: Document, forms: Forms, *, aside: bool = False) -> None:
+    said = []
     if forms.html is not None or forms.pdf is not None:
         from harness.report.figures.drawing import draw_all
 
@@ -57,35 +98,63 @@ def report(run: str, forms: Forms, store: str | None) -> int:
         if forms.html is not None:
             from harness.report.html import to_html
 
-            _write(forms.html, to_html(document, drawn).encode("utf-8"))
+            said.append(write_whole(forms.html, to_html(document, drawn).encode("utf-8")))
         if forms.pdf is not None:
             from harness.report.pdf import to_pdf
 
             paper = PAPERS[forms.paper]
-            _write(forms.pdf, to_pdf(document, drawn, paper))  # type: ignore[arg-type]
-    if forms.text or (forms.html is None and forms.pdf is None):
-        from harness.cli.view.ink import writable
+            said.append(write_whole(forms.pdf, to_pdf(document, drawn, paper)))  # type: ignore[arg-type]
+    if forms.text or not forms.any:
+        from harness.cli.page import print_lines
         from harness.report.text import to_text
 
-        for line in to_text(document).splitlines():
-            print(writable(line, sys.stdout.encoding))
-    for path in (forms.html, forms.pdf):
-        if path is not None:
-            print(f"wrote {path}", file=sys.stderr if forms.text else sys.stdout)
-    return 0
+        print_lines(to_text(document).splitlines())
+    for words in said:
+        print(words, file=sys.stderr if forms.text or aside else sys.stdout)
 
 
 def _material(run: str, store: str | None) -> Material:
+    with open_reading(store) as opened:
+        return _load(opened, opened.find(run))
+
+
+def _load(opened: Store, key: str) -> Material:
     from harness.report.material import material_of
     from harness.store import digest_of
 
-    with open_reading(store) as opened:
-        key = opened.find(run)
-        record = opened.load(key)
-        kept = opened.digest(key)
+    record = opened.load(key)
+    kept = opened.digest(key)
     digest = digest_of(record) if kept is not None else None
-    program = f"bitassay {version('bitassay')}"
-    return material_of(record, kept, digest, written=time.time_ns(), program=program)
+    return material_of(record, kept, digest, written=time.time_ns(), program=_program())
+
+
+def _program() -> str:
+    return f"bitassay {version('bitassay')}"
+
+
+def lot_material(name: str, store: str | None) -> LotMaterial | None:
+    """Gather a lot from the store; None where it holds no run of it."""
+    from harness.report.lot import gather
+
+    with open_reading(store) as opened:
+        materials = (_load(opened, key) for key in opened.in_lot(name))
+        return gather(name, materials, written=time.time_ns(), program=_program())
+
+
+def _lot_named(name: str, store: str | None) -> LotMaterial:
+    """Find a lot by its name, or the newest by `last`."""
+    with open_reading(store) as opened:
+        known = opened.lots()
+    if name not in known and name == "last" and known:
+        name = known[0]
+    material = lot_material(name, store) if name in known else None
+    if material is None:
+        some = ", ".join(known[:5]) + (" and others" if len(known) > 5 else "")
+        raise UserError(
+            f'there is no lot "{name}" in the store',
+            f"it holds {some}" if known else "`bitassay lot PROFILE` measures one",
+        )
+    return material
 
 
 def _need_typst() -> None:
@@ -97,18 +166,10 @@ def _need_typst() -> None:
         raise UserError(error.what, error.advice) from error
 
 
-def _write(path: Path, data: bytes) -> None:
-    """Write a file whole or not at all."""
-    part = path.with_name(f".{path.name}.part")
-    try:
-        part.write_bytes(data)
-        part.replace(path)
-    finally:
-        part.unlink(missing_ok=True)
-
-
 def export(run: str, wanted: Export, store: str | None) -> int:
     """Write a run's data, or the schema of its JSON."""
+    if wanted.output is not None:
+        may_write(wanted.output)
     if wanted.schema:
         from harness.report.exports.data import schema_text
 
@@ -153,5 +214,4 @@ def _deliver(output: Path | None, write: Callable[[TextIO], None]) -> None:
         sys.stdout.buffer.write(data)
         sys.stdout.buffer.flush()
         return
-    _write(output, data)
-    print(f"wrote {output}", file=sys.stderr)
+    print(write_whole(output, data), file=sys.stderr)

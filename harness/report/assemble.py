@@ -61,14 +61,14 @@ def assemble(material: Material) -> Document:
     run = material.run
     return harmless(
         Document(
+            kind="Bit error ratio report",
             title=run.title or "Bit error ratio measurement",
-            unit=unit_name(run.device),
+            subject=unit_name(run.device),
             date=moment(run.started),
-            run=run.key,
+            reference=("run", run.key),
             banners=tuple(_banners(material)),
             sections=tuple(s for s in sections if s is not None),
-            record_digest=record_digest(material),
-            profile_digest=material.profile_digest,
+            digests=(("record", record_digest(material)), ("profile", material.profile_digest)),
             program=material.program,
         )
     )

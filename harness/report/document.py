@@ -113,14 +113,14 @@ class Section:
 class Document:
     """A report."""
 
+    kind: str  # what paper it is
     title: str
-    unit: str
+    subject: str  # the unit or the lot
     date: str
-    run: str
+    reference: tuple[str, str]  # what it reports on: ("run", its key)
     banners: tuple[str, ...]  # what nobody may overlook
     sections: tuple[Section, ...]
-    record_digest: str  # SHA-256 in hexadecimal, or why there is none
-    profile_digest: str
+    digests: tuple[tuple[str, str], ...]  # (of what, SHA-256 in hexadecimal, or why there is none)
     program: str  # name and version
 
     def figures(self) -> tuple[Figure, ...]:

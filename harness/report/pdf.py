@@ -13,6 +13,7 @@ from harness.report.figures.drawing import draw_all
 
 Paper = Literal["a4", "us-letter"]
 _TOGETHER = 16  # rows of a table that is not broken over pages
+_ROOMY = 72  # characters that a row may have in letters of the usual size
 _LONG = 26  # characters: text that may need more than one line
 
 
@@ -61,13 +62,13 @@ def to_pdf(document: Document, drawn: Sequence[str] | None = None, paper: Paper 
     drawn = draw_all(document.figures()) if drawn is None else drawn
     pictures = iter([coloured(svg, ON_PAPER) for svg in drawn])
     data = {
+        "kind": document.kind,
         "title": document.title,
-        "unit": document.unit,
+        "subject": document.subject,
         "date": document.date,
-        "run": document.run,
+        "reference": list(document.reference),
         "banners": list(document.banners),
-        "record_digest": document.record_digest,
-        "profile_digest": document.profile_digest,
+        "digests": [list(pair) for pair in document.digests],
         "program": document.program,
         "sections": [
             {"title": s.title, "blocks": [_block(block, pictures) for block in s.blocks]}
@@ -100,8 +101,15 @@ def _block(block: Block, pictures: Any) -> dict[str, Any]:
         widest = _widest(block)
         for number, about in enumerate(data["columns"]):
             about["stretch"] = number == widest
+        data["crowded"] = _letters(block) > _ROOMY
         data["together"] = len(block.rows) <= _TOGETHER
     return data
+
+
+def _letters(table: Table) -> int:
+    """Give how many characters wide a table is, with the room between its columns."""
+    rows = (tuple(column.label for column in table.columns), *table.rows)
+    return sum(max(len(row[k]) for row in rows) + 2 for k in range(len(table.columns)))
 
 
 def _widest(table: Table) -> int | None:

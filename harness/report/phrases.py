@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from typing import Any
 
 from harness.assess.assessment import PointAssessment
 from harness.assess.words import count, duration, local_date, percent, ratio
@@ -105,16 +104,3 @@ def on_bits(p: PointAssessment) -> str:
         return f"none: the pattern was not found in the {count(t.received, 'bit')} that came"
     errors = count(t.errors, "error") if t.errors else "no error"
     return f"{errors} in {count(t.compared, 'compared bit')}"
-
-
-def value_words(value: Any) -> str:
-    """Write a setting's value for people."""
-    if isinstance(value, bool):
-        return "yes" if value else "no"
-    if isinstance(value, float):
-        return f"{value:g}"
-    if isinstance(value, Mapping):
-        return ", ".join(f"{k} {value_words(v)}" for k, v in value.items())
-    if isinstance(value, list | tuple):
-        return ", ".join(value_words(v) for v in value)
-    return str(value)

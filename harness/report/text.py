@@ -29,8 +29,9 @@ def to_text(document: Document) -> str:
 
 
 def _lines(document: Document) -> Iterator[str]:
-    yield f"{document.unit} — {document.title}"
-    yield f"{document.date}, run {document.run}"
+    yield f"{document.subject} — {document.title}"
+    what, name = document.reference
+    yield document.date if name in document.subject else f"{document.date}, {what} {name}"
     for banner in document.banners:
         yield ""
         yield from textwrap.wrap(f"!! {banner}", WIDTH, subsequent_indent="   ")
@@ -38,8 +39,8 @@ def _lines(document: Document) -> Iterator[str]:
         yield from _section(section)
     yield ""
     yield "─" * WIDTH
-    yield f"record  SHA-256 {document.record_digest}"
-    yield f"profile SHA-256 {document.profile_digest}"
+    for what, digest in document.digests:
+        yield f"{what:<7} SHA-256 {digest}"
 
 
 def _section(section: Section) -> Iterator[str]:

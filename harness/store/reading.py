@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import re
 import time
 from collections.abc import Iterator, Mapping
@@ -69,6 +70,23 @@ class Reading:
         if limit is not None:
             query = query.limit(limit)
         return self._run_lines(query)
+
+    def in_lot(self, name: str) -> list[str]:
+        """List the keys of the runs of a lot, by what ``device.lot`` says, oldest first."""
+        return [key for key, lot in self._lots() if lot == name]
+
+    def lots(self) -> list[str]:
+        """List the names of all lots, the one measured last first."""
+        return list(dict.fromkeys(lot for _key, lot in reversed(self._lots())))
+
+    def _lots(self) -> list[tuple[str, str]]:
+        """Give (key, lot) of every run that belongs to one, oldest first."""
+        run = t.run.c
+        query = select(run.key, run.device).where(run.device.like('%"lot"%')).order_by(run.started, run.key)
+        with self._reading() as connection:
+            rows = connection.execute(query).all()
+            named = [(cast(str, row.key), json.loads(row.device).get("lot")) for row in rows]
+        return [(key, str(lot)) for key, lot in named if lot]
 
     def earlier_runs(
         self,

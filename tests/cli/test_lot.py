@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-import numpy as np
+import hashlib
+import re
 
 PROFILE = """
 title = "Wader-9 lot, invented"
@@ -35,6 +36,76 @@ def test_units_are_asked_for_checked_measured_and_summed_up(bitassay, tmp_path):
     assert [run["serial_number"] for run in runs] == ["0032", "0031"]
 
 
+def test_a_lot_is_reported_when_it_ends_and_again_later_without_measuring(bitassay, tmp_path):
+    (tmp_path / "lot.toml").write_text(PROFILE)
+    done = bitassay("lot", "lot.toml", "--html", "a.html", "--text", stdin=b"0031\n0032\n\n")
+    assert done.status == 0, done.err
+    assert "wrote a.html" in done.err
+    again = bitassay("report", "--lot", "L7")
+    assert again.status == 0
+    written = re.compile(r"written by .*")
+    assert written.sub("", again.out) == written.sub("", done.out)
+    assert (
+        bitassay("report", "--lot", "last").out.splitlines()[0] == "Wader-9, lot L7 — Wader-9 lot, invented"
+    )
+    runs = [run["run"] for run in bitassay("runs", "--json").json["runs"]]
+    assert len(runs) == 2
+    digests = {key: bitassay("verify", key, "--json").json["digest"] for key in runs}
+    for key, digest in digests.items():
+        assert key in again.out
+        assert digest in again.out
+    lines = "".join(f"{digests[key]}  {key}\n" for key in sorted(runs))
+    assert again.out.count(hashlib.sha256(lines.encode()).hexdigest()) == 2  # its section, and the foot
+    page = (tmp_path / "a.html").read_text()
+    for key in runs:
+        shown = bitassay("show", key, "--json").json
+        digits = f"{shown['bits_compared']:,}".replace(",", "\u202f")
+        row = re.search(rf"{shown['device']['serial_number']} +PASS +{shown['errors']} +{digits} ", again.out)
+        assert row, again.out
+        assert f">{digits}<" in page
+
+
+def test_what_cannot_be_reported_is_said_before_anything_is_measured(bitassay, tmp_path):
+    (tmp_path / "lot.toml").write_text(PROFILE)
+    done = bitassay("lot", "lot.toml", "--pdf", "nowhere/lot.pdf", stdin=b"0031\n\n")
+    assert done.status == 2
+    assert "there is no folder" in done.err
+    assert bitassay("runs", "--json").json["runs"] == []
+    bitassay("lot", "lot.toml", stdin=b"0031\n\n")
+    done = bitassay("report", "--lot", "L8")
+    assert (done.status, done.out) == (2, "")
+    assert 'no lot "L8"' in done.err
+    assert "it holds L7" in done.err
+    assert bitassay("report", "last", "--lot", "L7").status == 2
+
+
+def test_a_lot_with_units_still_to_be_measured_has_not_passed_and_counts_on(bitassay, tmp_path):
+    (tmp_path / "lot.toml").write_text(PROFILE + "size = 2\n")
+    done = bitassay("lot", "lot.toml", stdin=b"0031\n\n")
+    assert done.status == 3
+    assert "lot L7: 1 unit measured of 2" in done.out
+    assert "1 unit of 2 still to be measured" in done.out
+    assert max(len(line) for line in done.out.splitlines()) <= 80
+    done = bitassay("lot", "lot.toml", "--json", stdin=b"0032\n0033\n")
+    assert done.status == 0
+    assert "unit 2 of 2" in done.err
+    assert done.json["verdict"] == "PASS"
+    assert [unit["serial_number"] for unit in done.json["units"]] == ["0031", "0032"]
+
+
+def test_a_void_run_may_be_made_up_for_and_is_told(bitassay, tmp_path):
+    (tmp_path / "lot.toml").write_text(PROFILE)
+    bitassay("lot", "lot.toml", stdin=b"0031\n\n")
+    bitassay("note", "last", "antenna cable was loose", "--void")
+    done = bitassay("lot", "lot.toml", "--json", stdin=b"\n")
+    assert done.status == 3
+    assert done.json["units"][0]["standing"] == "void"
+    done = bitassay("lot", "lot.toml", "--text", stdin=b"0031\n\n")
+    assert done.status == 0
+    assert "void: antenna cable was loose" in done.out
+    assert "This is test 2 of unit 0031" in done.out
+
+
 def test_a_lot_goes_on_another_day_and_knows_what_was_measured(bitassay, tmp_path):
     (tmp_path / "lot.toml").write_text(PROFILE)
     bitassay("lot", "lot.toml", stdin=b"0031\n\n")
@@ -49,13 +120,3 @@ def test_a_profile_without_a_lot_is_refused(bitassay, tmp_path):
     done = bitassay("lot", "one.toml", stdin=b"0031\n")
     assert done.status == 2
     assert "[lot]" in done.err
-
-
-def test_a_unit_with_far_more_errors_than_the_others_is_pointed_out():
-    from harness.assess.lot import Unit, _marked
-
-    rng = np.random.default_rng(1)
-    units = [Unit(f"{n:04}", "", "PASS", int(rng.poisson(20)), 10**6, 2e-5, None, 1) for n in range(12)]
-    odd = Unit("9999", "", "PASS", 80, 10**6, 8e-5, None, 1)
-    assert "worse than the others" in " ".join(_marked(odd, [*units, odd]).remarks)
-    assert not any(_marked(unit, units).remarks for unit in units)

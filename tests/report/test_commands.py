@@ -73,8 +73,10 @@ def test_without_typst_it_says_what_to_install_and_writes_nothing(bitassay, stor
         (("export", "--format", "json", "--points"), 2, "--points is for CSV"),
         (("report", "--pdf", "x.pdf", "--paper", "a5"), 2, "a4, letter"),
         (("report", "nonesuch"), 2, "no run is named"),
-        (("report", "--html", "nowhere/x.html"), 4, "nowhere"),
-        (("export", "--output", "nowhere/x.csv"), 4, "nowhere"),
+        (("report", "--html", "nowhere/x.html"), 2, "there is no folder"),
+        (("export", "--output", "nowhere/x.csv"), 2, "there is no folder"),
+        (("report", "--html", "x.html", "--pdf", "x.html"), 2, "--html and --pdf both name x.html"),
+        (("report", "--html", "."), 2, "is a folder"),
     ],
 )
 def test_what_cannot_be_done_is_said_in_two_lines(
@@ -89,6 +91,30 @@ def test_what_cannot_be_done_is_said_in_two_lines(
     assert words in said.err
     assert len(said.err.strip().splitlines()) == 2
     assert said.out == ""
+
+
+def test_an_earlier_report_is_replaced_and_any_other_file_is_left_alone(store, capfd, monkeypatch, tmp_path):
+    def run(*arguments):
+        monkeypatch.setattr("sys.argv", ["bitassay", *arguments, store])
+        with pytest.raises(SystemExit) as left:
+            main()
+        said = capfd.readouterr()
+        return left.value.code, said.out + said.err
+
+    monkeypatch.chdir(tmp_path)
+    written = [("report", f"--{form}", f"r.{form}") for form in ("html", "pdf")]
+    written += [("export", "--format", f, "--output", f"x.{f}") for f in ("csv", "json", "junit")]
+    written += [("export", "--points", "--output", "p.csv"), ("export", "--schema", "--output", "s.json")]
+    for arguments in written:
+        name = arguments[-1]
+        assert run(*arguments) == (0, f"wrote {name}\n")
+        assert run(*arguments) == (0, f"replaced {name}\n")
+        (tmp_path / name).write_bytes(b"%PDF-1.4 the customer's own drawing")
+        status, said = run(*arguments)
+        assert status == 2
+        assert f"{name} is there already, and is no report or export of bitassay: it was left alone" in said
+        assert (tmp_path / name).read_bytes() == b"%PDF-1.4 the customer's own drawing"
+    assert not list(tmp_path.glob(".*part"))
 
 
 def test_the_schema_is_printed_without_a_run(bitassay):

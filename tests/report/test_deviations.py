@@ -118,7 +118,7 @@ def test_a_void_mark_stands_above_everything_with_who_and_why(records):
 def test_a_run_that_goes_on_is_called_preliminary(cases):
     document = assemble(cases["running"]())
     assert "PRELIMINARY" in document.banners[0]
-    assert document.record_digest.startswith("none yet")
+    assert dict(document.digests)["record"].startswith("none yet")
 
 
 def test_earlier_tries_are_told_with_the_joint_risk(records, point):

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 
 import numpy as np
 from matplotlib.axes import Axes
@@ -14,71 +15,90 @@ from harness.report.figures.canvas import BAR, INK, LINE, PALE, PAPER, RED, SOFT
 from harness.report.figures.drawings import Bar, Ruler, Stairs
 from harness.report.figures.scales import power, short_count
 
-DECADES = 15
 _HALF = 0.30  # of a bar's height
 
 
-def _place(value: float) -> float:
-    """Where a ratio stands: 0 at 1, 15 at 1e-15 and under."""
-    return min(max(-math.log10(value), 0.0), DECADES + 0.0) if value > 0 else DECADES + 0.0
+def _place(value: float, drawing: Ruler) -> float:
+    """Where a ratio stands, in decades under 1; beyond an end of the scale, at that end."""
+    end = float(drawing.last)
+    return min(max(-math.log10(value), float(drawing.first)), end) if value > 0 else end
 
 
 def ruler(drawing: Ruler) -> Sheet:
-    """Draw the bounds as bars on a scale from 1 down to 1e-15, with the requirement as a mark."""
+    """Draw the bounds as bars on a scale of decades, with the requirement as a mark."""
     rows = len(drawing.bars)
     labelled = any(bar.label for bar in drawing.bars)
     height = 74 + rows * (18 if rows > 1 else 22)
     made, axes = sheet(height)
-    longest = max(len(bar.label) for bar in drawing.bars)
-    left = min(0.30, 0.03 + 0.0135 * longest) if labelled else 0.02
-    made.subplots_adjust(left=left, right=0.965, top=1 - 26 / height, bottom=32 / height)
+    make_room_for_labels(made, [bar.label for bar in drawing.bars], height)
+    decades = range(drawing.first, drawing.last + 1)
+    room = len(decades) / 32  # to the right: for the arrow towards 0
     axes.spines["left"].set_visible(False)
-    axes.set_xlim(-0.12, DECADES + 0.5)
+    axes.set_xlim(drawing.first - 0.008 * len(decades), drawing.last + room)
     axes.set_ylim(rows - 0.4, -0.75)
-    axes.set_xticks(range(DECADES + 1), [power(-k) if k % 3 == 0 else "" for k in range(DECADES + 1)])
-    axes.set_yticks(range(rows), [_short(bar.label) for bar in drawing.bars] if labelled else [""] * rows)
+    every = 3 if len(decades) > 8 else 1
+    axes.set_xticks(decades, [power(-k) if k % every == 0 else "" for k in decades])
+    axes.set_yticks(
+        range(rows), [short_label(bar.label) for bar in drawing.bars] if labelled else [""] * rows
+    )
     axes.tick_params(axis="y", length=0)
     axes.grid(axis="x", color=LINE, linewidth=0.5)
     axes.set_axisbelow(True)
     for row, bar in enumerate(drawing.bars):
-        _draw_bar(axes, row, bar)
+        _draw_bar(axes, row, bar, drawing)
     if drawing.mark is not None:
-        at = _place(drawing.mark)
-        axes.plot([at, at], [rows - 0.4, -0.75], color=INK, linewidth=1.4)
-        right = at < DECADES * 0.55
-        axes.annotate(
-            f"{drawing.flag} {ratio(drawing.mark)}",
-            (at, -0.75),
-            xytext=(5 if right else -5, 3),
-            textcoords="offset points",
-            ha="left" if right else "right",
-            va="bottom",
-            annotation_clip=False,
-        )
+        at = _place(drawing.mark, drawing)
+        right = at < drawing.first + (drawing.last - drawing.first) * 0.55
+        draw_mark(axes, at, rows, f"{drawing.flag} {ratio(drawing.mark)}", right=right)
     return made
 
 
-def _short(label: str) -> str:
+def make_room_for_labels(made: Sheet, labels: Sequence[str], height_px: float) -> None:
+    """Set the margins so that the rows' labels stand left of the axes."""
+    longest = max(len(short_label(label)) for label in labels)
+    left = min(0.30, 0.03 + 0.0135 * longest) if longest else 0.02
+    made.subplots_adjust(left=left, right=0.965, top=1 - 26 / height_px, bottom=32 / height_px)
+
+
+def draw_mark(axes: Axes, at: float, rows: int, words: str, *, right: bool) -> None:
+    """Draw a line through all rows with its words above."""
+    axes.plot([at, at], [rows - 0.4, -0.75], color=INK, linewidth=1.4)
+    axes.annotate(
+        words,
+        (at, -0.75),
+        xytext=(5 if right else -5, 3),
+        textcoords="offset points",
+        ha="left" if right else "right",
+        va="bottom",
+        annotation_clip=False,
+    )
+
+
+def short_label(label: str) -> str:
+    """Cut a label that would take too much of the figure's width."""
     return label if len(label) <= 18 else f"{label[:17]}…"
 
 
-def _draw_bar(axes: Axes, row: int, bar: Bar) -> None:
-    start, end = _place(bar.upper), _place(bar.lower)
-    end = max(end, start + 0.06)  # a bar is seen, however narrow
+def _draw_bar(axes: Axes, row: int, bar: Bar, drawing: Ruler) -> None:
+    width = (drawing.last - drawing.first) / 15
+    start, end = _place(bar.upper, drawing), _place(bar.lower, drawing)
+    end = max(end, start + 0.06 * width)  # a bar is seen, however narrow
     colour = RED if bar.against else BAR
-    solid = end if bar.fades_from is None else min(max(_place(bar.fades_from), start + 0.06), end)
+    solid = end
+    if bar.fades_from is not None:
+        solid = min(max(_place(bar.fades_from, drawing), start + 0.06 * width), end)
     axes.fill_between([start, solid], row - _HALF, row + _HALF, color=colour, linewidth=0)
     if solid < end or bar.lower <= 0:
         # Nothing is claimed of how good the unit is: the bar thins out towards 0.
         axes.fill_between([solid, end], row - _HALF, row + _HALF, color=PALE, linewidth=0)
         axes.plot([solid, end], [row - _HALF] * 2, color=colour, linewidth=0.7)
         axes.plot([solid, end], [row + _HALF] * 2, color=colour, linewidth=0.7)
-        axes.annotate("0", (DECADES, row), xytext=(12, 0), textcoords="offset points", va="center", color=SOFT,
-                      annotation_clip=False)  # fmt: skip
-        axes.annotate("", (DECADES + 0.35, row), xytext=(DECADES - 0.35, row),
+        axes.annotate("0", (drawing.last, row), xytext=(12, 0), textcoords="offset points", va="center",
+                      color=SOFT, annotation_clip=False)  # fmt: skip
+        axes.annotate("", (drawing.last + 0.35 * width, row), xytext=(drawing.last - 0.35 * width, row),
                       arrowprops={"arrowstyle": "->", "color": SOFT, "linewidth": 0.9})  # fmt: skip
     if bar.measured:
-        axes.plot([_place(bar.measured)], [row], marker="D", markersize=6, color=PAPER,
+        axes.plot([_place(bar.measured, drawing)], [row], marker="D", markersize=6, color=PAPER,
                   markeredgecolor=INK, markeredgewidth=1.2)  # fmt: skip
 
 

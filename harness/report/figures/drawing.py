@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 
 from harness.report.document import Figure
-from harness.report.figures.drawings import Bursts, Course, Curve, Gaps, Ruler, Stairs
+from harness.report.figures.drawings import Bursts, Course, Curve, Gaps, Ruler, Spans, Stairs
 
 
 def draw_all(figures: Sequence[Figure]) -> list[str]:
@@ -29,6 +29,10 @@ def draw(figure: Figure, name: str) -> str:
             from harness.report.figures import draw_sweep
 
             sheet = draw_sweep.curve(drawing)
+        elif isinstance(drawing, Spans):
+            from harness.report.figures import draw_lot
+
+            sheet = draw_lot.spans(drawing)
         elif isinstance(drawing, Gaps):
             sheet = draw_spacing.gaps(drawing)
         else:

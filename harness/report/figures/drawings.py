@@ -26,11 +26,36 @@ class Bar:
 
 @dataclass(frozen=True, slots=True)
 class Ruler:
-    """Bit error ratios from 1 down to 1e-15, the bounds as bars, the requirement as a mark."""
+    """Bit error ratios on a scale of decades, the bounds as bars, the requirement as a mark."""
 
     bars: tuple[Bar, ...]
     mark: float | None
     flag: str
+    first: int = 0  # the scale's left end: a BER of 1
+    last: int = 15  # its right end: 1e-15
+
+
+@dataclass(frozen=True, slots=True)
+class Span:
+    """Where a value lies; None where a side has no bound."""
+
+    label: str
+    value: float
+    lower: float | None
+    upper: float | None
+    against: bool = False
+
+
+@dataclass(frozen=True, slots=True)
+class Spans:
+    """Values of many units on one scale, the bounds as bars, the requirement and the median as marks."""
+
+    axis: str
+    spans: tuple[Span, ...]
+    mark: float | None
+    flag: str
+    median: float | None
+    edges: tuple[float, float]  # of the scale: the same where the units need several figures
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -115,4 +140,4 @@ class Curve:
     target: float | None = None
 
 
-Drawing = Ruler | Course | Stairs | Gaps | Bursts | Curve
+Drawing = Ruler | Course | Stairs | Gaps | Bursts | Curve | Spans

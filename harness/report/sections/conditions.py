@@ -5,10 +5,10 @@ from __future__ import annotations
 from collections.abc import Iterator, Mapping
 from typing import Any
 
-from harness.assess.words import count, duration, rate
+from harness.assess.words import count, duration, rate, value_words
 from harness.report.document import Block, Column, Entries, Entry, Listing, Paragraph, Section, Table
 from harness.report.material import Material, Measured
-from harness.report.phrases import digits, point_name, value_words, with_unit
+from harness.report.phrases import digits, point_name, with_unit
 
 _TOPOLOGY = {
     "far-end-loop": "far-end loop: sent and received at the same end, both directions in series",

@@ -27,7 +27,7 @@ def summary(material: Material) -> Section:
     found = _found(material)
     upper = (
         Entry("unit", tuple(_unit(material))),
-        Entry("required", tuple(_required(material))),
+        Entry("required", tuple(required_words(material))),
     )
     lower = (
         Entry("how sure", tuple(_how_sure(material))),
@@ -49,7 +49,8 @@ def _unit(material: Material) -> Iterator[str]:
             yield f"{key} {device[key]}"
 
 
-def _required(material: Material) -> Iterator[str]:
+def required_words(material: Material) -> Iterator[str]:
+    """Say what is required and how it is decided."""
     judged = [m for m in material.points if m.assessed.plan]
     sensitivity = material.assessment.required_sensitivity
     if sensitivity:
