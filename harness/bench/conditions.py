@@ -13,7 +13,7 @@ from collections.abc import Iterator, Mapping
 from pathlib import Path
 from typing import Any
 
-from drivers.contract import DriverError, Instrument, Link, OutOfLimits, WrongInstrument
+from drivers.contract import DriverError, Instrument, Link, NotConfirmed, OutOfLimits, WrongInstrument
 from drivers.guardian import Guardian
 from drivers.registry import instrument_class
 from harness.bench.correction import PortLevel
@@ -175,6 +175,27 @@ class Conditions:
         if port is not None:
             facts["level"] = port.to_json()
         return facts
+
+    def confirm(self, values: Mapping[str, float]) -> tuple[tuple[str, ...], DriverError | None]:
+        """Read at a point's end whether everything still stands where it was set.
+
+        Gives words for what does not, or cannot be known any more: what was counted meanwhile does not belong
+        to this setting; and the fault where an instrument no longer answers.
+        """
+        doubts: list[str] = []
+        fault: DriverError | None = None
+        for name, value in values.items():
+            instrument = self.instruments[name]
+            try:
+                instrument.confirm(value)
+            except NotConfirmed as error:
+                doubts.append(f"{name} did not stay where it was put: {error.what}")
+            except DriverError as error:
+                fault = error
+                doubts.append(f"nobody knows whether {name} stayed where it was put: {error.what}")
+        for words in doubts:
+            self._say(f"{words}; what was counted at this point decides nothing")
+        return tuple(doubts), fault
 
     def take_events(self) -> list[Event]:
         """Give what happened since the last call."""

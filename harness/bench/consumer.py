@@ -8,10 +8,12 @@ from collections import deque
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, replace
 
-from harness.assess.accumulate import EVENTS_KEPT
 from harness.assess.feed import PlanFeed
 from harness.assess.words import count, duration, slip_words
+from harness.bench.arrivals import Arrivals
 from harness.bench.book import Book
+from harness.bench.chronicle import Chronicle
+from harness.bench.missing import Missing
 from harness.bench.places import Places
 from harness.bench.ring import Piece, Ring
 from harness.bench.traffic import Traffic
@@ -22,7 +24,6 @@ from harness.statistics.plans import Decision
 
 SECOND_NS = 1_000_000_000
 WAIT_S = 0.05
-ARRIVALS_KEPT = 65_536
 
 
 @dataclass(slots=True)
@@ -69,25 +70,18 @@ class Consumer(threading.Thread):
         self._watch = watch
         self._rules = rules
         self._boundary_ns = started_ns + SECOND_NS
-        self._wall_ns = wall_ns
-        self._drain_ns = drain_ns
         self._sending = sending
         self._commit = commit
         self._ask_stop = stop
         self._each_second = each_second
-        self._base_bit = base_bit  # what the point had in earlier sittings
-        self._base_compared = base_compared
-        self._arrivals: deque[tuple[int, int]] = deque([(0, started_ns)], maxlen=ARRIVALS_KEPT)
-        self._events: list[Event] = []
-        self._event_count = 0
+        self._base_compared = base_compared  # what the point had in earlier sittings
+        self._chronicle = Chronicle(wall_ns, base_bit)
+        self._missing = Missing(traffic, drain_ns)
+        self.arrivals = Arrivals(started_ns)
         self._sent_before = 0
         self._held: list[Segment] = []  # of a second whose positions were cut: one look at its end
         self._mark_bits: deque[int] = deque()
-        self._unexplained = 0  # bits given up in silence that no slip has explained so far
-        self._out_at_decision = 0
         self._first_delay_bits: int | None = None
-        self._posted: deque[Event] = deque()
-        self._given_up: deque[int] = deque()
         self.tally = Tally()
         self.after = Tally()
         self.decision: Decision | None = None
@@ -97,11 +91,11 @@ class Consumer(threading.Thread):
 
     def post(self, event: Event) -> None:
         """Take an event from another thread."""
-        self._posted.append(event)
+        self._chronicle.post(event)
 
     def gave_up(self, bits: int) -> None:
         """Take from another thread that bits on their way were given up: the link went away."""
-        self._given_up.append(bits)
+        self._missing.gave_up(bits)
 
     # -- the thread
 
@@ -128,8 +122,8 @@ class Consumer(threading.Thread):
             segments = self._counter.skip(bits)
         else:
             segments = self._counter.feed(piece.data)
-            self._ring.give_back(piece)
-        self._arrivals.append((self._counter.received, piece.arrived_ns))
+        self.arrivals.came(self._counter.received, piece.arrived_ns, piece.data)
+        self._ring.give_back(piece)
         self._absorb(segments)
         limit = self._rules.received_bits
         if limit is not None and self._counter.received >= limit:
@@ -138,12 +132,12 @@ class Consumer(threading.Thread):
     def _finish(self) -> None:
         self._absorb(self._counter.finish())
         self._look(whole_second=True)
-        self._take_given_up()
+        self._missing.take_given_up()
         now = max(time.monotonic_ns(), self._boundary_ns - SECOND_NS)
         if self.decision is not None:
             self._missing_at_the_decision(now)
         else:
-            left = self._traffic.in_flight() if self._sends else 0
+            left = self._missing.left()
             if self.waited_for_the_rest:
                 self._never_returned(left, now)
             else:
@@ -152,10 +146,6 @@ class Consumer(threading.Thread):
             sent = self._traffic.sent_bits - self._sent_before
             self._book.end(ends_ns=now, received_bits=self._counter.received, sent=sent, due=self._due(now))
         self._flush()
-
-    @property
-    def _sends(self) -> bool:
-        return self._traffic.first_sent_ns is not None
 
     # -- time
 
@@ -174,7 +164,8 @@ class Consumer(threading.Thread):
             return
         if self._watch is not None and self._nothing_aligned_pending() and self._watch.silent_until(now_ns):
             self._link_lost(now_ns)
-        self._write_off(now_ns)
+        if self._sending():
+            self._missing.write_off(now_ns)
 
     def _nothing_aligned_pending(self) -> bool:
         """Whether what is undecided came long ago: it cannot be news of the link."""
@@ -196,20 +187,9 @@ class Consumer(threading.Thread):
             self._mark_bits.append(self._counter.received)
             self._look(whole_second=self._counter.decided >= self._counter.received)
             for event in self._each_second():
-                self._keep(event)
+                self._chronicle.keep(event)
             self._flush()
         self._boundary_ns += SECOND_NS
-
-    def _write_off(self, now_ns: int) -> None:
-        """Give up what is out when nothing has come for the time that the profile allows."""
-        if not self._sends or self._traffic.in_flight() == 0:
-            return
-        first = self._traffic.first_sent_ns or now_ns
-        quiet_since = max(self._traffic.last_received_ns or first, first)
-        if now_ns - quiet_since >= self._drain_ns and self._sending():
-            bits = self._traffic.write_off()
-            if bits and self.decision is None:
-                self._unexplained += bits
 
     def _link_lost(self, now_ns: int) -> None:
         self._happened(
@@ -289,7 +269,7 @@ class Consumer(threading.Thread):
 
     def _close_book(self, decision: Decision, bit: int) -> None:
         self.decision = decision
-        self._out_at_decision = self._traffic.in_flight()
+        self._missing.decided()
         at = self._arrived(bit)
         self._never_returned(0, at)
         verb = "accepted" if decision.accepted else "rejected"
@@ -309,31 +289,21 @@ class Consumer(threading.Thread):
             self._happened("broken_off", text, at, {"bits": bits})
 
     def _missing_at_the_decision(self, at: int) -> None:
-        """Say what had gone missing before the decision without a slip that shows it.
-
-        A loss of whole periods leaves no trace in a periodic stream: only the count of bits tells. Of what was
-        out at the decision and never came, so much is taken to be on its way as ever was at the least: a start
-        that was held up by this computer must not hide a loss.
-        """
+        """Say what had gone missing before the decision without a slip that shows it."""
         usual = self._first_delay_bits or 0
         if self._places is not None and self._places.least_out is not None:
             usual = min(usual, self._places.least_out)
-        missing = min(self._traffic.in_flight(), self._out_at_decision) - usual
-        if self._sends and missing > 0:
+        missing = self._missing.since_decision(usual)
+        if missing:
             text = f"{count(missing, 'bit')} sent before the decision never came back"
             self._happened("never_returned", text, at, {"bits": missing})
 
-    def _take_given_up(self) -> None:
-        while self._given_up:
-            self._unexplained += self._given_up.popleft()
-
     def _never_returned(self, left: int, at: int) -> None:
         """Say what was sent and never came back, as far as no slip says it already."""
-        bits = left + min(self._unexplained, self._traffic.written_off_bits)
+        bits = self._missing.never_returned(left)
         if bits:
-            self._happened(
-                "never_returned", f"{count(bits, 'bit')} were sent and never came back", at, {"bits": bits}
-            )
+            text = f"{count(bits, 'bit')} were sent and never came back"
+            self._happened("never_returned", text, at, {"bits": bits})
 
     # -- events
 
@@ -347,9 +317,9 @@ class Consumer(threading.Thread):
             at = self._arrived(bit)
             if event.kind == "slip":
                 event = self._resolve(event, bit, at)
-            event = replace(event, at=at + self._wall_ns)
+            event = self._chronicle.stamped(event, at)
             stamped.append(event)
-            self._keep(event)
+            self._chronicle.keep(event)
             if event.kind == "aligned" and self._places is not None and "place" in event.data:
                 self._delay(bit, int(event.data["place"]), at)
         return replace(segment, events=tuple(stamped))
@@ -358,20 +328,14 @@ class Consumer(threading.Thread):
         size, modulo = int(event.data["bits"]), event.data.get("modulo")
         if self._places is not None:
             size, modulo = self._places.slipped(bit, size, modulo, at)
-        self._take_given_up()
-        if size < 0:
-            explained = min(-size, self._unexplained)
-            self._unexplained -= explained
-            self._traffic.lose(-size - explained)
-        else:
-            self._traffic.invent(size)
+        self._missing.explained(size)
         data = {**event.data, "bits": size, "modulo": modulo}
         text = slip_words(size) + (" over an outage" if "outage" in event.text else "")
         return replace(event, data=data, text=text)
 
     def _delay(self, bit: int, place: int, at: int) -> None:
         assert self._places is not None
-        delay = self._places.aligned(bit, place, at, self._came_with(bit))
+        delay = self._places.aligned(bit, place, at, self.arrivals.came_with(bit))
         if delay is None:
             return
         if self._first_delay_bits is None:
@@ -397,41 +361,16 @@ class Consumer(threading.Thread):
 
     def _arrived(self, bit: int) -> int:
         """Monotonic time at which a received bit came."""
-        while len(self._arrivals) > 1 and self._arrivals[0][0] <= min(bit, self._counter.decided):
-            self._arrivals.popleft()
-        for end, at in self._arrivals:
-            if bit < end:
-                return at
-        return self._arrivals[-1][1]
-
-    def _came_with(self, bit: int) -> int:
-        """Received bits up to the end of the piece in which a bit came."""
-        return next((end for end, _ in self._arrivals if bit < end), bit + 1)
+        self.arrivals.forget_before(min(bit, self._counter.decided))
+        return self.arrivals.when(bit)
 
     def _happened(
         self, kind: str, text: str, at_ns: int, data: Mapping[str, object], bit: int | None = None
     ) -> None:
         where = self._counter.received if bit is None else bit
-        self._keep(Event(kind, where, text, at_ns + self._wall_ns, data))
-
-    def _keep(self, event: Event) -> None:
-        if event.bit is not None and self._base_bit:
-            event = replace(event, bit=event.bit + self._base_bit)
-        self._event_count += 1
-        if self._event_count <= EVENTS_KEPT or event.kind not in (
-            "slip",
-            "aligned",
-            "alignment_lost",
-            "delay",
-        ):
-            self._events.append(event)
-        if self._event_count == EVENTS_KEPT + 1:
-            text = f"more than {EVENTS_KEPT} events: slips are still counted, no longer listed"
-            self._events.append(replace(event, kind="events_cut", text=text, data={}))
+        self._chronicle.happened(kind, text, at_ns, data, where)
 
     def _flush(self) -> None:
-        while self._posted:
-            self._events.append(self._posted.popleft())
-        self._take_given_up()
-        events, self._events = self._events, []
-        self._commit(self._book.take_complete(), events, self._counter.received - self._counter.decided)
+        self._missing.take_given_up()
+        undecided = self._counter.received - self._counter.decided
+        self._commit(self._book.take_complete(), self._chronicle.take(), undecided)

@@ -174,13 +174,13 @@ class RecordKeeping:
         key = self.key
         self._recorder.put(lambda store: store.commit(key, [], [], 0))
 
-    def close_point(self, number: int, outcome: Outcome) -> None:
+    def close_point(self, number: int, outcome: Outcome, facts: Mapping[str, Any]) -> None:
         """End a point that came to its end; `end` closes others, with how the run ended."""
         if outcome.ended_by in ("interrupted", "fault"):
             return
         key, now = self.key, time.time_ns()
         self._recorder.put(
-            lambda store: store.end_point(key, number, now, outcome.ended_by, outcome.after, {})
+            lambda store: store.end_point(key, number, now, outcome.ended_by, outcome.after, facts)
         )
         self._undecided.pop(number, None)
         self._ended.add(number)

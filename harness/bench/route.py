@@ -124,7 +124,9 @@ class ListRoute(Route):
         if not self._guard or visit.reference:
             return False
         rest = {name: value for name, value in visit.values.items() if name != self._axis}
-        alike = [p for p in done if {n: v for n, v in p.values.items() if n != self._axis} == rest]
+        alike = [
+            p for p in done if not p.moved and {n: v for n, v in p.values.items() if n != self._axis} == rest
+        ]
         aligned = [p.values[self._axis] for p in alike if p.tally.compared]
         lost = {p.values[self._axis] for p in alike if not p.tally.compared}
         here = visit.values[self._axis]

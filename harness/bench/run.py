@@ -9,7 +9,7 @@ from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
-from drivers.contract import DriverError, Interrupted
+from drivers.contract import DriverError, Interrupted, NotConfirmed
 from harness.assess.assessment import PointAssessment
 from harness.assess.feed import PlanFeed
 from harness.assess.point import Facts
@@ -31,6 +31,7 @@ from harness.store import Store
 
 TICK_S = 0.2
 SIGN_OF_LIFE_S = 30.0
+MOST_MOVED = 3  # points in a row at which an instrument did not stay where it was put: then the run ends
 
 
 class BenchRun:
@@ -69,6 +70,7 @@ class BenchRun:
         self._next_index = 1 + max((s.index for p in cut.points for s in p.seconds), default=-1) if cut else 0
         self._next_place = 0
         self._now = Visit(0)
+        self._moved_in_a_row = 0
         self._schedule = Schedule(profile)
 
     def run(self) -> RunResult:
@@ -216,10 +218,30 @@ class BenchRun:
         outcomes = side_by_side(measurements)
         self._next_index = max(o.next_index for o in outcomes)
         self._next_place = outcomes[0].next_place
+        moved, lost = self._moved(visit, worst(outcomes))
+        found = {"moved": list(moved)} if moved else {}
         for way, outcome in enumerate(outcomes):
-            self._record.close_point(self._point(visit, way), outcome)
-            self._done.append(replace(lives[way].point(), values=visit.values, ended_by=outcome.ended_by))
+            self._record.close_point(self._point(visit, way), outcome, found)
+            point = lives[way].point()
+            facts = {**point.facts, **found}
+            self._done.append(replace(point, values=visit.values, ended_by=outcome.ended_by, facts=facts))
+        if lost is not None:
+            raise lost
         return outcomes
+
+    def _moved(self, visit: Visit, ended_by: EndedBy) -> tuple[tuple[str, ...], DriverError | None]:
+        """Say what no longer stands where it was set for a point that came to its end."""
+        if ended_by in ("interrupted", "fault"):
+            return (), None
+        moved, lost = self._conditions.confirm({**self._conditions.fixed(), **visit.values})
+        self._record.note(self._point(visit, 0), self._conditions.take_events())
+        self._moved_in_a_row = self._moved_in_a_row + 1 if moved else 0
+        if self._moved_in_a_row >= MOST_MOVED and lost is None:
+            lost = NotConfirmed(
+                f"{moved[0]}, at {MOST_MOVED} points in a row",
+                "see who else turns it: a hand, another program, a supply that fails",
+            )
+        return moved, lost
 
     def _resumed(self, had: Had | None) -> list[Event]:
         if had is None:

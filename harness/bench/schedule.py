@@ -112,7 +112,11 @@ class Schedule:
         known: dict[float, float] = {}  # value -> BER
         for p in done:
             rest = {n: v for n, v in p.values.items() if n != self._axis}
-            if p.tally.errors >= FEW_ERRORS and all(visit.values.get(n) == v for n, v in rest.items()):
+            if (
+                p.tally.errors >= FEW_ERRORS
+                and not p.moved
+                and all(visit.values.get(n) == v for n, v in rest.items())
+            ):
                 known[p.values[self._axis]] = min(p.tally.errors / p.tally.compared, 0.4)
         target = self._target
         nearest = sorted(known.items(), key=lambda item: abs(math.log(item[1] / target)))[:2]

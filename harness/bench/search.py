@@ -69,7 +69,7 @@ class SearchRoute(Route):
         if seconds is not None and seconds <= 0:
             self._say("search", "the search ends: its limit of time was reached")
             return None
-        points = [curve_point(p, self._search.instrument) for p in done]
+        points = [curve_point(p, self._search.instrument) for p in done if not p.moved]
         chosen = next_step(self._space, points)
         if isinstance(chosen, Found):
             took = f"{count(len(done), 'point')} and {count(chosen.bits, 'bit')}"
@@ -93,7 +93,9 @@ class SearchRoute(Route):
 
     def _in_words(self, step: Step, done: Sequence[PointAssessment]) -> str:
         steps = f"{step.words}, up to {count(step.errors, 'error')} or {count(step.bits, 'bit')}"
-        ratios = [(p.values[self._search.instrument], p.ber) for p in done if p.ber is not None]
+        ratios = [
+            (p.values[self._search.instrument], p.ber) for p in done if p.ber is not None and not p.moved
+        ]
         over = [x for x, ber in ratios if ber > self._search.ber]
         under = [x for x, ber in ratios if ber <= self._search.ber]
         if not over or not under:

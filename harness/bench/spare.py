@@ -48,7 +48,7 @@ def visit_again(
     sums: dict[tuple[tuple[str, float], ...], _Sum] = {}
     for point in done:
         # A point on which a plan decides is never measured again: that would be a second try.
-        if point.plan is None and not point.facts.get("reference"):
+        if point.plan is None and not point.facts.get("reference") and not point.moved:
             found = sums.setdefault(tuple(sorted(point.values.items())), _Sum(dict(point.values)))
             found.bits += point.tally.compared
             found.errors += point.tally.errors

@@ -1,0 +1,61 @@
+"""The chronicle of a point: what happened, when and at which bit, in words, until it is committed."""
+
+from __future__ import annotations
+
+from collections import deque
+from collections.abc import Mapping
+from dataclasses import replace
+
+from harness.assess.accumulate import EVENTS_KEPT
+from harness.record import Event
+
+COMMON = ("slip", "aligned", "alignment_lost", "delay")  # no longer listed once there are too many
+
+
+class Chronicle:
+    """Collects events of the consumer, and those that other threads post.
+
+    Parameters
+    ----------
+    wall_ns
+        UTC minus monotonic time, ns.
+    base_bit
+        Received bits that the point had in earlier sittings.
+    """
+
+    def __init__(self, wall_ns: int, base_bit: int) -> None:
+        self._wall_ns = wall_ns
+        self._base_bit = base_bit
+        self._events: list[Event] = []
+        self._count = 0
+        self._posted: deque[Event] = deque()
+
+    def post(self, event: Event) -> None:
+        """Take an event from another thread."""
+        self._posted.append(event)
+
+    def happened(self, kind: str, text: str, at_ns: int, data: Mapping[str, object], bit: int) -> None:
+        """Enter what happened at a received bit, at a monotonic time."""
+        self.keep(Event(kind, bit, text, at_ns + self._wall_ns, data))
+
+    def stamped(self, event: Event, at_ns: int) -> Event:
+        """Give a counter's event its time."""
+        return replace(event, at=at_ns + self._wall_ns)
+
+    def keep(self, event: Event) -> None:
+        """Enter an event whose bit is counted from this sitting's first."""
+        if event.bit is not None and self._base_bit:
+            event = replace(event, bit=event.bit + self._base_bit)
+        self._count += 1
+        if self._count <= EVENTS_KEPT or event.kind not in COMMON:
+            self._events.append(event)
+        if self._count == EVENTS_KEPT + 1:
+            text = f"more than {EVENTS_KEPT} events: slips are still counted, no longer listed"
+            self._events.append(replace(event, kind="events_cut", text=text, data={}))
+
+    def take(self) -> list[Event]:
+        """Give what is new since the last call."""
+        while self._posted:
+            self._events.append(self._posted.popleft())
+        events, self._events = self._events, []
+        return events

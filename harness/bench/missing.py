@@ -1,0 +1,82 @@
+"""What was sent and never came: given up while the point goes on, told apart from slips at its end."""
+
+from __future__ import annotations
+
+from collections import deque
+
+from harness.bench.traffic import Traffic
+
+
+class Missing:
+    """Knows how many bits went missing that no slip shows.
+
+    Parameters
+    ----------
+    traffic
+        What is on its way.
+    drain_ns
+        When nothing has come for so long, what is out is given up.
+    """
+
+    def __init__(self, traffic: Traffic, drain_ns: int) -> None:
+        self._traffic = traffic
+        self._drain_ns = drain_ns
+        self._unexplained = 0  # bits given up in silence that no slip has explained so far
+        self._given_up: deque[int] = deque()
+        self._out_at_decision = 0
+
+    @property
+    def sends(self) -> bool:
+        """Whether anything was sent at all."""
+        return self._traffic.first_sent_ns is not None
+
+    def gave_up(self, bits: int) -> None:
+        """Take from another thread that bits on their way were given up: the link went away."""
+        self._given_up.append(bits)
+
+    def take_given_up(self) -> None:
+        """Enter what other threads gave up."""
+        while self._given_up:
+            self._unexplained += self._given_up.popleft()
+
+    def write_off(self, now_ns: int) -> None:
+        """Give up what is out when nothing has come for the time that the profile allows."""
+        if not self.sends or self._traffic.in_flight() == 0:
+            return
+        first = self._traffic.first_sent_ns or now_ns
+        quiet_since = max(self._traffic.last_received_ns or first, first)
+        if now_ns - quiet_since >= self._drain_ns:
+            self._unexplained += self._traffic.write_off()
+
+    def explained(self, slip_bits: int) -> None:
+        """Take a slip's size: it shows bits to be lost (negative) or never sent (positive)."""
+        self.take_given_up()
+        if slip_bits >= 0:
+            self._traffic.invent(slip_bits)
+            return
+        explained = min(-slip_bits, self._unexplained)
+        self._unexplained -= explained
+        self._traffic.lose(-slip_bits - explained)
+
+    def decided(self) -> None:
+        """Remember what is on its way now that the plan has decided."""
+        self._out_at_decision = self._traffic.in_flight()
+
+    def since_decision(self, usually_out: int) -> int:
+        """Bits that had gone missing before the decision without a slip that shows it.
+
+        A loss of whole periods leaves no trace in a periodic stream: only the count of bits tells. Of what was
+        out at the decision and never came, so much is taken to be on its way as ever was at the least: a start
+        that was held up by this computer must not hide a loss.
+        """
+        if not self.sends:
+            return 0
+        return max(0, min(self._traffic.in_flight(), self._out_at_decision) - usually_out)
+
+    def left(self) -> int:
+        """Bits that are still out at the end."""
+        return self._traffic.in_flight() if self.sends else 0
+
+    def never_returned(self, left: int) -> int:
+        """Bits that were sent and never came back, as far as no slip says it already."""
+        return left + min(self._unexplained, self._traffic.written_off_bits)
