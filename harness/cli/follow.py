@@ -20,6 +20,8 @@ from harness.record import Point, Run
 from harness.store import Store
 
 LOOK_EVERY_S = 0.5
+LOOK_AGAIN_S = 2.0  # while the store is away
+HANDED_OVER_S = 30.0  # after that, a bench has handed over what its store lacks: until then it seems gone
 LATE = 120  # seconds that are numbered so far behind the newest and are still missing will not come any more
 
 
@@ -162,11 +164,26 @@ def follow(run: str, store: str | None, *, as_json: bool) -> int:
 
 
 def _watch(follower: Follower, *, quiet: bool) -> None:
+    """Watch until the run has ended; while the store cannot be reached, wait for it: the bench does so too."""
+    from harness.store import StoreLost
+
+    back_at = float("-inf")
     with watcher(quiet=quiet, title=follower.run.title, device=follower.run.device) as view:
         view.started(follower.run.key)
+        away = False
         while True:
-            follower.look()
-            if not follower.goes_on:
+            try:
+                follower.look()
+            except StoreLost as error:
+                away = True
+                view.waiting(f"{error.what}; waiting for it (the bench that measures goes on without it)")
+                time.sleep(LOOK_AGAIN_S)
+                continue
+            if away:
+                away, back_at = False, time.monotonic()
+                view.waiting("")
+            silent = follower.run.status == "cut" and time.monotonic() - back_at < HANDED_OVER_S
+            if not follower.goes_on and not silent:
                 return
             progress = follower.progress(time.time_ns())
             if progress is not None:

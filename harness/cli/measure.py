@@ -195,7 +195,12 @@ def carry_out(loaded: Profile, command: str, manner: Manner, cut: Run | None = N
     where = store_place(manner.store)
     if not (quiet or as_json):
         tell_new_store(manner.store)
-    with open_for_measuring(manner.store) as opened, ending.caught():
+
+    def of_the_store(words: str) -> None:
+        warn(words)
+        log_file.line(words)
+
+    with open_for_measuring(manner.store, of_the_store) as opened, ending.caught():
         try:
             with watcher(
                 quiet=quiet or as_json,

@@ -5,7 +5,7 @@ from __future__ import annotations
 import json
 import os
 import sys
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -40,15 +40,16 @@ def open_writing(option: str | None) -> Store:
     return open_store(store_url(option), create=True)
 
 
-def open_for_measuring(option: str | None) -> Store:
+def open_for_measuring(option: str | None, tell: Callable[[str], None] | None = None) -> Store:
     """Open the store for a bench: a server that goes away in mid-run is no end of the run.
 
-    What the server has not taken stands in results/handover.sqlite, and is handed over when it is back.
+    What the server has not taken stands in results/handover.sqlite, and is handed over when it is back. `tell` is
+    given a sentence when it goes and when it is back; left out, that is a line on standard error.
     """
     from harness.cli.failure import warn
     from harness.store import open_for_bench
 
-    return open_for_bench(store_url(option), Path.cwd() / "results" / "handover.sqlite", warn)
+    return open_for_bench(store_url(option), Path.cwd() / "results" / "handover.sqlite", tell or warn)
 
 
 def store_place(option: str | None) -> str:

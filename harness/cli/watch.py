@@ -18,6 +18,7 @@ if TYPE_CHECKING:
     from harness.cli.view.terminal import LivePage
 
 LINE_EVERY_S = 5.0
+BACK = "the store can be reached again"
 QUIET_S = 1.5  # without news from the bench for so long, the run is being closed
 
 
@@ -35,6 +36,9 @@ class Watcher:
     def tick(self, progress: Progress) -> None:
         """Take the state of the run, several times a second; never waits."""
 
+    def waiting(self, why: str) -> None:
+        """Take why nothing can be known for now; empty: it can be known again."""
+
     def stop(self) -> None:
         """End; nothing is shown any more."""
 
@@ -50,6 +54,7 @@ class LineWatcher(Watcher):
         self._every_s = every_s
         self._latest: Progress | None = None
         self._key = ""
+        self._why = ""
         self._over = threading.Event()
         self._thread = threading.Thread(target=self._run, name="lines", daemon=True)
 
@@ -65,6 +70,10 @@ class LineWatcher(Watcher):
         """Take the state of the run."""
         self._latest = progress
 
+    def waiting(self, why: str) -> None:
+        """Take why nothing can be known for now."""
+        self._why = why
+
     def stop(self) -> None:
         """End, with what is being written; a reader that takes nothing is not waited for."""
         self._over.set()
@@ -72,7 +81,7 @@ class LineWatcher(Watcher):
 
     def _run(self) -> None:
         try:
-            said = False
+            said, why = False, ""
             events_said = 0
             next_at = time.monotonic() + self._every_s
             over = False
@@ -82,6 +91,9 @@ class LineWatcher(Watcher):
                 if self._key and not said:
                     said = True
                     self._say(f"run {self._key}")
+                if self._why != why:
+                    why = self._why
+                    self._say(why or BACK)
                 now = time.monotonic()
                 latest = self._latest
                 if latest is not None and latest is not shown and now >= next_at and not over:
@@ -107,6 +119,7 @@ class PageWatcher(Watcher):
         self._device = device
         self._interrupted = interrupted
         self._latest: tuple[Progress, float] | None = None
+        self._waiting: tuple[str, int] | None = None  # why, and since when (UTC, ns)
         self._newest = (-1, time.monotonic())  # the newest decided second, and when it was first seen
         self._live: LivePage | None = None
 
@@ -126,6 +139,11 @@ class PageWatcher(Watcher):
             self._newest = (index, now)
         self._latest = (progress, now)
 
+    def waiting(self, why: str) -> None:
+        """Take why nothing can be known for now: the page stands still, and says so."""
+        since = self._waiting[1] if self._waiting else time.time_ns()
+        self._waiting = (why, since) if why else None
+
     def stop(self) -> None:
         """Give the terminal back as it was."""
         if self._live is not None:
@@ -137,6 +155,9 @@ class PageWatcher(Watcher):
         if self._latest is None:
             return sheet_before(self._title, self._device, now_ns)
         progress, at = self._latest
+        waiting = self._waiting
+        if waiting is not None:
+            return sheet_of_progress(progress, waiting[1], closing=waiting[0])
         closing = ""
         if self._interrupted.is_set():
             closing = "interrupted: what was measured is being closed and kept"

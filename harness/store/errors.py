@@ -9,6 +9,7 @@ StoreError
 
 from __future__ import annotations
 
+import re
 from collections.abc import Iterator
 from contextlib import contextmanager
 
@@ -83,10 +84,21 @@ def explain(error: Exception, place: str) -> StoreError:
         error.connection_invalidated or isinstance(error, exc.OperationalError | exc.InterfaceError)
     ):
         return StoreLost(
-            f"the store {place} cannot be reached: {words}",
-            "check that the server runs and the address is right",
+            f"the store {place} cannot be reached ({_briefly(words)})",
+            "check user, password and database in the address"
+            if "FATAL" in words
+            else "check that its server runs, the network, and the address",
         )
     return StoreError(f"the store {place} failed: {words}", "check the address and the user's rights on it")
+
+
+def _briefly(words: str) -> str:
+    """Leave what a server's driver says beyond the cause out: addresses that stand there already, and advice."""
+    words = re.sub(r"Multiple connection attempts failed.*", "", words)
+    words = re.sub(r"Is the server running.*?(\?|$)", "", words)
+    words = re.sub(r"^connection failed: |connection to server (at|on) .*?(failed|closed)(: |$)", "", words)
+    words = re.sub(r"^connection to server .*? failed: ", "", words)
+    return re.split(r"This probably means|\(Background on", words)[0].strip(" :;.") or "no answer"
 
 
 @contextmanager

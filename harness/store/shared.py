@@ -101,7 +101,7 @@ class SharedStore(Store):
 
     def _lose(self, error: StoreError) -> None:
         if not self._behind:
-            self._tell(f"{error.what}; the run goes on into {self.buffer} and is handed over later")
+            self._tell(f"{error.what}: nothing is lost, the run goes on into {self.buffer} until it is back")
         self._behind = True
 
     def _hand_over(self, server: Store) -> None:
@@ -121,7 +121,8 @@ class SharedStore(Store):
                 with self._writing() as connection:
                     forget(connection, key)
             if self._behind and outcome.seconds:
-                self._tell(f"the store {server.place} has got {outcome.seconds} seconds of the run {key}")
+                lacked = f"{outcome.seconds} second{'' if outcome.seconds == 1 else 's'}"
+                self._tell(f"the store is back and has got the {lacked} of the run {key} that it lacked")
 
     def _go_on(self, server: Store, key: str) -> None:
         """Let the server's writer stand where the file's does."""
@@ -322,7 +323,7 @@ def open_for_bench(address: str | Path, buffer: Path, tell: Tell = _keep_quiet, 
     try:
         store.reach_or_refuse()
         if store.behind:
-            tell(f"the shared store cannot be reached; the record goes into {store.buffer} for now")
+            tell(f"the shared store cannot be reached: the record goes into {store.buffer} until it is back")
     except BaseException:
         super(SharedStore, store).close()
         raise

@@ -2,8 +2,14 @@
 
 from __future__ import annotations
 
+import contextlib
+import glob
 import os
+import pwd
 import shutil
+import socket
+import subprocess
+import tempfile
 import uuid
 from collections.abc import Callable, Iterator
 from pathlib import Path
@@ -11,6 +17,7 @@ from typing import Any
 
 import numpy as np
 import pytest
+from sqlalchemy import text
 
 from harness.record import Event, Second, Sitting, Tally
 from harness.store import Store, open_store, this_host
@@ -171,3 +178,68 @@ def equal_seconds() -> Callable[..., bool]:
         return len(left) == len(right) and all(map(same_second, left, right))
 
     return equal
+
+
+PROGRAMS = os.environ.get("BITASSAY_TEST_POSTGRES_BIN") or next(
+    iter(sorted(glob.glob("/usr/lib/postgresql/*/bin"), reverse=True)), ""
+)
+
+
+class Server:
+    """A PostgreSQL server of one's own, to be stopped and started."""
+
+    def __init__(self, folder: Path) -> None:
+        self._folder, self._data = folder, f"{folder}/data"
+        with socket.socket() as probe:
+            probe.bind(("127.0.0.1", 0))
+            self._port = probe.getsockname()[1]
+        self.address = f"postgresql+psycopg://postgres@127.0.0.1:{self._port}/postgres"
+        # The server refuses to run as root.
+        self._user = pwd.getpwnam("postgres").pw_uid if os.geteuid() == 0 else None
+        if self._user is not None:
+            os.chown(folder, self._user, -1)
+        self._do(
+            "initdb", "-D", self._data, "-U", "postgres", "-A", "trust", "-N", "--locale=C", "-E", "UTF8"
+        )
+        self.start()
+
+    def _do(self, program: str, *arguments: str) -> None:
+        command = [f"{PROGRAMS}/{program}", *arguments]
+        quiet = subprocess.DEVNULL
+        subprocess.run(command, check=True, user=self._user, cwd=self._folder, stdout=quiet, stderr=quiet)
+
+    @property
+    def running(self) -> bool:
+        return Path(self._data, "postmaster.pid").exists()
+
+    def start(self) -> None:
+        options = f"-p {self._port} -c listen_addresses=127.0.0.1 -k {self._folder} -c fsync=off"
+        self._do("pg_ctl", "-D", self._data, "-l", f"{self._folder}/log", "-w", "-o", options, "start")
+
+    def stop(self, how: str = "immediate") -> None:
+        with contextlib.suppress(subprocess.CalledProcessError):
+            self._do("pg_ctl", "-D", self._data, "-m", how, "-w", "stop")
+
+
+@pytest.fixture(scope="session")
+def the_server() -> Iterator[Server]:
+    if not PROGRAMS:
+        pytest.skip("the programs of a PostgreSQL server are not on this machine")
+    folder = Path(tempfile.mkdtemp(prefix="bitassay-pg-"))
+    try:
+        server = Server(folder)
+        yield server
+        server.stop()
+    finally:
+        shutil.rmtree(folder, ignore_errors=True)
+
+
+@pytest.fixture
+def server(the_server: Server) -> Server:
+    """Give the server, running and without a run."""
+    if not the_server.running:
+        the_server.start()
+    with open_store(the_server.address) as store, store._writing() as connection:
+        for table in ("note", "event", "second", "point", "sitting", "run"):
+            connection.execute(text(f"DELETE FROM {table}"))
+    return the_server
