@@ -2,10 +2,15 @@
 
 from __future__ import annotations
 
+import contextlib
 import json
 import os
+import select
+import signal
+import socket
 import subprocess
 import sys
+import tempfile
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from pathlib import Path
@@ -33,15 +38,70 @@ class Finished:
         return json.loads(self.out)
 
 
+class ReadyCommand:
+    """Gives commands to a process that has read the program already (see devices/ready_command.py)."""
+
+    def __init__(self) -> None:
+        self._requests, theirs = socket.socketpair(socket.AF_UNIX, socket.SOCK_DGRAM)
+        with theirs:
+            self._process = subprocess.Popen(
+                [sys.executable, str(DEVICES / "ready_command.py"), str(theirs.fileno())],
+                pass_fds=[theirs.fileno()],
+            )
+
+    def run(
+        self, arguments: list[str], folder: Path, environment: dict[str, str], stdin: bytes, timeout: float
+    ) -> Finished:
+        """Run one command; as `subprocess.run` does, it is killed and TimeoutExpired raised when it takes longer."""
+        with contextlib.ExitStack() as open_files:
+            given, out, err = (open_files.enter_context(tempfile.TemporaryFile()) for _ in range(3))
+            given.write(stdin)
+            given.seek(0)
+            told, theirs = os.pipe()
+            news = open_files.enter_context(os.fdopen(told, "rb", buffering=0))
+            request = {"arguments": arguments, "folder": str(folder), "environment": environment}
+            files = [given.fileno(), out.fileno(), err.fileno(), theirs]
+            socket.send_fds(self._requests, [json.dumps(request).encode()], files)
+            os.close(theirs)
+            process = int(news.readline())
+            if not select.select([news], [], [], timeout)[0]:
+                os.kill(process, signal.SIGKILL)
+                raise subprocess.TimeoutExpired(arguments, timeout)
+            status = int(news.readline())
+            for file in (out, err):
+                file.seek(0)
+            return Finished(status, out.read().decode(), err.read().decode())
+
+    def close(self) -> None:
+        """End the process."""
+        self._requests.send(b"")
+        self._requests.close()
+        self._process.wait()
+
+
+@pytest.fixture(scope="session")
+def ready_command() -> Iterator[ReadyCommand | None]:
+    """One for all tests; None where a process cannot be forked."""
+    if not hasattr(os, "fork"):
+        yield None
+        return
+    with contextlib.closing(ReadyCommand()) as ready:
+        yield ready
+
+
 @pytest.fixture
-def bitassay(tmp_path: Path) -> Callable[..., Finished]:
+def bitassay(tmp_path: Path, ready_command: ReadyCommand | None) -> Callable[..., Finished]:
     """Run the command in a folder of its own, as a user would."""
 
-    def run(*arguments: object, timeout: float = 60, stdin: bytes | None = None) -> Finished:
+    def run(*arguments: object, timeout: float = 60, stdin: bytes = b"") -> Finished:
+        words = list(map(str, arguments))
+        environment = {k: v for k, v in os.environ.items() if k != "BITASSAY_STORE"} | {"NO_COLOR": "1"}
+        if ready_command is not None:
+            return ready_command.run(words, tmp_path, environment, stdin, timeout)
         done = subprocess.run(
-            [sys.executable, "-m", "harness.cli.main", *map(str, arguments)],
+            [sys.executable, "-m", "harness.cli.main", *words],
             cwd=tmp_path,
-            env={k: v for k, v in os.environ.items() if k != "BITASSAY_STORE"} | {"NO_COLOR": "1"},
+            env=environment,
             capture_output=True,
             timeout=timeout,
             input=stdin,

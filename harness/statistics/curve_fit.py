@@ -8,7 +8,6 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.optimize import minimize
 
 from harness.statistics.curve_model import LEAST_STRETCH, MOST_STRETCH, Array, Counts, Shape, log_likelihood
 from harness.statistics.gaussian import inverse_q
@@ -37,6 +36,8 @@ def maximise(
 
     A floor under an anchored BER is kept below it; scatter within 0 and `most_scatter_db`.
     """
+    from scipy.optimize import minimize  # only sweeps need it, and it takes long to read
+
     low, high = float(counts.level.min()), float(counts.level.max())
     limits = {
         _ANCHOR: (low - _FARTHEST_DB, high + _FARTHEST_DB),

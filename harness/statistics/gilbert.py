@@ -11,7 +11,6 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.optimize import minimize
 
 Array = NDArray[np.float64]
 MOST_ERRORS = 1_000  # a fit looks at no more than so many, from the first on: enough, and quick
@@ -57,6 +56,8 @@ def fit_gilbert_elliott(
     GilbertElliott or None
         None with fewer than two errors.
     """
+    from scipy.optimize import minimize  # only clustered runs need it, and it takes long to read
+
     if len(positions) < 2:
         return None
     if len(positions) > MOST_ERRORS:
