@@ -107,6 +107,9 @@ class Traits:
     finite: bool = False  # ends by itself, as a file does
     whole_bytes: bool = True  # bits are lost and invented in whole bytes only
     transparent: bool = True  # every byte value goes through; False: XON and XOFF do not
+    ends_with_input: bool = (
+        False  # once its input has ended, the device still gives what it kept; False: it may hang up
+    )
     holds_back: bool = (
         True  # what we do not read waits at the sender; False: it is lost (a port without flow control)
     )
@@ -307,6 +310,15 @@ class Instrument(_Opened, ABC):
     def read(self) -> float:
         """Read the condition; raises `InstrumentLost`."""
         raise InstrumentError("this instrument cannot be read", "leave `read` out")
+
+    def confirm(self, value: float) -> float | None:
+        """Read once more, at a point's end, whether it still stands where it was set.
+
+        Gives the reading; None where it cannot be read. Raises `NotConfirmed` where it has moved away, or
+        `InstrumentLost`.
+        """
+        del value
+        return None
 
     def identity(self) -> Identity:
         """Who answers."""

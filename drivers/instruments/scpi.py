@@ -162,6 +162,19 @@ class ScpiInstrument(Instrument):
             self._meet()
             return self._reading(self._manners)
 
+    def confirm(self, value: float) -> float | None:
+        """Read whether the value still stands: a knob may have been turned, or its supply have failed."""
+        if self.section.read is None or self._command is None:
+            return None
+        reading = self.read()
+        if abs(reading - value) > self._tolerance(value):
+            raise NotConfirmed(
+                f"{self.section.resource} was put at {value:g} {self.section.unit} and reads {reading:g} "
+                f"{self.section.unit} now",
+                "see that nobody, no other program and no power failure turns it meanwhile",
+            )
+        return reading
+
     def make_safe(self) -> None:
         """Go to the safe value in a few seconds at most, through a new session if the old one is broken."""
         safe = self.section.safe

@@ -88,9 +88,14 @@ def curves_of(settings: Mapping[str, Any], points: Sequence[PointAssessment]) ->
 
 
 def _was_measured(point: PointAssessment) -> bool:
-    """Whether a point says anything: it was measured to its end, be it without a single aligned bit."""
-    return point.ended_by is not None and (
-        point.tally.compared > 0 or point.ended_by not in ("interrupted", "fault")
+    """Whether a point says anything: it was measured to its end, be it without a single aligned bit.
+
+    Nothing does whose conditions did not stay where they were set.
+    """
+    return (
+        point.ended_by is not None
+        and not point.moved
+        and (point.tally.compared > 0 or point.ended_by not in ("interrupted", "fault"))
     )
 
 

@@ -144,10 +144,11 @@ def _summed(first: PointAssessment, points: list[PointAssessment]) -> PointAsses
 
 
 def _common_remarks(points: list[PointAssessment], curves: list[Any]) -> tuple[str, ...]:
-    """Collect what has to be said of a sweep as a whole: calibrations that ran out, the fit, drift, hysteresis."""
+    """Collect what has to be said of a sweep as a whole: calibrations, what moved, the fit, drift, hysteresis."""
     overdue = dict.fromkeys(words for point in points for words in point.facts.get("overdue", ()))
+    moved = [f"{_name(point)}: {words}" for point in points for words in point.moved]
     fits = [_beyond_the_value(curve.fit) for curve in curves if curve.fit is not None]
-    return (*overdue, *filter(None, fits), *(remark for curve in curves for remark in curve.remarks))
+    return (*overdue, *moved, *filter(None, fits), *(remark for curve in curves for remark in curve.remarks))
 
 
 def _beyond_the_value(fit: Any) -> str:

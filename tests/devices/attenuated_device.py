@@ -20,6 +20,9 @@ Options are one JSON object on the command line:
   offset_db      what ATT? reads is off by so much
   fault_from     `answer`, `refuse`, `offset_db`, `late_s` begin after so many settings (default 0)
   count          file that holds how many bytes reached the echo, in all connections so far
+  falls_back_s   so long after a setting it falls back to `start_db` by itself, as after a power failure
+  falls_back_at  the settings after which it does, counted from 1 (default: every one)
+  mute_after_s   so long after the first setting the attenuator answers nothing any more
   die_after      the whole bench ends when it is set once more than so many times
 """
 
@@ -92,6 +95,19 @@ class Bench:
         self.value = value
         self.scattered = self.options.get("scatter_db", 0.0) * float(self.rng.normal())
         self.history.append((time.monotonic(), value + self.scattered))
+        after = self.options.get("falls_back_s")
+        if after and self.settings in self.options.get("falls_back_at", [self.settings]):
+            threading.Timer(after, self.fall_back, [self.settings]).start()
+
+    def fall_back(self, number: int) -> None:
+        with self.lock:
+            if number == self.settings:
+                self.value = float(self.options.get("start_db", 0.0))
+                self.history.append((time.monotonic(), self.value))
+
+    def mute(self) -> bool:
+        after = self.options.get("mute_after_s", math.inf)
+        return len(self.history) > 1 and time.monotonic() > self.history[1][0] + after
 
     def late(self) -> float:
         return self.options.get("late_s", 0.0) if self.faulty() else 0.0
@@ -130,7 +146,7 @@ def talk(connection: socket.socket, bench: Bench) -> None:
     with connection, connection.makefile("rb") as lines:
         for raw in lines:
             answer = bench.answer(raw.decode().strip())
-            if answer is None:
+            if answer is None or bench.mute():
                 continue
             time.sleep(bench.late())
             try:

@@ -148,6 +148,7 @@ def risk_words(p: PointAssessment) -> str:
 def point_words(p: PointAssessment) -> str:
     """Say one of several points in a line; the confidence is said once for all of them."""
     verdict = f"{p.verdict}, " if p.verdict else ""
+    verdict += "what it was set to moved away, " if p.moved else ""
     t = p.tally
     if p.bounds is None or not t.compared:
         return f"{point_name(p)}: {verdict}{bits_words(p)[0]}"
