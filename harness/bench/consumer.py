@@ -15,6 +15,7 @@ from harness.bench.book import Book
 from harness.bench.chronicle import Chronicle
 from harness.bench.missing import Missing
 from harness.bench.places import Places
+from harness.bench.playback import Playback, PlayedArrivals
 from harness.bench.ring import Piece, Ring
 from harness.bench.traffic import Traffic
 from harness.bench.watch import LinkWatch
@@ -58,6 +59,7 @@ class Consumer(threading.Thread):
         commit: Callable[[list[Second], list[Event], int], None],
         stop: Callable[[str], None],
         each_second: Callable[[], list[Event]] = list,
+        playback: Playback | None = None,
         base_bit: int = 0,
         base_compared: int = 0,
     ) -> None:
@@ -77,7 +79,9 @@ class Consumer(threading.Thread):
         self._base_compared = base_compared  # what the point had in earlier sittings
         self._chronicle = Chronicle(wall_ns, base_bit)
         self._missing = Missing(traffic, drain_ns)
-        self.arrivals = Arrivals(started_ns)
+        self._playback = playback  # of a file; None where bytes come now
+        self._flushed_ns = started_ns
+        self.arrivals = Arrivals(started_ns) if playback is None else PlayedArrivals(started_ns, playback)
         self._sent_before = 0
         self._held: list[Segment] = []  # of a second whose positions were cut: one look at its end
         self._mark_bits: deque[int] = deque()
@@ -105,7 +109,8 @@ class Consumer(threading.Thread):
             while not self._ring.drained:
                 piece = self._ring.next_piece(WAIT_S)
                 if piece is None:
-                    self._pass_time(time.monotonic_ns(), idle=True)
+                    if self._playback is None:
+                        self._pass_time(time.monotonic_ns(), idle=True)
                 else:
                     self._pass_time(piece.arrived_ns, idle=False)
                     self._take(piece)
@@ -133,7 +138,8 @@ class Consumer(threading.Thread):
         self._absorb(self._counter.finish())
         self._look(whole_second=True)
         self._missing.take_given_up()
-        now = max(time.monotonic_ns(), self._boundary_ns - SECOND_NS)
+        came_ns = self._playback.when(self._counter.received) if self._playback else time.monotonic_ns()
+        now = max(came_ns, self._boundary_ns - SECOND_NS)
         if self.decision is not None:
             self._missing_at_the_decision(now)
         else:
@@ -188,7 +194,7 @@ class Consumer(threading.Thread):
             self._look(whole_second=self._counter.decided >= self._counter.received)
             for event in self._each_second():
                 self._chronicle.keep(event)
-            self._flush()
+            self._flush_in_time()
         self._boundary_ns += SECOND_NS
 
     def _link_lost(self, now_ns: int) -> None:
@@ -369,6 +375,13 @@ class Consumer(threading.Thread):
     ) -> None:
         where = self._counter.received if bit is None else bit
         self._chronicle.happened(kind, text, at_ns, data, where)
+
+    def _flush_in_time(self) -> None:
+        """Hand over after each second; the seconds of a file go by faster, and one commit a second is enough."""
+        now = time.monotonic_ns()
+        if self._playback is None or now - self._flushed_ns >= SECOND_NS:
+            self._flushed_ns = now
+            self._flush()
 
     def _flush(self) -> None:
         self._missing.take_given_up()

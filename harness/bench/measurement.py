@@ -12,6 +12,7 @@ from harness.bench.book import Book
 from harness.bench.consumer import Consumer, Rules
 from harness.bench.line import LineCounts
 from harness.bench.places import Places
+from harness.bench.playback import Playback
 from harness.bench.receiver import Receiver
 from harness.bench.ring import Ring
 from harness.bench.sender import Sender
@@ -73,6 +74,7 @@ class Measurement:
         self._wall_ns = time.time_ns() - self._started_ns
         self._line = LineCounts([link for link in (sending, receiving) if link is not None], self._wall_ns)
         self._draining = False
+        self._playback = self._make_playback()
         self._sender = self._make_sender()
         self._receiver = self._make_receiver()
         self._book = Book(
@@ -105,7 +107,31 @@ class Measurement:
     def _make_receiver(self) -> Receiver | None:
         if self._receiving is None:
             return None
-        return Receiver(self._receiving, self._ring, self.traffic, on_end=self._wake.set)
+        limits = [bits for bits, _ in self._receiving_limits()]
+        return Receiver(
+            self._receiving,
+            self._ring,
+            self.traffic,
+            on_end=self._wake.set,
+            playback=self._playback,
+            limit_bits=min(limits, default=None),
+        )
+
+    def _make_playback(self) -> Playback | None:
+        """Let the bytes of a file have come at their rate."""
+        link = self._receiving
+        if link is None or self._sending is not None or not link.traits.finite or not link.rate_bps:
+            return None
+        return Playback(self._started_ns, link.rate_bps)
+
+    def _receiving_limits(self) -> list[tuple[int, EndedBy]]:
+        """Bits after which receiving ends where nothing is sent, and what ends it then."""
+        stop, limits = self._setup.stop, list[tuple[int, EndedBy]]()
+        if self._sending is None and stop.bits is not None:
+            limits.append((stop.bits, "bits"))
+        if self._playback is not None and stop.seconds is not None:
+            limits.append((self._playback.bits(stop.seconds), "seconds"))
+        return limits
 
     def _make_consumer(self, commit: Callable[[list[Second], list[Event], int], None]) -> Consumer:
         setup = self._setup
@@ -148,6 +174,7 @@ class Measurement:
             commit=commit,
             stop=self._ask_stop,
             each_second=self._line.events,
+            playback=self._playback,
             base_bit=setup.base_bit,
             base_compared=setup.base_compared,
         )
@@ -230,12 +257,14 @@ class Measurement:
             ended = self._link_ended()
             if ended is not None and not (ended[0] == "fault" and self._reconnect(ended[1])):
                 return ended
+            if self._receiver is not None and self._receiver.full:
+                return min(self._receiving_limits())[1], None
             if self._asked is not None:
                 return ("bits" if self._asked == "bits" else "errors"), None
             if self._sender is not None and self._sender.done:
                 return "bits", None
             now = time.monotonic_ns()
-            if limit is not None and now - self._started_ns >= limit * 1e9:
+            if limit is not None and self._playback is None and now - self._started_ns >= limit * 1e9:
                 return "seconds", None
             hopeless = self._hopeless(now)
             if hopeless is not None and self._setup.silence_is_a_result:

@@ -7,6 +7,7 @@ import time
 from collections.abc import Callable
 
 from drivers.contract import DriverError, EndOfStream, Interrupted, Link
+from harness.bench.playback import Playback
 from harness.bench.ring import PIECE_BYTES, Ring
 from harness.bench.traffic import Traffic
 
@@ -18,19 +19,38 @@ class Receiver(threading.Thread):
 
     Where a link holds unread bytes back at their sender, a full ring makes it wait; where it does not,
     what finds no room is counted as lost by the host.
+
+    Parameters
+    ----------
+    playback
+        Says when the bytes of a file came; None where they come now.
+    limit_bits
+        Where nothing is sent: so many are received at most, rounded up to whole bytes.
     """
 
-    def __init__(self, link: Link, ring: Ring, traffic: Traffic, on_end: Callable[[], None]) -> None:
+    def __init__(
+        self,
+        link: Link,
+        ring: Ring,
+        traffic: Traffic,
+        on_end: Callable[[], None],
+        *,
+        playback: Playback | None = None,
+        limit_bits: int | None = None,
+    ) -> None:
         super().__init__(name="receiver", daemon=True)
         self._link = link
         self._ring = ring
         self._traffic = traffic
         self._on_end = on_end
+        self._playback = playback
+        self._limit_bits = limit_bits
         self._halt = threading.Event()
         self._scratch = memoryview(bytearray(PIECE_BYTES))
         self.fault: DriverError | None = None
         self.defect: BaseException | None = None
         self.ended = False  # the stream came to its end
+        self.full = False  # as much came as is wanted
 
     def halt(self) -> None:
         """Stop at the next time-out."""
@@ -39,7 +59,7 @@ class Receiver(threading.Thread):
     def run(self) -> None:
         """Receive."""
         try:
-            while not self._halt.is_set():
+            while not (self._halt.is_set() or self.full):
                 self._receive_once()
         except EndOfStream:
             self.ended = True
@@ -68,9 +88,20 @@ class Receiver(threading.Thread):
         if message is not None and len(room) < message:
             self._receive_message(room)
             return
+        if message is None:
+            room = room[: self._wanted(len(room))]
         count = self._link.receive(room, WAIT_S)
         if count:
             self._arrived(count)
+            self.full = message is None and self._wanted(1) == 0
+
+    def _wanted(self, most: int) -> int:
+        """Bytes to take in one piece: no more than are wanted in all, nor beyond the end of a played second."""
+        if self._limit_bits is not None:
+            most = min(most, max(0, -(-(self._limit_bits - self._traffic.received_bits) // 8)))
+        if self._playback is not None and most:
+            most, _ = self._playback.piece(self._traffic.received_bits, most)
+        return most
 
     def _receive_message(self, room: memoryview) -> None:
         """Take a message that may not fit before the ring's turn, by way of the scratch buffer."""
@@ -91,5 +122,10 @@ class Receiver(threading.Thread):
 
     def _arrived(self, count: int) -> None:
         now = time.monotonic_ns()
+        if self._playback is None:
+            self._traffic.received(8 * count, now)
+            self._ring.written(count, now)
+            return
+        _, came_ns = self._playback.piece(self._traffic.received_bits, count)
         self._traffic.received(8 * count, now)
-        self._ring.written(count, now)
+        self._ring.written(count, came_ns, join=False)

@@ -51,12 +51,12 @@ class Ring:
         with self._changed:
             return self._changed.wait_for(lambda: self._write - self._read < self._size, timeout)
 
-    def written(self, count: int, arrived_ns: int) -> None:
-        """Say that `count` bytes were put at the start of `room`."""
+    def written(self, count: int, arrived_ns: int, *, join: bool = True) -> None:
+        """Say that `count` bytes were put at the start of `room`; `join`: perhaps to the piece before them."""
         with self._changed:
             starts_at = self._write % self._size
             self._write += count
-            if self._pieces and starts_at:
+            if join and self._pieces and starts_at:
                 at, before, lost = self._pieces[-1]
                 if not lost and arrived_ns - at < JOIN_NS and before + count <= PIECE_BYTES:
                     self._pieces[-1] = (at, before + count, 0)
