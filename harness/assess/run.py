@@ -46,7 +46,7 @@ def assess(run: Run) -> Assessment:
             ]
             verdict, reasons = _worst([*judged, *([(verdict, reasons)] if verdict is not None else [])])
     if several:
-        whole = replace(whole, remarks=_common_remarks(points, curves))
+        whole = replace(whole, remarks=(*_judges_nothing(run), *_common_remarks(points, curves)))
     sensitivities = [found for curve in curves if (found := curve.sensitivity()) is not None]
     return Assessment(
         run=run.key,
@@ -141,6 +141,19 @@ def _summed(first: PointAssessment, points: list[PointAssessment]) -> PointAsses
         clustering=None,
         remarks=(),
     )
+
+
+def _judges_nothing(run: Run) -> list[str]:
+    """Say of a sweep that its requirement stands for no point of it: the run has no verdict then."""
+    asked = run.settings.get("requirement")
+    if (
+        run.command != "sweep"
+        or not asked
+        or asked.get("at")
+        or asked.get("sensitivity_at_least") is not None
+    ):
+        return []
+    return ["the requirement names no point and no sensitivity: nothing was judged"]
 
 
 def _common_remarks(points: list[PointAssessment], curves: list[Any]) -> tuple[str, ...]:

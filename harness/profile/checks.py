@@ -12,6 +12,7 @@ from .links import InstrumentSettings, LinkSettings
 from .problems import ProfileError, nearest
 from .profile import Profile
 from .requirement import PatternChoice
+from .sweeps import Search, Sweep
 
 RISES = ("attenuation", "loss")  # the more of it, the more errors
 FALLS = ("level", "power", "gain", "ebn0", "snr")
@@ -234,4 +235,19 @@ def _conditions(profile: Profile) -> None:
     if requirement.sensitivity_at_least is not None and sweep is not None and sweep.sensitivity_ber is None:
         raise ProfileError(
             "requirement.sensitivity_at_least needs to know at which BER", "add sensitivity_ber to [sweep]"
+        )
+    if requirement.sensitivity_at_least is not None:
+        _within_reach(requirement.sensitivity_at_least, sweep, search)
+
+
+def _within_reach(least: float, sweep: Sweep | None, search: Search | None) -> None:
+    """A sensitivity beyond what is measured can never be demonstrated."""
+    values: tuple[float, ...] = () if search is None else (search.low, search.high)
+    if sweep is not None:
+        values = sweep.all_axes()[0].listed()
+    low, high = min(values), max(values)
+    if not low <= least <= high:
+        raise ProfileError(
+            f"requirement.sensitivity_at_least is {least:g}, and only {low:g} to {high:g} is measured",
+            f"let [{'sweep' if search is None else 'search'}] reach beyond {least:g}, or correct the requirement",
         )

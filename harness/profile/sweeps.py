@@ -7,7 +7,7 @@ import random
 from decimal import Decimal
 from typing import Annotated, Any, Literal
 
-from pydantic import Discriminator, Field, Tag, model_validator
+from pydantic import Discriminator, Field, Tag, field_validator, model_validator
 
 from .basics import (
     Clock,
@@ -31,6 +31,21 @@ class Range(ProfileSection):
     start: float
     stop: float
     step: Positive
+
+    @field_validator("step", mode="before")
+    @classmethod
+    def _without_a_sign(cls, step: Any) -> Any:
+        if isinstance(step, int | float) and step < 0:
+            raise problem(
+                f"must be over 0, not {step:g}",
+                "write it without the minus: start and stop say which way it goes",
+            )
+        return step
+
+    @property
+    def meets_its_end(self) -> bool:
+        """Whether the last value is `stop`."""
+        return self.values()[-1] == self.stop
 
     def values(self) -> tuple[float, ...]:
         """Give the values, downwards where stop lies under start. 20.1 to 20.3 by 0.1 are three."""

@@ -170,3 +170,13 @@ def test_one_difference_of_three_in_a_thousand_is_hysteresis_alone_and_chance_am
 
     assert len(remarks([30.0])) == 1
     assert remarks([30 + k / 4 for k in range(40)]) == []
+
+
+def test_a_requirement_that_stands_for_no_point_is_said_to_judge_nothing(sweep):
+    found = assess(sweep(counts_of(STEPS)))
+    assert found.verdict is None
+    assert "the requirement names no point and no sensitivity: nothing was judged" in found.whole.remarks
+    for named in ({"at": {"att": 31.0}}, {"least": 32.5}):
+        assert not any(
+            "nothing was judged" in r for r in assess(sweep(counts_of(STEPS), **named)).whole.remarks
+        )

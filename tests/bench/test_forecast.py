@@ -9,7 +9,8 @@ import numpy as np
 import pytest
 
 from harness.assess.run import assess
-from harness.bench.check.forecast import PAGE_BYTES, forecast
+from harness.bench.check.forecast import PAGE_BYTES, forecast, stop_problem
+from harness.bench.check.points import of_the_points
 from harness.bench.session import bench_host, bench_versions
 from harness.profile import parse_profile
 from harness.record import Event, Second, Sitting, Tally
@@ -144,3 +145,60 @@ def test_the_points_of_a_sweep_are_forecast(grown, points, seconds, errors):
     # Every second of a sweep may be full of errors.
     told = forecast(profile, 48_000, positions_per_second=errors).disk_bytes
     assert grown(profile, 48_000, seconds, points, errors) == pytest.approx(told, rel=0.1, abs=SLACK)
+
+
+SWEEP = """
+[link]
+driver = "loopback"
+rate_bps = 48_000
+[[link.channel]]
+model = "awgn"
+modulation = "qpsk"
+ebn0_db = 32
+attenuation_db = 0
+[instruments.att]
+driver = "simulated"
+knob = "attenuation_db"
+limits = [0, 60]
+safe = 60
+"""
+POINTS = "[sweep]\ninstrument = 'att'\nvalues = [20, 30]\n"
+SEARCH = "[search]\ninstrument = 'att'\nlow = 20\nhigh = 30\nber = 1e-4\n"
+
+
+@pytest.mark.parametrize(
+    ("text", "problem"),
+    [
+        (POINTS, "nothing ends this run: [stop] is empty"),
+        (POINTS + "[stop]\nseconds = 5\n", None),
+        (POINTS + "finish_by = '07:00'\n", None),
+        (POINTS + "[requirement]\nber = 1e-4\n", "nothing ends this run: [stop] is empty"),
+        (
+            POINTS + "[requirement]\nber = 1e-4\nat = { att = 20 }\n",
+            "nothing ends this run at the points where nothing is required",
+        ),
+        (POINTS + "[requirement]\nber = 1e-4\nat = { att = 20 }\n[stop]\nseconds = 5000\n", None),
+        (POINTS + "[requirement]\nber = 1e-4\nat = { att = 20 }\n[stop]\nbits = 99\n", "stop.bits is 99"),
+        (SEARCH, "nothing limits this search"),
+        (SEARCH + "max_seconds = 60\n", None),
+        (SEARCH + "max_bits = 1_000_000\n", None),
+    ],
+)
+def test_a_sweep_or_a_search_that_may_not_end_is_found_beforehand(text, problem):
+    found = stop_problem(parse_profile(SWEEP + text), 48_000.0)
+    assert (found is None) == (problem is None)
+    assert found is None or found.startswith(problem)
+
+
+def test_a_sweep_that_stops_short_of_its_end_or_judges_nothing_is_remarked():
+    values = "{ start = 20, stop = 30, step = 4 }"
+    text = f"{SWEEP}[sweep]\ninstrument = 'att'\nvalues = {values}\n"
+    said = [f.text for f in of_the_points(parse_profile(text + "[requirement]\nber = 1e-3\n"))]
+    assert said == [
+        "att goes to 28 and not to 30: the step does not meet the end",
+        "the requirement names no point and no sensitivity: there will be no verdict",
+    ]
+    whole = text.replace("step = 4", "step = 0.1")  # decimal steps meet it
+    assert (
+        list(of_the_points(parse_profile(whole + "[requirement]\nber = 1e-3\nat = { att = 20.1 }\n"))) == []
+    )

@@ -64,6 +64,8 @@ def test_several_axes_go_through_their_grid_the_first_one_slowest() -> None:
     ("replace", "by", "words"),
     [
         ("step = 2", "step = 0", "sweep.values.step must be over 0"),
+        ("step = 2", "step = -2", "sweep.values.step must be over 0, not -2"),
+        ("ber = 1e-5", "ber = 1e-5\nsensitivity_at_least = 61", "only 20 to 60 is measured"),
         ("step = 2", "stp = 2", "unknown key sweep.values.stp"),
         ("step = 2", "step = 1e-6", "more than 10000"),
         ("stop = 60", "stop = 96", "outside the limits 0 to 95"),

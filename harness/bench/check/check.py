@@ -16,6 +16,7 @@ from harness.bench.check.beside import echo_on, listen_only, lost_at_most
 from harness.bench.check.findings import Finding, Outcome, Report
 from harness.bench.check.forecast import forecast, stop_problem
 from harness.bench.check.path import Line, PathCheck
+from harness.bench.check.points import of_the_points
 from harness.bench.conditions import Conditions, caution
 from harness.bench.session import Links, Way, ways_of
 from harness.bench.visits import visits_of
@@ -78,11 +79,14 @@ class Check:
             advice = "raise it (or leave it out): the plan would often end UNDECIDED"
             if "nothing ends" in problem:
                 advice = "add [stop] with bits, seconds or errors: an unattended run must end by itself"
+            if "search" in problem:
+                advice = "add search.max_seconds or search.max_bits: an unattended search must end in time"
             yield Finding("stop rules", "bad", problem, advice, usage=True)
         else:
             yield Finding("stop rules", "good", "the run ends by itself, and not before its plan")
         if words := caution(self._profile):
             yield Finding("caution", "note", words.removeprefix("caution: "))
+        yield from of_the_points(self._profile)
         conditions = self._conditions()
         for name, instrument in conditions.instruments.items():
             if not instrument.unattended:
@@ -231,14 +235,8 @@ class Check:
 
     def _time_and_disk(self, ahead: dict[str, float | None]) -> Iterator[Finding]:
         longest, expected = ahead.get("longest_seconds"), ahead.get("expected_seconds")
-        if longest is None and self._profile.search is not None:
-            yield Finding(
-                "forecast",
-                "note",
-                "how long the search takes cannot be said beforehand",
-                "add search.max_seconds: an unattended search must end by itself",
-            )
-            return
+        if longest is None and stop_problem(self._profile, self._links.rate_bps) is not None:
+            return  # it has been said
         if longest is None:
             yield Finding(
                 "forecast",

@@ -168,19 +168,22 @@ def _integer_bytes(value: float) -> int:
 
 def stop_problem(profile: Profile, rate_bps: float | None) -> str | None:
     """Say why the stop rules never let the plan decide, or that nothing ends the run."""
-    if profile.search is not None:
-        return None  # each of its looks ends by its own plan
+    search = profile.search
+    if search is not None:  # each of its points ends by itself, but how many there will be nobody knows
+        limited = search.max_seconds is not None or search.max_bits is not None
+        return (
+            None if limited else "nothing limits this search: how long it goes on cannot be said beforehand"
+        )
     settings = profile.resolved()
     requirement = requirement_of(settings)
-    stop = profile.stop
-    if requirement is None or (profile.sweep is not None and not settings["requirement"].get("at")):
-        if (
-            stop.bits is None
-            and stop.seconds is None
-            and stop.errors is None
-            and profile.need_link().driver != "capture"
-        ):
-            return "nothing ends this run: [stop] is empty and there is no plan"
+    stop, sweep = profile.stop, profile.sweep
+    plans = [requirement_at(requirement, settings, visit.values) for visit in visits_of(profile)]
+    ends = stop.bits is not None or stop.seconds is not None or stop.errors is not None
+    ends = ends or (sweep is not None and sweep.finish_by is not None)
+    if not ends and None in plans and profile.need_link().driver != "capture":
+        where = " at the points where nothing is required" if any(plans) else ""
+        return f"nothing ends this run{where}: [stop] is empty and there is no plan"
+    if requirement is None or not any(plans):
         return None
     plan = requirement.make_plan()
     longest = plan.longest_bits
