@@ -7,6 +7,8 @@ from collections.abc import Mapping
 from datetime import UTC, datetime
 from typing import Any
 
+from harness.statistics import notation
+
 ENDED_BY: Mapping[str, str] = {
     "plan": "its plan decided",
     "bits": "the profile's limit of bits was reached",
@@ -50,13 +52,7 @@ def ratio(value: float | None) -> str:
     """Write a ratio such as a BER: ``1e-06`` becomes ``1e-6``, 1.234e-6 keeps three digits."""
     if value is None:
         return "none"
-    if value == 0:
-        return "0"
-    if value >= 0.01:
-        return f"{value:.3g}"
-    mantissa, exponent = f"{value:.2e}".split("e")
-    mantissa = mantissa.rstrip("0").rstrip(".")
-    return f"{mantissa}e{int(exponent)}"
+    return notation.ratio(value)
 
 
 def percent(value: float) -> str:

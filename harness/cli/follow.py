@@ -175,8 +175,9 @@ def _watch(follower: Follower, *, quiet: bool) -> None:
             try:
                 follower.look()
             except StoreLost as error:
+                if not away:
+                    view.waiting(f"{error.what}; waiting for it (the bench that measures goes on without it)")
                 away = True
-                view.waiting(f"{error.what}; waiting for it (the bench that measures goes on without it)")
                 time.sleep(LOOK_AGAIN_S)
                 continue
             if away:

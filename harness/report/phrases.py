@@ -7,6 +7,7 @@ from collections.abc import Mapping
 from harness.assess.assessment import PointAssessment
 from harness.assess.words import count, duration, local_date, percent, ratio
 from harness.report.material import Material, Measured
+from harness.statistics import notation
 
 
 def number(value: int) -> str:
@@ -18,12 +19,7 @@ def digits(value: float | None) -> str:
     """Write a ratio with six digits: what a reader needs to compute it again."""
     if value is None:
         return "none"
-    if value == 0:
-        return "0"
-    if value >= 0.01:
-        return f"{value:.6g}"
-    mantissa, exponent = f"{value:.5e}".split("e")
-    return f"{mantissa.rstrip('0').rstrip('.')}e{int(exponent)}"
+    return notation.ratio(value, 6)
 
 
 def moment(at_ns: int | None) -> str:

@@ -18,6 +18,7 @@ from scipy.special import fdtrc, gammaincinv, stdtrit
 
 from harness.statistics.curve_fit import Best, Profile, anchored, fit_bend, fit_floor, fit_plain
 from harness.statistics.curve_model import LEAST_STRETCH, MOST_STRETCH, Array, Counts, Shape, telling_points
+from harness.statistics.notation import ratio
 
 FARTHEST = 100  # times the target BER: what lies surely above is not fitted
 WORSE = 10  # times the target BER: all that such points say
@@ -297,7 +298,7 @@ def _without_fit(
     over, under = bracket
     low, high = (over, under) if not rising else (under, over)
     between = (
-        f"the target {target_ber:g} is crossed between the points at {over:g} (over) and {under:g} (under)"
+        f"the target {ratio(target_ber)} is crossed between the points at {over:g} (over) and {under:g} (under)"
         if over is not None and under is not None
         else "the points do not lie surely on both sides of the target"
     )
@@ -329,15 +330,15 @@ def _words(
 ) -> str:
     if value is None:
         return (
-            f"The curve levels off at a BER of {floor:.2g}, over the target {target_ber:g}: no sensitivity."
+            f"The curve levels off at a BER of {ratio(floor, 2)}, over the target {ratio(target_ber)}: no sensitivity."
         )
     shown = [f"{b:.2f}" if b is not None else "no bound" for b in (low, high)]
     said = [
-        f"BER {target_ber:g} is reached at {value:.2f} {unit} ({shown[0]} to {shown[1]}, "
+        f"BER {ratio(target_ber)} is reached at {value:.2f} {unit} ({shown[0]} to {shown[1]}, "
         f"{confidence * 100:g} %)."
     ]
     if floor:
-        said.append(f"The curve levels off at a BER of {floor:.2g}.")
+        said.append(f"The curve levels off at a BER of {ratio(floor, 2)}.")
     if shape.scatter_db >= 0.005:
         said.append(f"Levels scatter by {shape.scatter_db:.2f} dB from point to point.")
     if min(shape.stretch / LEAST_STRETCH, MOST_STRETCH / shape.stretch) < 1.001:

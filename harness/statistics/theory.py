@@ -15,6 +15,7 @@ from collections.abc import Callable
 from dataclasses import dataclass
 
 from harness.statistics.fading import Fading, parse_fading, phase_step_tail, phase_tail, tone_error
+from harness.statistics.notation import ratio
 
 LOWEST_DB, HIGHEST_DB = -100.0, 400.0
 
@@ -112,7 +113,7 @@ def ebn0_db(modulation: str, ber: float, fading: str | None = None) -> float:
         return (math.log(value) if value > 0 else -1e4) - target
 
     if excess(LOWEST_DB) < 0 or excess(HIGHEST_DB) > 0:
-        raise ValueError(f"no Eb/N0 gives {kind.name} a bit error ratio of {ber:g}: it lies under one half")
+        raise ValueError(f"no Eb/N0 gives {kind.name} a bit error ratio of {ratio(ber)}: it lies under one half")
     return float(brentq(excess, LOWEST_DB, HIGHEST_DB, xtol=1e-12, rtol=1e-14, maxiter=300))
 
 

@@ -19,7 +19,7 @@ PLANS = [
 def test_the_paragraph_states_requirement_rule_and_risks(kind: str, accepts: int, margin: float) -> None:
     plan = make_plan(kind, 1e-6, accept_errors=accepts, margin=margin)
     text = describe(plan, rate_bps=48_000)
-    assert "at most 1e-06" in text
+    assert "at most 1e-6" in text
     assert "95 % confidence" in text
     assert f"{plan.longest_bits:,} bits".replace(",", " ") in text
     assert "48 000 bit/s" in text

@@ -11,6 +11,7 @@ from harness.report.document import Figure
 from harness.report.figures.drawings import Bar, Ruler, Span, Spans
 
 _ROWS = 32  # of a figure: more than a page's height holds none
+_SAID = 8  # units whose numbers a caption says one by one
 _LEAST_DECADES = 3
 _SMALLEST = 1e-15
 
@@ -25,7 +26,7 @@ def bers_of(lot: LotSummary, required: float | None) -> Iterator[Figure]:
         bars = tuple(_bar(u) for u in part)
         drawing = Ruler(bars, required, "required: at most", first, last)
         title = f"The units' BERs and their bounds (two-sided, {percent(lot.confidence)} confidence){words}"
-        yield Figure(title, "; ".join(_ber_words(u) for u in part), drawing)
+        yield Figure(title, _bers_words(part), drawing)
 
 
 def _parts(units: Sequence[Unit]) -> Iterator[tuple[Sequence[Unit], str]]:
@@ -55,6 +56,22 @@ def _bar(u: Unit) -> Bar:
     against = u.verdict == "FAIL"
     fades = upper / 10 if not lower else None
     return Bar(u.serial_number, lower, upper, u.ber or None, fades, against)
+
+
+def _bers_words(part: Sequence[Unit]) -> str:
+    """Say the bounds of few units, and of many how far they reach."""
+    uppers = [u for u in part if u.upper is not None]
+    if len(part) <= _SAID or not uppers:
+        return "; ".join(_ber_words(u) for u in part)
+    least, most = min(uppers, key=_upper), max(uppers, key=_upper)
+    return (
+        f"{count(len(part), 'unit')}; upper bounds from {ratio(least.upper)} ({least.serial_number}) to "
+        f"{ratio(most.upper)} ({most.serial_number}); all of them stand under “Units”"
+    )
+
+
+def _upper(u: Unit) -> float:
+    return 1.0 if u.upper is None else u.upper
 
 
 def _ber_words(u: Unit) -> str:
@@ -92,6 +109,8 @@ def sensitivities_of(lot: LotSummary, required: float | None) -> Iterator[Figure
         title = f"The units' sensitivities and their bounds ({percent(lot.confidence)} confidence){words}"
         median = f"median {middle:.2f}{unit} (dashed); " if len(units) > 2 else ""
         said = "; ".join(f"{u.serial_number} {u.sensitivity:.2f}{_sides(u)}" for u in part)
+        if len(part) > _SAID:
+            said = "all bounds stand under “Units”"
         yield Figure(title, f"{count(len(part), 'unit')}; {median}{said}", drawing)
 
 

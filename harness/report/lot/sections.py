@@ -87,7 +87,8 @@ def _verdict(material: LotMaterial) -> Verdict:
     if any(u.standing == "not valid" for u in lot.units):
         return Verdict("NOT VALID", words, "fail")
     if lot.verdict == "PASS":
-        return Verdict("ALL PASSED" if len(lot.units) > 1 else "PASSED", words, "pass")
+        each = "each by its own run" if len(lot.units) > 1 else "the only one of the lot"
+        return Verdict("ALL PASSED", f"{count(len(lot.units), 'unit')}, {each}", "pass")
     if lot.verdict == "FAIL":
         return Verdict(f"{lot.failed} FAILED", words, "fail")
     if lot.verdict == "UNDECIDED":

@@ -17,6 +17,7 @@ from numpy.typing import NDArray
 
 from harness.statistics.bounds import bits_needed
 from harness.statistics.least_bits import risk_of
+from harness.statistics.notation import ratio
 from harness.statistics.plans.plan import PlanError
 from harness.statistics.plans.recursion import Stairs, corners, mean_bits, poisson_kernels, sweep, walk
 from harness.statistics.tails import chance_over
@@ -98,7 +99,7 @@ def aim_at(ber: float, confidence: float, margin: float, producer_risk: float) -
     consumer = risk_of(confidence)
     if good == 0.0:
         raise PlanError(
-            f"a unit {margin:g} times better than {ber:g} has no errors at all", "state a smaller margin"
+            f"a unit {margin:g} times better than {ratio(ber)} has no errors at all", "state a smaller margin"
         )
     if consumer + producer_risk >= 1:
         raise PlanError(

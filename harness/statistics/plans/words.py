@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from harness.statistics.notation import ratio
 from harness.statistics.plans.plan import Plan
 
 _MEANING = (
@@ -40,7 +41,7 @@ def good_unit_fails(plan: Plan) -> str:
 
 def _requirement(plan: Plan) -> str:
     return (
-        f"Requirement: the bit error ratio (BER) is at most {plan.ber:g}, to be demonstrated with "
+        f"Requirement: the bit error ratio (BER) is at most {ratio(plan.ber, 6)}, to be demonstrated with "
         f"{_percent(plan.confidence)} confidence."
     )
 
@@ -76,9 +77,9 @@ def _rule(plan: Plan, rate_bps: float | None) -> str:
 
 def _risks(plan: Plan) -> str:
     return (
-        f"Risks, computed exactly for independent errors: a unit with a BER of exactly {plan.ber:g} passes "
+        f"Risks, computed exactly for independent errors: a unit with a BER of exactly {ratio(plan.ber, 6)} passes "
         f"with probability {_percent(plan.consumer_risk)} (consumer's risk), a worse one less often; a unit "
-        f"{plan.margin:g} times better (BER {plan.good_ber:g}) fails with probability "
+        f"{plan.margin:g} times better (BER {ratio(plan.good_ber)}) fails with probability "
         f"{_percent(plan.producer_risk)} (producer's risk), a better one less often."
     )
 
