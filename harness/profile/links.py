@@ -65,7 +65,7 @@ class LinkSettings(DrivenSection):
     least_delay_s: NotNegative | None = None
     """`check` takes what comes back sooner for a short at this end; 0: this path may answer at once.
 
-    Left out: a few milliseconds on links with hardware behind them.
+    Left out: a few milliseconds on serial ports; tcp and udp may answer at once, which is said.
     """
     duplex: bool = False
     """Two ports: measure both directions at once, with two patterns and separate tallies."""

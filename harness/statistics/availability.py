@@ -327,7 +327,11 @@ class Availability:
                 "counted at most"
             )
         if result.partial_errored:
-            found.append(f"{result.partial_errored} partial second(s) with errors are left out")
+            one = result.partial_errored == 1
+            found.append(
+                f"{result.partial_errored} partial {'second' if one else 'seconds'} with errors "
+                f"{'is' if one else 'are'} left out"
+            )
         return tuple(found)
 
 

@@ -9,6 +9,7 @@ import threading
 import time
 from collections.abc import Callable, Iterator
 from pathlib import Path
+from typing import Any
 
 from drivers.contract import DriverError, Instrument, Interrupted
 from harness.assess.words import duration, rate
@@ -23,6 +24,7 @@ from harness.bench.visits import visits_of
 from harness.profile import Profile
 
 SIMULATED = ("loopback", "process", "capture")
+WITHOUT_WIRES = ("tcp", "udp")  # no connector there can be shorted: an answer at once may be the far end's
 LONG_S = 8.0  # a probe that takes longer says so beforehand
 ROOM = 3  # so many times the forecast must be free on the disk
 
@@ -68,7 +70,7 @@ class Check:
         if all(finding.outcome != "bad" for finding in found):
             take(self._at_the_bench())
         if not self._cancel.is_set():
-            take(self._time_and_disk(ahead))
+            take(self._time_and_disk(self._with_delay(ahead)))
         return Report(tuple(found), self._delay_s, ahead)
 
     # -- without touching anything
@@ -187,7 +189,8 @@ class Check:
         if way.sending is None or way.receiving is None:
             return None
         link = self._profile.need_link()
-        at_once: Outcome = "bad" if way.sending is way.receiving else "note"
+        wired = link.driver not in WITHOUT_WIRES
+        at_once: Outcome = "bad" if way.sending is way.receiving and wired else "note"
         return Line(
             sending=way.sending,
             receiving=way.receiving,
@@ -199,6 +202,7 @@ class Check:
             drain_s=link.drain_s,
             at_once="good" if link.driver in SIMULATED else at_once,
             least_delay_s=link.least_delay_s,
+            wired=wired,
         )
 
     def _path(self, way: Way) -> Iterator[Finding]:
@@ -233,7 +237,14 @@ class Check:
 
     # -- the forecast
 
-    def _time_and_disk(self, ahead: dict[str, float | None]) -> Iterator[Finding]:
+    def _with_delay(self, ahead: dict[str, Any]) -> dict[str, Any]:
+        """Add the loop delay, after which each point's last bit is back."""
+        for key in ("longest_seconds", "expected_seconds"):
+            if ahead[key] is not None and self._delay_s is not None:
+                ahead[key] += ahead["points"] * self._delay_s
+        return ahead
+
+    def _time_and_disk(self, ahead: dict[str, Any]) -> Iterator[Finding]:
         longest, expected = ahead.get("longest_seconds"), ahead.get("expected_seconds")
         if longest is None and stop_problem(self._profile, self._links.rate_bps) is not None:
             return  # it has been said
@@ -249,9 +260,11 @@ class Check:
         if expected is not None and expected < 0.9 * longest:
             words = f"about {duration(expected)}, {words}"
         ends = datetime.datetime.now().astimezone() + datetime.timedelta(seconds=longest)
-        yield Finding(
-            "forecast", "good", f"the run takes {words}: until {ends:%H:%M on %a %d %b} at the latest"
-        )
+        text = f"the run takes {words}: until {ends:%H:%M on %a %d %b} at the latest"
+        if self._delay_s is not None and self._profile.sweep is None and self._profile.search is None:
+            drain_s = self._profile.need_link().drain_s
+            text += f"; should its last bits be lost, {duration(drain_s)} more are waited for them"
+        yield Finding("forecast", "good", text)
         need = ahead.get("disk_bytes")
         if need is None:
             return

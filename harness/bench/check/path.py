@@ -13,7 +13,7 @@ from __future__ import annotations
 import threading
 import time
 from collections.abc import Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -44,6 +44,10 @@ ADAPTER_S = 0.020  # a USB adapter collects what came for up to 16 ms
 SLOW_S = 0.05  # beyond the limit: clearly slow
 JUMP_BITS = 8 * 4_099  # half a period, where that is less
 LEAST_BYTES, MOST_BYTES = 512, 65_536
+ASK_THE_PEER = (
+    "check that host and port are those of the device's data, that the far end loops back, and that the device "
+    "is in its data mode"
+)
 STRETCH_S = 2.0  # how long a stretch may take, where the rate allows
 
 
@@ -61,6 +65,7 @@ class Line:
     drain_s: float
     at_once: Outcome  # what an answer at once is: good where the path is simulated and proves nothing
     least_delay_s: float | None = None  # what the profile says of an answer at once
+    wired: bool = True  # False: a connection to a program or a server, which has neither plug nor cable here
 
     @property
     def speed_bps(self) -> float | None:
@@ -110,6 +115,8 @@ class PathCheck:
                 found = step(probe)
                 if found is None:
                     continue
+                if found.cause == "silence" and not self._line.wired:
+                    found = replace(found, advice=ASK_THE_PEER)
                 yield found
                 if found.outcome == "bad":
                     return
@@ -222,14 +229,7 @@ class PathCheck:
             return found
         self.delay_s = took_s
         if line.at_once != "bad" and line.least_delay_s is None:
-            return Finding(
-                "delay",
-                "note",
-                f"what is sent comes out of the other port at once (in {duration(took_s)})",
-                "be sure that the device is between the two ports, and no cable past it; link.least_delay_s makes "
-                "the check refuse an answer that comes too soon",
-                cause="at_once",
-            )
+            return self._soon(took_s)
         return Finding(
             "delay",
             "bad",
@@ -239,6 +239,21 @@ class PathCheck:
             "so soon (a simulator, a fibre), say link.least_delay_s = 0",
             cause="short",
         )
+
+    def _soon(self, took_s: float) -> Finding:
+        """Say that an answer came at once where it may be the far end's: what proves it is for a person to see."""
+        refuse = "link.least_delay_s makes the check refuse an answer that comes too soon"
+        if self._line.sending is self._line.receiving:
+            text = (
+                f"our own bytes come back at once (in {duration(took_s)}): from a far end without delay, or "
+            )
+            text += "from an echo at this end of the connection"
+            advice = "be sure that the far end loops them back, and no server or gateway before it; " + refuse
+        else:
+            text = f"what is sent comes out of the other port at once (in {duration(took_s)})"
+            past = "no cable" if self._line.wired else "nothing"
+            advice = f"be sure that the device is between the two ports, and {past} past it; " + refuse
+        return Finding("delay", "note", text, advice, cause="at_once")
 
     def _echoed(self, near_s: float, far_s: float | None = None) -> Finding:
         again = "" if far_s is None else f" (after {duration(near_s + far_s)})"
