@@ -432,6 +432,12 @@ def verify(run: RunArgument = "last", store: StoreOption = None, json: JsonOptio
 def compare(
     a: Annotated[str, typer.Argument(metavar="A", help="A run: its key, a unique ending of it, or `last`.")],
     b: Annotated[str, typer.Argument(metavar="B", help="Another run.")],
+    at: Annotated[
+        list[str] | None,
+        typer.Option(
+            "--at", metavar="INSTRUMENT=VALUE", help="Sweeps: at this setting only; may be repeated."
+        ),
+    ] = None,
     store: StoreOption = None,
     confidence: Annotated[
         float, typer.Option("--confidence", parser=number, metavar="C", help="Between 0 and 1.")
@@ -440,11 +446,13 @@ def compare(
 ) -> int:
     """Is B worse than A? An exact test on the two counts, and the ratio of the BERs with bounds.
 
+    Two sweeps are compared point by point, where their settings are the same.
+
     Example: bitassay compare 5f2c last
     """
-    from harness.cli.records import compare as carry_out
+    from harness.cli.compare import compare as carry_out
 
-    return carry_out(a, b, store, confidence, as_json=json)
+    return carry_out(a, b, store, confidence, at or [], as_json=json)
 
 
 @app.command()

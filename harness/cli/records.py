@@ -127,39 +127,6 @@ def copy(source: str, target: str) -> int:
     return FAULT if done.diverged or done.unsound else 0
 
 
-def compare(a: str, b: str, store: str | None, confidence: float, *, as_json: bool) -> int:
-    """Compare two runs."""
-    from harness.assess.compare import compare as carry_out
-    from harness.assess.words import ratio
-    from harness.cli.failure import UserError
-
-    if not 0 < confidence < 1:
-        raise UserError(f"a confidence of {confidence:g} is outside 0 to 1", "give 0.95 for 95 %")
-    with open_reading(store) as opened:
-        first, second = opened.load(opened.find(a)), opened.load(opened.find(b))
-    result = carry_out(first, second, confidence)
-    if as_json:
-        print_json(result.to_json())
-        return 0
-    for name, run in (("A", result.a), ("B", result.b)):
-        t = run.whole.tally
-        unit = run.device.get("serial_number", "-")
-        print(f"{name}  {run.run}  unit {unit}, {local_date(run.started)}")
-        print(f"   {count(t.errors, 'error')} in {count(t.compared, 'bit')}: BER {ratio(run.whole.ber)}")
-    print()
-    if result.errors is None:
-        print("one of them compared no bit: there is nothing to compare")
-    else:
-        print(result.errors.words)
-    if result.seconds is not None:
-        print(result.seconds.words)
-    for line in result.differences:
-        print(f"conditions differ: {line}")
-    for line in result.warnings:
-        print(f"note: {line}")
-    return 0
-
-
 def note(run: str, text: str, store: str | None, *, void: bool) -> int:
     """Add words to a record, or mark it void; the record itself stays as it is."""
     import getpass
