@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import threading
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 from harness.assess.accumulate import Accumulator
 from harness.assess.assessment import Assessment, PointAssessment
@@ -36,6 +36,12 @@ class Progress:
     sensitivity_ber: float | None = None
     until: float | None = None  # forecast of the end, seconds since the epoch
     elsewhere: bool = False  # another process measures, and this one only watches
+    beside: tuple[Progress, ...] = ()  # the other direction, where both are measured at once
+
+    def of_direction(self, live: Live) -> Progress:
+        """Give the same for another direction that is measured at once."""
+        longest = live.plan.longest_bits if live.plan else None
+        return replace(self, point=live.point(), longest_bits=longest, outlook=live.outlook(), done=())
 
 
 @dataclass(frozen=True, slots=True)

@@ -311,26 +311,26 @@ class BenchRun:
             return
         self._next_tick = now + TICK_S
         sweep, search = self._profile.sweep, self._profile.search
-        self._hooks.tick(
-            Progress(
-                run=self._record.key,
-                title=self._profile.title,
-                device=self._profile.device,
-                point=lives[0].point(),
-                longest_bits=lives[0].plan.longest_bits if lives[0].plan else None,
-                stop=stop,
-                elapsed_s=(time.time_ns() - self._record.started) / 1e9,
-                waiting_writes=self._record.waiting,
-                outlook=lives[0].outlook(),
-                number=self._now.number,
-                visits=self._route.total,
-                seeking=self._route.words,
-                units=self._conditions.units(),
-                done=tuple(self._done),
-                sensitivity_ber=search.ber if search else sweep.sensitivity_ber if sweep else None,
-                until=self._schedule.until(self._done, len(self._route.ahead)) if sweep else None,
-            )
+        progress = Progress(
+            run=self._record.key,
+            title=self._profile.title,
+            device=self._profile.device,
+            point=lives[0].point(),
+            longest_bits=lives[0].plan.longest_bits if lives[0].plan else None,
+            stop=stop,
+            elapsed_s=(time.time_ns() - self._record.started) / 1e9,
+            waiting_writes=self._record.waiting,
+            outlook=lives[0].outlook(),
+            number=self._now.number,
+            visits=self._route.total,
+            seeking=self._route.words,
+            units=self._conditions.units(),
+            done=tuple(self._done),
+            sensitivity_ber=search.ber if search else sweep.sensitivity_ber if sweep else None,
+            until=self._schedule.until(self._done, len(self._route.ahead)) if sweep else None,
         )
+        beside = tuple(progress.of_direction(live) for live in lives[1:])
+        self._hooks.tick(replace(progress, beside=beside) if beside else progress)
 
 
 __all__ = ["BenchRun", "Defect", "Hooks", "Live", "Progress", "RunResult"]

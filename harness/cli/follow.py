@@ -84,7 +84,7 @@ class Follower:
         done = self._done()
         visits = self._visits()
         began = self.run.sittings[-1].started if self.run.sittings else self.run.started
-        return Progress(
+        progress = Progress(
             run=self.run.key,
             title=self.run.title,
             device=self.run.device,
@@ -102,6 +102,9 @@ class Follower:
             until=self._until(now_ns, visits * ways),
             elsewhere=True,
         )
+        others = [p for p in self.run.points if now.index < p.index < now.index + ways]
+        beside = tuple(progress.of_direction(self._live(p)) for p in others)
+        return replace(progress, beside=beside) if beside else progress
 
     def _visits(self) -> int:
         """How many points there are in all, as the profile says; 0: not known beforehand."""

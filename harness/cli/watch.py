@@ -170,14 +170,29 @@ class PageWatcher(Watcher):
 def progress_line(progress: Progress, now_ns: int, events_said: int = 0) -> str:
     """Say the state of a run in one line, with the latest event where it is not one of those said before."""
     from harness.cli.view.forecast import still_to_do
-    from harness.cli.view.sheet import against_words
 
     p = progress.point
-    t = p.tally
     of_all = f" of {progress.visits}" if progress.visits > progress.number else ""
     point = f"point {progress.number + 1}{of_all}, " if progress.visits != 1 else ""
+    parts = [f"{point}{duration(round(progress.elapsed_s))}"]
+    for way in (progress, *progress.beside):
+        counted = _counted(way)
+        name = way.point.facts.get("direction") if progress.beside else None
+        parts += [f"{name}: {counted[0]}" if name else counted[0], *counted[1:]]
+    if p.plan is not None or progress.stop.any:
+        last = next((w for w in (progress, *progress.beside) if not w.outlook.decided), progress)
+        parts.append(still_to_do(last, now_ns)[0])
+    if len(p.events) > events_said:
+        parts.append(p.events[-1].text)
+    return " · ".join(parts)
+
+
+def _counted(progress: Progress) -> list[str]:
+    """Say what was counted in one direction, and what speaks against it."""
+    from harness.cli.view.sheet import against_words
+
+    p, t = progress.point, progress.point.tally
     parts = [
-        f"{point}{duration(round(progress.elapsed_s))}",
         f"{count(t.errors, 'error')} in {count(t.compared, 'bit')}",
         f"BER {ratio(p.ber)}" if t.compared else "nothing compared yet",
     ]
@@ -185,12 +200,7 @@ def progress_line(progress: Progress, now_ns: int, events_said: int = 0) -> str:
         parts.append(f"{count(t.unaligned, 'bit')} unaligned")
     if p.slip_count:
         parts.append(count(p.slip_count, "slip"))
-    parts += [f"cannot pass any more {why}" for why in against_words(progress)]
-    if p.plan is not None or progress.stop.any:
-        parts.append(still_to_do(progress, now_ns)[0])
-    if len(p.events) > events_said:
-        parts.append(p.events[-1].text)
-    return " · ".join(parts)
+    return parts + [f"cannot pass any more {why}" for why in against_words(progress)]
 
 
 @contextmanager

@@ -12,6 +12,7 @@ from typing import TYPE_CHECKING
 
 from harness.assess.assessment import Assessment, PointAssessment
 from harness.assess.words import count, duration, how_it_ended, local_date, percent, rate
+from harness.cli.view.directions import on_one_page
 from harness.cli.view.entries import (
     ber_decided,
     ber_so_far,
@@ -100,7 +101,7 @@ def sheet_of_progress(progress: Progress, now_ns: int, *, closing: str = "", beh
         foot.insert(
             0, f"the store is slow: {progress.waiting_writes} seconds wait to be written; none is lost"
         )
-    return Sheet(
+    sheet = Sheet(
         unit=unit_name(progress.device),
         title=progress.title,
         corner=moment(now_ns, now_ns),
@@ -121,6 +122,17 @@ def sheet_of_progress(progress: Progress, now_ns: int, *, closing: str = "", beh
         to_do=[closing] if closing else _to_do(progress, now_ns, behind_s),
         events=p.events,
         foot=foot,
+    )
+    if not progress.beside:
+        return sheet
+    ways = (progress, *progress.beside)
+    beside = [sheet_of_progress(w, now_ns, closing=closing, behind_s=behind_s) for w in progress.beside]
+    names = [point_label(w.point) for w in ways]
+    last = next((w for w in ways if not w.outlook.decided), progress)
+    return on_one_page(
+        dict(zip(names, (sheet, *beside), strict=True)),
+        [point_words(w.point) for w in ways],
+        to_do_of=point_label(last.point),
     )
 
 
