@@ -11,6 +11,7 @@ from harness.assess.words import count, duration, local_date, local_time, percen
 from harness.cli.view.ink import signs_for, writable
 from harness.cli.view.ruler import ruler
 from harness.cli.view.sheet import Sheet, sheet_of_assessment
+from harness.record import Event
 
 EVENTS_SHOWN = 12
 LABEL = 12  # columns
@@ -58,15 +59,26 @@ def page(a: Assessment, where: str = "") -> Iterator[str]:
     yield ""
     if sheet.points:
         yield from _entry("BER", [sheet.ber] if sheet.ber else [])
+        yield from _entry("remarks", list(sheet.remarks))
+        yield from _told(sheet.events)
+        yield ""
         yield from _ruler(sheet)
         yield from _entry("points", sheet.points)
-        yield from _entry("remarks", list(sheet.remarks))
     else:
         yield from _numbers(a.whole, sheet)
         yield from _happened(a.whole)
     if where:
         yield ""
         yield f"record in {where}"
+
+
+def _told(events: Sequence[Event]) -> Iterator[str]:
+    """Give what happened during a sweep; what there is no room for is counted."""
+    for number, event in enumerate(events[:EVENTS_SHOWN]):
+        yield f"{'meanwhile' if number == 0 else '':<{LABEL}}{local_time(event.at)}  {event.text}"
+    if len(events) > EVENTS_SHOWN:
+        more = count(len(events) - EVENTS_SHOWN, "further event")
+        yield f"{'':<{LABEL}}… {more}; `bitassay show --json` lists them"
 
 
 def _entry(label: str, lines: Sequence[str]) -> Iterator[str]:

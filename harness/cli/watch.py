@@ -97,6 +97,8 @@ class LineWatcher(Watcher):
                 now = time.monotonic()
                 latest = self._latest
                 if latest is not None and latest is not shown and now >= next_at and not over:
+                    if shown is None or shown.point.started != latest.point.started:
+                        events_said = 0
                     next_at, shown = now + self._every_s, latest
                     self._say(progress_line(latest, time.time_ns(), events_said))
                     events_said = len(latest.point.events)
@@ -120,7 +122,8 @@ class PageWatcher(Watcher):
         self._interrupted = interrupted
         self._latest: tuple[Progress, float] | None = None
         self._waiting: tuple[str, int] | None = None  # why, and since when (UTC, ns)
-        self._newest = (-1, time.monotonic())  # the newest decided second, and when it was first seen
+        # The newest decided second of the point under way, and when it was first seen.
+        self._newest: tuple[tuple[int, int], float] = ((0, -1), time.monotonic())
         self._live: LivePage | None = None
 
     def start(self) -> None:
@@ -135,8 +138,9 @@ class PageWatcher(Watcher):
         """Take the state of the run; the drawing thread shows it."""
         now = time.monotonic()
         index = progress.point.recent[-1][0] if progress.point.recent else -1
-        if index != self._newest[0]:
-            self._newest = (index, now)
+        newest = (progress.point.started, index)  # a new point waits for no second of the one before
+        if newest != self._newest[0]:
+            self._newest = (newest, now)
         self._latest = (progress, now)
 
     def waiting(self, why: str) -> None:
@@ -169,11 +173,13 @@ class PageWatcher(Watcher):
 
 def progress_line(progress: Progress, now_ns: int, events_said: int = 0) -> str:
     """Say the state of a run in one line, with the latest event where it is not one of those said before."""
+    from harness.cli.view.entries import point_name
     from harness.cli.view.forecast import still_to_do
 
     p = progress.point
     of_all = f" of {progress.visits}" if progress.visits > progress.number else ""
-    point = f"point {progress.number + 1}{of_all}, " if progress.visits != 1 else ""
+    at = f" ({point_name(p)})" if p.values else ""
+    point = f"point {progress.number + 1}{of_all}{at}, " if progress.visits != 1 else ""
     parts = [f"{point}{duration(round(progress.elapsed_s))}"]
     for way in (progress, *progress.beside):
         counted = _counted(way)

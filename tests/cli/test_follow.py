@@ -154,7 +154,7 @@ def test_a_follower_of_a_sweep_shows_the_page_of_the_live_view(tmp_path):
         assert "Ctrl-C ends the watching; the run goes on" in sheet.foot[-1]
         assert sheet.unit == "Wader-9 0031"
         line = progress_line(progress, now).replace("\u202f", " ")
-        assert line.startswith("point 2 of 3, ")
+        assert line.startswith("point 2 of 3 (attenuator 33), ")
         assert "200 errors in 400 000 bits" in line
 
 

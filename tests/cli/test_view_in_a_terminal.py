@@ -175,7 +175,7 @@ def test_a_resized_window_gets_a_page_of_its_new_size(terminal, tmp_path):
     ]
     for size in ((140, 40), (80, 24), (60, 16), (30, 5)):
         assert size in sizes
-    assert "it was interrupted" in " ".join(plain(text.split(LEAVE)[1]).replace("│", "").split())
+    assert "the run was interrupted" in " ".join(plain(text.split(LEAVE)[1]).replace("│", "").split())
 
 
 def test_json_shows_nothing_while_the_run_goes_on(terminal, tmp_path):

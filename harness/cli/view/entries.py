@@ -169,7 +169,10 @@ def point_name(p: PointAssessment) -> str:
 def point_label(p: PointAssessment) -> str:
     """Name a point as shortly as the margin wants it."""
     direction = p.facts.get("direction")
-    return str(direction) if direction else "/".join(f"{value:g}" for value in p.values.values())
+    if direction:
+        return str(direction)
+    mark = "ref " if p.facts.get("reference") else ""
+    return mark + "/".join(f"{value:g}" for value in p.values.values())
 
 
 def sensitivity_words(found: Mapping[str, Any] | None) -> str:

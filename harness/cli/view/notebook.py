@@ -10,7 +10,7 @@ from rich.text import Text
 
 from harness.assess.words import local_time
 from harness.cli.view.ink import BOXED, PLAIN, RED, STRONG, Line, Signs, clean
-from harness.cli.view.ruler import ruler
+from harness.cli.view.ruler import Bar, ruler
 from harness.cli.view.sheet import Sheet
 from harness.cli.view.strip import strip, strip_width, strip_words
 from harness.record import Event
@@ -36,7 +36,7 @@ class Layout:
     reason_lines: int  # of each reason, at most
     remark_lines: int
     remarks: int
-    points: int  # of a sweep, done before
+    points: int  # of a sweep, done before; of a page that stays, beside the one that tells most
 
 
 LAYOUTS = (
@@ -62,7 +62,7 @@ class Notebook:
 
     def draw(self, sheet: Sheet, *, whole: bool = False) -> list[Text]:
         """Draw a page of at most `height` lines; `whole`: a page that stays, as long as it needs to be."""
-        for layout in LAYOUTS:
+        for layout in (replace(LAYOUTS[0], points=_ALL), *LAYOUTS) if whole else LAYOUTS:
             if whole:  # of a page that stays no reason is cut, and no remark is left out
                 layout = replace(layout, reason_lines=_ALL, remarks=_ALL)
             head, tail = self._head(sheet, layout), self._tail(sheet, layout)
@@ -70,6 +70,9 @@ class Notebook:
             room = self.height - len(head) - len(tail)
             if room >= wanted:
                 break
+        if whole and sheet.weights and (spare := room - 1 - len(list(_grouped(sheet.events)))) > 0:
+            head = self._head(sheet, replace(layout, points=layout.points + spare))
+            room -= spare
         events = self._events(sheet.events, max(room, wanted if whole else 0))
         lines = [*head, *events, *tail]
         if whole or len(lines) <= self.height:
@@ -88,8 +91,11 @@ class Notebook:
         lines += gap
         lines += self._words("point", [sheet.point] if sheet.point else [], 1)
         lines += self._words("BER", [sheet.ber] if sheet.ber else [], 2)
-        bars = sheet.bars[max(0, sheet.ahead - layout.points) :]
+        bars = _kept(sheet, layout.points)
         lines += [self._entry(label[:MARGIN], line) for label, line in ruler(bars, self._room, self.signs)]
+        if sheet.weights and len(bars) < len(sheet.bars):
+            words = f"{len(bars)} of {len(sheet.bars)} points; `bitassay show RUN | cat` has all"
+            lines += self._words("", [words], 1)
         lines += gap
         if layout.details or len(sheet.points) <= FEW_POINTS:
             lines += self._words("points", sheet.points, 2)
@@ -196,6 +202,14 @@ class Notebook:
         if self.signs.margin != "|":
             return text
         return text.translate(_ASCII).encode("ascii", "replace").decode("ascii")
+
+
+def _kept(sheet: Sheet, points: int) -> Sequence[tuple[str, Bar]]:
+    """Leave out the bars that tell least: the first ones, or those that weigh least."""
+    if not sheet.weights:
+        return sheet.bars[max(0, sheet.ahead - points) :]
+    by_weight = sorted(range(len(sheet.bars)), key=lambda number: -sheet.weights[number])
+    return [sheet.bars[number] for number in sorted(by_weight[: points + 1])]
 
 
 def _grouped(events: Sequence[Event]) -> Iterator[tuple[Event, int]]:

@@ -6,6 +6,7 @@ how many bits, what is still to do, what happened meanwhile.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
@@ -29,6 +30,7 @@ from harness.cli.view.entries import (
     unit_name,
 )
 from harness.cli.view.forecast import STALLED_S, elapsed_s, moment, rates, still_to_do
+from harness.cli.view.meanwhile import meanwhile
 from harness.cli.view.ruler import Bar
 from harness.record import Event, Tally
 
@@ -54,6 +56,7 @@ class Sheet:
     ber: str = ""
     bars: Sequence[tuple[str, Bar]] = (("", Bar(0.0, 1.0)),)
     ahead: int = 0  # bars that may be left out where room is short: the first ones
+    weights: Sequence[float] = ()  # of bars of which the weightiest are kept where room is short
     point: str = ""  # which of several is measured
     path: str = ""  # what was measured
     bits: Sequence[str] = ()
@@ -167,17 +170,33 @@ def sheet_of_assessment(a: Assessment, where: str = "") -> Sheet:
     if len(a.points) < 2:
         return sheet
     looked_for = a.sensitivity["ber"] if a.sensitivity else None
+    points = sorted(a.points, key=lambda p: tuple(p.values.values()))  # a curve, however it was visited
+    events = meanwhile(a.points)
     return replace(
         sheet,
         ber=sensitivity_words(a.sensitivity),
-        bars=[(point_label(p), _bar(p, decided=False, looked_for=looked_for)) for p in a.points],
+        bars=[(point_label(p), _bar(p, decided=False, looked_for=looked_for)) for p in points],
+        weights=_weights(points, looked_for),
         bits=(),
         details=(),
         recent=(),
         points=_points(a),
-        to_do=[_took_in_all(a)],
-        events=[event for p in a.points for event in p.events],
+        to_do=[_took_in_all(a), *([] if events else ["nothing out of the ordinary happened meanwhile"])],
+        events=events,
     )
+
+
+def _weights(points: Sequence[PointAssessment], looked_for: float | None) -> list[float]:
+    """Say how much each point tells: the nearer to the ratio that is looked for, the more; a second visit less."""
+    seen: set[tuple[float, ...]] = set()
+    weights = []
+    for p in points:
+        weight = -100.0 if tuple(p.values.values()) in seen else 0.0
+        seen.add(tuple(p.values.values()))
+        if looked_for is not None and p.tally.compared:
+            weight += 50 - abs(math.log((p.tally.errors + 0.5) / p.tally.compared / looked_for))
+        weights.append(math.inf if p.verdict is not None else weight)
+    return weights
 
 
 def _required(a: Assessment) -> list[str]:
