@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import re
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from typing import Any
@@ -101,7 +102,7 @@ def _one_type(schema: Schema, defs: Schema) -> str:
         return "one of " + ", ".join(json.dumps(value) for value in schema["enum"])
     kind = schema.get("type")
     if kind == "array":
-        return f"list of {_type(schema.get('items', {}), defs)}"
+        return _list_type(schema, defs)
     word = {
         "string": "path" if schema.get("format") == "path" else "text",
         "integer": "whole number",
@@ -112,13 +113,43 @@ def _one_type(schema: Schema, defs: Schema) -> str:
     return word + _limits(schema)
 
 
+def _list_type(schema: Schema, defs: Schema) -> str:
+    """Say what a list holds; one of a fixed length says how many."""
+    fixed = schema.get("prefixItems")
+    if fixed:
+        kinds = list(dict.fromkeys(_type(item, defs) for item in fixed))
+        return (
+            f"list of {len(fixed)} {_plural(kinds[0])}" if len(kinds) == 1 else f"list of {', '.join(kinds)}"
+        )
+    return f"list of {_plural(_type(schema.get('items', {}), defs))}"
+
+
+def _plural(kind: str) -> str:
+    """Write a type's name for many: ``numbers, 0 to 1``."""
+    if kind.startswith("one of ") or " or " in kind or kind == "anything":
+        return kind
+    name, comma, limits = kind.partition(",")
+    return f"{name}s{comma}{limits}"
+
+
+def written(value: Any) -> str:
+    """Write a setting's value in one line: ``1e-6`` and not ``1e-06``, a list without brackets."""
+    if isinstance(value, bool):
+        return "true" if value else "false"
+    if isinstance(value, float):
+        return re.sub(r"e([+-])0*(?=[0-9])", lambda found: f"e{found[1].strip('+')}", f"{value:.12g}")
+    if isinstance(value, (list, tuple)):
+        return ", ".join(written(v) for v in value)
+    return str(value)
+
+
 def _limits(schema: Schema) -> str:
     low, over = schema.get("minimum"), schema.get("exclusiveMinimum")
     high, under = schema.get("maximum"), schema.get("exclusiveMaximum")
     if low is not None and high is not None:
-        return f", {low:g} to {high:.12g}"
+        return f", {written(float(low))} to {written(float(high))}"
     parts = [
-        f"{word} {value:.12g}"
+        f"{word} {written(float(value))}"
         for word, value in (("at least", low), ("over", over), ("at most", high), ("under", under))
         if value is not None
     ]
@@ -131,4 +162,7 @@ def _toml(value: Any) -> str:
         return "{ " + ", ".join(f"{k} = {_toml(v)}" for k, v in value.items()) + " }" if value else "{}"
     if isinstance(value, (list, tuple)):
         return "[" + ", ".join(_toml(v) for v in value) + "]"
+    if isinstance(value, float):
+        whole = value.is_integer() and abs(value) < 1e12
+        return f"{value:.1f}" if whole else written(value)
     return json.dumps(value, ensure_ascii=False)

@@ -27,6 +27,7 @@ from drivers.contract import (
     SendRefused,
     Traits,
 )
+from drivers.keys import written
 
 _DELAY_STEP_S = 1e-3  # bytes accepted within the same millisecond come back together
 
@@ -195,7 +196,8 @@ class LoopbackLink(Link):
             zip(self.section.channel, self._chain.seeds, strict=True), start=1
         ):
             keys = {**section.model_dump(exclude_defaults=True, exclude={"model", "seed"}), "seed": seed}
-            told[f"channel {number}"] = f"{section.model}: " + ", ".join(f"{k} {v}" for k, v in keys.items())
+            words = ", ".join(f"{key} {written(value)}" for key, value in keys.items())
+            told[f"channel {number}"] = f"{section.model}: {words}"
         return told
 
     def knobs(self) -> Mapping[str, Knob]:

@@ -3,12 +3,18 @@
 from __future__ import annotations
 
 import sys
+from collections import Counter
+from collections.abc import Iterator, Sequence
+from dataclasses import replace
 from typing import TYPE_CHECKING
 
 from harness.cli.output import print_json
 
 if TYPE_CHECKING:
+    from drivers.keys import Key
     from drivers.registry import Card
+
+TYPE_COLUMNS = 28
 
 
 def patterns(*, as_json: bool) -> int:
@@ -73,13 +79,45 @@ def drivers(name: str | None, *, as_json: bool) -> int:
         print_json({"schema": 1, "kind": card.kind, "driver": card.name, "origin": card.origin, "keys": keys})
         return 0
     print(f"{card.name} ({card.kind}, {card.origin}): {card.summary}")
-    for key in card.keys:
+    heading = ""
+    for key in _grouped(card.keys):
+        group = f"{key.name.rpartition('.')[0]} with {key.only_with}:" if key.only_with else ""
+        if group and group != heading:
+            print(f"\n  {group}")
+        elif heading and not group:
+            print()
+        heading = group
         default = "required" if key.required else f"default {key.default}" if key.default else "optional"
-        print(f"  {key.name:<24} {key.type:<28} {default}")
-        about = " · ".join(words for words in (key.only_with, key.description) if words)
-        if about:
-            print(f"  {'':<24} {about}")
+        name = f"  {key.name.rpartition('.')[2]}" if group else key.name
+        if len(key.type) > TYPE_COLUMNS:
+            print(f"  {name:<24} {key.type}")
+            print(f"  {'':<24} {'':<{TYPE_COLUMNS}} {default}")
+        else:
+            print(f"  {name:<24} {key.type:<{TYPE_COLUMNS}} {default}")
+        if key.description:
+            print(f"  {'':<24} {key.description}")
     return 0
+
+
+def _grouped(keys: Sequence[Key]) -> Iterator[Key]:
+    """Give keys in their order; one that all alternatives have alike comes once, before them."""
+    alternatives = {(key.name.rpartition(".")[0], key.only_with) for key in keys if key.only_with}
+    choices = Counter(where for where, _ in alternatives)
+    alike = Counter(replace(key, only_with="") for key in keys if key.only_with)
+    shared = {
+        key for key, times in alike.items() if times == choices[key.name.rpartition(".")[0]] and times > 1
+    }
+    said: set[str] = set()
+    for key in keys:
+        where = key.name.rpartition(".")[0]
+        if key.only_with and where not in said:
+            said.add(where)
+            chooser = key.only_with.partition(" = ")[0]
+            for common in alike:
+                if common in shared and common.name.rpartition(".")[0] == where:
+                    yield replace(common, only_with=f"any {chooser}")
+        if replace(key, only_with="") not in shared or not key.only_with:
+            yield key
 
 
 def _card(name: str) -> Card:

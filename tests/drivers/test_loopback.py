@@ -283,3 +283,12 @@ def test_rare_errors_keep_their_rate_and_never_overflow() -> None:
     assert (np.diff(places) > 0).all()
     rarest = Gaps(1e-300, np.random.default_rng(5))
     assert len(rarest.take(10**17)) == 0
+
+
+def test_the_link_tells_its_channel_in_plain_words() -> None:
+    link = loopback(
+        channel=[{"model": "independent", "ber": 1e-6}, {"model": "slip", "bits": -8, "at_bits": [80, 160]}]
+    )
+    told = link.describe()
+    assert told["channel 1"].startswith("independent: ber 1e-6, seed ")
+    assert told["channel 2"].startswith("slip: bits -8, at_bits 80, 160, seed ")
