@@ -8,6 +8,7 @@ import subprocess
 
 import pytest
 
+from harness.record import Event
 from harness.report import assemble
 from harness.report.figures.canvas import ON_A_PAGE, ON_PAPER, coloured
 from harness.report.figures.drawing import draw_all
@@ -70,7 +71,7 @@ def test_text_and_page_hold_the_numbers_of_the_assessment(cases, parsed, numbers
         wrong = [n for n in stated(material.assessment.to_json()) if not holds(n, among, 6e-6) and not (
             n in (material.assessment.sensitivity or {}).values() and holds(n, among, 6e-4))]  # fmt: skip
         assert wrong == []
-        assert (material.assessment.verdict or "none") in text
+        assert (material.assessment.verdict or "no verdict") in text
         assert material.run.key in text
         assert material.profile_digest in text
 
@@ -121,6 +122,27 @@ def test_a_sweep_shows_instruments_levels_and_the_sensitivity(cases):
         "1e-3 at",
     ):
         assert words in text
+
+
+def test_the_events_of_a_sweep_leave_out_what_every_point_begins_with(records, point):
+    start = 1_788_250_000 * 10**9
+    events = [
+        Event("instrument", None, "attenuator set to 58 dB, reads 58 dB", start),
+        Event("aligned", 0, "the pattern was found", start),
+        Event("delay", 0, "loop delay 0 bits", start),
+        Event("alignment_lost", 700, "the pattern was lost", start),
+        Event("aligned", 900, "the pattern was found again", start),
+    ]
+    settings = {"sweep": {"instrument": "attenuator"}}
+    points = [point([1, 2], {"attenuator": v}, {}, events, "bits") for v in (58.0, 60.0)]
+    text = to_text(assemble(records.make(points, command="sweep", settings=settings)))
+    course = text[text.index("── Course") : text.index("── What deviates")]
+    assert course.count("the pattern was found again") == course.count("the pattern was lost") == 2
+    assert "set to 58" not in course
+    assert "loop delay 0" not in course
+    assert "what every point begins with is left out" in course
+    plain = to_text(assemble(records.make([point([1, 2], {}, {}, events, "bits")])))
+    assert "loop delay 0 bits" in plain
 
 
 def test_both_directions_are_told_apart(cases):

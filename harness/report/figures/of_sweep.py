@@ -8,6 +8,7 @@ import numpy as np
 
 from harness.assess.assessment import PointAssessment
 from harness.assess.curve import Curve as Assessed
+from harness.assess.requirement import curve_axis
 from harness.assess.words import count, ratio
 from harness.report.document import Figure
 from harness.report.figures.drawings import Curve, CurvePoint, CurveSeries, Floats
@@ -42,13 +43,11 @@ def curve_of(material: Material) -> Figure | None:
 
 
 def _axis(material: Material) -> str:
-    """Give the axis along which curves run: the sweep's first."""
+    """Give the axis along which curves run: see `curve_axis`."""
     curves: Sequence[Assessed] = material.assessment.curves
     if curves:
         return curves[0].instrument
-    sweep = material.section("sweep")
-    axes = sweep.get("axes") or [sweep]
-    named = axes[0].get("instrument") or material.section("search").get("instrument")
+    named = curve_axis(material.run.settings)
     return str(named or next((name for m in material.points for name in m.point.values), ""))
 
 

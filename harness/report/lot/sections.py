@@ -93,7 +93,7 @@ def _verdict(material: LotMaterial) -> Verdict:
         return Verdict(f"{lot.failed} FAILED", words, "fail")
     if lot.verdict == "UNDECIDED":
         return Verdict("OPEN", words, "open")
-    return Verdict("none", "nothing was required", "none")
+    return Verdict("no verdict", "nothing was required", "none")
 
 
 def _some(items: list[str]) -> tuple[str, ...]:

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterator
 
 from harness.assess.words import count, duration, iso, percent, ratio
+from harness.record import Event
 from harness.report.document import Block, Column, Entries, Entry, Listing, Paragraph, Section, Table
 from harness.report.figures.of_spacing import bursts_of, gaps_of
 from harness.report.figures.of_time import course_figures
@@ -208,7 +209,7 @@ def _about(a: AvailabilityResult) -> Iterator[str]:
         )
     if a.idle:
         yield f"{count(a.idle, 'second')} in which nothing was due are left out"
-    if a.partial:
+    if a.partial and not any("partial second" in warning for warning in a.warnings):
         yield f"{count(a.partial, 'partial second')} left out"
     yield from a.warnings
 
@@ -273,7 +274,8 @@ def course_section(material: Material) -> Section:
 
 def _events(material: Material) -> Table | None:
     several = len(material.points) > 1
-    found = [(m, event) for m in material.points for event in m.assessed.events]
+    every = [(m, event) for m in material.points for event in m.assessed.events]
+    found = [(m, event) for m, event in every if not (material.swept and _ordinary(event))]
     found.sort(key=lambda pair: pair[1].at or 0)
     if not found:
         return None
@@ -296,5 +298,16 @@ def _events(material: Material) -> Table | None:
         Column("received bit"),
     )
     left = len(found) - len(shown)
-    note = f"{number(left)} events between the first and the last ones are not listed" if left else ""
-    return Table("", columns, rows, note)
+    notes = [f"{number(left)} events between the first and the last ones are not listed"] if left else []
+    if len(found) < len(every):
+        notes.append(
+            "what every point begins with is left out: its setting, finding the pattern, the loop delay"
+        )
+    return Table("", columns, rows, "; ".join(notes))
+
+
+def _ordinary(event: Event) -> bool:
+    """Whether an event is of those with which each point of a sweep begins."""
+    if event.kind == "aligned":
+        return event.bit == 0
+    return event.kind == "delay" or (event.kind == "instrument" and " set to " in event.text)

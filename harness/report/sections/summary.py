@@ -85,8 +85,8 @@ def _verdict(material: Material) -> Verdict:
     if a.verdict == "UNDECIDED":
         return Verdict("UNDECIDED", words, "open")
     if a.status in ("running", "cut"):
-        return Verdict("none yet", STATUS[a.status], "none")
-    return Verdict("none", "nothing was required", "none")
+        return Verdict("no verdict yet", STATUS[a.status], "none")
+    return Verdict("no verdict", "nothing was required", "none")
 
 
 def _how_sure(material: Material) -> Iterator[str]:
