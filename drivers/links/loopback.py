@@ -71,7 +71,8 @@ class LoopbackLink(Link):
     def __init__(self, section: LoopbackSection, nominal_bps: float | None = None) -> None:
         super().__init__(section, nominal_bps)
         self._chain = Chain(section.channel, Line(section.bit_order, nominal_bps))
-        self.traits = Traits(whole_bytes=self._chain.whole_bytes and section.delay_bits % 8 == 0)
+        whole_bytes = self._chain.whole_bytes and section.delay_bits % 8 == 0
+        self.traits = Traits(whole_bytes=whole_bytes, ends_with_input=True)
         self._delay: BitDelay | None = None
         self._channel = Lock()  # held while bits pass through the chain, or a knob is turned
         self._sending = Lock()

@@ -19,7 +19,7 @@ from time import monotonic, sleep
 
 from pydantic import Field
 
-from drivers.contract import EndOfStream, LinkError, LinkLost, OpenFailed, Section, SendRefused
+from drivers.contract import EndOfStream, LinkError, LinkLost, OpenFailed, Section, SendRefused, Traits
 from drivers.links.descriptor import DescriptorLink
 
 _PIPE_BYTES = 1 << 20  # asked for; the system may give less
@@ -47,6 +47,7 @@ class ProcessLink(DescriptorLink):
 
     Section = ProcessSection
     section: ProcessSection
+    traits = Traits(ends_with_input=True)
 
     def __init__(self, section: ProcessSection, nominal_bps: float | None = None) -> None:
         super().__init__(section, nominal_bps)

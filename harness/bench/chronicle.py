@@ -34,9 +34,11 @@ class Chronicle:
         """Take an event from another thread."""
         self._posted.append(event)
 
-    def happened(self, kind: str, text: str, at_ns: int, data: Mapping[str, object], bit: int) -> None:
+    def happened(self, kind: str, text: str, at_ns: int, data: Mapping[str, object], bit: int) -> Event:
         """Enter what happened at a received bit, at a monotonic time."""
-        self.keep(Event(kind, bit, text, at_ns + self._wall_ns, data))
+        event = Event(kind, bit, text, at_ns + self._wall_ns, data)
+        self.keep(event)
+        return event
 
     def stamped(self, event: Event, at_ns: int) -> Event:
         """Give a counter's event its time."""

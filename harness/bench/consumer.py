@@ -11,6 +11,7 @@ from dataclasses import dataclass, replace
 from harness.assess.feed import PlanFeed
 from harness.assess.words import count, duration, slip_words
 from harness.bench.arrivals import Arrivals
+from harness.bench.beyond import beyond_words, cut_off
 from harness.bench.book import Book
 from harness.bench.chronicle import Chronicle
 from harness.bench.missing import Missing
@@ -86,6 +87,7 @@ class Consumer(threading.Thread):
         self._held: list[Segment] = []  # of a second whose positions were cut: one look at its end
         self._mark_bits: deque[int] = deque()
         self._first_delay_bits: int | None = None
+        self._ending = False  # nothing more will come
         self.tally = Tally()
         self.after = Tally()
         self.decision: Decision | None = None
@@ -135,6 +137,7 @@ class Consumer(threading.Thread):
             self._ask_stop("bits")
 
     def _finish(self) -> None:
+        self._ending = True
         self._absorb(self._counter.finish())
         self._look(whole_second=True)
         self._missing.take_given_up()
@@ -218,7 +221,26 @@ class Consumer(threading.Thread):
             if self.decision is not None:
                 self.after += segment.tally
                 return
-        segment = self._stamp(segment)
+        for part in self._never_sent(self._stamp(segment)):
+            self._absorb_part(part)
+
+    def _never_sent(self, segment: Segment) -> list[Segment]:
+        """At the stream's end: the segment, with what came after the last bit sent cut off as inserted."""
+        sent_end = None if self._places is None or not self._ending else self._places.sent_end
+        extra = 0 if sent_end is None else min(segment.end - sent_end, self._missing.surplus())
+        if extra <= 0 or not segment.aligned or segment.known_bits < segment.tally.received - extra:
+            return [segment]
+        bit = segment.end - extra
+        at = self._arrived(bit)
+        data = {"bits": extra, "modulo": None}
+        slip = self._chronicle.happened("slip", beyond_words(extra), at, data, bit)
+        self._missing.explained(extra)
+        return list(cut_off(segment, bit, slip))
+
+    def _absorb_part(self, segment: Segment) -> None:
+        if self.decision is not None:
+            self.after += segment.tally
+            return
         if segment.aligned and segment.tally.compared:
             self._follow(segment)
         plan = self._rules.plan

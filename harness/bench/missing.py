@@ -77,6 +77,10 @@ class Missing:
         """Bits that are still out at the end."""
         return self._traffic.in_flight() if self.sends else 0
 
+    def surplus(self) -> int:
+        """Bits that came beside all that were sent, and that no slip explains."""
+        return self._traffic.surplus()
+
     def never_returned(self, left: int) -> int:
         """Bits that were sent and never came back, as far as no slip says it already."""
         return left + min(self._unexplained, self._traffic.written_off_bits)

@@ -70,8 +70,9 @@ class Places:
         pieces, and the last of a piece says best how many were on their way.
         """
         sent_by = self._traffic.sent_by(arrived_ns)
-        # The last bit of the piece: the first ones of a stream may never have been sent.
-        last = max(came_with - 1, bit)
+        # The last bit of the piece, as the first ones of a stream may never have been sent; nor may the last ones,
+        # where more came than was sent.
+        last = max(min(came_with, self._traffic.perhaps_sent_by(arrived_ns)) - 1, bit)
         offset, bit = place - self._first_place + last - bit, last
         if self._period is None or self._modulo is None:
             sent_bit, modulo = offset, None
@@ -94,6 +95,11 @@ class Places:
         if sent_by <= sent_bit:
             return None
         return Delay(max(0, sent_by - sent_bit - 1), seconds, modulo)
+
+    @property
+    def sent_end(self) -> int | None:
+        """Received bit that the bit after the last one sent would be; None before anything was aligned."""
+        return None if self.ahead is None else self._traffic.sent_bits - self.ahead
 
     @property
     def least_out(self) -> int | None:

@@ -63,6 +63,7 @@ class BenchRun:
         self._requirement = requirement_of(self._settings)
         self._links = Links(profile.need_link(), hooks.interrupted)
         self._ways = ways_of(profile, self._links)
+        self._several = profile.sweep is not None or profile.search is not None
         self._route = route_of(profile, cut, len(self._ways))
         self._record = RecordKeeping(profile, store, hooks, command=command, cut=cut)
         self._next_tick = 0.0
@@ -292,7 +293,8 @@ class BenchRun:
             index_step=len(self._ways),
             base_bit=had.received if had else 0,
             base_compared=had.compared if had else 0,
-            silence_is_a_result=self._profile.sweep is not None or self._profile.search is not None,
+            silence_is_a_result=self._several,
+            last=not self._several and len(self._ways) == 1 and not link.after,
         )
         return Measurement(
             chosen.sending,

@@ -50,6 +50,7 @@ class Setup:
     base_compared: int = 0
     index_step: int = 1  # two directions at once number their seconds in turns
     silence_is_a_result: bool = False  # a sweep's point without a bit: a result, not a fault
+    last: bool = False  # nothing is sent over the link afterwards, so that its sending side may be closed
 
 
 @dataclass(frozen=True, slots=True)

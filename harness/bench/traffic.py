@@ -50,6 +50,11 @@ class Traffic:
         with self._lock:
             return max(0, self._out())
 
+    def surplus(self) -> int:
+        """Bits that came beside those sent and were not seen to be invented; late ones may be among them."""
+        with self._lock:
+            return max(0, -self._out()) + self._taken_back
+
     def _out(self) -> int:
         return self._sent - (self._received - self._invented) - self._written_off
 
