@@ -9,7 +9,7 @@ from collections.abc import Iterator, Mapping
 from contextlib import contextmanager
 from typing import TYPE_CHECKING, TextIO
 
-from harness.assess.words import count, duration, ratio
+from harness.assess.words import count, duration, local_time, ratio
 from harness.cli.view.ink import writable
 
 if TYPE_CHECKING:
@@ -19,6 +19,7 @@ if TYPE_CHECKING:
 
 LINE_EVERY_S = 5.0
 BACK = "the store can be reached again"
+EVENTS_AT_ONCE = 4  # said between two lines
 QUIET_S = 1.5  # without news from the bench for so long, the run is being closed
 
 
@@ -100,8 +101,10 @@ class LineWatcher(Watcher):
                     if shown is None or shown.point.started != latest.point.started:
                         events_said = 0
                     next_at, shown = now + self._every_s, latest
-                    self._say(progress_line(latest, time.time_ns(), events_said))
-                    events_said = len(latest.point.events)
+                    for line in event_lines(latest, events_said):
+                        self._say(line)
+                    events_said = sum(len(way.point.events) for way in (latest, *latest.beside))
+                    self._say(f"{local_time(time.time_ns())}  {progress_line(latest, time.time_ns())}")
         except (OSError, ValueError):
             return  # nobody reads any more: the run goes on unseen
 
@@ -171,8 +174,23 @@ class PageWatcher(Watcher):
         return sheet_of_progress(progress, now_ns, closing=closing, behind_s=behind_s)
 
 
-def progress_line(progress: Progress, now_ns: int, events_said: int = 0) -> str:
-    """Say the state of a run in one line, with the latest event where it is not one of those said before."""
+def event_lines(progress: Progress, said: int) -> list[str]:
+    """Say what happened since so many events had been said, each in a line with its time of day."""
+    ways = (progress, *progress.beside)
+    named = [
+        (event, f"{way.point.facts.get('direction')}: " if progress.beside else "")
+        for way in ways
+        for event in way.point.events
+    ]
+    new = sorted(named, key=lambda pair: pair[0].at or 0)[said:]
+    lines = [f"{local_time(event.at):>8}  {name}{event.text}" for event, name in new[-EVENTS_AT_ONCE:]]
+    if len(new) > EVENTS_AT_ONCE:
+        lines.insert(0, f"{'':>8}  … {count(len(new) - EVENTS_AT_ONCE, 'further event')}")
+    return lines
+
+
+def progress_line(progress: Progress, now_ns: int) -> str:
+    """Say the state of a run in one line."""
     from harness.cli.view.entries import point_name
     from harness.cli.view.forecast import still_to_do
 
@@ -180,16 +198,16 @@ def progress_line(progress: Progress, now_ns: int, events_said: int = 0) -> str:
     of_all = f" of {progress.visits}" if progress.visits > progress.number else ""
     at = f" ({point_name(p)})" if p.values else ""
     point = f"point {progress.number + 1}{of_all}{at}, " if progress.visits != 1 else ""
-    parts = [f"{point}{duration(round(progress.elapsed_s))}"]
+    after = f"{point}after {duration(round(progress.elapsed_s))}: "
+    parts: list[str] = []
     for way in (progress, *progress.beside):
         counted = _counted(way)
         name = way.point.facts.get("direction") if progress.beside else None
         parts += [f"{name}: {counted[0]}" if name else counted[0], *counted[1:]]
+    parts[0] = after + parts[0]
     if p.plan is not None or progress.stop.any:
         last = next((w for w in (progress, *progress.beside) if not w.outlook.decided), progress)
         parts.append(still_to_do(last, now_ns)[0])
-    if len(p.events) > events_said:
-        parts.append(p.events[-1].text)
     return " · ".join(parts)
 
 
@@ -199,8 +217,9 @@ def _counted(progress: Progress) -> list[str]:
 
     p, t = progress.point, progress.point.tally
     parts = [
-        f"{count(t.errors, 'error')} in {count(t.compared, 'bit')}",
-        f"BER {ratio(p.ber)}" if t.compared else "nothing compared yet",
+        f"{count(t.errors, 'error')} in {count(t.compared, 'bit')}, BER {ratio(p.ber)}"
+        if t.compared
+        else "nothing compared yet"
     ]
     if t.unaligned:
         parts.append(f"{count(t.unaligned, 'bit')} unaligned")

@@ -123,7 +123,7 @@ def test_a_line_says_where_the_sweep_is(making):
     progress = making.progress([0])
     p = replace(progress.point, values={"att": 34.5})
     line = progress_line(replace(progress, point=p, number=3, visits=11), making.start + 10**9)
-    assert line.startswith("point 4 of 11 (att 34.5), 1 s · ")
+    assert line.startswith("point 4 of 11 (att 34.5), after 1 s: ")
 
 
 def test_a_new_point_waits_for_no_second_of_the_time_before_it(making, monkeypatch):

@@ -11,7 +11,7 @@ import time
 import pytest
 
 from harness.assess.requirement import Requirement
-from harness.cli.watch import LineWatcher, progress_line
+from harness.cli.watch import LineWatcher, event_lines, progress_line
 
 LONG = Requirement(ber=1e-6, accept_errors=3)
 
@@ -25,7 +25,7 @@ def said(making, progress, **more) -> str:
 def test_a_line_says_counts_ratio_and_what_is_still_to_do(making, utc):
     line = said(making, making.progress([0, 1, 0, 0, 0], requirement=LONG))
     assert line.startswith(
-        "5 s · 1 error in 240 000 bits · BER 4.17e-6 · 7 513 655 bits to the decision, about"
+        "after 5 s: 1 error in 240 000 bits, BER 4.17e-6 · 7 513 655 bits to the decision, about"
     )
 
 
@@ -41,10 +41,20 @@ def test_a_line_says_what_was_not_aligned_and_slips(making):
     assert "1 slip" in line
 
 
-def test_an_event_is_said_once(making):
-    progress = making.progress([0], [making.event("aligned", "the pattern was found")])
-    assert said(making, progress).endswith("the pattern was found")
-    assert "found" not in said(making, progress, events_said=1)
+def test_an_event_has_a_line_of_its_own_with_its_time_and_is_said_once(making, utc):
+    utc()
+    progress = making.progress([0], [making.event("aligned", "the pattern was found", 3)])
+    (line,) = event_lines(progress, 0)
+    assert line == "08:06:43  the pattern was found"
+    assert event_lines(progress, 1) == []
+    assert "found" not in said(making, progress)
+
+
+def test_of_many_events_the_latest_are_said_and_the_others_counted(making):
+    events = [making.event("slip", f"slip {number}", number) for number in range(10)]
+    lines = event_lines(making.progress([0], events), 1)
+    assert lines[0].strip() == "… 5 further events"
+    assert [line.split("  ")[1] for line in lines[1:]] == ["slip 6", "slip 7", "slip 8", "slip 9"]
 
 
 def test_the_run_is_named_first_and_lines_follow(making):
@@ -60,7 +70,7 @@ def test_the_run_is_named_first_and_lines_follow(making):
     watcher.stop()
     lines = said.getvalue().decode().splitlines()
     assert lines[0] == "run 01a2"
-    assert all(line.startswith("1 s · 0 errors") for line in lines[1:])
+    assert all(line[8:].startswith("  after 1 s: 0 errors") for line in lines[1:])
 
 
 @pytest.mark.parametrize("closed", [False, True])
