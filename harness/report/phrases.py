@@ -100,3 +100,8 @@ def on_bits(p: PointAssessment) -> str:
         return f"none: the pattern was not found in the {count(t.received, 'bit')} that came"
     errors = count(t.errors, "error") if t.errors else "no error"
     return f"{errors} in {count(t.compared, 'compared bit')}"
+
+
+def fault_words(material: Material) -> str:
+    """Say what failed, in the fault's own words; empty where nothing did."""
+    return "; ".join(e.text for m in material.points for e in m.assessed.events if e.kind == "fault")

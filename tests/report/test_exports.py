@@ -12,11 +12,14 @@ from xml.etree import ElementTree as ET
 import jsonschema
 import pytest
 
-from harness.record import Note
+from harness.record import Event, Note
+from harness.report import assemble
 from harness.report.exports.data import schema_text, write_json
 from harness.report.exports.tables import write_points, write_seconds
 from harness.report.exports.testcases import write_junit
+from harness.report.text import to_text
 
+FIXED = {"ber": 1e-4, "confidence": 0.95, "plan": "fixed", "accept_errors": 12}
 KINDS = (
     "pass", "fail", "undecided", "sequential pass", "outages", "bursts", "measured only", "never aligned",
     "nothing came", "sweep", "duplex", "running",
@@ -222,3 +225,16 @@ def test_a_verdict_on_the_sensitivity_has_a_case_of_its_own(cases, verdict, expe
     judged = replace(material.assessment, verdict=verdict, reasons=("the sensitivity is 60.03 dB",))
     found = suite_of(replace(material, run=run, assessment=judged))
     assert [outcome(case) for case in found] == ["skipped"] * 5 + [expected]
+
+
+def test_a_refused_connection_is_a_fault_and_no_verdict_on_the_unit(records, point):
+    refused = Event("fault", None, "127.0.0.1:5310 refused the connection", 1_788_250_000 * 10**9)
+    material = records.make([point([], {}, {}, [refused], "fault")], FIXED, status="failed")
+    case = suite_of(material)[0]
+    assert outcome(case) == "error"
+    error = case.find("error")
+    assert error.get("type") == "FAULT"
+    assert error.get("message") == "127.0.0.1:5310 refused the connection"
+    text = to_text(assemble(material))
+    assert "something failed: 127.0.0.1:5310 refused the connection" in " ".join(text.split())
+    assert "no slip, no unaligned bit" not in text

@@ -18,6 +18,7 @@ from harness.report.phrases import (
     bounds_words,
     deciding_words,
     digits,
+    fault_words,
     on_bits,
     point_name,
     unit_name,
@@ -103,10 +104,11 @@ def _overall(material: Material) -> tuple[Outcome, str, str] | None:
         return "error", "RECORD", f"the record does not hold: {'; '.join(material.broken)}"
     if material.void_notes:
         return "error", "VOID", "; ".join(f"void: {n.text} ({n.who})" for n in material.void_notes)
-    if material.run.status != "completed":
-        fault = [e.text for m in material.points for e in m.assessed.events if e.kind == "fault"]
-        status = material.run.status
-        return "error", status.upper(), f"{STATUS[status]}{': ' if fault else ''}{'; '.join(fault)}"
+    status = material.run.status
+    if status != "completed":
+        # A fault is no FAIL: the type must not be read as a verdict on the unit.
+        fault = fault_words(material)
+        return "error", "FAULT" if status == "failed" else status.upper(), fault or STATUS[status]
     return None
 
 

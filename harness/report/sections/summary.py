@@ -13,6 +13,7 @@ from harness.report.phrases import (
     ber_name,
     bounds_words,
     deciding_words,
+    fault_words,
     on_bits,
     point_name,
     span,
@@ -151,8 +152,10 @@ def _bits(material: Material) -> Iterator[str]:
 def _meanwhile(material: Material, found: list[str]) -> Iterator[str]:
     a = material.assessment
     why = how_it_ended(a.status, a.ended_by)
-    yield span(a.started, a.ended) + (f"; {why}" if why else "")
-    yield ", ".join(found) if found else "no slip, no unaligned bit, no lost link"
+    fault = fault_words(material) if a.status == "failed" else ""
+    yield span(a.started, a.ended) + (f"; {why}" if why else "") + (f": {fault}" if fault else "")
+    if found or a.whole.tally.received:
+        yield ", ".join(found) if found else "no slip, no unaligned bit, no lost link"
     said = sum(len(items) for _title, items in deviations(material))
     if said:
         yield f"{count(said, 'thing')} to know about this run: see “What deviates”"
