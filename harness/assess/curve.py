@@ -9,14 +9,14 @@ from statistics import NormalDist
 from typing import Any
 
 from harness.assess.assessment import PointAssessment
+from harness.assess.requirement import curve_axis
 from harness.assess.words import percent, ratio
 from harness.statistics.bracket import Bracket, bracket_of
 from harness.statistics.comparing import compare_counts
+from harness.statistics.conditions import rises_with
 from harness.statistics.curve import CurveFit, CurvePoint, fit_curve
 
 DEFAULT_CONFIDENCE = 0.95
-RISES = ("attenuation", "loss")  # quantities with which the BER rises
-FALLS = ("level", "power", "gain", "ebn0", "snr")  # and with which it falls
 NOTICEABLE = 0.99  # confidence at which drift and hysteresis are called
 
 
@@ -72,10 +72,8 @@ class Curve:
 
 
 def curves_of(settings: Mapping[str, Any], points: Sequence[PointAssessment]) -> list[Curve]:
-    """Sort a sweep's points into curves along its first axis, one for each setting of the others."""
-    sweep = settings.get("sweep") or settings.get("search") or {}
-    axes = sweep.get("axes") or [{"instrument": sweep.get("instrument")}]
-    name = axes[0]["instrument"]
+    """Sort a sweep's points into curves along one axis, one for each setting of the others."""
+    name = curve_axis(settings)
     if not name:
         return []
     groups: dict[tuple[tuple[str, float], ...], list[PointAssessment]] = {}
@@ -107,7 +105,7 @@ def _curve(
     unit = str((points[0].facts.get("units") or {}).get(name, ""))
     confidence = float((settings.get("requirement") or {}).get("confidence") or DEFAULT_CONFIDENCE)
     fit = bracket = sure = None
-    search, rising, contrary = settings.get("search"), rises_with(settings, name), ""
+    search, rising, contrary = settings.get("search"), _rises_with(settings, name), ""
     counted = [_counted(p, name) for p in points]
     if search:
         target, confidence = search["ber"], float(search["confidence"])
@@ -145,10 +143,10 @@ def _curve(
     )
 
 
-def rises_with(settings: Mapping[str, Any], name: str) -> bool | None:
+def _rises_with(settings: Mapping[str, Any], name: str) -> bool | None:
     """Whether the BER rises with what an instrument sets; None where its quantity does not say."""
     quantity = str(((settings.get("instruments") or {}).get(name) or {}).get("quantity") or "").casefold()
-    return True if quantity in RISES else False if quantity in FALLS else None
+    return rises_with(quantity)
 
 
 def _contrary(fit: CurveFit, rising: bool | None, name: str) -> str:

@@ -8,6 +8,7 @@ from typing import Any, Literal
 
 from harness.assess.words import ratio
 from harness.record import Run
+from harness.statistics.conditions import Condition, curve_along
 from harness.statistics.objectives import Objectives
 from harness.statistics.plans import Plan, make_plan
 
@@ -81,6 +82,33 @@ def units_of(run: Run) -> dict[str, str]:
     return units
 
 
+def curve_axis(settings: Mapping[str, Any]) -> str:
+    """Name the instrument along which a run's curves run; empty where it has none."""
+    search, sweep = settings.get("search") or {}, settings.get("sweep") or {}
+    if search.get("instrument"):
+        return str(search["instrument"])
+    instruments = settings.get("instruments") or {}
+    axes = sweep.get("axes") or [sweep]
+    return curve_along(
+        [
+            Condition(
+                str(axis["instrument"]),
+                str((instruments.get(axis["instrument"]) or {}).get("quantity") or "").casefold(),
+                _how_many(axis.get("values")),
+            )
+            for axis in axes
+            if axis.get("instrument")
+        ]
+    )
+
+
+def _how_many(values: Any) -> int:
+    """Count the values of an axis, listed or from start to stop."""
+    if not isinstance(values, Mapping):
+        return len(values or ())
+    return int(abs(float(values["stop"]) - float(values["start"])) / float(values["step"]) + 1e-9) + 1
+
+
 def required_sensitivity(run: Run) -> str:
     """Say which sensitivity is required: ``sensitivity at BER 1e-6 at least 54 dB``; empty where none is."""
     asked = (run.settings.get("requirement") or {}).get("sensitivity_at_least")
@@ -88,8 +116,7 @@ def required_sensitivity(run: Run) -> str:
         return ""
     sweep: Mapping[str, Any] = run.settings.get("sweep") or {}
     search: Mapping[str, Any] = run.settings.get("search") or {}
-    axes = sweep.get("axes") or [sweep]
-    unit = units_of(run).get(axes[0].get("instrument") or search.get("instrument") or "", "")
+    unit = units_of(run).get(curve_axis(run.settings), "")
     ber = sweep.get("sensitivity_ber") or search.get("ber")
     at = f" at BER {ratio(float(ber))}" if ber else ""
     return f"sensitivity{at} at least {float(asked):g} {unit}".rstrip()

@@ -160,8 +160,17 @@ def _common_remarks(points: list[PointAssessment], curves: list[Any]) -> tuple[s
     """Collect what has to be said of a sweep as a whole: calibrations, what moved, the fit, drift, hysteresis."""
     overdue = dict.fromkeys(words for point in points for words in point.facts.get("overdue", ()))
     moved = [f"{_name(point)}: {words}" for point in points for words in point.moved]
-    fits = [_beyond_the_value(curve.fit) for curve in curves if curve.fit is not None]
-    return (*overdue, *moved, *filter(None, fits), *(remark for curve in curves for remark in curve.remarks))
+    return (*overdue, *moved, *_of_curves(curves))
+
+
+def _of_curves(curves: list[Any]) -> list[str]:
+    """Give what each curve's fit and its points bring to be said, with its own setting where there are several."""
+    said = []
+    for curve in curves:
+        words = [] if curve.fit is None else [_beyond_the_value(curve.fit)]
+        at = ", ".join(f"{name} {value:g}" for name, value in curve.at.items())
+        said += [f"{at}: {text}" if at else text for text in (*words, *curve.remarks) if text]
+    return said
 
 
 def _beyond_the_value(fit: Any) -> str:

@@ -84,7 +84,7 @@ class ListRoute(Route):
             self._highest = max(self._highest, unfinished.index)
             self._left.append(Visit(unfinished.index, dict(unfinished.values), facts={"again": True}))
         self._guard = profile.sweep.guard if profile.sweep is not None else 0
-        self._axis = profile.sweep.all_axes()[0].instrument if profile.sweep is not None else ""
+        self._axis = profile.curve_axis
 
     def next(self, done: Sequence[PointAssessment]) -> Visit | None:
         """Give the next visit, leaving out those where hope is gone."""

@@ -49,7 +49,7 @@ class Schedule:
         self.deadline: float | None = None  # of the clock
         sweep = profile.sweep
         if sweep is not None:
-            self._axis, self._target = sweep.all_axes()[0].instrument, sweep.sensitivity_ber
+            self._axis, self._target = profile.curve_axis, sweep.sensitivity_ber
             if sweep.finish_by is not None:
                 self.deadline = self._begun + seconds_until(str(sweep.finish_by), now)
 

@@ -13,9 +13,9 @@ from harness.bench.route import ListRoute, Route
 from harness.bench.terms import StopRules
 from harness.bench.visits import Visit
 from harness.profile import Profile
-from harness.profile.checks import RISES
 from harness.profile.sweeps import Search
 from harness.record import Point, Run
+from harness.statistics.conditions import rises_with
 from harness.statistics.curve import CurvePoint
 from harness.statistics.search import Found, SearchSpace, Step, next_step
 
@@ -112,7 +112,7 @@ def space_of(profile: Profile, search: Search) -> SearchSpace:
         high=search.high,
         target_ber=search.ber,
         width=search.resolution,
-        rising=quantity in RISES,
+        rising=rises_with(quantity) is True,
         resolution=search.step or fine_step(search.resolution),
         confidence=search.confidence,
         most_bits=search.max_bits,

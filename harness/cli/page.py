@@ -58,7 +58,7 @@ def page(a: Assessment, where: str = "") -> Iterator[str]:
     yield from _entry("took", sheet.to_do)
     yield ""
     if sheet.points:
-        yield from _entry("BER", [sheet.ber] if sheet.ber else [])
+        yield from _entry("BER", [*([sheet.ber] if sheet.ber else []), *sheet.sensitivities])
         yield from _entry("remarks", list(sheet.remarks))
         yield from _told(sheet.events)
         yield ""

@@ -7,15 +7,12 @@ from pathlib import Path
 from typing import Any
 
 from drivers.instruments.condition import QUANTITIES
+from harness.statistics.conditions import rises_with
 
 from .links import InstrumentSettings, LinkSettings
 from .problems import ProfileError, nearest
 from .profile import Profile
 from .requirement import PatternChoice
-from .sweeps import Search, Sweep
-
-RISES = ("attenuation", "loss")  # the more of it, the more errors
-FALLS = ("level", "power", "gain", "ebn0", "snr")
 
 
 def check(profile: Profile) -> None:
@@ -164,7 +161,7 @@ def _within(profile: Profile, name: str, values: tuple[float, ...], path: str) -
 def _searched(profile: Profile, name: str) -> None:
     options = profile.instruments[name].options
     quantity, unit = getattr(options, "quantity", ""), getattr(options, "unit", "")
-    if quantity not in (*RISES, *FALLS) or unit not in ("dB", "dBm", "dBW"):
+    if rises_with(quantity) is None or unit not in ("dB", "dBm", "dBW"):
         raise ProfileError(
             f"a search goes along decibels, and {name} sets {quantity or 'something'} in {unit or 'no unit'}",
             "search over an attenuation, a level, a gain or a signal-to-noise ratio; sweep over the rest",
@@ -237,14 +234,15 @@ def _conditions(profile: Profile) -> None:
             "requirement.sensitivity_at_least needs to know at which BER", "add sensitivity_ber to [sweep]"
         )
     if requirement.sensitivity_at_least is not None:
-        _within_reach(requirement.sensitivity_at_least, sweep, search)
+        _within_reach(requirement.sensitivity_at_least, profile)
 
 
-def _within_reach(least: float, sweep: Sweep | None, search: Search | None) -> None:
+def _within_reach(least: float, profile: Profile) -> None:
     """A sensitivity beyond what is measured can never be demonstrated."""
+    search, sweep = profile.search, profile.sweep
     values: tuple[float, ...] = () if search is None else (search.low, search.high)
-    if sweep is not None:
-        values = sweep.all_axes()[0].listed()
+    for axis in sweep.all_axes() if sweep is not None else ():
+        values = axis.listed() if axis.instrument == profile.curve_axis else values
     low, high = min(values), max(values)
     if not low <= least <= high:
         raise ProfileError(

@@ -7,6 +7,8 @@ from typing import Any, Literal
 
 from pydantic import Field, PrivateAttr
 
+from harness.statistics.conditions import Condition, curve_along
+
 from .basics import PlainText, ProfileSection
 from .lab import Correction, Level, Lot
 from .links import CounterSettings, DrivenSection, InstrumentSettings, LinkSettings
@@ -84,6 +86,20 @@ class Profile(ProfileSection):
                 "this profile has an error counter and no link", "use a profile with [link] for this command"
             )
         return self.link
+
+    @property
+    def curve_axis(self) -> str:
+        """The instrument along which a sweep's or a search's curves run; empty where there is neither."""
+        if self.search is not None:
+            return self.search.instrument
+        axes = self.sweep.all_axes() if self.sweep is not None else ()
+        return curve_along(
+            [Condition(a.instrument, self._quantity(a.instrument), len(a.listed())) for a in axes]
+        )
+
+    def _quantity(self, name: str) -> str:
+        options = self.instruments[name].options if name in self.instruments else None
+        return str(getattr(options, "quantity", None) or "").casefold()
 
     def resolved(self) -> dict[str, Any]:
         """Give all keys as TOML would have them, defaults included; JSON values only, never NaN."""

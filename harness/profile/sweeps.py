@@ -99,7 +99,7 @@ class TheoryMap(ProfileSection):
     modulation: str
     """As for `bitassay theory`."""
     value: float
-    """A value of the first axis …"""
+    """A value of the axis along which curves run …"""
     ebn0_db: float
     """… and the Eb/N0 there, dB."""
     slope: Literal[-1, 1] = -1
@@ -118,7 +118,7 @@ class Sweep(ProfileSection):
     seed: WholeNumber = 1
     """Short form, shuffled: which order."""
     axes: Annotated[tuple[Axis, ...], FromList] = ()
-    """Several conditions."""
+    """Several conditions. Curves run along the one in decibels, and of several such the one with the most values."""
     return_trip: bool = False
     """Visit the points again in reverse order, which shows hysteresis."""
     reference: float | None = None

@@ -329,9 +329,8 @@ def _words(
     unit: str,
 ) -> str:
     if value is None:
-        return (
-            f"The curve levels off at a BER of {ratio(floor, 2)}, over the target {ratio(target_ber)}: no sensitivity."
-        )
+        levels_off = f"The curve levels off at a BER of {ratio(floor, 2)}"
+        return f"{levels_off}, over the target {ratio(target_ber)}: no sensitivity."
     shown = [f"{b:.2f}" if b is not None else "no bound" for b in (low, high)]
     said = [
         f"BER {ratio(target_ber)} is reached at {value:.2f} {unit} ({shown[0]} to {shown[1]}, "

@@ -10,6 +10,7 @@ from typing import Any
 import pytest
 
 from harness.assess.run import assess
+from harness.cli.view.sheet import sheet_of_assessment
 from harness.record import Event, Point, Run, Second, Tally
 
 BITS = 1_000_000
@@ -180,3 +181,23 @@ def test_a_requirement_that_stands_for_no_point_is_said_to_judge_nothing(sweep):
         assert not any(
             "nothing was judged" in r for r in assess(sweep(counts_of(STEPS), **named)).whole.remarks
         )
+
+
+def test_each_temperature_has_a_curve_of_its_own_whichever_axis_is_the_slow_one(sweep):
+    run = sweep(counts_of(STEPS), 32.5)
+    cold = counts_of(STEPS, lambda value: ber_at(value + 1.5))  # 1.5 dB deaf at -20 degrees
+    again = sweep(cold, 32.5)
+    points = [replace(p, values={"oven": 25.0, **p.values}) for p in run.points]
+    points += [
+        replace(p, index=p.index + 100, values={"oven": -20.0, **p.values}, seconds=p.seconds)
+        for p in again.points
+    ]
+    axes = [{"instrument": "oven", "values": [25, -20]}, {"instrument": "att", "values": STEPS}]
+    settings = {**run.settings, "sweep": {"axes": axes, "sensitivity_ber": 1e-3}}
+    settings["instruments"] = {**settings["instruments"], "oven": {"quantity": "temperature", "unit": "C"}}
+    found = assess(replace(run, points=tuple(points), settings=settings))
+    values = {s["at"]["oven"]: s["value"] for s in found.more["sensitivities"]}
+    assert values == {25.0: pytest.approx(CROSSING, abs=0.1), -20.0: pytest.approx(CROSSING - 1.5, abs=0.1)}
+    assert found.verdict == "FAIL"
+    sheet = sheet_of_assessment(found)
+    assert [words.partition(":")[0] for words in sheet.sensitivities] == ["oven 25", "oven -20"]

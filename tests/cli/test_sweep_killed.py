@@ -159,7 +159,8 @@ def test_a_sweep_ended_by_ctrl_c_is_safe_at_once_and_can_go_on(bitassay, attenua
 
 
 @pytest.mark.campaign
-def test_a_sweep_killed_20_times_equals_one_that_was_not(attenuated, tmp_path):
+@pytest.mark.parametrize("late_s", [0.0, 0.4])  # a slow attenuator makes a slow guardian
+def test_a_sweep_killed_20_times_equals_one_that_was_not(attenuated, tmp_path, late_s):
     sweep = "[sweep]\ninstrument = 'attenuator'\nvalues = { start = 32, stop = 36, step = 0.5 }\n"
     rate = 400_000
     records = []
@@ -167,7 +168,7 @@ def test_a_sweep_killed_20_times_equals_one_that_was_not(attenuated, tmp_path):
         folder = tmp_path / name
         folder.mkdir()
         count = folder / "count.txt"
-        device = attenuated(count=str(count))
+        device = attenuated(count=str(count), late_s=late_s)
         text = device.profile(sweep, stop=f"bits = {4 * rate}", link=f"pace_bps = {rate}")
         (folder / "sweep.toml").write_text(text)
         if not kills:

@@ -8,6 +8,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
+from harness.assess.requirement import curve_axis
 from harness.profile import ProfileError, Range, Sweep, parse_profile
 
 
@@ -144,3 +145,39 @@ def test_a_serial_pattern_must_be_a_regular_expression(sweep_text: str) -> None:
     assert parse_profile(sweep_text + '[lot]\nserial_pattern = "\\\\d{4}"\n').lot is not None
     with pytest.raises(ProfileError, match="no regular expression"):
         parse_profile(sweep_text + '[lot]\nserial_pattern = "("\n')
+
+
+@pytest.mark.parametrize("oven_first", [True, False])
+def test_the_record_knows_the_same_curve_axis_as_the_profile(oven_first: bool) -> None:
+    axes = [
+        "[[sweep.axes]]\ninstrument = 'oven'\nvalues = [-20, 25, 60, 80]\n",
+        "[[sweep.axes]]\ninstrument = 'att'\nvalues = { start = 20, stop = 21, step = 0.5 }\n",
+    ]
+    text = """
+[link]
+driver = "loopback"
+[instruments.oven]
+driver = "manual"
+quantity = "temperature"
+unit = "degC"
+limits = [-40, 90]
+safe = 20
+[instruments.att]
+driver = "manual"
+quantity = "attenuation"
+unit = "dB"
+limits = [0, 60]
+safe = 60
+[requirement]
+ber = 1e-3
+sensitivity_at_least = 20.5
+[sweep]
+sensitivity_ber = 1e-3
+"""
+    profile = parse_profile(text + "".join(axes if oven_first else axes[::-1]))
+    assert profile.curve_axis == curve_axis(profile.resolved()) == "att"
+    only = profile.resolved()
+    only["sweep"]["axes"] = only["sweep"]["axes"][::-1]
+    assert curve_axis(only) == "att"
+    with pytest.raises(ProfileError, match="only 20 to 21 is measured"):
+        parse_profile(text.replace("20.5", "22") + "".join(axes))

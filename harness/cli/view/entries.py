@@ -179,10 +179,11 @@ def sensitivity_words(found: Mapping[str, Any] | None) -> str:
     """Say where the ratio that was looked for is reached."""
     if not found:
         return ""
+    at = "".join(f"{name} {value:g}: " for name, value in (found.get("at") or {}).items())
     if found.get("value") is None:
-        return f"{ratio(found.get('ber'))} was not reached within the sweep"
+        return f"{at}{ratio(found.get('ber'))} was not reached at any value measured"
     unit = f" {found['unit']}" if found.get("unit") else ""
-    words = f"{ratio(found.get('ber'))} is reached at {found['value']:.4g}{unit}"
+    words = f"{at}{ratio(found.get('ber'))} is reached at {found['value']:.4g}{unit}"
     if found.get("lower") is None or found.get("upper") is None:
         return words
     return f"{words} ({found['lower']:.4g} to {found['upper']:.4g}{unit} at {percent(found['confidence'])})"

@@ -90,7 +90,7 @@ class Notebook:
         lines += self._verdict(sheet, layout)
         lines += gap
         lines += self._words("point", [sheet.point] if sheet.point else [], 1)
-        lines += self._words("BER", [sheet.ber] if sheet.ber else [], 2)
+        lines += self._words("BER", [*([sheet.ber] if sheet.ber else []), *sheet.sensitivities], 2)
         bars = _kept(sheet, layout.points)
         lines += [self._entry(label[:MARGIN], line) for label, line in ruler(bars, self._room, self.signs)]
         if sheet.weights and len(bars) < len(sheet.bars):

@@ -54,6 +54,7 @@ class Sheet:
     against: bool = False  # what stands there speaks against the unit
     reasons: Sequence[str] = ()
     ber: str = ""
+    sensitivities: Sequence[str] = ()  # of several curves
     bars: Sequence[tuple[str, Bar]] = (("", Bar(0.0, 1.0)),)
     ahead: int = 0  # bars that may be left out where room is short: the first ones
     weights: Sequence[float] = ()  # of bars of which the weightiest are kept where room is short
@@ -169,12 +170,14 @@ def sheet_of_assessment(a: Assessment, where: str = "") -> Sheet:
     )
     if len(a.points) < 2:
         return sheet
-    looked_for = a.sensitivity["ber"] if a.sensitivity else None
+    found = [a.sensitivity] if a.sensitivity else a.more.get("sensitivities", ())
+    looked_for = found[0]["ber"] if found else None
     points = sorted(a.points, key=lambda p: tuple(p.values.values()))  # a curve, however it was visited
     events = meanwhile(a.points)
     return replace(
         sheet,
         ber=sensitivity_words(a.sensitivity),
+        sensitivities=[sensitivity_words(found) for found in a.more.get("sensitivities", ())],
         bars=[(point_label(p), _bar(p, decided=False, looked_for=looked_for)) for p in points],
         weights=_weights(points, looked_for),
         bits=(),
