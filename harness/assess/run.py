@@ -82,7 +82,7 @@ def accumulate(run: Run, point: Point, requirement: Requirement | None) -> Accum
     acc = accumulator_for(point, requirement)
     for event in point.events:
         acc.note(event)
-    if run.status == "cut" and run.sittings and point.index == run.points[-1].index:
+    if run.status == "cut" and run.sittings and run.points and point.index == run.points[-1].index:
         undecided = run.sittings[-1].undecided_bits
         if undecided:
             text = f"{undecided} bits had come and were not decided when the run was cut"

@@ -6,10 +6,12 @@ import contextlib
 import json
 import os
 import signal
+import socket
 import sqlite3
 import subprocess
 import sys
 import time
+from concurrent.futures import ThreadPoolExecutor
 
 import pytest
 
@@ -125,3 +127,45 @@ def test_a_sweep_killed_again_and_again_has_the_bits_of_one_that_was_not(bitassa
     again = bitassay("resume", "last", "--json")
     assert again.status == 0
     assert again.json["run"] == got["run"]
+
+
+def echo_to(port: int) -> None:
+    """Be the device: connect, give back what comes, until the other side has gone."""
+    for _ in range(300):
+        with contextlib.suppress(OSError), socket.create_connection(("127.0.0.1", port)) as connection:
+            while data := connection.recv(65_536):
+                connection.sendall(data)
+            return
+        time.sleep(0.1)
+
+
+def test_a_run_killed_before_its_first_point_is_shown_and_goes_on(bitassay, tmp_path):
+    with socket.create_server(("127.0.0.1", 0)) as free:
+        port = free.getsockname()[1]
+    (tmp_path / "run.toml").write_text(
+        f'[link]\ndriver = "tcp"\nhost = "127.0.0.1"\nport = {port}\nlisten = true\nrate_bps = 800_000\n'
+        "connect_timeout_s = 60\n[requirement]\nber = 1e-4\n[stop]\nbits = 80_000\n"
+    )
+    process = start(tmp_path, "measure", "run.toml")
+    path = tmp_path / "results" / "runs.sqlite"
+    for _ in range(400):
+        with contextlib.suppress(sqlite3.OperationalError), contextlib.closing(sqlite3.connect(path)) as db:
+            if db.execute("select count(*) from sitting").fetchone()[0]:
+                break
+        time.sleep(0.05)
+    process.kill()
+    process.communicate()
+    shown = bitassay("show", "last", "--json")
+    assert shown.status == 0, shown.err
+    assert (shown.json["status"], shown.json["bits_received"]) == ("cut", 0)
+    for command in ("show last", "runs", "report last --text", "verify last", "export last --format csv"):
+        done = bitassay(*command.split())
+        assert done.status == 0, (command, done.err)
+    for form in ("json", "junit"):
+        assert bitassay("export", "last", "--format", form).status == 0
+    with ThreadPoolExecutor() as pool:
+        pool.submit(echo_to, port)
+        resumed = bitassay("resume", "last", "--json")
+    assert resumed.status == 0, resumed.err
+    assert (resumed.json["verdict"], resumed.json["errors"]) == ("PASS", 0)
+    assert bitassay("verify", "last").status == 0
