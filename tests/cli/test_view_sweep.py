@@ -9,6 +9,7 @@ import pytest
 
 from harness.assess.assessment import Assessment
 from harness.cli.page import page
+from harness.cli.view.entries import sensitivity_words
 from harness.cli.view.ink import LINES
 from harness.cli.view.notebook import Notebook
 from harness.cli.view.sheet import sheet_of_assessment
@@ -117,6 +118,29 @@ def test_the_plain_page_tells_the_night_before_the_points(swept, making):
         "the stream lost its sequence 30 times, at att 39",
     ]
     assert lines.index(told[-1]) < next(k for k, line in enumerate(lines) if line.startswith("points"))
+
+
+def test_a_sweep_of_one_point_shows_what_was_counted_there(swept):
+    """Over all points no BER is given: that of the only one must not be lost for it."""
+    many = swept()
+    whole = replace(many.whole, tally=many.points[0].tally, ber=None, bounds=None)
+    one = replace(many, points=many.points[:1], whole=whole, sensitivity=None, verdict=None, reasons=[])
+    text = "\n".join(page(one))
+    assert "att 33: 1e-3" in text
+    assert "no bit was compared" not in text + "\n".join(drawn(one, 80, 24))
+
+
+@pytest.mark.parametrize(
+    ("lower", "upper", "words"),
+    [
+        (None, None, "where 1e-3 is reached these points do not tell"),
+        (33.0, None, "where 1e-3 is reached these points do not tell: at least 33 dB at 95 %"),
+        (None, 34.0, "where 1e-3 is reached these points do not tell: at most 34 dB at 95 %"),
+        (33.0, 34.0, "where 1e-3 is reached these points do not tell: between 33 and 34 dB at 95 %"),
+    ],
+)
+def test_without_a_sensitivity_what_is_sure_of_it_is_said(lower, upper, words):
+    assert sensitivity_words({**FOUND, "value": None, "lower": lower, "upper": upper}) == words
 
 
 def test_a_line_says_where_the_sweep_is(making):

@@ -180,10 +180,21 @@ def sensitivity_words(found: Mapping[str, Any] | None) -> str:
     if not found:
         return ""
     at = "".join(f"{name} {value:g}: " for name, value in (found.get("at") or {}).items())
-    if found.get("value") is None:
-        return f"{at}{ratio(found.get('ber'))} was not reached at any value measured"
     unit = f" {found['unit']}" if found.get("unit") else ""
+    if found.get("value") is None:
+        return f"{at}where {ratio(found.get('ber'))} is reached these points do not tell{_sides(found, unit)}"
     words = f"{at}{ratio(found.get('ber'))} is reached at {found['value']:.4g}{unit}"
     if found.get("lower") is None or found.get("upper") is None:
         return words
     return f"{words} ({found['lower']:.4g} to {found['upper']:.4g}{unit} at {percent(found['confidence'])})"
+
+
+def _sides(found: Mapping[str, Any], unit: str) -> str:
+    """Say what bounds there are without a value."""
+    lower, upper = found.get("lower"), found.get("upper")
+    if lower is None and upper is None:
+        return ""
+    sure = f"{unit} at {percent(found['confidence'])}"
+    if lower is None or upper is None:
+        return f": at least {lower:g}{sure}" if upper is None else f": at most {upper:g}{sure}"
+    return f": between {lower:g} and {upper:g}{sure}"

@@ -168,7 +168,7 @@ def sheet_of_assessment(a: Assessment, where: str = "") -> Sheet:
         events=p.events,
         foot=[f"run {a.run}" if a.run else "no record kept", *ended],
     )
-    if len(a.points) < 2:
+    if len(a.points) < 2 and not a.sweep:
         return sheet
     found = [a.sensitivity] if a.sensitivity else a.more.get("sensitivities", ())
     looked_for = found[0]["ber"] if found else None
