@@ -28,6 +28,7 @@ from harness.cli.output import (
 
 if TYPE_CHECKING:
     from harness.bench.run import RunResult
+    from harness.cli.watch import Watcher
     from harness.profile import Profile
     from harness.record import Run
 
@@ -196,8 +197,10 @@ def carry_out(loaded: Profile, command: str, manner: Manner, cut: Run | None = N
     if not (quiet or as_json):
         tell_new_store(manner.store)
 
+    views: list[Watcher] = []
+
     def of_the_store(words: str) -> None:
-        warn(words)
+        (views[0].notice if views else warn)(words)
         log_file.line(words)
 
     with open_for_measuring(manner.store, of_the_store) as opened, ending.caught():
@@ -209,6 +212,7 @@ def carry_out(loaded: Profile, command: str, manner: Manner, cut: Run | None = N
                 interrupted=ending.event,
                 plain=attended(loaded),
             ) as view:
+                views.append(view)
                 log_file.line(f"begins: {loaded.title or loaded.name}; store {where}")
                 hooks = Hooks(
                     interrupted=ending.event, started=view.started, tick=view.tick, log=log_file.line

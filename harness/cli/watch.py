@@ -7,9 +7,11 @@ import threading
 import time
 from collections.abc import Iterator, Mapping
 from contextlib import contextmanager
+from dataclasses import replace
 from typing import TYPE_CHECKING, TextIO
 
 from harness.assess.words import count, duration, local_time, ratio
+from harness.cli.failure import warn
 from harness.cli.view.ink import writable
 
 if TYPE_CHECKING:
@@ -39,6 +41,10 @@ class Watcher:
 
     def waiting(self, why: str) -> None:
         """Take why nothing can be known for now; empty: it can be known again."""
+
+    def notice(self, words: str) -> None:
+        """Say something that is not about the device, such as that the store is away; may come from any thread."""
+        warn(words)
 
     def stop(self) -> None:
         """End; nothing is shown any more."""
@@ -125,6 +131,7 @@ class PageWatcher(Watcher):
         self._interrupted = interrupted
         self._latest: tuple[Progress, float] | None = None
         self._waiting: tuple[str, int] | None = None  # why, and since when (UTC, ns)
+        self._notices: list[str] = []
         # The newest decided second of the point under way, and when it was first seen.
         self._newest: tuple[tuple[int, int], float] = ((0, -1), time.monotonic())
         self._live: LivePage | None = None
@@ -151,12 +158,26 @@ class PageWatcher(Watcher):
         since = self._waiting[1] if self._waiting else time.time_ns()
         self._waiting = (why, since) if why else None
 
+    def notice(self, words: str) -> None:
+        """Write it at the page's foot, and once more below it when the page has gone."""
+        if self._live is None:
+            warn(words)
+        else:
+            self._notices.append(words)
+
     def stop(self) -> None:
         """Give the terminal back as it was."""
         if self._live is not None:
             self._live.stop()
+            self._live = None
+        while self._notices:
+            warn(self._notices.pop(0))
 
     def _fill(self, now_ns: int) -> Sheet:
+        page = self._filled(now_ns)
+        return replace(page, foot=(*self._notices[-1:], *page.foot))
+
+    def _filled(self, now_ns: int) -> Sheet:
         from harness.cli.view.sheet import sheet_before, sheet_of_progress
 
         if self._latest is None:

@@ -7,11 +7,12 @@ import io
 import os
 import threading
 import time
+from types import SimpleNamespace
 
 import pytest
 
 from harness.assess.requirement import Requirement
-from harness.cli.watch import LineWatcher, event_lines, progress_line
+from harness.cli.watch import LineWatcher, PageWatcher, event_lines, progress_line
 
 LONG = Requirement(ber=1e-6, accept_errors=3)
 
@@ -100,3 +101,44 @@ def test_no_reader_holds_up_a_run_by_taking_nothing_or_by_going_away(making, clo
             thread.join(30)
     with contextlib.suppress(OSError):
         stream.close()
+
+
+def test_what_is_not_about_the_device_stands_at_the_pages_foot_and_below_it_afterwards(making, capsys):
+    view = PageWatcher(io.StringIO(), "Wader-9", {}, threading.Event())
+    view.notice("the store is away")
+    assert "the store is away" in capsys.readouterr().err  # no page yet
+    view.tick(making.progress([1, 0, 2]))
+    view._live = SimpleNamespace(stop=lambda: None)
+    view.notice("the store is away again")
+    view.notice("the store is back")
+    sheet = view._fill(making.start + 3 * 10**9)
+    assert sheet.foot[0] == "the store is back"
+    assert "away" not in " ".join(sheet.foot)
+    assert capsys.readouterr().err == ""
+    view.stop()
+    assert capsys.readouterr().err.splitlines() == [
+        "bitassay: the store is away again", "bitassay: the store is back",
+    ]  # fmt: skip
+    view.notice("handed over")
+    assert "handed over" in capsys.readouterr().err
+
+
+def test_a_page_stands_still_and_says_why_while_nothing_can_be_known(making):
+    view = PageWatcher(io.StringIO(), "Wader-9", {}, threading.Event())
+    view.tick(making.progress([1, 0, 2]))
+    view.waiting("the store cannot be reached; waiting for it")
+    sheet = view._fill(making.start + 90 * 10**9)
+    assert list(sheet.to_do) == ["the store cannot be reached; waiting for it"]
+    view.waiting("")
+    assert list(view._fill(making.start + 90 * 10**9).to_do) != list(sheet.to_do)
+
+
+def test_lines_say_once_that_they_wait_and_that_the_waiting_is_over():
+    stream = io.StringIO()
+    view = LineWatcher(stream, every_s=60)
+    view.start()
+    for why in ("the store is away", "the store is away", ""):
+        view.waiting(why)
+        time.sleep(0.3)
+    view.stop()
+    assert stream.getvalue().splitlines() == ["the store is away", "the store can be reached again"]
