@@ -246,7 +246,7 @@ def _counted(progress: Progress) -> list[str]:
         parts.append(f"{count(t.unaligned, 'bit')} unaligned")
     if p.slip_count:
         parts.append(count(p.slip_count, "slip"))
-    return parts + [f"cannot pass any more {why}" for why in against_words(progress)]
+    return parts + [f"cannot pass any more: {why}" for why in against_words(progress)]
 
 
 @contextmanager

@@ -38,7 +38,7 @@ def test_a_direction_that_cannot_pass_any_more_is_named_though_the_other_is_well
     sheet = sheet_of_progress(duplex(making, [0, 0], [0, 9]), NOW)
     assert sheet.against
     assert sheet.verdict == "reverse: cannot pass any more"
-    assert sheet.reasons[0].startswith("reverse: because of 9 errors")
+    assert sheet.reasons[0].startswith("reverse: 9 errors")
 
 
 def test_lines_say_both_directions(making):

@@ -31,7 +31,7 @@ def test_a_line_says_counts_ratio_and_what_is_still_to_do(making, utc):
 
 
 def test_a_line_says_that_there_can_be_no_pass_any_more(making):
-    assert "cannot pass any more because of 10 errors, where the plan accepts 3" in said(
+    assert "cannot pass any more: 10 errors, where the plan accepts 3" in said(
         making, making.progress([5, 5], requirement=LONG)
     )
 

@@ -250,8 +250,8 @@ def against_words(progress: Progress) -> list[str]:
     p = progress.point
     accepted = p.plan["accept_errors"] if p.plan else None
     if accepted is not None and p.tally.errors > int(accepted):
-        return [f"because of {count(p.tally.errors, 'error')}, where the plan accepts {accepted or 'none'}"]
-    return [f"because of {progress.outlook.against[0]}"]
+        return [f"{count(p.tally.errors, 'error')}, where the plan accepts {accepted or 'none'}"]
+    return [progress.outlook.against[0]]
 
 
 def _trouble(progress: Progress, now_ns: int) -> str:
