@@ -9,6 +9,8 @@ from __future__ import annotations
 import os
 import sqlite3
 import statistics
+import subprocess
+import sys
 import time
 from collections.abc import Callable
 from pathlib import Path
@@ -38,16 +40,24 @@ def second(k: int) -> Second:
 
 
 def one_run(store: Store, seconds: int) -> str:
+    """Record a run whose profile, settings and stated numbers are as long as real ones."""
+    from harness.assess.run import assess
+    from harness.profile import load_profile
+    from harness.profile.ready import ready_profiles
+
+    path = ready_profiles() / "loopback.toml"
+    profile = load_profile(path, [])
     key = store.begin_run(
-        title="Wader-9", command="measure", started=T0, profile_text="x", overrides=[],
-        settings={"requirement": {"ber": 1e-6}}, device={"serial_number": "0031", "model": "Wader-9"},
+        title="Wader-9", command="measure", started=T0, profile_text=path.read_text(), overrides=[],
+        settings=profile.resolved(), device=dict(profile.device),
     )  # fmt: skip
     store.begin_sitting(key, Sitting(0, T0, None, this_host(), {}))
     store.begin_point(key, 0, {}, T0)
     store.commit(key, [second(k) for k in range(seconds)])
     store.end_point(key, 0, T0 + 1, "plan")
     store.end_sitting(key, 0, T0 + 1, "completed")
-    store.end_run(key, T0 + 1, "completed", "plan", "PASS", {})
+    a = assess(store.load(key))
+    store.end_run(key, T0 + 1, "completed", "plan", a.verdict, a.to_json())
     return key
 
 
@@ -110,6 +120,46 @@ def test_a_full_store_answers_nearly_as_fast_as_an_empty_one(
                 print(f"  {name:20} {many * 1e3:8.2f} ms  {many / few:5.2f} times the nearly empty store's")
             listing = median_s(lambda: full.runs())
             print(f"  {'all runs, listed':20} {listing * 1e3:8.2f} ms  {listing / RUNS * 1e6:.1f} us a run")
+
+
+def cost_of(*arguments: str) -> tuple[float, float]:
+    """Run the command several times; gives medians of (s until it ended, s of computing)."""
+    walls, computing = [], []
+    for _ in range(7):
+        start = time.perf_counter()
+        process = subprocess.Popen(
+            [sys.executable, "-m", "harness.cli.main", *arguments], stdout=subprocess.DEVNULL
+        )
+        _, status, used = os.wait4(process.pid, 0)
+        walls.append(time.perf_counter() - start)
+        computing.append(used.ru_utime + used.ru_stime)
+        assert os.waitstatus_to_exitcode(status) == 0
+        process.returncode = 0
+    return statistics.median(walls), statistics.median(computing)
+
+
+@pytest.mark.campaign
+def test_commands_on_a_full_store_against_a_nearly_empty_one(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    each = max(1, SECONDS // RUNS)
+    keys = {}
+    for name in ("small", "full"):
+        with open_store(tmp_path / f"{name}.sqlite") as store:
+            keys[name] = one_run(store, each)
+    fill(tmp_path / "full.sqlite")
+    with capsys.disabled():
+        print(f"\n{RUNS} runs, {RUNS * each} seconds, against one run of {each} seconds:")
+        for command in (["runs"], ["runs", "--json"], ["runs", "--limit=20"], ["show", "last"], ["show"]):
+            few, many = (
+                cost_of(*command, *([keys[name][-12:]] if command == ["show"] else []),
+                        f"--store={tmp_path / name}.sqlite")
+                for name in ("small", "full")
+            )  # fmt: skip
+            print(
+                f"  {' '.join(command):18} {many[0]:5.2f} s, {many[1]:5.2f} s of computing: "
+                f"{many[0] / few[0]:5.2f} and {many[1] / few[1]:5.2f} times the nearly empty store's"
+            )
 
 
 @pytest.mark.campaign
