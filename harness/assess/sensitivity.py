@@ -32,6 +32,8 @@ def judge_sensitivity(curve: Curve | None, least: float, requirement: Requiremen
     """
     if curve is None or curve.fit is None:
         return "UNDECIDED", ["the sensitivity could not be determined: no point was measured"]
+    if not any(point.tally.compared for point in curve.points):
+        return "UNDECIDED", ["nothing was ever aligned at any value: no bit could be compared"]
     if curve.contrary:
         return "UNDECIDED", [curve.contrary]
     unit = f" {curve.unit}".rstrip()

@@ -94,7 +94,8 @@ def _fit(space: SearchSpace, points: Sequence[CurvePoint]) -> CurveFit:
 
 def _given_up(space: SearchSpace, points: Sequence[CurvePoint], spent: int, why: str) -> Found:
     fit = _fit(space, points)
-    return Found(fit, spent, False, f"{why}; {fit.words}")
+    aligned = any(point.aligned for point in points)
+    return Found(fit, spent, False, f"{why}. {fit.words}" if aligned else why)
 
 
 def _quality(space: SearchSpace, value: float) -> float:
