@@ -92,6 +92,8 @@ def _type(field: Schema, defs: Schema) -> str:
         word = _one_type(choice, defs)
         if word not in words:
             words.append(word)
+    if len(words) == 2 and words[0] == f"list of {_plural(words[1])}":
+        return f"{words[1]} or a list of such"
     return " or ".join(words) or "anything"
 
 

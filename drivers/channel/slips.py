@@ -2,14 +2,14 @@
 
 from __future__ import annotations
 
-from typing import Literal
+from typing import Annotated, Literal
 
 import numpy as np
-from pydantic import Field, field_validator, model_validator
+from pydantic import Field, model_validator
 
 from drivers.channel.packing import delay_bits, pack, unpack
 from drivers.channel.schedule import Schedule, given_once, schedule
-from drivers.channel.stage import BitOrder, Bytes, ChannelSection, Line, Stage
+from drivers.channel.stage import BitOrder, Bytes, ChannelSection, Line, OneOrSeveral, Stage
 
 Filler = Literal["noise", "zeros", "ones", "repeat"]
 _LARGEST_SLIP_BITS = 1 << 24
@@ -19,7 +19,7 @@ class SlipSection(ChannelSection):
     """Bits are lost or invented; several sizes: one of them by chance each time."""
 
     model: Literal["slip"]
-    bits: tuple[int, ...] = Field(
+    bits: Annotated[tuple[int, ...], OneOrSeveral()] = Field(
         min_length=1, description="Sizes in bits: negative, lost; positive, invented. One or a list."
     )
     at_bits: tuple[int, ...] | None = Field(default=None, description="After these numbers of bits.")
@@ -27,11 +27,6 @@ class SlipSection(ChannelSection):
     every_s: float | None = Field(default=None, gt=0, description="After every so many seconds of bits.")
     rate: float | None = Field(default=None, ge=0, le=1, description="Probability of a slip at a bit.")
     filler: Filler = Field(default="noise", description="What invented bits are.")
-
-    @field_validator("bits", mode="before")
-    @classmethod
-    def _one_or_several(cls, value: object) -> object:
-        return (value,) if isinstance(value, int) else value
 
     @model_validator(mode="after")
     def _check(self) -> SlipSection:

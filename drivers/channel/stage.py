@@ -5,11 +5,12 @@ from __future__ import annotations
 from abc import ABC, abstractmethod
 from collections.abc import Mapping
 from dataclasses import dataclass
-from typing import Literal
+from typing import Any, Literal
 
 import numpy as np
 from numpy.typing import NDArray
-from pydantic import Field
+from pydantic import Field, GetCoreSchemaHandler, GetJsonSchemaHandler
+from pydantic_core import CoreSchema, core_schema
 
 from drivers.contract import Knob, OpenFailed, Section
 
@@ -17,6 +18,23 @@ Bytes = NDArray[np.uint8]
 BitOrder = Literal["lsb", "msb"]
 
 MAX_STEP_BYTES = 1 << 18  # the most that a stage is ever given at once
+
+
+class OneOrSeveral:
+    """Marks a tuple whose only entry may stand by itself, in the profile and in its JSON schema."""
+
+    def __get_pydantic_core_schema__(self, source: Any, handler: GetCoreSchemaHandler) -> CoreSchema:
+        """Put what stands by itself into a tuple, before it is validated."""
+        return core_schema.no_info_before_validator_function(_several, handler(source))
+
+    def __get_pydantic_json_schema__(self, core: CoreSchema, handler: GetJsonSchemaHandler) -> dict[str, Any]:
+        """Allow an entry in place of the list."""
+        several = handler(core)
+        return {"anyOf": [several, several["items"]]}
+
+
+def _several(value: object) -> object:
+    return value if isinstance(value, list | tuple) else (value,)
 
 
 @dataclass(frozen=True, slots=True)

@@ -8,14 +8,14 @@ from collections import deque
 from collections.abc import Mapping
 from dataclasses import replace
 from threading import Condition, Lock
-from typing import Any
+from typing import Annotated
 
 import numpy as np
-from pydantic import Field, field_validator
+from pydantic import Field
 
 from drivers.channel.delay import BitDelay
 from drivers.channel.models import AnyChannel, Chain
-from drivers.channel.stage import BitOrder, Bytes, Line
+from drivers.channel.stage import BitOrder, Bytes, Line, OneOrSeveral
 from drivers.contract import (
     EndOfStream,
     Interrupted,
@@ -35,7 +35,7 @@ _DELAY_STEP_S = 1e-3  # bytes accepted within the same millisecond come back tog
 class LoopbackSection(Section):
     """What comes back, how late, and what happens to it on the way."""
 
-    channel: tuple[AnyChannel, ...] = Field(
+    channel: Annotated[tuple[AnyChannel, ...], OneOrSeveral()] = Field(
         default=(), description="What happens to the bits, in order; none: they come back as they were."
     )
     delay_s: float = Field(default=0.0, ge=0, le=600, description="Every byte comes back this much later.")
@@ -51,11 +51,6 @@ class LoopbackSection(Section):
     buffer_bytes: int = Field(
         default=1 << 20, ge=1, le=1 << 30, description="Room for what was sent and not yet received."
     )
-
-    @field_validator("channel", mode="before")
-    @classmethod
-    def _one_or_several(cls, value: Any) -> Any:
-        return (value,) if isinstance(value, Mapping) else value
 
 
 class LoopbackLink(Link):

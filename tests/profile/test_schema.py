@@ -7,6 +7,7 @@ from collections.abc import Iterator
 from typing import Any
 
 import pytest
+from jsonschema import Draft202012Validator
 
 from drivers import registry
 from harness.profile import Profile, parse_profile, profile_schema
@@ -82,3 +83,13 @@ def test_what_the_reader_resolves_is_in_the_schema(schema: dict[str, Any], sweep
         if a["properties"]["driver"]["const"] == "loopback"
     )
     assert set(resolved["link"]) <= set(loopback["properties"])
+
+
+@pytest.mark.parametrize("channel", [[{"model": "slip", "bits": [8]}], {"model": "slip", "bits": 8}])
+def test_what_may_stand_without_brackets_may_also_by_the_schema(
+    schema: dict[str, Any], channel: dict[str, Any] | list[dict[str, Any]]
+) -> None:
+    validator = Draft202012Validator(schema)
+    assert list(validator.iter_errors({"link": {"driver": "loopback", "channel": channel}})) == []
+    wrong = {"link": {"driver": "loopback", "channel": {"model": "slip", "bits": "eight"}}}
+    assert list(validator.iter_errors(wrong))
