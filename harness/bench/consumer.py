@@ -79,10 +79,10 @@ class Consumer(threading.Thread):
         self._each_second = each_second
         self._base_compared = base_compared  # what the point had in earlier sittings
         self._chronicle = Chronicle(wall_ns, base_bit)
-        self._missing = Missing(traffic, drain_ns)
+        self._missing = Missing(traffic, self._chronicle, drain_ns)
         self._playback = playback  # of a file; None where bytes come now
         self._flushed_ns = started_ns
-        self.arrivals = Arrivals(started_ns) if playback is None else PlayedArrivals(started_ns, playback)
+        self._arrivals = Arrivals(started_ns) if playback is None else PlayedArrivals(started_ns, playback)
         self._sent_before = 0
         self._held: list[Segment] = []  # of a second whose positions were cut: one look at its end
         self._mark_bits: deque[int] = deque()
@@ -102,6 +102,11 @@ class Consumer(threading.Thread):
     def gave_up(self, bits: int) -> None:
         """Take from another thread that bits on their way were given up: the link went away."""
         self._missing.gave_up(bits)
+
+    def newest(self) -> tuple[int, bytes, bool]:
+        """Say how many bits were taken, the last bytes among them, and whether they are but noise so far."""
+        tally = self.tally
+        return *self._arrivals.newest, tally.received > 0 and not tally.compared
 
     # -- the thread
 
@@ -129,7 +134,7 @@ class Consumer(threading.Thread):
             segments = self._counter.skip(bits)
         else:
             segments = self._counter.feed(piece.data)
-        self.arrivals.came(self._counter.received, piece.arrived_ns, piece.data)
+        self._arrivals.came(self._counter.received, piece.arrived_ns, piece.data)
         self._ring.give_back(piece)
         self._absorb(segments)
         limit = self._rules.received_bits
@@ -143,15 +148,16 @@ class Consumer(threading.Thread):
         self._missing.take_given_up()
         came_ns = self._playback.when(self._counter.received) if self._playback else time.monotonic_ns()
         now = max(came_ns, self._boundary_ns - SECOND_NS)
+        bit = self._counter.received
         if self.decision is not None:
-            self._missing_at_the_decision(now)
+            usual = self._first_delay_bits or 0
+            if self._places is not None and self._places.least_out is not None:
+                usual = min(usual, self._places.least_out)
+            self._missing.say_what_was_missing(usual, bit, now)
         else:
-            left = self._missing.left()
-            if self.waited_for_the_rest:
-                self._never_returned(left, now)
-            else:
-                self._never_returned(0, now)
-                self._on_their_way(left, now)
+            self._missing.say_what_never_returned(bit, now, over=self.waited_for_the_rest)
+            if not self.waited_for_the_rest:
+                self._missing.say_what_is_out(bit, now)
             sent = self._traffic.sent_bits - self._sent_before
             self._book.end(ends_ns=now, received_bits=self._counter.received, sent=sent, due=self._due(now))
         self._flush()
@@ -299,7 +305,7 @@ class Consumer(threading.Thread):
         self.decision = decision
         self._missing.decided()
         at = self._arrived(bit)
-        self._never_returned(0, at)
+        self._missing.say_what_never_returned(self._counter.received, at, over=False)
         verb = "accepted" if decision.accepted else "rejected"
         text = (
             f"the plan decided: {verb} with {count(decision.errors, 'error')} in "
@@ -309,29 +315,6 @@ class Consumer(threading.Thread):
         self._book.cut(bit=bit, ends_ns=at, sent=max(0, self._traffic.sent_bits - self._sent_before))
         self._flush()
         self._ask_stop("plan")
-
-    def _on_their_way(self, bits: int, at: int) -> None:
-        """Say what was still out when the point was broken off: that is not the device's loss."""
-        if bits:
-            text = f"{count(bits, 'bit')} were on their way when it was broken off and are in no figure"
-            self._happened("broken_off", text, at, {"bits": bits})
-
-    def _missing_at_the_decision(self, at: int) -> None:
-        """Say what had gone missing before the decision without a slip that shows it."""
-        usual = self._first_delay_bits or 0
-        if self._places is not None and self._places.least_out is not None:
-            usual = min(usual, self._places.least_out)
-        missing = self._missing.since_decision(usual)
-        if missing:
-            text = f"{count(missing, 'bit')} sent before the decision never came back"
-            self._happened("never_returned", text, at, {"bits": missing})
-
-    def _never_returned(self, left: int, at: int) -> None:
-        """Say what was sent and never came back, as far as no slip says it already."""
-        bits = self._missing.never_returned(left)
-        if bits:
-            text = f"{count(bits, 'bit')} were sent and never came back"
-            self._happened("never_returned", text, at, {"bits": bits})
 
     # -- events
 
@@ -363,7 +346,7 @@ class Consumer(threading.Thread):
 
     def _delay(self, bit: int, place: int, at: int) -> None:
         assert self._places is not None
-        delay = self._places.aligned(bit, place, at, self.arrivals.came_with(bit))
+        delay = self._places.aligned(bit, place, at, self._arrivals.came_with(bit))
         if delay is None:
             return
         if self._first_delay_bits is None:
@@ -389,8 +372,8 @@ class Consumer(threading.Thread):
 
     def _arrived(self, bit: int) -> int:
         """Monotonic time at which a received bit came."""
-        self.arrivals.forget_before(min(bit, self._counter.decided))
-        return self.arrivals.when(bit)
+        self._arrivals.forget_before(min(bit, self._counter.decided))
+        return self._arrivals.when(bit)
 
     def _happened(
         self, kind: str, text: str, at_ns: int, data: Mapping[str, object], bit: int | None = None

@@ -6,12 +6,11 @@ import contextlib
 import threading
 import time
 from collections.abc import Callable
-from typing import Literal
 
 from drivers.contract import DriverError, Link
 from harness.bench.book import Book
 from harness.bench.consumer import Consumer, Rules
-from harness.bench.ending import Patience, ends_with
+from harness.bench.ending import TheRest
 from harness.bench.line import LineCounts
 from harness.bench.places import Places
 from harness.bench.playback import Playback
@@ -25,9 +24,6 @@ from harness.record import EndedBy, Event, Second, Tally
 from harness.signal.counter import Counter
 
 POLL_S = 0.05
-LOOK_S = 0.01  # between two looks at the stream's end
-PERHAPS_S = 0.5  # to wait for more where errors leave it open whether the last bit has come
-PROMPT_NS = 200_000_000  # a device that answers promptly is not told that its input has ended
 RETRY_S = 0.5
 
 
@@ -220,10 +216,13 @@ class Measurement:
         self._consumer.waited_for_the_rest = ended_by not in ("interrupted", "fault")
         self._stop_sending(ended_by)
         if ended_by in ("bits", "seconds", "errors", "plan"):
-            self._wait_for_the_rest()
+            self._the_rest()
         if self._receiver is not None:
             self._receiver.halt()
             self._receiver.join()
+            lost = self._receiver.fault
+            if lost is not None and ended_by != "fault" and self.traffic.in_flight():
+                self._tell("link", f"while the rest was waited for: {lost.what}", time.monotonic_ns())
         self._ring.close()
         self._consumer.join()
         for thread in (self._consumer, self._sender, self._receiver):
@@ -352,37 +351,17 @@ class Measurement:
             with contextlib.suppress(DriverError):
                 self._sending.drain(self._setup.drain_s if ended_by != "interrupted" else 0.2)
 
-    def _wait_for_the_rest(self) -> None:
-        """Wait for what is on its way: until it has all come, or nothing has come for `drain_s`."""
-        if self._sender is None or self._receiver is None or self._sending is None:
+    def _the_rest(self) -> None:
+        if self._sending is None or self._sender is None or self._receiver is None:
             return
-        begun, patience = time.monotonic_ns(), Patience(self._setup.drain_s)
-        for_a_little = Patience(min(self._setup.drain_s, PERHAPS_S))
-        told = not (self._setup.last and self._sending.traits.ends_with_input)
-        while True:
-            came = self._all_came() if self.traffic.wait_for_quiet(POLL_S) else "no"
-            last = self.traffic.last_received_ns
-            if came == "yes" or patience.spent(last) or (for_a_little.spent(last) and came == "perhaps"):
-                return
-            if not self._receiver.is_alive() or self._interrupted.is_set():
-                return
-            if not told and time.monotonic_ns() - begun >= PROMPT_NS:
-                told = True
-                with contextlib.suppress(DriverError):
-                    self._sending.finish_sending()
-
-    def _all_came(self) -> Literal["yes", "perhaps", "no"]:
-        """Whether the last bit that came, with as many as were sent, is the last that was sent."""
-        received, tail = self._consumer.arrivals.newest
-        setup, decided = self._setup, self._consumer.tally
-        if decided.received and not decided.compared:
-            return "yes"  # noise: no place in it will tell
-        came: Literal["yes", "perhaps", "no"] = "no"
-        if received == self.traffic.received_bits:
-            came = ends_with(tail, setup.pattern, setup.bit_order, setup.first_place + self.traffic.sent_bits)
-        if came != "yes":
-            time.sleep(LOOK_S)
-        return came
+        TheRest(
+            self._sending,
+            self._setup,
+            self.traffic,
+            came=self._consumer.newest,
+            listens=self._receiver.is_alive,
+            interrupted=self._interrupted.is_set,
+        ).wait()
 
     # -- for the screen
 

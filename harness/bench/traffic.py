@@ -97,7 +97,9 @@ class Traffic:
         with self._changed:
             # Bits may be back before the link has said that it took them: then those offered are out.
             out = max(0, self._out() + max(0, self._offered - self._sent))
-            self._written_off += min(bits, out)
+            given_up = min(bits, out)
+            self._written_off += given_up
+            self._taken_back += bits - given_up  # made up ones have come in their stead already
             self._changed.notify_all()
 
     def invent(self, bits: int) -> None:

@@ -113,6 +113,16 @@ def test_invented_bits_do_not_stand_in_for_lost_ones():
     assert traffic.in_flight() == 0
 
 
+def test_a_loss_that_shows_late_has_had_its_bits_made_up_meanwhile():
+    traffic = Traffic()
+    traffic.sent(1000, 1)
+    traffic.received(1000, 2)  # 8 of them lost, and 8 made up at the end
+    traffic.lose(8)
+    assert traffic.surplus() == 8
+    traffic.invent(8)
+    assert (traffic.in_flight(), traffic.surplus(), traffic.written_off_bits) == (0, 0, 8)
+
+
 def test_a_loss_stays_one_when_an_invented_bit_comes_in_its_stead_before_it_is_noticed():
     traffic = Traffic()
     traffic.sent(1000, 1)

@@ -95,3 +95,9 @@ def test_a_byte_lost_before_does_not_make_the_added_one_an_error(measure):
 def test_a_lost_last_byte_is_lost_and_what_comes_instead_is_no_slip_back(measure):
     got = measure(lose=[BITS // 8 - 1], link="drain_s = 1")
     assert (got["bits_lost"], got["bits_inserted"], got["errors"]) == (8, 0, 0)
+
+
+def test_a_program_that_dies_with_what_it_kept_is_named(measure):
+    got = measure(keep=100, dies=3, link="drain_s = 1")
+    assert (got["bits_lost"], got["errors"]) == (800, 0)
+    assert any("ended with exit status 3" in event["text"] for event in got["events"])

@@ -7,6 +7,7 @@ Options are one JSON object on the command line:
   lose         bytes that are swallowed, by number
   append       once so many bytes have come, [n, hexadecimal] is given out too
   farewell     written when the input ends
+  dies         exit status with which it ends then, with what it kept
 """
 
 from __future__ import annotations
@@ -66,6 +67,8 @@ def main(options: dict) -> None:
         data = late + device.treat(data)
         late = data[-1:] if linger_s else b""
         device.give(data[: len(data) - len(late)])
+    if "dies" in options:
+        sys.exit(options["dies"])
     write(bytes(device.kept) + late + options.get("farewell", "").encode())
     time.sleep(options.get("linger_s") or 0)
 
