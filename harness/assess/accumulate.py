@@ -13,6 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from harness.assess.feed import PlanFeed
+from harness.assess.pace import Pace
 from harness.assess.requirement import Requirement
 from harness.record import Event, Point, Second, Segment, Tally
 from harness.statistics.availability import Availability, AvailabilityResult
@@ -51,6 +52,7 @@ class Accumulator:
         self.events: list[Event] = []
         self.events_cut = 0
         self.recent: list[tuple[int, Tally]] = []  # (index, tally) of the last minute
+        self.pace = Pace()
         self._tally = Tally()
         self._sent = self._duration_ns = self._seconds = 0
         self._slips = self._lost = self._inserted = 0
@@ -117,6 +119,7 @@ class Accumulator:
         self._sent += second.sent
         self._duration_ns += second.duration_ns
         self._seconds += 1
+        self.pace.take(second)
         self._slips += second.slips
         self._lost += second.bits_lost
         self._inserted += second.bits_inserted

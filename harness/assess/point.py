@@ -61,6 +61,7 @@ def assess_point(acc: Accumulator, about: Facts, *, quick: bool = False) -> Poin
             verdict, reasons = "UNDECIDED", [*moved, *reasons]
     bounds = _bounds(acc, about, quick)
     aligned = next((e for e in acc.events if e.kind == "aligned"), None)
+    delay = next((dict(e.data) for e in acc.events if e.kind == "delay"), {})
     tally = sums.tally
     seconds = sums.duration_ns / 1e9
     return PointAssessment(
@@ -71,7 +72,7 @@ def assess_point(acc: Accumulator, about: Facts, *, quick: bool = False) -> Poin
         ended=about.ended,
         seconds=seconds,
         rate_bps=about.rate_bps,
-        measured_bps=tally.received / seconds if seconds > 0 and not about.facts.get("untimed") else None,
+        measured_bps=None if about.facts.get("untimed") else acc.pace.bps(delay.get("seconds")),
         pattern=about.pattern,
         alternatives=tuple(about.facts.get("alternatives", ())),
         inverted=_inverted(about, aligned),
@@ -85,7 +86,7 @@ def assess_point(acc: Accumulator, about: Facts, *, quick: bool = False) -> Poin
         slip_count=sums.slips,
         bits_lost=bits_lost,
         bits_inserted=sums.bits_inserted,
-        delay=next((dict(e.data) for e in acc.events if e.kind == "delay"), None),
+        delay=delay or None,
         events=tuple(acc.events),
         verdict=verdict,
         plan=_plan(acc),
