@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 import sys
 from dataclasses import replace
 from pathlib import Path
@@ -80,14 +81,22 @@ def examine(
     sys.stdout.flush()
     if found.capture is None:
         warn(f"{file}: {found.words}")
-        advice = "name the pattern with --pattern if you know what was sent"
-        if pattern.lower() != "auto":
-            advice = "leave out --pattern to have it looked for among all that are known"
-        print(f"  {advice}", file=sys.stderr)
+        print(f"  {_what_to_try(pattern, found.words)}", file=sys.stderr)
     else:
         warn(f"{file} was never aligned to {found.capture.pattern.name}")
         print("  try --pattern auto, the other --bit-order, or a longer capture", file=sys.stderr)
     return UNDECIDED
+
+
+def _what_to_try(pattern: str, looks: str) -> str:
+    """Say what to do where no pattern was found."""
+    if pattern.lower() != "auto":
+        return "leave out --pattern to have it looked for among all that are known"
+    if "constant" in looks:
+        return "that is a dead line, or the wrong file: check what was captured"
+    if repeated := re.search(r"\b(word|taps):\S+", looks):
+        return f"if that is what was sent, count against it with --pattern {repeated[0]}"
+    return "name the pattern with --pattern if you know what was sent"
 
 
 def _check(bit_order: str, rate_bps: float | None, confidence: float) -> None:
@@ -176,10 +185,11 @@ def emit(pattern: str, number: int, bit_order: str, output: Path | None) -> int:
     if output is None:
         write(sys.stdout.buffer)
         return 0
+    there = output.is_file() and output.stat().st_size > 0
     try:
         with output.open("wb") as file:
             write(file)
     except OSError as error:
         raise UserError(f"{output}: {error.strerror}", "choose a file that can be written") from error
-    print(f"wrote {output}", file=sys.stderr)
+    print(f"{'replaced' if there else 'wrote'} {output}", file=sys.stderr)
     return 0

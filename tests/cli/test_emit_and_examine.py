@@ -145,6 +145,21 @@ def test_with_a_rate_what_no_pattern_fits_is_unavailable_second_by_second(bitass
     assert done.json["bits_unaligned"] == 8 * 6_000 * 12 + 4_800
 
 
+@pytest.mark.parametrize(
+    ("content", "words"),
+    [(bytes(8192), "a dead line"), (b"\xa5" * 8192, "--pattern word:"), (b"", "capture again")],
+)
+def test_what_to_do_about_a_capture_that_fits_nothing_goes_with_what_is_in_it(
+    bitassay, tmp_path, content, words
+):
+    (tmp_path / "got.bin").write_bytes(content)
+    done = bitassay("examine", "got.bin")
+    assert words in done.err.splitlines()[1]
+    if "word:" in words:
+        word = done.err.rpartition("--pattern ")[2].strip()
+        assert bitassay("examine", "got.bin", "--pattern", word, "--json").json["bits_compared"] == 8 * 8192
+
+
 def test_a_folder_is_not_called_missing(bitassay, tmp_path):
     done = bitassay("examine", tmp_path)
     assert done.status == 2
