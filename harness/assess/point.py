@@ -6,6 +6,7 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
+from harness.assess import tries
 from harness.assess.accumulate import Accumulator, Sums
 from harness.assess.assessment import Bounds, Clustered, PointAssessment
 from harness.assess.requirement import Requirement
@@ -97,7 +98,7 @@ def assess_point(acc: Accumulator, about: Facts, *, quick: bool = False) -> Poin
         unaligned_ratio=unaligned_ratio(sums, bits_lost),
         links_lost=links_lost,
         remarks=(
-            *_retests(acc, about),
+            *(tries.remark(acc.plan.consumer_risk, about.facts) if acc.plan is not None else ()),
             *about.facts.get("overdue", ()),
             *about.facts.get("moved", ()),
             *bounds.remarks,
@@ -197,19 +198,6 @@ def _clustering(acc: Accumulator, requirement: Requirement | None) -> Clustered 
         found.words,
         more,
     )
-
-
-def _retests(acc: Accumulator, about: Facts) -> Sequence[str]:
-    """Count the tries: every earlier run of the unit against the same requirement, void ones too."""
-    tries = 1 + int(about.facts.get("earlier_tries_count", 0))
-    if acc.plan is None or tries == 1:
-        return ()
-    from harness.statistics.retests import retest_words
-
-    named = ", ".join(
-        f"{try_['run'][-8:]} ({try_['verdict'] or try_['status']})" for try_ in about.facts["earlier_tries"]
-    )
-    return (f"{retest_words(acc.plan.consumer_risk, tries)} Earlier: {named}",)
 
 
 def _remarks(acc: Accumulator, sums: Sums, bits_lost: int, clustering: Clustered | None) -> Sequence[str]:

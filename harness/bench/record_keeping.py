@@ -39,7 +39,7 @@ class RecordKeeping:
         self._cut = cut
         self._recorder = Recorder(store)
         self._undecided: dict[int, int] = {}  # point -> bits received and not decided
-        self._earlier: list[dict[str, str | None]] = []
+        self._earlier: list[dict[str, Any]] = []
         self._begun: set[int] = set()
         self._ended: set[int] = set()
         self.started = time.time_ns()
@@ -70,16 +70,23 @@ class RecordKeeping:
 
         self.key = self._recorder.ask(job)
 
-    def _earlier_tries(self, store: Store, key: str) -> list[dict[str, str | None]]:
-        """List this unit's earlier runs against the same requirement: each of them was a try."""
+    def _earlier_tries(self, store: Store, key: str) -> list[dict[str, Any]]:
+        """List this unit's earlier runs against the same requirement; a try is each in which a bit came."""
         device, asked = self._profile.device, self._profile.resolved().get("requirement")
         serial = device.get("serial_number")
         if not asked or not serial:
             return []
-        return [
-            {"run": r.run, "status": r.status, "verdict": "VOID" if r.void else r.verdict}
-            for r in store.earlier_runs(serial, key, asked, device.get("model"))
-        ]
+        earlier = []
+        for r in store.earlier_runs(serial, key, asked, device.get("model")):
+            run: dict[str, Any] = {
+                "run": r.run,
+                "status": r.status,
+                "verdict": "VOID" if r.void else r.verdict,
+            }
+            if r.verdict in (None, "UNDECIDED") and _without_a_bit(store.load_head(r.run)):
+                run["without_a_bit"] = True
+            earlier.append(run)
+        return earlier
 
     def end(self, ended_by: EndedBy) -> Assessment:
         """End what is open, and keep what the run states; raises what the recorder met."""
@@ -144,7 +151,7 @@ class RecordKeeping:
             return
         if self._earlier:
             facts["earlier_tries"] = self._earlier[-TRIES_KEPT:]
-            facts["earlier_tries_count"] = len(self._earlier)
+            facts["earlier_tries_count"] = sum(not run.get("without_a_bit") for run in self._earlier)
         now = time.time_ns()
         self._recorder.ask(lambda store: store.begin_point(key, number, dict(values), now, facts))
 
@@ -184,3 +191,8 @@ class RecordKeeping:
         )
         self._undecided.pop(number, None)
         self._ended.add(number)
+
+
+def _without_a_bit(run: Run) -> bool:
+    """Whether a run that has ended states that not a single bit came, so that it could never have passed."""
+    return run.stated is not None and run.stated.get("bits_received") == 0

@@ -54,6 +54,25 @@ def test_a_second_test_of_the_same_unit_is_counted_and_named(bitassay, measured)
     assert bitassay("verify", "last").status == 0
 
 
+def test_a_run_in_which_not_a_bit_came_is_named_but_was_no_try(bitassay, measured, tmp_path):
+    dead = '--set=link={driver="tcp",host="127.0.0.1",port=1}'
+    failed = measured(7, "2e-5", dead)
+    assert failed["status"] == "failed"
+    next_one = measured()
+    assert next_one["verdict"] == "PASS"
+    assert next_one["earlier_tries"] == 0
+    assert failed["run"][-8:] in next_one["remarks"][0]
+    assert "not a single bit came" in next_one["remarks"][0]
+    assert "%" not in next_one["remarks"][0]
+    third = measured()
+    assert third["earlier_tries"] == 1
+    assert "test 2 of this unit" in third["remarks"][0]
+    text = " ".join(bitassay("report", "last", "--text").out.split())
+    assert "is no try" in text
+    assert "UNDECIDED, not a single bit came" in text
+    assert bitassay("verify", "last").status == 0
+
+
 def test_two_runs_are_compared_and_their_conditions(bitassay, measured):
     good, bad = measured(), measured(8, "3e-3")
     assert (good["verdict"], bad["verdict"]) == ("PASS", "FAIL")

@@ -5,6 +5,8 @@ from __future__ import annotations
 from collections.abc import Iterator
 
 from harness.assess.requirement import requirement_of
+from harness.assess.tries import NO_TRY, count_of, result_of
+from harness.assess.tries import listed as listed_runs
 from harness.assess.words import count, duration, iso, percent
 from harness.report.document import Block, Column, Entries, Entry, Listing, Paragraph, Section, Table
 from harness.report.figures.of_counts import stairs_of
@@ -219,8 +221,8 @@ def retest_section(material: Material) -> Section | None:
     m = next((m for m in material.points if m.plan is not None), None)
     if m is None or m.plan is None:
         return None
-    tries = int(m.facts.get("earlier_tries_count", 0))
-    if not tries:
+    tries, listed = count_of(m.facts), listed_runs(m.facts)
+    if not listed:
         serial = material.run.device.get("serial_number")
         text = (
             "This is the first test of this unit against this requirement in this store."
@@ -230,13 +232,14 @@ def retest_section(material: Material) -> Section | None:
         return Section("Retests", (Paragraph(text),))
     from harness.statistics.retests import retest_words
 
-    listed = m.facts.get("earlier_tries", ())
-    rows = tuple((str(t.get("run", "")), str(t.get("verdict") or t.get("status") or "none")) for t in listed)
+    rows = tuple((str(run.get("run", "")), result_of(run)) for run in listed)
+    words = retest_words(m.plan.consumer_risk, tries + 1)
     blocks: list[Block] = [
-        Paragraph(retest_words(m.plan.consumer_risk, tries + 1), "against"),
-        Paragraph("Every earlier run counts, also void, interrupted and undecided ones."),
+        Paragraph(words, "against") if words else Paragraph("No earlier run of this unit could have passed."),
+        Paragraph(f"Every earlier run counts, also void, interrupted and undecided ones; but {NO_TRY}."),
     ]
-    more = f"{tries - len(rows)} earlier ones are not listed" if tries > len(rows) else ""
+    left = tries - sum(not run.get("without_a_bit") for run in listed)
+    more = f"{left} earlier ones are not listed" if left > 0 else ""
     columns = (Column("run", False), Column("verdict or status", False))
     blocks.append(Table("", columns, rows, more))
     return Section("Retests", tuple(blocks))
