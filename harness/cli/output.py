@@ -5,7 +5,7 @@ from __future__ import annotations
 import json
 import os
 import sys
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -17,6 +17,15 @@ def print_json(document: Mapping[str, Any]) -> None:
     """Print one JSON object on standard output; NaN is a defect, not a value."""
     json.dump(document, sys.stdout, allow_nan=False, indent=1, ensure_ascii=False)
     sys.stdout.write("\n")
+
+
+def print_listing(head: Mapping[str, Any], name: str, items: Sequence[Mapping[str, Any]]) -> None:
+    """Print one JSON object whose long list has an item a line: indenting tens of thousands takes its time."""
+    encode = json.JSONEncoder(allow_nan=False, ensure_ascii=False).encode
+    lines = [f" {encode(key)}: {encode(value)}," for key, value in head.items()]
+    rows = ",\n".join(f"  {encode(item)}" for item in items)
+    listed = f"[\n{rows}\n ]" if items else "[]"
+    sys.stdout.write("\n".join(["{", *lines, f" {encode(name)}: {listed}", "}", ""]))
 
 
 def store_url(option: str | None) -> str:

@@ -6,7 +6,15 @@ import sys
 
 from harness.assess.words import count, local_date
 from harness.cli.failure import FAULT
-from harness.cli.output import missing_default, new_store, open_reading, print_json, store_place, store_url
+from harness.cli.output import (
+    missing_default,
+    new_store,
+    open_reading,
+    print_json,
+    print_listing,
+    store_place,
+    store_url,
+)
 
 
 def runs(store: str | None, limit: int | None, *, as_json: bool) -> int:
@@ -30,7 +38,7 @@ def runs(store: str | None, limit: int | None, *, as_json: bool) -> int:
             }
             for r in lines
         ]
-        print_json({"schema": 1, "runs": listing})
+        print_listing({"schema": 1}, "runs", listing)
         return 0
     if not lines:
         print(f"no runs yet in {store_place(store)}")
