@@ -278,7 +278,8 @@ def main(lock: int, run: int) -> None:
     if goodbye:
         watch.note("dismissed")
         return
-    watch.note(f"process {run} died without a goodbye: making {len(described)} instruments safe")
+    number = "1 instrument" if len(described) == 1 else f"{len(described)} instruments"
+    watch.note(f"process {run} left without a goodbye: making {number} safe")
     watch.make_safe(described)
 
 

@@ -159,8 +159,9 @@ def _judges_nothing(run: Run) -> list[str]:
 def _common_remarks(points: list[PointAssessment], curves: list[Any]) -> tuple[str, ...]:
     """Collect what has to be said of a sweep as a whole: calibrations, what moved, the fit, drift, hysteresis."""
     overdue = dict.fromkeys(words for point in points for words in point.facts.get("overdue", ()))
+    unsafe = [e.text for point in points for e in point.events if "NOT be made safe" in e.text]
     moved = [f"{_name(point)}: {words}" for point in points for words in point.moved]
-    return (*overdue, *moved, *_of_curves(curves))
+    return (*unsafe, *overdue, *moved, *_of_curves(curves))
 
 
 def _of_curves(curves: list[Any]) -> list[str]:

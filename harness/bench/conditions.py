@@ -13,7 +13,15 @@ from collections.abc import Iterator, Mapping
 from pathlib import Path
 from typing import Any
 
-from drivers.contract import DriverError, Instrument, Link, NotConfirmed, OutOfLimits, WrongInstrument
+from drivers.contract import (
+    DriverError,
+    Instrument,
+    Interrupted,
+    Link,
+    NotConfirmed,
+    OutOfLimits,
+    WrongInstrument,
+)
 from drivers.guardian import Guardian
 from drivers.registry import instrument_class
 from harness.bench.correction import PortLevel
@@ -40,6 +48,7 @@ class Conditions:
         self._cancel = cancel
         self.level = PortLevel.of(profile)
         self.events: list[Event] = []
+        self.unsafe: list[str] = []  # what was left in a state that may not be safe, in words
         self.instruments: dict[str, Instrument] = {}
         self._strangers: set[str] = set()  # not those that a resumed run was begun with: never sent a value
         for name, settings in profile.instruments.items():
@@ -71,8 +80,9 @@ class Conditions:
         }
         guardian: Guardian | None = None
         try:
-            for instrument in self.instruments.values():
-                instrument.open()
+            for name, instrument in self.instruments.items():
+                with _of(name):
+                    instrument.open()
             if any(instrument.lasting for instrument in self.instruments.values()):
                 guardian = Guardian.start(described, self._lock)
             yield
@@ -112,7 +122,8 @@ class Conditions:
                     self._say(f"{name} made safe at {_value(instrument, instrument.section.safe)}")
             except DriverError as error:
                 well = False
-                self._say(f"{name} could NOT be made safe: {error.what}")
+                self.unsafe.append(f"{name} could NOT be made safe: {error.what}")
+                self._say(self.unsafe[-1])
         for instrument in self.instruments.values():
             with contextlib.suppress(DriverError):
                 instrument.close()
@@ -162,7 +173,8 @@ class Conditions:
             if name not in values:
                 continue
             instrument = self.instruments[name]
-            applied = instrument.apply(values[name], self._cancel)
+            with _of(name):
+                applied = instrument.apply(values[name], self._cancel)
             if applied.reading is not None:
                 readings[name] = applied.reading
             reads = "" if applied.reading is None else f", reads {_value(instrument, applied.reading)}"
@@ -204,6 +216,19 @@ class Conditions:
 
     def _say(self, text: str) -> None:
         self.events.append(Event("instrument", None, text, time.time_ns()))
+
+
+@contextlib.contextmanager
+def _of(name: str) -> Iterator[None]:
+    """Let an instrument's error say which one it is: an address alone tells a tired person nothing."""
+    try:
+        yield
+    except Interrupted:
+        raise
+    except DriverError as error:
+        if not error.what.startswith(name):
+            error.what = f"{name}: {error.what}"
+        raise
 
 
 def _value(instrument: Instrument, value: float) -> str:

@@ -66,6 +66,8 @@ class BenchRun:
         self._several = profile.sweep is not None or profile.search is not None
         self._route = route_of(profile, cut, len(self._ways))
         self._record = RecordKeeping(profile, store, hooks, command=command, cut=cut)
+        for link in self._links.all:
+            link.begin_sitting(self._record.sitting)
         self._next_tick = 0.0
         self._done: list[PointAssessment] = points_done(cut) if cut else []
         self._next_index = 1 + max((s.index for p in cut.points for s in p.seconds), default=-1) if cut else 0
@@ -136,7 +138,18 @@ class BenchRun:
         if fault is not None:
             extra.append(Event("fault", None, fault[0], time.time_ns()))
         self._make_sure_of(last, extra)
-        return fault, ended_by
+        return self._with_what_is_unsafe(fault), ended_by
+
+    def _with_what_is_unsafe(self, fault: tuple[str, str] | None) -> tuple[str, str] | None:
+        """Let nobody overlook an instrument that could not be made safe, however well the run went."""
+        unsafe = "; ".join(self._conditions.unsafe)
+        if not unsafe:
+            return fault
+        log = self._lock / f"guardian-{self._record.key}.log"
+        advice = (
+            f"set it by hand before anyone touches the bench; what its guardian still tries stands in {log}"
+        )
+        return (f"{fault[0]}; {unsafe}" if fault else unsafe), advice
 
     def _make_sure_of(self, number: int, events: list[Event]) -> None:
         """Enter events that came outside of a point's measurement, beginning the point where need be."""

@@ -80,7 +80,7 @@ def wait_for_the_guardian(folder: Path) -> str:
     """Read its log once it has tried."""
     for _ in range(600):
         words = "".join(log.read_text() for log in folder.glob("guardian-*.log"))
-        if "safe" in words.replace("instruments safe", ""):
+        if "safe" in words.replace("1 instrument safe", ""):
             return words
         time.sleep(0.1)
     raise AssertionError("the guardian never tried")
@@ -101,6 +101,7 @@ def test_an_attenuator_that_fails_in_mid_sweep_ends_it_and_what_was_measured_is_
     said = done.err.strip().splitlines()
     assert said[0].startswith("caution: too little attenuation")
     assert len(said) == 3
+    assert said[1].startswith("bitassay: attenuator: ")  # which one, not its address alone
     assert "Traceback" not in done.err
     first = got["points"][0]
     assert first["bits_compared"] == 80_000
@@ -113,6 +114,22 @@ def test_an_attenuator_that_fails_in_mid_sweep_ends_it_and_what_was_measured_is_
     if fault == "dies":  # nothing answers any more: it is said, and the guardian goes on trying
         assert any("could NOT be made safe" in e["text"] for p in got["points"] for e in p["events"])
         assert "not yet safe" in wait_for_the_guardian(tmp_path / "results")
+        assert "attenuator could NOT be made safe" in said[1]
+        assert "set it by hand" in said[2]
+
+
+def test_a_sweep_that_went_well_and_left_its_attenuator_unsafe_is_no_success(bitassay, attenuated, tmp_path):
+    device = attenuated(refuse='-350,"Queue overflow"', fault_from=3)
+    (tmp_path / "sweep.toml").write_text(device.profile(SHORT, stop="bits = 80_000"))
+    done = bitassay("sweep", "sweep.toml", "--json", timeout=120)
+    assert done.status == 4, done.err
+    assert "attenuator could NOT be made safe" in done.err
+    assert "set it by hand before anyone touches the bench" in done.err
+    assert done.json["status"] == "completed"
+    assert [p["bits_compared"] for p in done.json["points"]] == [80_000] * 3
+    shown = bitassay("show", "last").out
+    assert "attenuator could NOT be made safe" in shown.partition("\npoints")[0]
+    assert bitassay("verify", "last").status == 0
 
 
 def test_an_attenuator_that_is_slow_but_answers_in_time_is_waited_for(bitassay, attenuated, tmp_path):

@@ -84,7 +84,7 @@ def test_a_killed_run_leaves_its_attenuator_safe(attenuator: Start, run: StartRu
     assert wait_for_guardian(lock, 30)
     assert bench.settings() == [20.0, 95.0]
     words = last_words(lock)
-    assert "died without a goodbye" in words[1]
+    assert "left without a goodbye" in words[1]
     assert words[2].endswith("attenuator: safe at 95.0")
     assert words[3].endswith("done")
 
