@@ -7,7 +7,7 @@ from typing import Annotated
 
 import typer
 
-from harness.cli.numbers import number
+from harness.cli.numbers import at_least_one, number
 from harness.cli.options import HtmlOption, JsonOption, PaperOption, PdfOption, RunArgument, StoreOption
 
 records_app = typer.Typer()
@@ -17,7 +17,7 @@ records_app = typer.Typer()
 def runs(
     store: StoreOption = None,
     limit: Annotated[
-        int | None, typer.Option("--limit", metavar="N", min=1, help="Only the newest N.")
+        int | None, typer.Option("--limit", parser=at_least_one, metavar="N", help="Only the newest N.")
     ] = None,
     json: JsonOption = False,
 ) -> int:

@@ -9,7 +9,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, BinaryIO, Literal
 
 from harness.cli.failure import FAULT, PASS, UNDECIDED, UserError, warn
-from harness.cli.output import open_writing, print_json, store_place, tell_new_store
+from harness.cli.output import new_store, open_writing, print_json, store_place
 
 if TYPE_CHECKING:
     import numpy as np
@@ -60,9 +60,10 @@ def examine(
     settings = {**record.settings, "confidence": confidence, "file": str(file)}
     record = replace(record, title=f"capture {file.name}", settings=settings)
     if store is not None:
-        if not as_json:
-            tell_new_store(store)
+        new = None if as_json else new_store(store)
         record = _keep(record, store)
+        if new is not None:
+            print(f"new store at {new}", file=sys.stderr)
     assessment = assess(record)
     if not record.key:
         assessment = replace(assessment, run=None)

@@ -18,12 +18,12 @@ from harness.assess.assessment import Assessment
 from harness.cli.failure import FAIL, FAULT, INTERRUPTED, PASS, TERMINATED, UNDECIDED, UserError, warn
 from harness.cli.output import (
     lock_folder,
+    new_store,
     open_for_measuring,
     open_reading,
     print_json,
     store_place,
     store_url,
-    tell_new_store,
 )
 
 if TYPE_CHECKING:
@@ -194,9 +194,7 @@ def carry_out(loaded: Profile, command: str, manner: Manner, cut: Run | None = N
     as_json, quiet = manner.as_json, manner.quiet
     ending, log_file = Ending(), Log(manner.log)
     where = store_place(manner.store)
-    if not (quiet or as_json):
-        tell_new_store(manner.store)
-
+    new = None if quiet or as_json else new_store(manner.store)
     views: list[Watcher] = []
 
     def of_the_store(words: str) -> None:
@@ -204,6 +202,8 @@ def carry_out(loaded: Profile, command: str, manner: Manner, cut: Run | None = N
         log_file.line(words)
 
     with open_for_measuring(manner.store, of_the_store) as opened, ending.caught():
+        if new is not None:
+            print(f"new store at {new}", file=sys.stderr)
         try:
             with watcher(
                 quiet=quiet or as_json,

@@ -45,6 +45,20 @@ def count_of(text: str) -> int:
     return value
 
 
+def at_least_one(text: str) -> int:
+    """Read a whole number of 1 or more.
+
+    Raises
+    ------
+    UserError
+        It is none.
+    """
+    value = whole(text)
+    if value < 1:
+        raise UserError(f"{text} is too few", "give 1 or more")
+    return value
+
+
 def number(text: str | float) -> float:
     """Read a finite number: ``48000``, ``48_000``, ``4.8e4``, ``1e-9``; a default, which is one, stays as it is.
 

@@ -79,12 +79,6 @@ def new_store(option: str | None) -> Path | None:
     return None if "://" in path or Path(path).exists() else Path(path)
 
 
-def tell_new_store(option: str | None) -> None:
-    """Say it on standard error."""
-    if path := new_store(option):
-        print(f"new store at {path}", file=sys.stderr)
-
-
 def lock_folder(url: str) -> Path:
     """Say where guardians keep their files: beside a SQLite store, else in results/ here."""
     path = url.removeprefix("sqlite:///") if url.startswith("sqlite:///") else url

@@ -68,6 +68,7 @@ def test_what_is_no_number_is_refused_and_says_how_to_write_it(text, advice):
         (["examine", "x.bin", "--rate", "48k"], ['"48k" is no number', "write it in figures: 48000"]),
         (["bounds", "-1", "10"], ["-1 is under 0"]),
         (["theory", "--modulation", "bpsk", "--ebn0", "inf", "--json"], ["no finite number"]),
+        (["runs", "--limit", "0"], ["0 is too few", "1 or more"]),
         (["plan", "--ber", "1e-320"], ["beyond every test", "1e-30 or more"]),
         ([], ["no command was given", "--help"]),
     ],

@@ -24,6 +24,9 @@ def test_writing_says_that_a_named_store_is_new(bitassay, tmp_path):
     (tmp_path / "p.toml").write_text(PROFILE)
     done = bitassay("measure", "p.toml", "--store", "lab.sqlite")
     assert done.err.splitlines()[0] == "new store at lab.sqlite"
+    failed = bitassay("measure", "p.toml", "--store", "/proc/lab.sqlite")
+    assert failed.status == 4
+    assert "new store" not in failed.err
 
 
 def test_a_store_that_is_there_or_in_its_usual_place_or_on_a_server_needs_no_word(tmp_path, monkeypatch):
