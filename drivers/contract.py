@@ -200,6 +200,12 @@ class Link(_Opened, ABC):
     def turn(self, to: Literal["send", "receive"]) -> None:
         """Half-duplex links: change direction."""
 
+    def begin_sitting(self, number: int) -> None:
+        """Say, before `open`, which sitting of its run this is: a simulation goes on instead of starting again.
+
+        Number 0 begins a run; each time that it goes on after it was cut it is one more.
+        """
+
     def carry(self, what: Literal["payload", "characters"]) -> None:
         """Say what the bytes are: payload, as after `open`, or the characters of a set-up dialogue.
 

@@ -40,6 +40,9 @@ class Chain:
         One for each stage; two stages with the same seed still draw from different streams.
     line
         What they may know of the line.
+    sitting
+        Of the run. In each the stages draw from streams of their own, or a run that goes on would meet the errors
+        of its beginning once more.
 
     Raises
     ------
@@ -47,12 +50,12 @@ class Chain:
         Where the line does not know what a model's keys need.
     """
 
-    def __init__(self, sections: Sequence[ChannelSection], line: Line) -> None:
+    def __init__(self, sections: Sequence[ChannelSection], line: Line, sitting: int = 0) -> None:
         self.seeds = tuple(
             section.seed if section.seed is not None else secrets.randbits(48) for section in sections
         )
         self._stages = tuple(
-            section.stage(line, np.random.default_rng([seed, index]))
+            section.stage(line, np.random.default_rng([seed, index, sitting] if sitting else [seed, index]))
             for index, (section, seed) in enumerate(zip(sections, self.seeds, strict=True))
         )
         self.whole_bytes = all(stage.whole_bytes for stage in self._stages)

@@ -65,7 +65,8 @@ class LoopbackLink(Link):
 
     def __init__(self, section: LoopbackSection, nominal_bps: float | None = None) -> None:
         super().__init__(section, nominal_bps)
-        self._chain = Chain(section.channel, Line(section.bit_order, nominal_bps))
+        self._sitting = 0
+        self._chain = self._new_chain()
         whole_bytes = self._chain.whole_bytes and section.delay_bits % 8 == 0
         self.traits = Traits(whole_bytes=whole_bytes, ends_with_input=True)
         self._delay: BitDelay | None = None
@@ -83,6 +84,15 @@ class LoopbackLink(Link):
         self._read = 0
         self._due: deque[tuple[int, float]] = deque()  # (written, when they may be received)
         self._ripe = 0  # bytes that may be received, counted like `_written`
+
+    def _new_chain(self) -> Chain:
+        return Chain(self.section.channel, Line(self.section.bit_order, self._nominal_bps), self._sitting)
+
+    def begin_sitting(self, number: int) -> None:
+        """Draw other errors than in the sittings before; knobs are as the profile has them."""
+        with self._channel:
+            self._sitting = number
+            self._chain = self._new_chain()
 
     def open(self) -> None:
         """Start with an empty buffer and a fresh delay."""
@@ -193,6 +203,8 @@ class LoopbackLink(Link):
         ):
             keys = {**section.model_dump(exclude_defaults=True, exclude={"model", "seed"}), "seed": seed}
             words = ", ".join(f"{key} {written(value)}" for key, value in keys.items())
+            if self._sitting:
+                keys["sitting"] = self._sitting
             told[f"channel {number}"] = f"{section.model}: {words}"
         return told
 

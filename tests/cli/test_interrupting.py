@@ -15,6 +15,8 @@ from concurrent.futures import ThreadPoolExecutor
 
 import pytest
 
+from harness.store import open_store
+
 RUN = """
 title = "Wader-9, invented"
 [device]
@@ -169,3 +171,22 @@ def test_a_run_killed_before_its_first_point_is_shown_and_goes_on(bitassay, tmp_
     assert resumed.status == 0, resumed.err
     assert (resumed.json["verdict"], resumed.json["errors"]) == ("PASS", 0)
     assert bitassay("verify", "last").status == 0
+
+
+def test_a_resumed_run_does_not_meet_the_errors_of_its_beginning_again(bitassay, tmp_path):
+    (tmp_path / "run.toml").write_text(RUN + "[stop]\nbits = 2_400_000\n")
+    process = start(tmp_path, "measure", "run.toml", "--quiet")
+    assert wait_for_rows(tmp_path, 1, process)
+    process.kill()
+    process.communicate()
+    assert bitassay("resume", "last").status == 0
+    with open_store(f"sqlite:///{tmp_path / 'results' / 'runs.sqlite'}") as store:
+        (point,) = store.load(store.find("last")).points
+    sittings = []
+    for sitting in (0, 1):
+        seconds = [s for s in point.seconds if s.sitting == sitting]
+        first = min(s.first_bit for s in seconds)
+        sittings.append({int(bit) - first for s in seconds for bit in s.positions})
+    same, fewest = len(sittings[0] & sittings[1]), min(map(len, sittings))
+    assert fewest > 200
+    assert same < fewest / 10  # one in a thousand by chance

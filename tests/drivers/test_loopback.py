@@ -292,3 +292,24 @@ def test_the_link_tells_its_channel_in_plain_words() -> None:
     told = link.describe()
     assert told["channel 1"].startswith("independent: ber 1e-6, seed ")
     assert told["channel 2"].startswith("slip: bits -8, at_bits 80, 160, seed ")
+
+
+def test_each_sitting_of_a_run_meets_errors_of_its_own() -> None:
+    data = np.zeros(100_000, dtype=np.uint8)
+    channel = [
+        {"model": "independent", "ber": 0.01, "seed": 7},
+        {"model": "independent", "ber": 0.02, "seed": 7},
+    ]
+
+    def errors(sitting: int) -> bytes:
+        link = loopback(channel=channel)
+        link.begin_sitting(sitting)
+        return pass_through(link, data).tobytes()
+
+    first, again, third = errors(0), errors(1), errors(2)
+    assert first == errors(0) == pass_through(loopback(channel=channel), data).tobytes()
+    assert again == errors(1)
+    assert len({first, again, third}) == 3
+    together = [np.frombuffer(one, np.uint8) for one in (first, again)]
+    # Independent streams share errors by chance only: of about 23 500 in each some 700.
+    assert int(np.bitwise_count(together[0] & together[1]).sum()) < 1_000
