@@ -6,6 +6,7 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
+from harness.assess import tries
 from harness.assess.words import iso
 from harness.record import EndedBy, Event, Status, Tally, Verdict
 from harness.statistics.availability import AvailabilityResult
@@ -151,7 +152,7 @@ class PointAssessment:
             "plan": dict(self.plan) if self.plan else None,
             "reasons": list(self.reasons),
             "remarks": list(self.remarks),
-            "earlier_tries": int(self.facts.get("earlier_tries_count", 0)),
+            "earlier_tries": None if tries.unknown(self.facts) else tries.count_of(self.facts),
             "after_decision": {"bits": self.after_decision.received, "errors": self.after_decision.errors},
             "availability": [availability_json(a) for a in self.availability],
             "clustering": (self.clustering or _not_judged(t.errors)).to_json(),

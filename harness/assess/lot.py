@@ -128,7 +128,7 @@ def summarise(
     deciding = [_deciding(tried) for tried in by_unit.values()]
     asked = next((r.requirement for r in reversed(deciding) if r.standing == "measured"), None)
     units = [
-        _unit(run, len(tried), same=run.requirement == asked)
+        _unit(run, sum(_may_have_passed(one) for one in tried), same=run.requirement == asked)
         for run, tried in zip(deciding, by_unit.values(), strict=True)
     ]
     marked = tuple(replace(unit, remarks=tuple(_remarks(unit, units))) for unit in units)
@@ -178,9 +178,15 @@ def _deciding(tried: Sequence[LotRun]) -> LotRun:
     return next((run for run in reversed(tried) if run.standing == "measured"), tried[-1])
 
 
+def _may_have_passed(run: LotRun) -> bool:
+    """Whether a run was a try: one in which not a single bit came could not have passed."""
+    return run.assessment.whole.tally.received > 0
+
+
 def _first_verdict(tried: Sequence[LotRun]) -> Verdict | None:
     """Give the first verdict that a unit got; a void run's counts too, lest voiding it hide a fail."""
-    return next((run.assessment.verdict for run in tried if run.assessment.verdict is not None), None)
+    given = (run.assessment.verdict for run in tried if _may_have_passed(run))
+    return next((verdict for verdict in given if verdict is not None), None)
 
 
 def judged_point(a: Assessment) -> PointAssessment:
@@ -231,6 +237,8 @@ def _tries(runs: Sequence[LotRun], counting: set[str | None]) -> Iterator[Try]:
             why = STATUS[a.status]
         else:
             why = "measured again later"
+        if not _may_have_passed(run):
+            why += "; not a single bit came, so it was no try"
         yield Try(serial_of(a), a.run or "", iso(a.started) or "", a.verdict, why)
 
 
@@ -275,7 +283,7 @@ def _remarks(unit: Unit, units: Sequence[Unit]) -> Iterator[str]:
     if unit.standing == "not valid":
         yield "its record does not hold: no figure of it counts"
     elif unit.standing == "void":
-        yield "its only run is void" if unit.tries == 1 else "all its runs are void or were not completed"
+        yield "its only run is void" if unit.tries <= 1 else "all its runs are void or were not completed"
     elif unit.standing == "not completed":
         yield "no run of it was completed"
     if not unit.same_requirement:

@@ -8,6 +8,17 @@ from typing import Any
 NO_TRY = "a run in which not a single bit came could not have passed, and is no try"
 
 
+UNKNOWN = (
+    "whether this unit was tested before against this requirement is not known: the store could not be reached when "
+    "the run began"
+)
+
+
+def unknown(facts: Mapping[str, Any]) -> bool:
+    """Whether nobody could be asked for earlier runs."""
+    return bool(facts.get("earlier_tries_unknown"))
+
+
 def count_of(facts: Mapping[str, Any]) -> int:
     """How many earlier runs were tries: each of them might have passed."""
     return int(facts.get("earlier_tries_count", 0))
@@ -27,6 +38,8 @@ def result_of(run: Mapping[str, Any]) -> str:
 
 def remark(consumer_risk: float, facts: Mapping[str, Any]) -> Sequence[str]:
     """Say beside the verdict that a unit was tested before, and what that does to the risk."""
+    if unknown(facts):
+        return (f"{UNKNOWN[0].upper()}{UNKNOWN[1:]}.",)
     runs = listed(facts)
     if not runs:
         return ()

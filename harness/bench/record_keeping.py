@@ -15,7 +15,7 @@ from harness.bench.session import bench_host, bench_versions, status_of
 from harness.bench.terms import Defect, Outcome
 from harness.profile import Profile
 from harness.record import EndedBy, Event, Run, Second, Sitting, Tally
-from harness.store import Store
+from harness.store import Store, StoreLost
 
 TRIES_KEPT = 20  # named in the record; all are counted
 Commit = Callable[[list[Second], list[Event], int], None]
@@ -40,6 +40,7 @@ class RecordKeeping:
         self._recorder = Recorder(store)
         self._undecided: dict[int, int] = {}  # point -> bits received and not decided
         self._earlier: list[dict[str, Any]] = []
+        self._earlier_unknown = False
         self._begun: set[int] = set()
         self._ended: set[int] = set()
         self.started = time.time_ns()
@@ -65,7 +66,10 @@ class RecordKeeping:
                 device=profile.device,
             )
             store.begin_sitting(key, sitting)
-            self._earlier = self._earlier_tries(store, key)
+            try:
+                self._earlier = self._earlier_tries(store, key)
+            except StoreLost:
+                self._earlier_unknown = True  # said with the verdict: no reason to keep a bench waiting
             return key
 
         self.key = self._recorder.ask(job)
@@ -149,6 +153,8 @@ class RecordKeeping:
             missing = {name: fact for name, fact in facts.items() if name not in there.facts}
             self._recorder.ask(lambda store: store.begin_point(key, number, {}, 0, missing))
             return
+        if self._earlier_unknown:
+            facts["earlier_tries_unknown"] = True
         if self._earlier:
             facts["earlier_tries"] = self._earlier[-TRIES_KEPT:]
             facts["earlier_tries_count"] = sum(not run.get("without_a_bit") for run in self._earlier)

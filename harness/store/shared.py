@@ -15,7 +15,7 @@ from typing import Any
 
 from sqlalchemy import select
 
-from harness.record import EndedBy, Event, Note, Second, Sitting, Status, Tally, Verdict
+from harness.record import EndedBy, Event, Note, Run, Second, Sitting, Status, Tally, Verdict
 
 from . import schema as t
 from .connect import is_sqlite, parse_url
@@ -257,6 +257,15 @@ class SharedStore(Store):
         """Give the key of a run on the server."""
         return self._reached().find(ref)
 
+    def load_head(self, key: str) -> Run:
+        """Give a run without its seconds and events, from the file where that has it."""
+        try:
+            return super().load_head(key)
+        except NoSuchRun:
+            if self._server is None:
+                raise
+            return self._server.load_head(key)
+
     def load(self, key: str) -> Any:
         """Give a whole run, from the file where that has it."""
         return super().load(key) if self._has(key) else self._reached().load(key)
@@ -285,7 +294,7 @@ class SharedStore(Store):
 
     def _has(self, key: str) -> bool:
         try:
-            self.load_head(key)
+            super().load_head(key)
         except NoSuchRun:
             return False
         return True

@@ -26,7 +26,8 @@ def tried():
         bounds = Bounds(
             "Clopper-Pearson", 0.95, errors / bits / 2, errors / bits * 2 + 1e-7, "upper", 0.95, 1e-5
         )
-        tally = Tally(bits, bits, 0, errors, errors, 0)
+        received = more.pop("received", bits)
+        tally = Tally(received, received, 0, errors, errors, 0)
         p = replace(empty.whole, tally=tally, ber=errors / bits, bounds=bounds, verdict=verdict)
         a = replace(
             empty, run=key or f"run-{serial}", device={"serial_number": serial, "model": "Wader-9"},
@@ -82,6 +83,13 @@ def test_voiding_a_fail_does_not_make_the_next_try_the_first(tried):
     lot = summarise("L7", None, [tried("1", "FAIL", key="a", void="by mistake"), tried("1", key="b")])
     assert (lot.passed, lot.first_passed, lot.first_judged) == (1, 0, 1)
     assert lot.tries[0].why == "void: by mistake"
+
+
+def test_a_run_in_which_not_a_bit_came_is_listed_and_is_no_try(tried):
+    lot = summarise("L7", None, [tried("1", "UNDECIDED", 0, 1, key="a", received=0), tried("1", key="b")])
+    assert (lot.units[0].tries, lot.first_passed, lot.first_judged) == (1, 1, 1)
+    assert lot.tries[0].why == "measured again later; not a single bit came, so it was no try"
+    assert lot.units[0].remarks == ()
 
 
 def test_units_of_two_models_with_one_serial_number_are_two_units(tried):

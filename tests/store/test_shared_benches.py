@@ -95,3 +95,55 @@ def test_benches_and_a_follower_outlive_a_server_that_is_stopped_and_started(
         assert bitassay("verify", key, f"--store={server.address}").status == 0
         left = bitassay("runs", "--json", f"--store={tmp_path / serial / 'results' / 'handover.sqlite'}")
         assert left.json["runs"] == []
+
+
+JUDGED = (
+    PROFILE.replace("seconds = 12", "seconds = 1")
+    + """
+[requirement]
+ber = 1e-2
+accept_errors = 50
+"""
+)
+
+
+def test_a_bench_begins_while_the_server_is_away_and_says_what_it_cannot_know(
+    server: Any, bitassay: Callable[..., Any], tmp_path: Path
+) -> None:
+    (tmp_path / "wader.toml").write_text(JUDGED)
+    measure = (
+        "measure",
+        "wader.toml",
+        "--set=device.serial_number=0031",
+        "--json",
+        f"--store={server.address}",
+    )
+    server.stop()
+    alone = bitassay(*measure)
+    assert alone.status == 0, alone.err
+    assert alone.json["verdict"] == "PASS"
+    assert alone.json["earlier_tries"] is None
+    assert any("tested before" in remark and "not known" in remark for remark in alone.json["remarks"])
+    server.start()
+    again = bitassay(*measure)
+    assert again.json["earlier_tries"] == 1  # the one before has been handed over
+    assert bitassay("verify", alone.json["run"], f"--store={server.address}").status == 0
+    text = bitassay("report", alone.json["run"], f"--store={server.address}").out
+    assert "not known: the store could not be reached when the run began" in " ".join(text.split())
+
+
+def test_an_undecided_run_that_only_the_server_has_is_looked_into_as_an_earlier_try(
+    server: Any, bitassay: Callable[..., Any], tmp_path: Path
+) -> None:
+    (tmp_path / "wader.toml").write_text(JUDGED.replace("ber = 1e-2", "ber = 1e-5"))
+    measure = (
+        "measure",
+        "wader.toml",
+        "--set=device.serial_number=0031",
+        "--json",
+        f"--store={server.address}",
+    )
+    assert bitassay(*measure).json["verdict"] == "UNDECIDED"
+    again = bitassay(*measure)
+    assert again.status == 3, again.err
+    assert again.json["earlier_tries"] == 1

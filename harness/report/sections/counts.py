@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 
+from harness.assess.later import came_later
 from harness.assess.words import count, duration, iso, percent, ratio
 from harness.record import Event
 from harness.report.document import Block, Column, Entries, Entry, Listing, Paragraph, Section, Table
@@ -40,9 +41,11 @@ def counts_section(material: Material) -> Section:
 
 def _tallies(material: Material) -> Table:
     points = [m.assessed for m in material.points]
+    later = [came_later(p) for p in points]
     lines = (
         ("bits sent", [number(p.bits_sent) if p.bits_sent else "not sent here" for p in points]),
         ("bits received", [number(p.tally.received) for p in points]),
+        *([("sent before the decision, came after it", [number(n) for n in later])] if any(later) else []),
         ("bits compared", [number(p.tally.compared) for p in points]),
         ("bits unaligned", [number(p.tally.unaligned) for p in points]),
         ("errors", [number(p.tally.errors) for p in points]),

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterator
 from itertools import pairwise
 
+from harness.assess.tries import UNKNOWN, unknown
 from harness.assess.words import STATUS, count, duration
 from harness.record import Event
 from harness.report.document import Block, Listing, Paragraph, Section
@@ -150,6 +151,8 @@ def _limits(material: Material) -> Iterator[str]:
 
 
 def _tries(material: Material) -> Iterator[str]:
+    if any(unknown(m.facts) for m in material.points):
+        yield UNKNOWN
     tries = max((int(m.facts.get("earlier_tries_count", 0)) for m in material.points), default=0)
     if tries:
         yield f"this unit was tested {tries} {'time' if tries == 1 else 'times'} before against this requirement"

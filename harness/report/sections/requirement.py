@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterator
 
 from harness.assess.requirement import requirement_of
-from harness.assess.tries import NO_TRY, count_of, result_of
+from harness.assess.tries import NO_TRY, UNKNOWN, count_of, result_of, unknown
 from harness.assess.tries import listed as listed_runs
 from harness.assess.words import count, duration, iso, percent
 from harness.report.document import Block, Column, Entries, Entry, Listing, Paragraph, Section, Table
@@ -221,6 +221,8 @@ def retest_section(material: Material) -> Section | None:
     m = next((m for m in material.points if m.plan is not None), None)
     if m is None or m.plan is None:
         return None
+    if unknown(m.facts):
+        return Section("Retests", (Paragraph(f"{UNKNOWN[0].upper()}{UNKNOWN[1:]}.", "against"),))
     tries, listed = count_of(m.facts), listed_runs(m.facts)
     if not listed:
         serial = material.run.device.get("serial_number")
