@@ -247,7 +247,7 @@ class PathCheck:
             text = (
                 f"our own bytes come back at once (in {duration(took_s)}): from a far end without delay, or "
             )
-            text += "from an echo at this end of the connection"
+            text += "from an echo or a short at this end (a loop behind a serial server is one)"
             advice = "be sure that the far end loops them back, and no server or gateway before it; " + refuse
         else:
             text = f"what is sent comes out of the other port at once (in {duration(took_s)})"
