@@ -6,6 +6,7 @@ from collections.abc import Mapping
 from typing import Any
 
 from harness.assess.assessment import PointAssessment
+from harness.assess.later import came_later
 from harness.assess.words import count, percent, rate, ratio
 
 PATHS = {
@@ -124,7 +125,9 @@ def detail_words(p: PointAssessment) -> list[str]:
     if t.received:
         sent = f"{count(p.bits_sent, 'bit')} sent, " if p.bits_sent else ""
         speed = f" at {rate(p.measured_bps)}" if p.measured_bps else ""
-        lines.append(f"{sent}{count(t.received, 'bit')} received{speed}")
+        later = came_later(p)
+        rest = f"; the other {count(later, 'bit')} came after the decision" if later else ""
+        lines.append(f"{sent}{count(t.received, 'bit')} received{speed}{rest}")
     for a in p.availability:
         if a.seconds:
             lines.append(
