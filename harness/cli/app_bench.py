@@ -31,7 +31,7 @@ def measure(
     quiet: QuietOption = False,
     log: LogOption = None,
 ) -> int:
-    """Carry out one run: send the pattern, count, decide, keep the record.
+    """Carry out one run: send, count, decide, keep the record.
 
     Example: bitassay measure profiles/loopback.toml --set device.serial_number=0031
     """
@@ -50,7 +50,9 @@ def sweep(
     quiet: QuietOption = False,
     log: LogOption = None,
 ) -> int:
-    """Carry out a run with several points: a sweep steps through them, a search chooses them.
+    """Carry out a run with several points: a sweep, or a search.
+
+    A sweep steps through its points, a search chooses them.
 
     Example: bitassay sweep profiles/sweep-loopback.toml
     """
@@ -74,10 +76,10 @@ def lot(
     json: JsonOption = False,
     log: LogOption = None,
 ) -> int:
-    """Measure many units, one after another: asks for each serial number; ends with the lot at a glance.
+    """Measure many units, one after another, by serial number.
 
-    An empty line ends it; the lot goes on another day, and `bitassay report --lot NAME` reports it again
-    without measuring.
+    It asks for each number, and ends with the lot at a glance. An empty line ends it; the lot goes on another
+    day, and `bitassay report --lot NAME` reports it again without measuring.
 
     Example: bitassay lot my-lot.toml --pdf lot.pdf
     """
@@ -110,7 +112,9 @@ def resume(
 def check(
     profile: ProfileArgument, set_: SetOption = None, store: StoreOption = None, json: JsonOption = False
 ) -> int:
-    """Before a run: prove the path, the instruments and the counting; forecast time and disk.
+    """Before a run: prove the path, forecast time and disk.
+
+    Proves the path, the instruments and the counting; ends with 0 only when an unattended run may start.
 
     Example: bitassay check profiles/loopback.toml
     """

@@ -8,7 +8,7 @@ from typing import Annotated
 import typer
 
 from harness.cli.numbers import count_of, number
-from harness.cli.options import JsonOption, StoreOption
+from harness.cli.options import JsonOption
 
 figures_app = typer.Typer()
 
@@ -29,10 +29,13 @@ def examine(
     confidence: Annotated[
         float, typer.Option("--confidence", parser=number, metavar="C", help="Of the bounds.")
     ] = 0.95,
-    store: StoreOption = None,
+    store: Annotated[
+        str | None,
+        typer.Option("--store", metavar="URL", help="Keep a record there; left out: none is kept."),
+    ] = None,
     json: JsonOption = False,
 ) -> int:
-    """Count errors in bytes captured elsewhere; keeps a record only where --store is given.
+    """Count errors in bytes captured elsewhere.
 
     Example: bitassay examine received.bin --rate 48000
     """
@@ -138,7 +141,9 @@ def theory(
     ber: Annotated[
         float | None, typer.Option("--ber", parser=number, metavar="P", help="A BER; gives the Eb/N0 for it.")
     ] = None,
-    fading: Annotated[str | None, typer.Option("--fading", metavar="rayleigh", help="Flat fading.")] = None,
+    fading: Annotated[
+        str | None, typer.Option("--fading", metavar="rayleigh|rician:K", help="Flat fading; K in dB.")
+    ] = None,
     json: JsonOption = False,
 ) -> int:
     """The textbook curve: BER for an Eb/N0, or the other way round.

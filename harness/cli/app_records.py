@@ -45,9 +45,7 @@ def show(run: RunArgument = "last", store: StoreOption = None, json: JsonOption 
 def report(
     run: Annotated[
         str | None,
-        typer.Argument(
-            metavar="[RUN]", help="A run's key, any unique ending of it, or `last` (the default)."
-        ),
+        typer.Argument(metavar="RUN", help="A run's key, any unique ending of it, or `last` (the default)."),
     ] = None,
     lot: Annotated[
         str | None,
@@ -63,7 +61,7 @@ def report(
     paper: PaperOption = "a4",
     store: StoreOption = None,
 ) -> int:
-    """Write the report of a run, or of a lot with all its units: a page, a PDF, or text.
+    """Write the report of a run or a lot: a page, a PDF, or text.
 
     An earlier report is replaced; any other file that stands there is left alone.
 
@@ -92,7 +90,7 @@ def export(
     ] = False,
     store: StoreOption = None,
 ) -> int:
-    """Write a run's data for other programs: CSV, JSON, or JUnit XML for test automation.
+    """Write a run's data: CSV, JSON, or JUnit XML.
 
     Example: bitassay export last --format junit --output result.xml
     """
@@ -104,7 +102,9 @@ def export(
 
 @records_app.command()
 def follow(run: RunArgument = "last", store: StoreOption = None, json: JsonOption = False) -> int:
-    """Watch a run that another terminal or computer measures, until it ends; reads only the store.
+    """Watch a run that is measured elsewhere, until it ends.
+
+    It reads nothing but the store: from another terminal, or from another computer.
 
     Example: bitassay follow last
     """
@@ -140,7 +140,9 @@ def compare(
     ] = 0.95,
     json: JsonOption = False,
 ) -> int:
-    """Is B worse than A? An exact test on the two counts, and the ratio of the BERs with bounds.
+    """Say whether run B is worse than run A.
+
+    An exact test on the two counts, and the ratio of the BERs with bounds.
 
     Two sweeps are compared point by point, where their settings are the same.
 
@@ -160,7 +162,9 @@ def note(
     ] = False,
     store: StoreOption = None,
 ) -> int:
-    """Add words to a run's record, with your name and the time; nothing in it is ever changed.
+    """Add words to a run's record, or mark it as void.
+
+    They are kept with your name and the time; nothing in the record is ever changed.
 
     Example: bitassay note last "antenna cable was loose" --void
     """
