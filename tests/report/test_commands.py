@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import sys
 from xml.etree import ElementTree as ET
 
 import pytest
@@ -51,19 +52,25 @@ def test_exports_go_to_standard_output_or_to_a_file(bitassay, store, tmp_path):
     assert b",'=1+1," in written
 
 
-def test_without_typst_it_says_what_to_install_and_writes_nothing(bitassay, store, tmp_path, monkeypatch):
-    (tmp_path / "broken").mkdir()
-    (tmp_path / "broken" / "typst.py").write_text('raise ImportError("no typst here")\n')
-    monkeypatch.setenv("PYTHONPATH", str(tmp_path / "broken"))
-    done = bitassay("report", "--html", "r.html", "--pdf", "r.pdf", store)
-    assert done.status == 2
-    lines = done.err.strip().splitlines()
+def test_without_typst_it_says_what_to_install_and_writes_nothing(store, tmp_path, monkeypatch, capfd):
+    monkeypatch.setitem(sys.modules, "typst", None)  # as if it were not installed
+    monkeypatch.chdir(tmp_path)
+
+    def run(*arguments):
+        monkeypatch.setattr("sys.argv", ["bitassay", *arguments, store])
+        with pytest.raises(SystemExit) as left:
+            main()
+        return left.value.code, capfd.readouterr().err
+
+    status, said = run("report", "--html", "r.html", "--pdf", "r.pdf")
+    assert status == 2
+    lines = said.strip().splitlines()
     assert len(lines) == 2
     assert "Typst" in lines[0]
     assert "pip install 'bitassay[pdf]'" in lines[1]
     assert not (tmp_path / "r.html").exists()
     assert not (tmp_path / "r.pdf").exists()
-    assert bitassay("report", "--html", "r.html", store).status == 0
+    assert run("report", "--html", "r.html")[0] == 0
 
 
 @pytest.mark.parametrize(
