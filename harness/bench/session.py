@@ -213,6 +213,8 @@ class Way:
             "rate_bps": counted.rate_bps,
             "link": links.describe(),
         }
+        if counted.traits.finite and self.sending is None and not counted.rate_bps:
+            facts["untimed"] = True  # how fast a file is read says nothing of how fast its bytes came
         facts["link"]["sends"] = self.sending is not None
         facts["link"]["receives"] = self.receiving is not None
         if self.name:

@@ -48,3 +48,7 @@ def test_a_capture_is_measured_in_the_seconds_of_its_rate_and_stops_to_the_bit(b
     limits = ["--set", "stop.bits=400_000", "--set", "stop.seconds=2.5"]
     cut = bitassay("measure", "p.toml", *limits, "--json").json
     assert (cut["bits_received"], cut["seconds"], cut["ended_by"]) == (120_000, 2.5, "seconds")
+    (tmp_path / "p.toml").write_text('[link]\ndriver = "capture"\npath = "got.bin"\n')
+    untimed = bitassay("measure", "p.toml", "--json").json
+    assert (untimed["errors"], untimed["seconds"], untimed["availability"]) == (2, None, [])
+    assert bitassay("verify", "last").status == 0
