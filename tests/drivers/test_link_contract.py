@@ -34,10 +34,8 @@ Start = Callable[..., str]
 
 
 @pytest.fixture(scope="module")
-def free_port() -> int:
-    with socket.socket() as probe:
-        probe.bind(("127.0.0.1", 0))
-        return int(probe.getsockname()[1])
+def free_port(own_port: Callable[[socket.SocketKind], int]) -> int:
+    return own_port(socket.SOCK_STREAM)
 
 
 @pytest.fixture

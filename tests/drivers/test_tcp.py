@@ -23,10 +23,8 @@ def tcp(port: object, **keys: Any) -> TcpLink:
 
 
 @pytest.fixture
-def unused() -> int:
-    with socket.socket() as probe:
-        probe.bind(("127.0.0.1", 0))
-        return int(probe.getsockname()[1])
+def unused(own_port: Callable[[socket.SocketKind], int]) -> int:
+    return own_port(socket.SOCK_STREAM)
 
 
 def failure(link: TcpLink) -> OpenFailed:

@@ -26,10 +26,8 @@ def receive(link: UdpLink, size: int = 70_000, timeout: float = 10.0) -> bytes:
 
 
 @pytest.fixture
-def unused() -> int:
-    with socket.socket(socket.AF_INET, socket.SOCK_DGRAM) as probe:
-        probe.bind(("127.0.0.1", 0))
-        return int(probe.getsockname()[1])
+def unused(own_port: Callable[[socket.SocketKind], int]) -> int:
+    return own_port(socket.SOCK_DGRAM)
 
 
 def test_a_lost_datagram_is_bytes_lost_and_nothing_else(device: Start) -> None:
