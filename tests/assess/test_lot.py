@@ -59,6 +59,7 @@ def test_a_lot_has_not_passed_while_anything_of_it_is_open(tried, more, words):
     lot = summarise("L7", None, [tried("1"), tried("2", **more)])
     assert lot.verdict == "UNDECIDED"
     assert words in lot.reasons
+    assert lot.judged == (1 if {"void", "status", "broken"} & set(more) else 2)
 
 
 def test_a_lot_of_which_units_are_missing_has_not_passed(tried):
