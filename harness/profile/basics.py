@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import datetime
+import re
 from typing import Annotated, Any
 
 from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict, Field
@@ -36,8 +37,15 @@ def _as_tuple(value: Any) -> Any:
     return tuple(value) if isinstance(value, list) else value
 
 
+_CLOCK = r"^([01]\d|2[0-3]):[0-5]\d$"
+
+
 def _as_clock(value: Any) -> Any:
-    return value.strftime("%H:%M") if isinstance(value, datetime.time) else value
+    if isinstance(value, datetime.time):
+        return value.strftime("%H:%M")
+    if isinstance(value, str) and re.match(_CLOCK, value) is None:
+        raise problem(f'cannot be "{value}"', 'write hours and minutes of the local time of day, as "07:00"')
+    return value
 
 
 def _readable(value: str) -> str:
@@ -54,5 +62,5 @@ Positive = Annotated[float, Field(gt=0)]
 NotNegative = Annotated[float, Field(ge=0)]
 Share = Annotated[float, Field(gt=0, lt=1)]
 ShareOrZero = Annotated[float, Field(ge=0, le=1)]
-Clock = Annotated[str, BeforeValidator(_as_clock), Field(pattern=r"^([01]\d|2[0-3]):[0-5]\d$")]
+Clock = Annotated[str, BeforeValidator(_as_clock), Field(pattern=_CLOCK)]
 PlainText = Annotated[str, AfterValidator(_readable)]
