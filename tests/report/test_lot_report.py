@@ -209,6 +209,7 @@ def test_sensitivities_are_drawn_and_the_deaf_unit_is_pointed_out(swept):
     text = to_text(document)
     assert re.search(r"0045: sensitivity 56\.\d\d is far from the median 59\.\d\d", text)
     assert "sensitivity at BER 1e-3 at least 58 dB" in text
+    assert "they are two-sided, at 95 % confidence" in " ".join(text.split())
     svg = draw_all(document.figures())[0]
     assert "sensitivity, dB" in svg
     assert "required: at least 58" in svg

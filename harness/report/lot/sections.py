@@ -168,7 +168,7 @@ def _units(material: LotMaterial) -> Table:
 
 
 def _value(value: float | None) -> str:
-    return "" if value is None else f"{value:.4g}"
+    return "" if value is None else f"{value:.2f}"
 
 
 def _ratios(u: Unit) -> list[str]:

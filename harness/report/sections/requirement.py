@@ -56,7 +56,7 @@ def requirement_section(material: Material) -> Section:
     sensitivity = material.assessment.required_sensitivity
     blocks: list[Block] = []
     if sensitivity:
-        blocks.append(Paragraph(f"Requirement: {sensitivity}."))
+        blocks.append(Paragraph(f"Requirement: {sensitivity}. {_demonstrated(material)}"))
     if judged:
         plan = judged[0].plan
         assert plan is not None
@@ -72,6 +72,16 @@ def requirement_section(material: Material) -> Section:
     if limits:
         blocks.append(Paragraph(limits))
     return Section("Requirement and plan", tuple(blocks))
+
+
+def _demonstrated(material: Material) -> str:
+    """Say by what a required sensitivity is demonstrated."""
+    search = material.section("search")
+    sure = float((search or material.section("requirement")).get("confidence") or 0.95)
+    return (
+        "A unit passes where the bounds on its sensitivity lie wholly on the good side of that, and fails where they "
+        f"lie wholly on the other; they are two-sided, at {percent(sure)} confidence."
+    )
 
 
 def _rules(material: Material) -> Iterator[str]:
