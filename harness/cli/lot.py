@@ -38,7 +38,9 @@ def lot(profile: str, overrides: Sequence[str], manner: Manner, forms: Forms | N
     if manner.as_json and forms.text:
         raise UserError("--json and --text both print the lot", "leave one of them out")
     ready(forms)  # what cannot be written is said now, and not after the last unit
-    name = settings.name or loaded.title
+    name = (settings.name or loaded.title).strip()
+    if not name:
+        raise UserError(f"{profile} names neither the lot nor itself", 'add name = "L7" to [lot]')
     with open_for_measuring(manner.store):
         pass  # made if need be, and refused now rather than after the first unit
     ended = _measure_units(loaded, path, overrides, name, manner)

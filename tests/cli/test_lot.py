@@ -115,6 +115,21 @@ def test_a_lot_goes_on_another_day_and_knows_what_was_measured(bitassay, tmp_pat
     assert done.json["passed"] == done.json["judged"] == 2
 
 
+def test_a_lot_without_any_name_is_refused_before_anything_is_measured(bitassay, tmp_path):
+    nameless = PROFILE.replace('title = "Wader-9 lot, invented"', "").replace('name = "L7"', "")
+    (tmp_path / "lot.toml").write_text(nameless)
+    done = bitassay("lot", "lot.toml", stdin=b"0031\n\n")
+    assert done.status == 2
+    assert "[lot]" in done.err
+
+
+def test_blanks_around_a_lots_name_do_not_hide_its_units(bitassay, tmp_path):
+    (tmp_path / "lot.toml").write_text(PROFILE.replace('"L7"', '" L7 "'))
+    done = bitassay("lot", "lot.toml", "--json", stdin=b"0031\n\n")
+    assert (done.status, done.json["passed"]) == (0, 1)
+    assert bitassay("report", "--lot", "L7").status == 0
+
+
 def test_a_profile_without_a_lot_is_refused(bitassay, tmp_path):
     (tmp_path / "one.toml").write_text(PROFILE.split("[lot]")[0])
     done = bitassay("lot", "one.toml", stdin=b"0031\n")
