@@ -5,6 +5,7 @@ from __future__ import annotations
 import contextlib
 import json
 import os
+import random
 import select
 import signal
 import socket
@@ -22,6 +23,7 @@ import pytest
 os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 
 DEVICES = Path(__file__).parent / "devices"
+EPHEMERAL = Path("/proc/sys/net/ipv4/ip_local_port_range")
 
 
 @dataclass(frozen=True)
@@ -129,6 +131,31 @@ def program() -> Iterator[Callable[..., subprocess.Popen[str]]]:
         process.wait()
         assert process.stdout is not None
         process.stdout.close()
+
+
+@pytest.fixture(scope="session")
+def own_port() -> Callable[[socket.SocketKind], int]:
+    """Give a free port of 127.0.0.1 that the system hands to nobody by itself.
+
+    A device that calls such a port again and again, or a test that wants to be refused there, would otherwise
+    now and then reach a device of another test that was given the port in the meantime.
+    """
+    lowest = int(EPHEMERAL.read_text().split()[0]) if EPHEMERAL.exists() else 32768
+    worker = int(os.environ.get("PYTEST_XDIST_WORKER", "gw0")[2:]) % 8
+    mine = [port for port in range(max(1024, lowest - 12_000), lowest) if port % 8 == worker]
+    random.SystemRandom().shuffle(mine)
+
+    def free(kind: socket.SocketKind) -> int:
+        while True:
+            port = mine.pop()
+            with socket.socket(socket.AF_INET, kind) as probe:
+                try:
+                    probe.bind(("127.0.0.1", port))
+                except OSError:
+                    continue
+            return port
+
+    return free
 
 
 @pytest.fixture

@@ -141,9 +141,8 @@ def echo_to(port: int) -> None:
         time.sleep(0.1)
 
 
-def test_a_run_killed_before_its_first_point_is_shown_and_goes_on(bitassay, tmp_path):
-    with socket.create_server(("127.0.0.1", 0)) as free:
-        port = free.getsockname()[1]
+def test_a_run_killed_before_its_first_point_is_shown_and_goes_on(bitassay, own_port, tmp_path):
+    port = own_port(socket.SOCK_STREAM)
     (tmp_path / "run.toml").write_text(
         f'[link]\ndriver = "tcp"\nhost = "127.0.0.1"\nport = {port}\nlisten = true\nrate_bps = 800_000\n'
         "connect_timeout_s = 60\n[requirement]\nber = 1e-4\n[stop]\nbits = 80_000\n"

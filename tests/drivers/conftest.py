@@ -2,9 +2,6 @@
 
 from __future__ import annotations
 
-import os
-import random
-import socket
 import subprocess
 import sys
 from collections.abc import Callable, Iterator
@@ -15,34 +12,8 @@ from pathlib import Path
 import pytest
 
 DEVICE = Path(__file__).with_name("device.py")
-EPHEMERAL = Path("/proc/sys/net/ipv4/ip_local_port_range")
 
 Start = Callable[..., str]
-
-
-@pytest.fixture(scope="session")
-def own_port() -> Callable[[socket.SocketKind], int]:
-    """Give a free port of 127.0.0.1 that the system hands to nobody by itself.
-
-    A device that calls such a port again and again, or a test that wants to be refused there, would otherwise
-    now and then reach a device of another test that was given the port in the meantime.
-    """
-    lowest = int(EPHEMERAL.read_text().split()[0]) if EPHEMERAL.exists() else 32768
-    worker = int(os.environ.get("PYTEST_XDIST_WORKER", "gw0")[2:]) % 8
-    mine = [port for port in range(max(1024, lowest - 12_000), lowest) if port % 8 == worker]
-    random.SystemRandom().shuffle(mine)
-
-    def free(kind: socket.SocketKind) -> int:
-        while True:
-            port = mine.pop()
-            with socket.socket(socket.AF_INET, kind) as probe:
-                try:
-                    probe.bind(("127.0.0.1", port))
-                except OSError:
-                    continue
-            return port
-
-    return free
 
 
 @pytest.fixture
