@@ -349,3 +349,9 @@ def test_a_sensitivity_that_is_required_stands_under_required(making):
     swept = replace(measured, points=[measured.whole] * 2, sweep=True, required_sensitivity=asked)
     assert sheet_of_assessment(swept).required == [asked]
     assert "nothing was required" not in sheet_of_assessment(swept).verdict
+
+
+def test_the_seconds_of_a_file_that_was_read_name_no_end(making):
+    read = making.assessment([0] * 20, ended=making.start + 10**8)
+    assert "until" not in sheet_of_assessment(read).to_do[0]
+    assert "until" in sheet_of_assessment(making.assessment([0] * 20)).to_do[0]
