@@ -309,9 +309,8 @@ def _took(a: Assessment) -> str:
     words = duration(p.seconds if p.seconds < 10 else round(p.seconds)) + (
         f" at {rate(speed)}" if speed else ""
     )
-    played = (
-        a.ended is not None and a.ended - a.started < (p.seconds - 1) * SECOND_NS
-    )  # a file: read, not waited for
+    # The seconds of a file are read, and not waited for.
+    played = a.ended is not None and a.ended - a.started < (p.seconds - 1) * SECOND_NS
     if a.ended is not None and a.command != "examine" and not played:
         words += f", until {local_date(a.ended)[11:19]}"
     return f"{words}; {_why(a)}" if _why(a) else words
