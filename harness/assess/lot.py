@@ -64,6 +64,7 @@ class Unit:
     sensitivity_upper: float | None
     slips: int
     tries: int
+    direction: str = ""  # that the figures are of, where both were measured
     same_requirement: bool = True  # as the rest of the lot
     remarks: tuple[str, ...] = ()
 
@@ -190,9 +191,17 @@ def _first_verdict(tried: Sequence[LotRun]) -> Verdict | None:
 
 
 def judged_point(a: Assessment) -> PointAssessment:
-    """Give the point that a unit's BER is taken from: the only one that is judged, else the whole."""
+    """Give the point that a unit's BER is taken from.
+
+    That is the only one that is judged, of two directions the one with more errors a bit, else the whole, whose BER
+    is none where there are several points.
+    """
     judged = [p for p in a.points if p.verdict is not None]
-    return judged[0] if a.sweep and len(judged) == 1 else a.whole
+    if a.sweep and len(judged) == 1:
+        return judged[0]
+    if judged and all(p.facts.get("direction") for p in judged):
+        return max(judged, key=lambda p: p.ber or 0.0)
+    return a.whole
 
 
 def _unit(run: LotRun, tries: int, *, same: bool) -> Unit:
@@ -214,8 +223,9 @@ def _unit(run: LotRun, tries: int, *, same: bool) -> Unit:
         sensitivity=found.get("value") if counts else None,
         sensitivity_lower=found.get("lower") if counts else None,
         sensitivity_upper=found.get("upper") if counts else None,
-        slips=p.slip_count,
+        slips=a.whole.slip_count,
         tries=tries,
+        direction=str(p.facts.get("direction") or "") if len(a.points) > 1 else "",
         same_requirement=same or not counts,
     )
 

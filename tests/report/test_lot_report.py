@@ -217,6 +217,26 @@ def test_sensitivities_are_drawn_and_the_deaf_unit_is_pointed_out(swept):
     assert "passed 5 of 6" in text
 
 
+def test_of_two_directions_the_worse_one_stands_for_the_unit(records, point):
+    ways = ("forward", "reverse")
+    made = [
+        records.make(
+            [point([worse * way, 1], {}, {"direction": ways[way]}) for way in (0, 1)],
+            {**FIXED, "accept_errors": 2, "ber": 1e-4},
+            device=device(serial),
+        )
+        for serial, worse in (("0031", 3), ("0032", 9))
+    ]
+    lot = of(made)
+    assert [(u.errors, u.bits, u.direction) for u in lot.summary.units] == [
+        (4, 96_000, "reverse"), (10, 96_000, "reverse"),
+    ]  # fmt: skip
+    assert lot.summary.verdict == "FAIL"
+    text = to_text(assemble_lot(lot))
+    assert re.search(r"0032 \(reverse\) +FAIL +10 ", text)
+    assert "of the two directions the one with more errors a bit" in " ".join(text.split())
+
+
 def test_hostile_names_are_harmless_in_a_lot(records, parsed):
     script = "<script>alert(1)</script>"
     units = [

@@ -153,7 +153,7 @@ def _units(material: LotMaterial) -> Table:
     columns += [Column("tries")] if again else []
     rows = []
     for u in lot.units:
-        row = [u.serial_number]
+        row = [f"{u.serial_number} ({u.direction})" if u.direction else u.serial_number]
         row += [verdict_word(u)] if judged else []
         row += [_value(v) for v in (u.sensitivity, u.sensitivity_lower, u.sensitivity_upper)] if swept else []
         row += [number(u.errors), number(u.bits)]
@@ -162,6 +162,8 @@ def _units(material: LotMaterial) -> Table:
         row += [number(u.tries)] if again else []
         rows.append(tuple(row))
     note = f"bounds two-sided at {percent(lot.confidence)} confidence, each unit by itself"
+    if any(u.direction for u in lot.units):
+        note += "; of the two directions the one with more errors a bit"
     if swept and not counted:
         note += "; errors and bits are sums over all points of a unit's sweep"
     return Table("", tuple(columns), tuple(rows), note)
