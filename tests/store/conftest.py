@@ -188,11 +188,8 @@ PROGRAMS = os.environ.get("BITASSAY_TEST_POSTGRES_BIN") or next(
 class Server:
     """A PostgreSQL server of one's own, to be stopped and started."""
 
-    def __init__(self, folder: Path) -> None:
-        self._folder, self._data = folder, f"{folder}/data"
-        with socket.socket() as probe:
-            probe.bind(("127.0.0.1", 0))
-            self._port = probe.getsockname()[1]
+    def __init__(self, folder: Path, port: int) -> None:
+        self._folder, self._data, self._port = folder, f"{folder}/data", port
         self.address = f"postgresql+psycopg://postgres@127.0.0.1:{self._port}/postgres"
         # The server refuses to run as root.
         self._user = pwd.getpwnam("postgres").pw_uid if os.geteuid() == 0 else None
@@ -222,12 +219,12 @@ class Server:
 
 
 @pytest.fixture(scope="session")
-def the_server() -> Iterator[Server]:
+def the_server(own_port: Callable[[socket.SocketKind], int]) -> Iterator[Server]:
     if not PROGRAMS:
         pytest.skip("the programs of a PostgreSQL server are not on this machine")
     folder = Path(tempfile.mkdtemp(prefix="bitassay-pg-"))
     try:
-        server = Server(folder)
+        server = Server(folder, own_port(socket.SOCK_STREAM))
         yield server
         server.stop()
     finally:
