@@ -128,6 +128,9 @@ def stairs(drawing: Stairs) -> Sheet:
         axes.plot([bits[-1]], [errors[-1]], marker="s" if against else "o", markersize=7, clip_on=False,
                   color=RED if against else PAPER, markeredgecolor=RED if against else INK,
                   markeredgewidth=1.4, zorder=5)  # fmt: skip
+    else:  # where the run ended, undecided
+        axes.plot([bits[-1]], [errors[-1]], marker="D", markersize=5, clip_on=False, color=PAPER,
+                  markeredgecolor=INK, markeredgewidth=1.2, zorder=5)  # fmt: skip
     axes.set_xlim(0, right)
     axes.set_ylim(0, top)
     axes.xaxis.set_major_locator(_nice(6))
@@ -159,7 +162,7 @@ def _zones(axes: Axes, drawing: Stairs, n: float, top: float, right: float, *, w
         edges = np.append(rows, top)
         axes.fill_betweenx(edges, np.append(accept, accept[-1]), right, step="post", color=PALE, linewidth=0)
         axes.fill_betweenx(edges, 0, np.append(reject, reject[-1]), step="post", color=LINE, linewidth=0)
-        axes.text(0.97, 0.06, "passes", transform=axes.transAxes, ha="right", color=SOFT)
+        axes.text(0.955, 0.06, "passes", transform=axes.transAxes, ha="right", color=SOFT)
         axes.text(0.03, 0.90, "fails", transform=axes.transAxes, color=SOFT)
         return
     limit = float(drawing.errors[-1])
