@@ -71,7 +71,9 @@ def _measure_units(
         given = [*overrides, f"device.serial_number={serial}", f"device.lot={name}"]
         unit = load_profile(path, given)
         command = "measure" if unit.sweep is None and unit.search is None else "sweep"
-        status = carry_out(unit, command, Manner(manner.store, False, True, manner.log, silent=True))
+        status = carry_out(
+            unit, command, Manner(manner.store, False, manner.as_json, manner.log, silent=True)
+        )
         if status in _ENDING:
             return status
         if status not in (PASS, FAIL, UNDECIDED):

@@ -226,7 +226,9 @@ def carry_out(loaded: Profile, command: str, manner: Manner, cut: Run | None = N
         finally:
             log_file.close()
     if manner.silent:
-        print(f"{result.assessment.verdict or 'measured'} {result.key}", file=sys.stderr)
+        with standing_in_for_the_reader():
+            print(_in_a_line(result.assessment), file=sys.stderr)
+            _say_what_failed(result, status)
         return status
     with standing_in_for_the_reader():
         _print_result(result, status, where, view.drawn_on, as_json=as_json, quiet=quiet)
@@ -245,6 +247,18 @@ def _print_result(
     else:
         print_page(result.assessment, where, drawn_on)
     sys.stdout.flush()
+    _say_what_failed(result, status)
+
+
+def _in_a_line(a: Assessment) -> str:
+    """Say how one of many runs came out: a pass shortly, anything else with its reasons."""
+    serial = a.device.get("serial_number")
+    why = f": {'; '.join(a.reasons)}" if a.verdict in ("FAIL", "UNDECIDED") else ""
+    words = f"{f'{serial} ' if serial else ''}{a.verdict or 'measured'}{why} (run {a.run})"
+    return "".join(c if c.isprintable() else "\ufffd" for c in words)
+
+
+def _say_what_failed(result: RunResult, status: int) -> None:
     if result.fault is not None:
         warn(result.fault[0])
         print(f"  {result.fault[1] or '`bitassay check` proves the path before a run'}", file=sys.stderr)

@@ -115,6 +115,32 @@ def test_a_lot_goes_on_another_day_and_knows_what_was_measured(bitassay, tmp_pat
     assert done.json["passed"] == done.json["judged"] == 2
 
 
+def test_why_a_unit_did_not_pass_is_said_when_it_did_not(bitassay, tmp_path):
+    (tmp_path / "lot.toml").write_text(PROFILE.replace("ber = 2e-5", "ber = 3e-3"))
+    done = bitassay("lot", "lot.toml", stdin=b"0031\n\n")
+    assert done.status == 1
+    assert re.search(r"0031 FAIL: not demonstrated: [\d\u202f]+ errors in .* \(run [0-9a-f-]{36}\)", done.err)
+
+
+def test_a_unit_that_could_not_be_measured_is_told_why_and_may_be_tried_again(bitassay, tmp_path):
+    head, tail = PROFILE.split('driver = "loopback"')
+    away = (
+        head
+        + 'driver = "tcp"\nhost = "127.0.0.1"\nport = 9\n'
+        + re.sub(r"(?s)\[\[link.*?seed = 3\n", "", tail)
+    )
+    (tmp_path / "away.toml").write_text(away)
+    (tmp_path / "lot.toml").write_text(PROFILE)
+    done = bitassay("lot", "away.toml", stdin=b"0031\n\n")
+    assert done.status == 4
+    assert "refused the connection" in done.err
+    assert "unit 0031 could not be measured" in done.err
+    done = bitassay("lot", "lot.toml", "--json", stdin=b"0031\n\n")
+    assert (done.status, done.json["verdict"]) == (0, "PASS")
+    assert done.json["units"][0]["tries"] == 1  # not a bit came in the first run
+    assert done.json["tries"][0]["why"] == "something failed; not a single bit came, so it was no try"
+
+
 def test_a_lot_without_any_name_is_refused_before_anything_is_measured(bitassay, tmp_path):
     nameless = PROFILE.replace('title = "Wader-9 lot, invented"', "").replace('name = "L7"', "")
     (tmp_path / "lot.toml").write_text(nameless)
