@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import difflib
+import re
 from collections.abc import Iterable, Mapping, Sequence
 from typing import Any
 
@@ -40,7 +41,7 @@ def shown(value: Any) -> str:
     elif isinstance(value, list):
         text = "[" + ", ".join(shown(v) for v in value) + "]"
     else:
-        text = str(value)
+        text = re.sub(r"e([-+]?)0*(\d)", r"e\1\2", str(value)) if isinstance(value, float) else str(value)
     return text if len(text) <= 60 else text[:57] + "…" + text[-1]
 
 

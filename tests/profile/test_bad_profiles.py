@@ -80,9 +80,9 @@ def test_an_unknown_key_names_the_nearest_known_one(text: str, key: str, nearest
     [
         ('ber = "1e-6"', 'requirement.ber must be a number, not "1e-6"'),
         ("ber = true", "requirement.ber must be a number, not true"),
-        ("ber = [1e-6]", "requirement.ber must be a number, not [1e-06]"),
+        ("ber = [1e-6]", "requirement.ber must be a number, not [1e-6]"),
         ("ber = 0", "requirement.ber must be over 0, not 0"),
-        ("ber = -1e-6", "requirement.ber must be over 0, not -1e-06"),
+        ("ber = -1e-6", "requirement.ber must be over 0, not -1e-6"),
         ("ber = 1", "requirement.ber must be under 1, not 1"),
         ("ber = 1.5", "requirement.ber must be under 1, not 1.5"),
         ("ber = nan", "requirement.ber must be a finite number, not nan"),
