@@ -5,6 +5,9 @@ until three times the target's reciprocal in bits has passed. Once the crossing 
 over 1.5 dB apart, points go where bits tell most: errors are cheap where the BER is some ten times the
 target, and the curve (`curve`) carries what they tell to the target. Everything follows from the points
 measured so far, so a search that was cut goes on where it was.
+
+A device that drops out within a step has no point where errors are cheap: there halving goes on, with bits
+enough to be sure at each point, until the crossing is bracketed without a curve (`bracket`).
 """
 
 from __future__ import annotations
@@ -14,16 +17,21 @@ from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
 from harness.statistics.bounds import lower_bound
-from harness.statistics.curve import CurveFit, CurvePoint, fit_curve
+from harness.statistics.bracket import Bracket, bracket_of
+from harness.statistics.curve import FARTHEST, CurveFit, CurvePoint, fit_curve
 from harness.statistics.curve_model import Shape
+from harness.statistics.notation import ratio
 
 _NEAR_DB = 1.5
 _SURE_ERRORS = 10
+_MARGIN = 2.0  # what mixing the alternatives costs in evidence
 _SURE_BITS = 3  # over the target BER
 # Where a round's points go, in multiples of the target, and how many errors each waits for; every other
 # round lies between, so that no level's error is met twice.
 _ROUNDS = (((30, 100), (10, 100), (3, 60), (1, 30)), ((50, 100), (17, 100), (5.5, 60), (1.7, 40)))
 _ALLOWANCE = 3  # a point may take so many times the bits that its errors should need
+_MOST_POINTS = 60  # with levels that scatter more than what is asked for, there is no end by itself
+_CLIFF_AFTER = 2  # points that went where errors should be and found no link
 
 
 @dataclass(frozen=True, slots=True)
@@ -80,7 +88,14 @@ def next_step(space: SearchSpace, points: Sequence[CurvePoint]) -> Step | Found:
     if near is None:
         step = _halving(space, points)
         return step if step else _given_up(space, points, spent, _nowhere(space, points))
+    sure = bracket_of(points, space.target_ber, space.confidence, space.rising)
+    if sure.under is not None and sure.over is not None and abs(sure.over - sure.under) <= space.width + 1e-9:
+        return Found(_fit(space, points), spent, True, _sure_words(space, sure))
+    if len(points) >= _MOST_POINTS:
+        return _given_up(space, points, spent, f"given up after {len(points)} points")
     count = len(points) - near
+    if count >= _CLIFF_AFTER and (step := _on_a_cliff(space, points)) is not None:
+        return step
     if count >= len(_ROUNDS[0]):
         fit = _fit(space, points)
         if fit.lower is not None and fit.upper is not None and fit.upper - fit.lower <= space.width:
@@ -169,6 +184,37 @@ def _refining(space: SearchSpace, points: Sequence[CurvePoint], count: int) -> S
     value = _placed(space, shape.anchor + offset * 20 / math.log(10) / shape.stretch)
     bits = math.ceil(_ALLOWANCE * errors / wanted)
     return Step(value, errors, bits, f"where the BER should be {wanted:.1e}")
+
+
+def _on_a_cliff(space: SearchSpace, points: Sequence[CurvePoint]) -> Step | None:
+    """The next point where no errors are to be had between a link that works and none; None: they are."""
+    over, under = _bracket(space, points)
+    if over is None or under is None or any(_tells(space, point) for point in points):
+        return None
+    # A point looks at the end that works once more where the grid has nothing between, or that is near enough.
+    middle = under if under - over <= max(space.width, space.resolution) else (over + under) / 2
+    value = _placed(space, middle)
+    if any(abs(point.x - value) < 1e-9 and _over(space, point) for point in points):
+        value = _placed(space, under)
+    number = len(points) + 1
+    needed = math.log(number * (number + 1) / (1 - space.confidence)) + _MARGIN
+    return Step(
+        value, _SURE_ERRORS, math.ceil(2 * needed / space.target_ber), "at the edge of a link that drops out"
+    )
+
+
+def _tells(space: SearchSpace, point: CurvePoint) -> bool:
+    """Whether its errors tell of the curve: it is over the target, and not hopelessly so."""
+    if not point.aligned or not _over(space, point):
+        return False
+    return lower_bound(point.errors, point.bits, 0.975) <= FARTHEST * space.target_ber
+
+
+def _sure_words(space: SearchSpace, sure: Bracket) -> str:
+    return (
+        f"the BER is surely under {ratio(space.target_ber)} at {sure.under:g} and over it at {sure.over:g}, whatever "
+        "the curve's shape"
+    )
 
 
 def _present_shape(space: SearchSpace, points: Sequence[CurvePoint]) -> Shape:

@@ -35,7 +35,7 @@ HOURS_12 = 43_200
 BYTES = 4096  # a second
 SECOND_NS = 10**9
 ERRORS = 4  # a second
-REQUIREMENT = Requirement(ber=1e-9, max_slips=1_000_000)
+REQUIREMENT = Requirement(ber=1e-12, max_slips=1_000_000)  # no plan decides in one night
 Commit = Callable[[list[Second], list[Event], int], None]
 
 

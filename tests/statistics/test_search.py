@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 from scipy.special import ndtr
 
+from harness.statistics.bracket import bracket_of
 from harness.statistics.curve import CurvePoint, fit_curve
 from harness.statistics.search import Found, SearchSpace, next_step
 
@@ -79,6 +80,43 @@ def test_it_needs_less_than_half_of_the_bits_of_a_sweep():
             cheapest = min(cheapest, float(np.median(costs)))
     print(f"search {spent:.3g} bits, cheapest sweep {cheapest:.3g}")
     assert spent < cheapest / 2 < math.inf
+
+
+def dropping_out(rng, step, edge, scatter_db=0.0):
+    """A point of a device without errors up to an edge, and without a link beyond it."""
+    if step.value + scatter_db * rng.standard_normal() > edge:
+        return CurvePoint(step.value, 0, 0, aligned=False)
+    return CurvePoint(step.value, step.bits, 0)
+
+
+@pytest.mark.parametrize(
+    "edge", [39.27, *(pytest.param(edge, marks=pytest.mark.campaign) for edge in (25.05, 58.8, 44.44))]
+)
+def test_a_device_that_drops_out_from_one_step_to_the_next_is_found_without_a_curve(edge):
+    rng = np.random.default_rng(7)
+    space = SearchSpace(20, 60, TARGET, width=0.5, rising=True, resolution=0.1)
+    points = []
+    while not isinstance(step := next_step(space, points), Found):
+        points.append(dropping_out(rng, step, edge))
+        assert len(points) < 20
+    assert step.complete
+    assert "whatever the curve's shape" in step.words
+    sure = bracket_of(points, TARGET, space.confidence, rising=True)
+    assert sure.under <= edge <= sure.over
+    assert sure.over - sure.under <= space.width + 1e-9
+    assert step.bits < 100 / TARGET
+
+
+def test_a_search_that_gets_nowhere_ends_and_says_so():
+    """Levels that scatter by more than the width asked for: no number of points is enough."""
+    space = SearchSpace(20, 60, TARGET, width=0.1, rising=True)
+    points = [CurvePoint(40.0, 10**7, 1000), CurvePoint(39.0, 10**8, 20)]
+    points += [CurvePoint(39.5 + 0.1 * (k % 5), 10**7, 100 + 150 * (k % 3)) for k in range(57)]
+    assert not isinstance(next_step(space, points), Found)
+    found = next_step(space, [*points, CurvePoint(40.0, 10**7, 700)])
+    assert isinstance(found, Found)
+    assert not found.complete
+    assert found.words.startswith("given up after 60 points. ")
 
 
 def test_a_level_instead_of_an_attenuation():

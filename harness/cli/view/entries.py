@@ -187,9 +187,12 @@ def sensitivity_words(found: Mapping[str, Any] | None) -> str:
     if found.get("value") is None:
         return f"{at}where {ratio(found.get('ber'))} is reached these points do not tell{_sides(found, unit)}"
     words = f"{at}{ratio(found.get('ber'))} is reached at {found['value']:.4g}{unit}"
-    if found.get("lower") is None or found.get("upper") is None:
+    if found.get("lower") is not None and found.get("upper") is not None:
+        words += f" ({found['lower']:.4g} to {found['upper']:.4g}{unit} at {percent(found['confidence'])})"
+    sure = found.get("without_a_curve") or {}
+    if sure.get("under") is None or sure.get("over") is None:
         return words
-    return f"{words} ({found['lower']:.4g} to {found['upper']:.4g}{unit} at {percent(found['confidence'])})"
+    return f"{words}; without any curve under it at {sure['under']:g} and over it at {sure['over']:g}{unit}"
 
 
 def _sides(found: Mapping[str, Any], unit: str) -> str:

@@ -63,6 +63,8 @@ class Notebook:
     def draw(self, sheet: Sheet, *, whole: bool = False) -> list[Text]:
         """Draw a page of at most `height` lines; `whole`: a page that stays, as long as it needs to be."""
         for layout in (replace(LAYOUTS[0], points=_ALL), *LAYOUTS) if whole else LAYOUTS:
+            if whole and sheet.weights and layout.points < _ALL:  # rather a point than an empty line
+                layout = replace(layout, gaps=False, details=False)
             if whole:  # of a page that stays no reason is cut, and no remark is left out
                 layout = replace(layout, reason_lines=_ALL, remarks=_ALL)
             head, tail = self._head(sheet, layout), self._tail(sheet, layout)
