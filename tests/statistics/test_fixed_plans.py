@@ -312,7 +312,7 @@ def test_bounds_cover_at_ten_true_ratios(bit_by_bit, stretch, kind: str, accepts
         ({"kind": "wald"}, "no plan named", "sequential"),
         ({"kind": "sequential", "confidence": 0.4, "producer_risk": 0.5}, "nothing to decide", "confidence"),
         ({"kind": "sequential", "margin": 1.01}, "takes more than", "larger margin"),
-        ({"kind": "sequential", "ber": 1e-300, "margin": 1e300}, "no errors at all", "smaller margin"),
+        ({"kind": "sequential", "ber": 1e-30, "margin": 1e300}, "no errors at all", "smaller margin"),
     ],
 )
 def test_plans_that_cannot_be_are_refused_with_advice(settings_, word: str, advice: str) -> None:
