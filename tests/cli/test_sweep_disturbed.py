@@ -26,7 +26,9 @@ def test_a_point_that_was_disturbed_has_no_verdict_and_is_not_on_the_curve(bitas
     shown = bitassay("show", "last").out
     assert "attenuator 34: attenuator did not stay where it was put" in shown
     assert bitassay("verify", "last").status == 0
-    assert "did not stay where it was put" in bitassay("report", "last", "--text").out
+    paper = bitassay("report", "last", "--text").out
+    assert "did not stay where it was put" in paper
+    assert "34 (moved meanwhile: does not count)" in paper
 
 
 def test_a_search_on_an_attenuator_that_never_stays_ends(bitassay, attenuated, tmp_path):

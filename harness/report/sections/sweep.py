@@ -95,9 +95,10 @@ def _points(material: Material) -> Table:
     rows = []
     for m in material.points[:_ROWS]:
         p = m.assessed
-        reference = " (reference)" if m.facts.get("reference") else ""
+        mark = " (reference)" if m.facts.get("reference") else ""
+        mark += " (moved meanwhile: does not count)" if p.moved else ""
         row = [f"{m.point.values[n]:g}" if n in m.point.values else "" for n in names]
-        row[0] = row[0] + reference if row else ""
+        row[0] = row[0] + mark if row else ""
         row += [point_level(m)] if leveled else []
         row += [
             number(p.tally.compared),
