@@ -143,6 +143,15 @@ def test_without_a_sensitivity_what_is_sure_of_it_is_said(lower, upper, words):
     assert sensitivity_words({**FOUND, "value": None, "lower": lower, "upper": upper}) == words
 
 
+def test_the_level_at_the_device_and_the_distance_from_the_textbook_are_said(swept):
+    more = {"level_dbm": -33.03, "level_uncertainty_db": 0.283, "theory_distance_db": -0.026}
+    told = "-33.03 dBm ± 0.57 dB (k = 2) at the device's port; 0.03 dB better than the textbook's curve"
+    known = replace(swept(), sensitivity={**FOUND, **more})
+    assert any(told in line for line in page(known))
+    assert "-33.03 dBm" in "\n".join(drawn(known, 80, 24))
+    assert not any("dBm" in line or "textbook" in line for line in page(swept()))
+
+
 def test_a_line_says_where_the_sweep_is(making):
     progress = making.progress([0])
     p = replace(progress.point, values={"att": 34.5})

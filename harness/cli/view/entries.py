@@ -195,6 +195,22 @@ def sensitivity_words(found: Mapping[str, Any] | None) -> str:
     return f"{words}; without any curve under it at {sure['under']:g} and over it at {sure['over']:g}{unit}"
 
 
+def sensitivity_details(found: Mapping[str, Any] | None) -> list[str]:
+    """Say at which level the device stands there, and how far that is from the textbook; as far as is known."""
+    words = []
+    if found and found.get("level_dbm") is not None:
+        # Expanded with a factor of two, as uncertainties are stated.
+        uncertainty = 2 * float(found.get("level_uncertainty_db") or 0.0)
+        about = f" ± {uncertainty:.2g} dB (k = 2)" if uncertainty else ""
+        words.append(f"{found['level_dbm']:.2f} dBm{about} at the device's port")
+    if found and found.get("theory_distance_db") is not None:
+        distance = float(found["theory_distance_db"])
+        words.append(
+            f"{abs(distance):.2f} dB {'worse' if distance > 0 else 'better'} than the textbook's curve"
+        )
+    return ["; ".join(words)] if words else []
+
+
 def _sides(found: Mapping[str, Any], unit: str) -> str:
     """Say what bounds there are without a value."""
     lower, upper = found.get("lower"), found.get("upper")

@@ -26,6 +26,7 @@ from harness.cli.view.entries import (
     required_words,
     residual,
     risk_words,
+    sensitivity_details,
     sensitivity_words,
     unit_name,
 )
@@ -54,7 +55,7 @@ class Sheet:
     against: bool = False  # what stands there speaks against the unit
     reasons: Sequence[str] = ()
     ber: str = ""
-    sensitivities: Sequence[str] = ()  # of several curves
+    sensitivities: Sequence[str] = ()  # of several curves; of one, what else is known of it
     bars: Sequence[tuple[str, Bar]] = (("", Bar(0.0, 1.0)),)
     ahead: int = 0  # bars that may be left out where room is short: the first ones
     weights: Sequence[float] = ()  # of bars of which the weightiest are kept where room is short
@@ -177,7 +178,8 @@ def sheet_of_assessment(a: Assessment, where: str = "") -> Sheet:
     return replace(
         sheet,
         ber=sensitivity_words(a.sensitivity),
-        sensitivities=[sensitivity_words(found) for found in a.more.get("sensitivities", ())],
+        sensitivities=[sensitivity_words(found) for found in a.more.get("sensitivities", ())]
+        or sensitivity_details(a.sensitivity),
         bars=[(point_label(p), _bar(p, decided=False, looked_for=looked_for)) for p in points],
         weights=_weights(points, looked_for),
         bits=(),
