@@ -56,7 +56,7 @@ def test_flips_then_drops_then_a_close_are_exact_and_the_record_is_kept(
     bitassay, modem, profile, over, tmp_path
 ):
     port = modem(over=over, flip=FLIPS[:6], drop=DROPS, close_after=75_000)
-    done = bitassay("measure", profile(port, "[stop]\nbits = 10_000_000\n", PACED))
+    done = bitassay("measure", profile(port, "[stop]\nbits = 10_000_000\n", PACED), "--quiet")
     assert done.status == 4
     assert port.removeprefix("socket://").removeprefix("rfc2217://") in done.err
     assert 2 <= len(done.err.strip().splitlines()) <= 4
