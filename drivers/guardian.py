@@ -278,8 +278,8 @@ def main(lock: int, run: int) -> None:
     if goodbye:
         watch.note("dismissed")
         return
-    number = "1 instrument" if len(described) == 1 else f"{len(described)} instruments"
-    watch.note(f"process {run} left without a goodbye: making {number} safe")
+    several = "1 instrument" if len(described) == 1 else f"{len(described)} instruments"
+    watch.note(f"process {run} left without a goodbye: making {several} safe")
     watch.make_safe(described)
 
 
