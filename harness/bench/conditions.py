@@ -14,6 +14,7 @@ from pathlib import Path
 from typing import Any
 
 from drivers.contract import (
+    Applied,
     DriverError,
     Instrument,
     Interrupted,
@@ -48,6 +49,7 @@ class Conditions:
         self._cancel = cancel
         self.level = PortLevel.of(profile)
         self.events: list[Event] = []
+        self._standing: dict[str, float] = {}  # what was set, and as far as is known still stands
         self.unsafe: list[str] = []  # what was left in a state that may not be safe, in words
         self.instruments: dict[str, Instrument] = {}
         self._strangers: set[str] = set()  # not those that a resumed run was begun with: never sent a value
@@ -111,6 +113,7 @@ class Conditions:
 
     def _leave(self) -> bool:
         """Make everything safe and close it; never raises, says whether all went well."""
+        self._standing.clear()
         well = True
         for name, instrument in self.instruments.items():
             if name in self._strangers:
@@ -161,6 +164,9 @@ class Conditions:
     def apply(self, values: Mapping[str, float]) -> dict[str, Any]:
         """Set values, in the profile's order; gives readings and the level at the device's port.
 
+        What stands where it should already is read once more and left alone: an oven need not settle at each
+        step of an attenuator, nor a person be asked for what he has set.
+
         Raises
         ------
         InstrumentError
@@ -172,21 +178,37 @@ class Conditions:
         for name in self.instruments:
             if name not in values:
                 continue
-            instrument = self.instruments[name]
-            with _of(name):
-                applied = instrument.apply(values[name], self._cancel)
-            if applied.reading is not None:
-                readings[name] = applied.reading
-            reads = "" if applied.reading is None else f", reads {_value(instrument, applied.reading)}"
-            self._say(f"{name} set to {_value(instrument, values[name])}{reads}")
-            for note in applied.notes:
-                self._say(f"{name}: {note}")
+            reading = self._stands(name, values[name]) or self._put(name, values[name])
+            if reading.reading is not None:
+                readings[name] = reading.reading
         if readings:
             facts["readings"] = readings
         port = self.level.at(values)
         if port is not None:
             facts["level"] = port.to_json()
         return facts
+
+    def _stands(self, name: str, value: float) -> Applied | None:
+        """Give the reading of an instrument that was set to this value before and has stayed there."""
+        if self._standing.get(name) != value:
+            return None
+        try:
+            with _of(name):
+                return Applied(value, self.instruments[name].confirm(value))
+        except NotConfirmed:
+            return None
+
+    def _put(self, name: str, value: float) -> Applied:
+        instrument = self.instruments[name]
+        self._standing.pop(name, None)
+        with _of(name):
+            applied = instrument.apply(value, self._cancel)
+        self._standing[name] = value
+        reads = "" if applied.reading is None else f", reads {_value(instrument, applied.reading)}"
+        self._say(f"{name} set to {_value(instrument, value)}{reads}")
+        for note in applied.notes:
+            self._say(f"{name}: {note}")
+        return applied
 
     def confirm(self, values: Mapping[str, float]) -> tuple[tuple[str, ...], DriverError | None]:
         """Read at a point's end whether everything still stands where it was set.
@@ -201,8 +223,10 @@ class Conditions:
             try:
                 instrument.confirm(value)
             except NotConfirmed as error:
+                self._standing.pop(name, None)
                 doubts.append(f"{name} did not stay where it was put: {error.what}")
             except DriverError as error:
+                self._standing.pop(name, None)
                 fault = error
                 doubts.append(f"nobody knows whether {name} stayed where it was put: {error.what}")
         for words in doubts:

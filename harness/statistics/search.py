@@ -30,7 +30,7 @@ _SURE_BITS = 3  # over the target BER
 # round lies between, so that no level's error is met twice.
 _ROUNDS = (((30, 100), (10, 100), (3, 60), (1, 30)), ((50, 100), (17, 100), (5.5, 60), (1.7, 40)))
 _ALLOWANCE = 3  # a point may take so many times the bits that its errors should need
-_MOST_POINTS = 60  # with levels that scatter more than what is asked for, there is no end by itself
+MOST_POINTS = 60  # with levels that scatter more than what is asked for, there is no end by itself
 _CLIFF_AFTER = 2  # points that went where errors should be and found no link
 
 
@@ -91,7 +91,7 @@ def next_step(space: SearchSpace, points: Sequence[CurvePoint]) -> Step | Found:
     sure = bracket_of(points, space.target_ber, space.confidence, space.rising)
     if sure.under is not None and sure.over is not None and abs(sure.over - sure.under) <= space.width + 1e-9:
         return Found(_fit(space, points), spent, True, _sure_words(space, sure))
-    if len(points) >= _MOST_POINTS:
+    if len(points) >= MOST_POINTS:
         return _given_up(space, points, spent, f"given up after {len(points)} points")
     count = len(points) - near
     if count >= _CLIFF_AFTER and (step := _on_a_cliff(space, points)) is not None:

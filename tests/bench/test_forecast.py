@@ -9,7 +9,7 @@ import numpy as np
 import pytest
 
 from harness.assess.run import assess
-from harness.bench.check.forecast import PAGE_BYTES, forecast, stop_problem
+from harness.bench.check.forecast import PAGE_BYTES, POINT_S, forecast, stop_problem
 from harness.bench.check.points import of_the_points
 from harness.bench.session import bench_host, bench_versions
 from harness.profile import parse_profile
@@ -202,3 +202,30 @@ def test_a_sweep_that_stops_short_of_its_end_or_judges_nothing_is_remarked():
     assert (
         list(of_the_points(parse_profile(whole + "[requirement]\nber = 1e-3\nat = { att = 20.1 }\n"))) == []
     )
+
+
+def test_a_sweep_is_foreseen_with_what_its_points_take_beside_measuring():
+    """Only what changes settles; at most, each point also waits for what never comes."""
+    two = """
+[instruments.slow]
+driver = "simulated"
+knob = "ebn0_db"
+limits = [0, 60]
+safe = 40
+settle_s = 100
+[[sweep.axes]]
+instrument = "slow"
+values = [40, 50]
+[[sweep.axes]]
+instrument = "att"
+values = [20, 21, 22]
+[stop]
+seconds = 10
+"""
+    text = SWEEP.replace("safe = 60", "safe = 60\nsettle_s = 1") + two
+    found = forecast(
+        parse_profile(text.replace("rate_bps = 48_000", "rate_bps = 48_000\ndrain_s = 5")), 48_000.0
+    )
+    assert found.points == 6
+    assert found.expected_s == pytest.approx(6 * (10 + 1) + 2 * 100 + 6 * POINT_S)
+    assert found.longest_s == pytest.approx(found.expected_s + 6 * 5)

@@ -107,3 +107,39 @@ def test_a_search_over_scpi_finds_the_devices_own_crossing(bitassay, attenuated,
     refused = bitassay("measure", "search.toml")
     assert refused.status == 2
     assert "bitassay sweep" in refused.err
+
+
+def test_what_stands_where_it_should_is_not_set_again_and_what_fell_back_is(bitassay, attenuated, tmp_path):
+    """The slow axis is set when it changes only: an oven would have to settle at each step of the attenuator."""
+    fast = attenuated()
+    slow = attenuated(falls_back_s=0.7, falls_back_at=[2], start_db=7)
+    axes = """
+[instruments.slow]
+driver = "scpi"
+resource = "TCPIP::127.0.0.1::{port}::SOCKET"
+backend = "@py"
+quantity = "attenuation"
+unit = "dB"
+limits = [0, 80]
+safe = 80
+set = "ATT {{value:.1f}}"
+read = "ATT?"
+tolerance = 0.05
+[sweep]
+sensitivity_ber = 1e-2
+[[sweep.axes]]
+instrument = "slow"
+values = [1, 2]
+[[sweep.axes]]
+instrument = "attenuator"
+values = [32, 34, 36]
+"""
+    text = fast.profile(axes.format(port=slow.scpi_port), stop="seconds = 1")
+    (tmp_path / "sweep.toml").write_text(text)
+    done = bitassay("sweep", "sweep.toml", "--json", timeout=120)
+    assert done.status == 0, done.err
+    assert fast.settings() == [32, 34, 36, 32, 34, 36, 80]
+    assert slow.settings() == [1, 2, 2, 80]
+    moved = [any("did not stay" in remark for remark in p["remarks"]) for p in done.json["points"]]
+    assert moved == [False, False, False, True, False, False]
+    assert all(p["readings"]["slow"] == p["values"]["slow"] for p in done.json["points"] if "readings" in p)

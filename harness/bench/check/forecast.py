@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import math
+from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Any
 
@@ -13,6 +14,7 @@ from harness.bench.schedule import seconds_until
 from harness.bench.visits import visits_of
 from harness.profile import Profile
 from harness.statistics.plans import Plan
+from harness.statistics.search import MOST_POINTS
 
 # Measured on SQLite with the layout of this version, indexes and the space that pages leave free included;
 # tests/bench/test_forecast.py measures them again.
@@ -24,6 +26,7 @@ INSTRUMENT_BYTES = 250  # at each point: readings, and the event of its setting
 SECOND_ROW_BYTES = 44  # beside counts and positions
 SECOND_INDEX_BYTES = 13
 SEARCH_POINTS = 12  # that a search looks at, more or less
+POINT_S = 0.4  # that a point takes beside settling and measuring: asking instruments, emptying the line
 COUNTS = 3  # of a second's bits: sent, received, compared
 
 
@@ -57,12 +60,14 @@ def forecast(profile: Profile, rate_bps: float | None, *, positions_per_second: 
     requirement = requirement_of(settings)
     longest: float | None = 0.0
     expected: float | None = 0.0
+    before: Mapping[str, float] = {}
     for visit in visits:
         asked = requirement_at(requirement, settings, visit.values)
         plan = asked.make_plan() if asked else None
         most, mean = _point_seconds(profile, plan, rate_bps)
-        overhead = _overhead(profile)
-        longest = None if longest is None or most is None else longest + most + overhead
+        overhead = _overhead(profile, before, visit.values)
+        before = visit.values
+        longest = None if longest is None or most is None else longest + most + overhead + _late(profile)
         expected = None if expected is None or mean is None else expected + mean + overhead
     if profile.sweep is not None:
         warm = profile.sweep.warm_up_s
@@ -98,19 +103,31 @@ def _search_seconds(profile: Profile, rate_bps: float | None) -> float | None:
     assert search is not None
     limits = [] if search.max_seconds is None else [search.max_seconds]
     if search.max_bits is not None and rate_bps:
-        limits.append(search.max_bits / rate_bps + SEARCH_POINTS * (search.settle_s + _settling(profile)))
+        each = POINT_S + search.settle_s + _settling(profile, search.instrument) + _late(profile)
+        limits.append(search.max_bits / rate_bps + MOST_POINTS * each)
     return search.warm_up_s + min(limits) if limits else None
 
 
-def _overhead(profile: Profile) -> float:
-    return _settling(profile) + (profile.sweep.settle_s if profile.sweep else 0.0)
+def _overhead(profile: Profile, before: Mapping[str, float], values: Mapping[str, float]) -> float:
+    """Seconds that a point takes beside measuring: what was set before and stays need not settle again."""
+    if profile.sweep is None:
+        return sum(_settling(profile, name) for name in profile.instruments)
+    first = [] if before else [name for name in profile.instruments if name not in values]
+    changed = [name for name, value in values.items() if before.get(name) != value]
+    return POINT_S + profile.sweep.settle_s + sum(_settling(profile, name) for name in (*first, *changed))
 
 
-def _settling(profile: Profile) -> float:
-    """Seconds that the slowest instrument takes to settle."""
-    return max(
-        (float(getattr(i.options, "settle_s", 0.0)) for i in profile.instruments.values()), default=0.0
-    )
+def _late(profile: Profile) -> float:
+    """Seconds that a point may take longer at most: what is out is waited for, and a setting confirmed."""
+    if profile.sweep is None and profile.search is None:
+        return 0.0
+    slow = [float(getattr(i.options, "confirm_s", 0.0)) for i in profile.instruments.values()]
+    return profile.need_link().drain_s + sum(slow)
+
+
+def _settling(profile: Profile, name: str) -> float:
+    """Seconds that an instrument takes to settle."""
+    return float(getattr(profile.instruments[name].options, "settle_s", 0.0))
 
 
 def _disk(
