@@ -11,7 +11,7 @@ from harness.assess.accumulate import Accumulator, Sums
 from harness.assess.assessment import Bounds, Clustered, PointAssessment
 from harness.assess.requirement import Requirement
 from harness.assess.verdict import Evidence, judge, unaligned_ratio
-from harness.assess.words import count, ratio
+from harness.assess.words import count, duration, ratio
 from harness.record import EndedBy, Event, Status, Tally, Verdict
 from harness.statistics.bounds import clopper_pearson, upper_bound
 
@@ -209,6 +209,10 @@ def _remarks(acc: Accumulator, sums: Sums, bits_lost: int, clustering: Clustered
             f"this computer could not keep up {len(overruns)} times: {count(lost, 'bit')} counted as "
             "unaligned, not the device's fault"
         )
+    stalls = [float(e.data.get("seconds", 0.0)) for e in acc.events if e.kind == "host_stalled"]
+    if stalls:
+        often = "once" if len(stalls) == 1 else f"{len(stalls)} times"
+        remarks.append(f"this computer stood still {often}, for {duration(sum(stalls))}: no bit was due then")
     if (sums.tally.unaligned or bits_lost) and sums.tally.compared:
         half = _half_wrong(sums, bits_lost)
         parts = [(sums.tally.unaligned, "not aligned"), (bits_lost, "lost")]

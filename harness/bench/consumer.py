@@ -6,9 +6,8 @@ import threading
 import time
 from collections import deque
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass, replace
+from dataclasses import replace
 
-from harness.assess.feed import PlanFeed
 from harness.assess.words import count, duration, slip_words
 from harness.bench.arrivals import Arrivals
 from harness.bench.beyond import beyond_words, cut_off
@@ -18,6 +17,8 @@ from harness.bench.missing import Missing
 from harness.bench.places import Places
 from harness.bench.playback import Playback, PlayedArrivals
 from harness.bench.ring import Piece, Ring
+from harness.bench.standstill import standstill_ns
+from harness.bench.terms import Rules
 from harness.bench.traffic import Traffic
 from harness.bench.watch import LinkWatch
 from harness.record import Event, Second, Segment, Tally
@@ -26,15 +27,7 @@ from harness.statistics.plans import Decision
 
 SECOND_NS = 1_000_000_000
 WAIT_S = 0.05
-
-
-@dataclass(slots=True)
-class Rules:
-    """What ends a point, as far as the consumer sees it."""
-
-    plan: PlanFeed | None = None
-    errors: int | None = None
-    received_bits: int | None = None  # where nothing is sent
+SURE_BITS = 512  # a split is off by more than this with a chance under 1e-9 up to a BER of 0.3
 
 
 class Consumer(threading.Thread):
@@ -88,6 +81,7 @@ class Consumer(threading.Thread):
         self._mark_bits: deque[int] = deque()
         self._first_delay_bits: int | None = None
         self._ending = False  # nothing more will come
+        self._excused_until_ns = 0
         self.tally = Tally()
         self.after = Tally()
         self.decision: Decision | None = None
@@ -114,7 +108,9 @@ class Consumer(threading.Thread):
         """Consume until nothing more will come."""
         try:
             while not self._ring.drained:
+                begun = time.monotonic_ns()
                 piece = self._ring.next_piece(WAIT_S)
+                self._excuse(standstill_ns(begun, time.monotonic_ns(), WAIT_S))
                 if piece is None:
                     if self._playback is None:
                         self._pass_time(time.monotonic_ns(), idle=True)
@@ -170,11 +166,22 @@ class Consumer(threading.Thread):
         came = self._traffic.last_received_ns is not None
         return self._watch.due(self._sending(), now_ns, self._traffic.first_sent_ns, came)
 
+    def _excuse(self, stood_ns: int) -> None:
+        """Let time in which this computer stood still count for nothing."""
+        if not stood_ns:
+            return
+        self._excused_until_ns = time.monotonic_ns()
+        if self._watch is not None:
+            self._watch.excuse(stood_ns)
+        text = f"this computer stood still for {duration(stood_ns / 1e9)}"
+        at = self._excused_until_ns - stood_ns
+        self._happened("host_stalled", text, at, {"seconds": stood_ns / 1e9})
+
     def _pass_time(self, now_ns: int, *, idle: bool) -> None:
         """Close the seconds that end before `now_ns`; when idle, look after what is overdue."""
         due = self._due(now_ns)
         while now_ns >= self._boundary_ns:
-            self._close_second(due)
+            self._close_second(due and self._boundary_ns > self._excused_until_ns)
         if not idle:
             return
         if self._watch is not None and self._nothing_aligned_pending() and self._watch.silent_until(now_ns):
@@ -327,7 +334,7 @@ class Consumer(threading.Thread):
             bit = segment.start if event.bit is None else event.bit
             at = self._arrived(bit)
             if event.kind == "slip":
-                event = self._resolve(event, bit, at)
+                event = self._resolve(event, bit)
             event = self._chronicle.stamped(event, at)
             stamped.append(event)
             self._chronicle.keep(event)
@@ -335,10 +342,12 @@ class Consumer(threading.Thread):
                 self._delay(bit, int(event.data["place"]), at)
         return replace(segment, events=tuple(stamped))
 
-    def _resolve(self, event: Event, bit: int, at: int) -> Event:
+    def _resolve(self, event: Event, bit: int) -> Event:
         size, modulo = int(event.data["bits"]), event.data.get("modulo")
         if self._places is not None:
-            size, modulo = self._places.slipped(bit, size, modulo, at)
+            # Bits before the slip may agree with both places: only one a little later is surely of the new one.
+            sure = max(bit, min(bit + SURE_BITS, self._counter.received - 1))
+            size, modulo = self._places.slipped(sure, size, modulo, self._arrived(sure))
         self._missing.explained(size)
         data = {**event.data, "bits": size, "modulo": modulo}
         text = slip_words(size) + (" over an outage" if "outage" in event.text else "")

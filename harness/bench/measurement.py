@@ -9,7 +9,7 @@ from collections.abc import Callable
 
 from drivers.contract import DriverError, Link
 from harness.bench.book import Book
-from harness.bench.consumer import Consumer, Rules
+from harness.bench.consumer import Consumer
 from harness.bench.ending import TheRest
 from harness.bench.line import LineCounts
 from harness.bench.places import Places
@@ -17,7 +17,7 @@ from harness.bench.playback import Playback
 from harness.bench.receiver import Receiver
 from harness.bench.ring import Ring
 from harness.bench.sender import Sender
-from harness.bench.terms import Defect, Outcome, Setup
+from harness.bench.terms import Defect, Outcome, Rules, Setup
 from harness.bench.traffic import Traffic
 from harness.bench.watch import LinkWatch, hopeless
 from harness.record import EndedBy, Event, Second, Tally

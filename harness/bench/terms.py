@@ -30,6 +30,15 @@ class StopRules:
 
 
 @dataclass(frozen=True, slots=True)
+class Rules:
+    """What ends a point, as far as the consumer sees it."""
+
+    plan: PlanFeed | None = None
+    errors: int | None = None
+    received_bits: int | None = None  # where nothing is sent
+
+
+@dataclass(frozen=True, slots=True)
 class Setup:
     """What a point is measured with."""
 

@@ -40,6 +40,11 @@ class LinkWatch:
             self._due_since = now_ns
         return True
 
+    def excuse(self, stood_ns: int) -> None:
+        """Take the news that this computer stood still for a while: nothing could be aligned then."""
+        if self._due_since is not None:
+            self._due_since += stood_ns
+
     def aligned(self, first_ns: int, last_ns: int) -> tuple[bool, bool]:
         """Take an aligned stretch by the arrival of its first and last bit.
 
@@ -56,7 +61,7 @@ class LinkWatch:
             self.lost_at_ns = first_ns
         self.lost = False
         self._ever = True
-        self._due_since = last_ns
+        self._due_since = max(last_ns, self._due_since or last_ns)  # it may have been excused beyond
         return newly_lost, back
 
     def silent_until(self, now_ns: int) -> bool:

@@ -18,11 +18,12 @@ from harness.assess.point import Facts
 from harness.assess.requirement import Requirement
 from harness.bench.book import Book
 from harness.bench.check.forecast import forecast
-from harness.bench.consumer import Consumer, Rules
+from harness.bench.consumer import Consumer
 from harness.bench.places import Places
 from harness.bench.progress import Live
 from harness.bench.ring import Ring
 from harness.bench.session import bench_host, bench_versions
+from harness.bench.terms import Rules
 from harness.bench.traffic import Traffic
 from harness.bench.watch import LinkWatch
 from harness.profile import parse_profile

@@ -189,3 +189,21 @@ def test_a_resumed_run_does_not_meet_the_errors_of_its_beginning_again(bitassay,
     same, fewest = len(sittings[0] & sittings[1]), min(map(len, sittings))
     assert fewest > 200
     assert same < fewest / 10  # one in a thousand by chance
+
+
+def test_a_computer_that_stood_still_is_not_a_lost_link(bitassay, tmp_path):
+    (tmp_path / "run.toml").write_text(RUN + "[stop]\nbits = 1_600_000\n")
+    process = start(tmp_path, "measure", "run.toml", "--json")
+    assert wait_for_rows(tmp_path, 1, process)
+    process.send_signal(signal.SIGSTOP)
+    time.sleep(4.2)
+    process.send_signal(signal.SIGCONT)
+    out, err = process.communicate(timeout=30)
+    assert process.returncode == 0, err
+    got = json.loads(out)
+    assert got["links_lost"] == got["bits_lost"] == 0
+    assert got["bits_compared"] == 1_600_000
+    assert [event["kind"] for event in got["events"]].count("host_stalled") >= 1
+    assert any("this computer stood still" in remark for remark in got["remarks"])
+    assert got["availability"][0]["unavailable"] == 0
+    assert bitassay("verify", "last").status == 0
