@@ -113,7 +113,9 @@ def ebn0_db(modulation: str, ber: float, fading: str | None = None) -> float:
         return (math.log(value) if value > 0 else -1e4) - target
 
     if excess(LOWEST_DB) < 0 or excess(HIGHEST_DB) > 0:
-        raise ValueError(f"no Eb/N0 gives {kind.name} a bit error ratio of {ratio(ber)}: it lies under one half")
+        raise ValueError(
+            f"no Eb/N0 gives {kind.name} a bit error ratio of {ratio(ber)}: it lies under one half"
+        )
     return float(brentq(excess, LOWEST_DB, HIGHEST_DB, xtol=1e-12, rtol=1e-14, maxiter=300))
 
 

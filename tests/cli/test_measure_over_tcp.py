@@ -52,6 +52,16 @@ def test_an_echo_two_seconds_late_is_counted_exactly_and_its_delay_is_found(bita
     assert got["links_lost"] == 0
 
 
+def test_a_long_loss_whose_split_lies_before_the_gap_by_chance_has_its_true_size(bitassay, device, profile):
+    # The two bits before the loss agree with both places, so the split is put before them, and they came long
+    # before the bits behind the loss were sent: what was possible when they came says nothing of those.
+    port = device(deaf=[10_800, 31_000])
+    keys = "rate_bps = 400_000\npace_bps = 400_000"
+    got = bitassay("measure", profile(port, "[stop]\nbits = 480_000\n", link=keys), "--json").json
+    assert got["slips"] == [{"bit": 86_398, "bits": -161_600, "modulo": None}]
+    assert (got["errors"], got["bits_lost"], got["bits_inserted"]) == (0, 161_600, 0)
+
+
 REQUIRED = "[requirement]\nber = 1e-5\n[stop]\nseconds = 12\n"
 
 
