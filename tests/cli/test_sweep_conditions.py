@@ -104,6 +104,10 @@ def test_a_search_over_scpi_finds_the_devices_own_crossing(bitassay, attenuated,
     assert bitassay("verify", "last").status == 0
     shown = bitassay("show", "last")
     assert "the search ends after" in shown.out
+    paper = bitassay("report", "last", "--text").out
+    assert ("without any curve, levels as set" in paper) == (
+        sure["under"] is not None or sure["over"] is not None
+    )
     refused = bitassay("measure", "search.toml")
     assert refused.status == 2
     assert "bitassay sweep" in refused.err

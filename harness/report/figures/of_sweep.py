@@ -9,7 +9,7 @@ import numpy as np
 from harness.assess.assessment import PointAssessment
 from harness.assess.curve import Curve as Assessed
 from harness.assess.requirement import curve_axis
-from harness.assess.words import count, ratio
+from harness.assess.words import count, percent, ratio
 from harness.report.document import Figure
 from harness.report.figures.drawings import Curve, CurvePoint, CurveSeries, Floats
 from harness.report.material import Material
@@ -125,6 +125,22 @@ def curve_words(material: Material) -> tuple[str, ...]:
     return tuple(said)
 
 
+def _without_a_curve(curve: Assessed) -> str | None:
+    """Say between which values the target is surely crossed, whatever the curve's shape."""
+    sure = curve.sure
+    if (
+        sure is None
+        or curve.contrary
+        or curve.target_ber is None
+        or (sure.under is None and sure.over is None)
+    ):
+        return None
+    ends = [(sure.under, "under"), (sure.over, "over")]
+    sides = [f"{side} it at {with_unit(value, curve.unit)}" for value, side in ends if value is not None]
+    target = f"BER {ratio(curve.target_ber)}"
+    return f"without any curve, levels as set ({percent(sure.confidence)}, {target}): {', '.join(sides)}"
+
+
 def _about(curve: Assessed) -> list[str]:
     said = []
     fit = curve.fit
@@ -142,6 +158,8 @@ def _about(curve: Assessed) -> list[str]:
             said.append(f"goodness of fit, p-value {fit.goodness:.2g}{bad}")
         if fit.only_worse:
             said.append(f"{count(len(fit.only_worse), 'point')} far above the target BER enter only as worse")
+    if (sides := _without_a_curve(curve)) is not None:
+        said.append(sides)
     if curve.level_at_value is not None:
         sure = f" ± {2 * curve.level_uncertainty_db:.2f} dB (k = 2)" if curve.level_uncertainty_db else ""
         said.append(f"level at the device's port there: {curve.level_at_value:.2f} dBm{sure}")
