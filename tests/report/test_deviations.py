@@ -89,6 +89,11 @@ def test_a_host_that_could_not_keep_up_is_told_with_the_bits(records, point):
     )
 
 
+def test_a_host_that_stood_still_is_told(records, point):
+    events = [Event("host_stalled", 5, "this computer stood still for 4.5 s", 10**18, {"seconds": 4.5})]
+    assert "stood still for 4.5 s" in said(records.make([point([0, 1], events=events)], FIXED))
+
+
 def test_bits_after_the_decision_are_told(records, point):
     material = records.make([point([0, 1], after=Tally(458, 458, 0, 2, 1, 1))], FIXED)
     assert "458 bits with 2 errors came after the decision" in " ".join(to_text(assemble(material)).split())

@@ -21,7 +21,16 @@ CUT_SHORT = "(cut short; `bitassay show RUN | cat` has every word)"
 FEWEST_EVENTS = 2
 FEW_POINTS = 4  # written out in words also where room is short
 ALARMS = frozenset(
-    ("alignment_lost", "slip", "link_lost", "fault", "host_overrun", "never_returned", "inversion")
+    (
+        "alignment_lost",
+        "slip",
+        "link_lost",
+        "fault",
+        "host_overrun",
+        "host_stalled",
+        "never_returned",
+        "inversion",
+    )
 )
 _ASCII = str.maketrans({"\u202f": " ", "—": "-", "–": "-", "·": ";", "…": ".", "→": ">", "−": "-"})
 

@@ -119,6 +119,7 @@ def _host(material: Material) -> Iterator[str]:
             f"it could not keep up {len(overruns)} times: {count(bits, 'bit')} counted as unaligned, "
             "not the device's fault"
         )
+    yield from _listed(_events(material, "host_stalled"))
 
 
 def _link(material: Material) -> Iterator[str]:
