@@ -10,7 +10,9 @@ REQUIRED = "[requirement]\nber = 1e-2\naccept_errors = 1_000\nat = { attenuator 
 
 def test_a_point_that_was_disturbed_has_no_verdict_and_is_not_on_the_curve(bitassay, attenuated, tmp_path):
     device = attenuated(falls_back_s=0.6, falls_back_at=[2], start_db=20)
-    (tmp_path / "sweep.toml").write_text(device.profile(SWEEP, stop="seconds = 1.5", more=REQUIRED, link=PACE))
+    (tmp_path / "sweep.toml").write_text(
+        device.profile(SWEEP, stop="seconds = 1.5", more=REQUIRED, link=PACE)
+    )
     done = bitassay("sweep", "sweep.toml", "--json", timeout=120)
     assert done.status == 3, done.err
     got = done.json
