@@ -87,7 +87,7 @@ class RecordKeeping:
                 "status": r.status,
                 "verdict": "VOID" if r.void else r.verdict,
             }
-            if r.verdict in (None, "UNDECIDED") and _without_a_bit(store.load_head(r.run)):
+            if r.verdict in (None, "UNDECIDED") and _without_a_bit(store, r.run):
                 run["without_a_bit"] = True
             earlier.append(run)
         return earlier
@@ -199,6 +199,10 @@ class RecordKeeping:
         self._ended.add(number)
 
 
-def _without_a_bit(run: Run) -> bool:
+def _without_a_bit(store: Store, key: str) -> bool:
     """Whether a run that has ended states that not a single bit came, so that it could never have passed."""
+    try:
+        run = store.load_head(key)
+    except StoreLost:
+        return False  # not known: it counts
     return run.stated is not None and run.stated.get("bits_received") == 0
