@@ -15,7 +15,7 @@ from harness.bench.session import bench_host, bench_versions, status_of
 from harness.bench.terms import Defect, Outcome
 from harness.profile import Profile
 from harness.record import EndedBy, Event, Run, Second, Sitting, Tally
-from harness.store import Store, StoreLost
+from harness.store import Store, StoreError, StoreLost
 
 TRIES_KEPT = 20  # named in the record; all are counted
 Commit = Callable[[list[Second], list[Event], int], None]
@@ -203,6 +203,6 @@ def _without_a_bit(store: Store, key: str) -> bool:
     """Whether a run that has ended states that not a single bit came, so that it could never have passed."""
     try:
         run = store.load_head(key)
-    except StoreLost:
+    except StoreError:
         return False  # not known: it counts
     return run.stated is not None and run.stated.get("bits_received") == 0
