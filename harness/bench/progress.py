@@ -52,6 +52,7 @@ class Hooks:
     started: Callable[[str], None] = lambda _key: None
     tick: Callable[[Progress], None] = lambda _progress: None
     log: Callable[[str], None] = lambda _line: None
+    pausing: Callable[[str], None] = lambda _what: None  # what is waited for; empty: nothing any more
 
 
 @dataclass(frozen=True, slots=True)

@@ -17,6 +17,7 @@ from harness.assess.requirement import requirement_at, requirement_of
 from harness.bench.both import side_by_side, worst
 from harness.bench.conditions import Conditions
 from harness.bench.measurement import Measurement
+from harness.bench.pausing import Pausing
 from harness.bench.progress import Hooks, Live, Progress, RunResult
 from harness.bench.record_keeping import RecordKeeping
 from harness.bench.resumption import instruments_of, points_done
@@ -30,7 +31,6 @@ from harness.record import EndedBy, Event, Run, Tally
 from harness.store import Store
 
 TICK_S = 0.2
-SIGN_OF_LIFE_S = 30.0
 MOST_MOVED = 3  # points in a row at which an instrument did not stay where it was put: then the run ends
 
 
@@ -68,6 +68,7 @@ class BenchRun:
         self._record = RecordKeeping(profile, store, hooks, command=command, cut=cut)
         for link in self._links.all:
             link.begin_sitting(self._record.sitting)
+        self._pausing = Pausing(hooks.pausing, self._record.sign_of_life, hooks.interrupted)
         self._next_tick = 0.0
         self._done: list[PointAssessment] = points_done(cut) if cut else []
         self._next_index = 1 + max((s.index for p in cut.points for s in p.seconds), default=-1) if cut else 0
@@ -161,7 +162,9 @@ class BenchRun:
         """Set a point's conditions; nothing is being sent meanwhile."""
         self._now = visit
         values = {**self._conditions.fixed(), **visit.values}
-        facts = self._conditions.apply(values)
+        words = ", ".join(f"{name} {value:g}" for name, value in values.items())
+        with self._pausing.during(f"being set: {words}"):
+            facts = self._conditions.apply(values)
         if self._conditions.instruments:
             facts["instruments"] = self._conditions.identities()
             facts["units"] = self._conditions.units()
@@ -175,7 +178,7 @@ class BenchRun:
 
     def _visit_all(self, first: Visit, facts: dict[str, Any]) -> tuple[EndedBy, DriverError | None]:
         steps = self._profile.sweep or self._profile.search
-        self._pause(steps.warm_up_s if steps else 0.0)
+        self._pausing.wait(steps.warm_up_s if steps else 0.0, "instruments and device warm up")
         visit: Visit | None = first
         ended_by: EndedBy = "bits"
         while visit is not None:
@@ -183,7 +186,7 @@ class BenchRun:
                 return "interrupted", None
             if visit is not first:
                 facts = self._set(visit)
-            self._pause(steps.settle_s if steps else 0.0)
+            self._pausing.wait(steps.settle_s if steps else 0.0, "everything settles before bits count")
             outcomes = self._measure(visit, facts)
             ended_by, fault = worst(outcomes), next((o.fault for o in outcomes if o.fault), None)
             if ended_by in ("interrupted", "fault"):
@@ -194,12 +197,6 @@ class BenchRun:
                 visit = self._route.again(self._done, self._schedule.left_over(self._done))
             self._record.note(here, self._route.take_events())
         return ended_by, None
-
-    def _pause(self, seconds: float) -> None:
-        ends = time.monotonic() + seconds
-        while (left := ends - time.monotonic()) > 0 and not self._hooks.interrupted.is_set():
-            self._record.sign_of_life()
-            self._hooks.interrupted.wait(min(left, SIGN_OF_LIFE_S))
 
     def _begin_point(self, visit: Visit, way: int, facts: Mapping[str, Any]) -> None:
         about = {**self._ways[way].facts(self._links), **facts, **visit.facts}

@@ -173,7 +173,7 @@ def _watch(follower: Follower, *, quiet: bool) -> None:
     back_at = float("-inf")
     with watcher(quiet=quiet, title=follower.run.title, device=follower.run.device) as view:
         view.started(follower.run.key)
-        away = False
+        away = paused = False
         while True:
             try:
                 follower.look()
@@ -192,4 +192,7 @@ def _watch(follower: Follower, *, quiet: bool) -> None:
             progress = follower.progress(time.time_ns())
             if progress is not None:
                 view.tick(progress)
+            elif not paused:  # what the bench waits for meanwhile is not in the store
+                view.pausing("instruments are set and warm up; nothing is measured yet")
+            paused = True
             time.sleep(LOOK_EVERY_S)

@@ -215,7 +215,11 @@ def carry_out(loaded: Profile, command: str, manner: Manner, cut: Run | None = N
                 views.append(view)
                 log_file.line(f"begins: {loaded.title or loaded.name}; store {where}")
                 hooks = Hooks(
-                    interrupted=ending.event, started=view.started, tick=view.tick, log=log_file.line
+                    interrupted=ending.event,
+                    started=view.started,
+                    tick=view.tick,
+                    log=log_file.line,
+                    pausing=view.pausing,
                 )
                 bench = BenchRun(
                     loaded, opened, hooks, lock=lock_folder(store_url(manner.store)), command=command, cut=cut

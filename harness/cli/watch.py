@@ -22,6 +22,7 @@ if TYPE_CHECKING:
 LINE_EVERY_S = 5.0
 BACK = "the store can be reached again"
 EVENTS_AT_ONCE = 4  # said between two lines
+PAUSE_S = 1.0  # a pause that is shorter is not told
 QUIET_S = 1.5  # without news from the bench for so long, the run is being closed
 
 
@@ -41,6 +42,9 @@ class Watcher:
 
     def waiting(self, why: str) -> None:
         """Take why nothing can be known for now; empty: it can be known again."""
+
+    def pausing(self, what: str) -> None:
+        """Take what is waited for while nothing is measured; empty: nothing any more."""
 
     def notice(self, words: str) -> None:
         """Say something that is not about the device, such as that the store is away; may come from any thread."""
@@ -62,6 +66,7 @@ class LineWatcher(Watcher):
         self._latest: Progress | None = None
         self._key = ""
         self._why = ""
+        self._pause = ("", 0.0)  # what is waited for, and since when
         self._over = threading.Event()
         self._thread = threading.Thread(target=self._run, name="lines", daemon=True)
 
@@ -81,6 +86,10 @@ class LineWatcher(Watcher):
         """Take why nothing can be known for now."""
         self._why = why
 
+    def pausing(self, what: str) -> None:
+        """Take what is waited for; said once it has taken as long as a line takes to come."""
+        self._pause = (what, time.monotonic())
+
     def stop(self) -> None:
         """End, with what is being written; a reader that takes nothing is not waited for."""
         self._over.set()
@@ -88,7 +97,7 @@ class LineWatcher(Watcher):
 
     def _run(self) -> None:
         try:
-            said, why = False, ""
+            said, why, paused = False, "", ("", 0.0)
             events_said = 0
             next_at = time.monotonic() + self._every_s
             over = False
@@ -102,6 +111,10 @@ class LineWatcher(Watcher):
                     why = self._why
                     self._say(why or BACK)
                 now = time.monotonic()
+                pause = self._pause
+                if pause[0] and pause != paused and now - pause[1] >= self._every_s:
+                    paused = pause
+                    self._say(f"{local_time(time.time_ns())}  {pause[0]}")
                 latest = self._latest
                 if latest is not None and latest is not shown and now >= next_at and not over:
                     if shown is None or shown.point.started != latest.point.started:
@@ -131,6 +144,7 @@ class PageWatcher(Watcher):
         self._interrupted = interrupted
         self._latest: tuple[Progress, float] | None = None
         self._waiting: tuple[str, int] | None = None  # why, and since when (UTC, ns)
+        self._pause = ("", 0.0)  # what is waited for, and since when
         self._notices: list[str] = []
         # The newest decided second of the point under way, and when it was first seen.
         self._newest: tuple[tuple[int, int], float] = ((0, -1), time.monotonic())
@@ -158,6 +172,10 @@ class PageWatcher(Watcher):
         since = self._waiting[1] if self._waiting else time.time_ns()
         self._waiting = (why, since) if why else None
 
+    def pausing(self, what: str) -> None:
+        """Take what is waited for: it stands on the page in place of what is still to do."""
+        self._pause = (what, time.monotonic())
+
     def notice(self, words: str) -> None:
         """Write it at the page's foot, and once more below it when the page has gone."""
         if self._live is None:
@@ -180,8 +198,10 @@ class PageWatcher(Watcher):
     def _filled(self, now_ns: int) -> Sheet:
         from harness.cli.view.sheet import sheet_before, sheet_of_progress
 
+        pause, since = self._pause
+        pause = pause if time.monotonic() - since >= PAUSE_S else ""
         if self._latest is None:
-            return sheet_before(self._title, self._device, now_ns)
+            return sheet_before(self._title, self._device, now_ns, pause)
         progress, at = self._latest
         waiting = self._waiting
         if waiting is not None:
@@ -189,10 +209,10 @@ class PageWatcher(Watcher):
         closing = ""
         if self._interrupted.is_set():
             closing = "interrupted: what was measured is being closed and kept"
-        elif time.monotonic() - at > QUIET_S:
+        elif not pause and time.monotonic() - at > QUIET_S:
             closing = "nothing more is sent; what is still on its way is waited for"
         behind_s = max(0, int(time.monotonic() - self._newest[1] - 1.0))  # a second takes a second
-        return sheet_of_progress(progress, now_ns, closing=closing, behind_s=behind_s)
+        return sheet_of_progress(progress, now_ns, closing=closing, behind_s=behind_s, pause=pause)
 
 
 def event_lines(progress: Progress, said: int) -> list[str]:

@@ -2,18 +2,22 @@
 
 from __future__ import annotations
 
+import io
 import re
+import threading
+import time
 from dataclasses import replace
 
 import pytest
 
+import harness.cli.watch as watch
 from harness.assess.assessment import Assessment
 from harness.cli.page import page
 from harness.cli.view.entries import sensitivity_words
 from harness.cli.view.ink import LINES
 from harness.cli.view.notebook import Notebook
 from harness.cli.view.sheet import sheet_of_assessment
-from harness.cli.watch import PageWatcher, progress_line
+from harness.cli.watch import LineWatcher, PageWatcher, progress_line
 
 FOUND = {"ber": 1e-3, "value": 33.2, "unit": "dB", "lower": 33.1, "upper": 33.3, "confidence": 0.95}
 ERRORS = [0, 1, 3, 10, 30, 48, 100, 300, 900, 2000, 4000, 6000]  # at 28 to 39 dB, of 48 000 bits
@@ -161,10 +165,6 @@ def test_a_line_says_where_the_sweep_is(making):
 
 def test_a_new_point_waits_for_no_second_of_the_time_before_it(making, monkeypatch):
     """A warm-up, or the setting of the next point, is no second that is not decided yet."""
-    import threading
-
-    import harness.cli.watch as watch
-
     clock = [100.0]
     monkeypatch.setattr(watch.time, "monotonic", lambda: clock[0])
     view = PageWatcher(None, "", {}, threading.Event())
@@ -174,3 +174,34 @@ def test_a_new_point_waits_for_no_second_of_the_time_before_it(making, monkeypat
     clock[0] += 6.0
     view.tick(replace(making.progress([]), visits=5))
     assert view._fill(making.start).behind_s == 5
+
+
+def test_a_warm_up_is_told_and_not_taken_for_a_link_that_does_not_open(making, monkeypatch):
+    clock = [100.0]
+    monkeypatch.setattr(watch.time, "monotonic", lambda: clock[0])
+    view = PageWatcher(None, "", {}, threading.Event())
+    view.pausing("instruments and device warm up until 18:30:00")
+    assert view._fill(making.start).verdict == "none yet: opening the link"  # a short one is not told
+    clock[0] += 2.0
+    assert view._fill(making.start).verdict == "none yet: instruments and device warm up until 18:30:00"
+    view.pausing("")
+    view.tick(replace(making.progress([0, 0]), visits=5))
+    view.pausing("being set: oven 60")
+    clock[0] += 600.0
+    assert view._fill(making.start).to_do == ["being set: oven 60"]
+    view.pausing("")
+    view.tick(replace(making.progress([0, 0]), visits=5))
+    assert "oven" not in " ".join(view._fill(making.start).to_do)
+
+
+def test_a_long_pause_is_told_in_a_line_once():
+    stream = io.StringIO()
+    view = LineWatcher(stream, every_s=0.05)
+    view.start()
+    view.pausing("being set: oven 60")
+    deadline = time.monotonic() + 20
+    while "oven" not in stream.getvalue() and time.monotonic() < deadline:
+        time.sleep(0.02)
+    time.sleep(0.3)
+    view.stop()
+    assert stream.getvalue().count("being set: oven 60") == 1

@@ -74,19 +74,21 @@ class Sheet:
     foot: Sequence[str] = ()
 
 
-def sheet_before(title: str, device: Mapping[str, str], now_ns: int) -> Sheet:
-    """Fill a page before anything was measured."""
+def sheet_before(title: str, device: Mapping[str, str], now_ns: int, pause: str = "") -> Sheet:
+    """Fill a page before anything was measured; `pause`: what is waited for."""
     return Sheet(
         unit=unit_name(device),
         title=title,
         corner=moment(now_ns, now_ns),
-        verdict="none yet: opening the link",
+        verdict=f"none yet: {pause or 'opening the link'}",
         ber="nothing is known yet: every ratio is possible",
         foot=(_foot(""),),
     )
 
 
-def sheet_of_progress(progress: Progress, now_ns: int, *, closing: str = "", behind_s: int = 0) -> Sheet:
+def sheet_of_progress(
+    progress: Progress, now_ns: int, *, closing: str = "", behind_s: int = 0, pause: str = ""
+) -> Sheet:
     """Fill a page for a run that goes on.
 
     Parameters
@@ -95,6 +97,8 @@ def sheet_of_progress(progress: Progress, now_ns: int, *, closing: str = "", beh
         Why it is being closed; empty while it is not.
     behind_s
         Whole seconds that have gone by and are not yet decided: the counter waits for what comes next.
+    pause
+        What is waited for while nothing is measured.
     """
     p = progress.point
     verdict, against = _state(progress, now_ns, closing)
@@ -124,7 +128,7 @@ def sheet_of_progress(progress: Progress, now_ns: int, *, closing: str = "", beh
         details=detail_words(p),
         recent=p.recent,
         behind_s=behind_s,
-        to_do=[closing] if closing else _to_do(progress, now_ns, behind_s),
+        to_do=[closing or pause] if closing or pause else _to_do(progress, now_ns, behind_s),
         events=p.events,
         foot=foot,
     )
