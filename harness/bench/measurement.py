@@ -272,6 +272,7 @@ class Measurement:
                 return "seconds", None
             hopeless = self._hopeless(now)
             if hopeless is not None and self._setup.silence_is_a_result:
+                self._tell("given_up", f"{hopeless.what}: the point ends", time.monotonic_ns())
                 return "seconds", None
             if hopeless is not None:
                 return "fault", hopeless
@@ -333,13 +334,18 @@ class Measurement:
         if self._receiver is None:
             return None
         waiting_since = self.traffic.first_sent_ns if self._sender is not None else self._started_ns
+        setup, aligned_ns = self._setup, self._consumer.last_aligned_ns
+        # A point of a sweep where only noise comes back has its result: the night is for the others.
+        noise = (
+            setup.silence_is_a_result and setup.plan is None and not setup.base_compared and not aligned_ns
+        )
         return hopeless(
             now_ns,
             waiting_since_ns=waiting_since,
             anything_came=self.traffic.last_received_ns is not None,
-            last_aligned_ns=self._consumer.last_aligned_ns or self._started_ns,
+            last_aligned_ns=aligned_ns or self._started_ns,
             drain_s=self._setup.drain_s,
-            ends_by_time=self._setup.stop.seconds is not None,
+            ends_by_time=setup.stop.seconds is not None and not noise,
         )
 
     def _stop_sending(self, ended_by: EndedBy) -> None:

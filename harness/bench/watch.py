@@ -94,6 +94,6 @@ def hopeless(
     if ends_by_time or now_ns - last_aligned_ns < HOPELESS_S * 1e9:
         return None
     return DriverError(
-        f"nothing was aligned for {HOPELESS_S:.0f} s, and the profile has no stop.seconds",
+        f"nothing was aligned for {HOPELESS_S:.0f} s",
         "check the link and the pattern's name; set stop.seconds to wait longer",
     )

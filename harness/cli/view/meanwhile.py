@@ -14,7 +14,7 @@ from harness.record import Event
 OFTEN = {"alignment_lost": "was no longer found", "sequence_loss": "lost its sequence", "slip": "slipped"}
 ROUTINE = ("aligned", "delay", "decided", "closed", "search", "inversion", "skipped", *OFTEN)
 OF_THE_RUN = ("guard", "fault", "stopped")  # whichever point they were entered with
-NO_LINK = ("link_lost", "never_returned")  # at a point that was never aligned its figures say so
+NO_LINK = ("link_lost", "never_returned", "given_up")  # at a point that was never aligned its figures say so
 _SET = (" set to ", " made safe at ")
 _NAMED = 4  # points
 
