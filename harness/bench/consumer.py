@@ -25,8 +25,7 @@ from harness.record import Event, Second, Segment, Tally
 from harness.signal.counter import Counter
 from harness.statistics.plans import Decision
 
-SECOND_NS = 1_000_000_000
-WAIT_S = 0.05
+SECOND_NS, WAIT_S = 1_000_000_000, 0.05
 SURE_BITS = 512  # a split is off by more than this with a chance under 1e-9 up to a BER of 0.3
 
 
@@ -214,9 +213,8 @@ class Consumer(threading.Thread):
         self._boundary_ns += SECOND_NS
 
     def _link_lost(self, now_ns: int) -> None:
-        self._happened(
-            "link_lost", "the link was lost: for 3 s bits were due and none was aligned", now_ns, {}
-        )
+        text = "the link was lost: for 3 s bits were due and none was aligned"
+        self._happened("link_lost", text, now_ns, {})
 
     # -- segments
 

@@ -154,7 +154,9 @@ class Bench:
         assert all(slip["bits"] % 8 == 0 for slip in got["slips"])
         positions = self._positions(got)
         assert len(positions) == got["errors"]
-        assert got["bits_unaligned"] == 0  # nothing that the modem does lasts as long as an outage
+        # Nothing that the modem does lasts as long as an outage; what it makes up at the very end was never sent.
+        beyond = sum(s["bits"] for s in got["slips"] if s["bit"] + s["bits"] == got["bits_received"])
+        assert got["bits_unaligned"] == beyond <= 8 * way.made_up_at_ends
         slips = [(slip["bit"], slip["bits"]) for slip in got["slips"]]
         tables = self._independent["made"]
         # Beside bytes that were framed wrongly a place must be picked out of more stretches: twice the spacing.
