@@ -106,6 +106,9 @@ class PointAssessment:
     clustering: Clustered | None
     unaligned_ratio: float | None
     links_lost: int
+    inversions: int = (
+        0  # each counts as a slip where slips are limited; not in JSON, whose `events` list them
+    )
     remarks: Sequence[str] = ()
     recent: Sequence[tuple[int, Tally]] = ()  # seconds of the last minute, for the strip; not in JSON
     facts: Mapping[str, Any] = field(default_factory=dict)

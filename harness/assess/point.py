@@ -40,9 +40,7 @@ class Facts:
 def assess_point(acc: Accumulator, about: Facts, *, quick: bool = False) -> PointAssessment:
     """Assess what has been accumulated; `quick` leaves out what takes long (clustering), for the screen."""
     sums = acc.sums
-    never_returned = sum(int(e.data.get("bits", 0)) for e in acc.events if e.kind == "never_returned")
-    bits_lost = sums.bits_lost + never_returned
-    links_lost = sum(1 for e in acc.events if e.kind == "link_lost")
+    bits_lost = sums.bits_lost + acc.never_returned
     clustering = None if quick else _clustering(acc, about.requirement)
     availability = acc.availability() if sums.duration_ns and not about.facts.get("untimed") else ()
     verdict: Verdict | None = None
@@ -52,7 +50,8 @@ def assess_point(acc: Accumulator, about: Facts, *, quick: bool = False) -> Poin
         evidence = Evidence(
             sums,
             bits_lost,
-            links_lost,
+            acc.links_lost,
+            acc.inversions,
             clustering is not None and bool(clustering.clustered),
             clustering is not None and clustering.too_few_events,
             availability[0].objectives_met if availability else None,
@@ -96,7 +95,8 @@ def assess_point(acc: Accumulator, about: Facts, *, quick: bool = False) -> Poin
         availability=availability,
         clustering=clustering,
         unaligned_ratio=unaligned_ratio(sums, bits_lost),
-        links_lost=links_lost,
+        links_lost=acc.links_lost,
+        inversions=acc.inversions,
         remarks=(
             *(tries.remark(acc.plan.consumer_risk, about.facts) if acc.plan is not None else ()),
             *about.facts.get("overdue", ()),

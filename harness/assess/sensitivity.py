@@ -106,6 +106,9 @@ def _troubles(curve: Curve, least: float, requirement: Requirement) -> tuple[lis
 def _over_the_limits(point: PointAssessment, requirement: Requirement) -> Iterator[str]:
     if point.slip_count > requirement.max_slips:
         yield f"{count(point.slip_count, 'slip')}, where at most {requirement.max_slips} are allowed"
+    elif point.slip_count + point.inversions > requirement.max_slips:
+        turned = count(point.inversions, "inversion")
+        yield f"{turned} in mid-stream, each like a slip, where at most {requirement.max_slips} are allowed"
     share = point.unaligned_ratio
     if point.tally.compared and share is not None and share > requirement.max_unaligned_ratio:
         most = percent(requirement.max_unaligned_ratio)

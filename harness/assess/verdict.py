@@ -21,6 +21,7 @@ class Evidence:
     sums: Sums
     bits_lost: int  # by slips, and never returned
     links_lost: int
+    inversions: int  # polarity turned over in mid-stream
     clustered: bool
     too_few_events: bool  # clustered, with under ten events: no bounds can be given
     objectives_met: bool | None
@@ -77,16 +78,7 @@ def _failures(
             f"in {count(plan.longest_bits, 'bit')}",
             _good_unit(plan),
         ]
-    if sums.slips > requirement.max_slips:
-        allowed = (
-            "none is allowed"
-            if requirement.max_slips == 0
-            else f"at most {requirement.max_slips} are allowed"
-        )
-        reasons.append(
-            f"{count(sums.slips, 'slip')}, and {allowed} "
-            f"({count(evidence.bits_lost, 'bit')} lost, {count(sums.bits_inserted, 'bit')} inserted)"
-        )
+    reasons += _out_of_place(requirement, evidence)
     share = unaligned_ratio(sums, evidence.bits_lost)
     if share is not None and share > requirement.max_unaligned_ratio:
         reasons.append(
@@ -97,6 +89,27 @@ def _failures(
         reasons.append(_links(evidence.links_lost))
     if evidence.objectives_met is False:
         reasons.append("an availability objective was not met")
+    return reasons
+
+
+def _out_of_place(requirement: Requirement, evidence: Evidence) -> list[str]:
+    """Say what is wrong with slips and inversions: after either, every bit is wrong for who does not resynchronize."""
+    sums, turned, most = evidence.sums, evidence.inversions, requirement.max_slips
+    if sums.slips + turned <= most:
+        return []
+    allowed = "none is allowed" if most == 0 else f"at most {most} are allowed"
+    reasons = []
+    if sums.slips:
+        reasons.append(
+            f"{count(sums.slips, 'slip')}, and {allowed} "
+            f"({count(evidence.bits_lost, 'bit')} lost, {count(sums.bits_inserted, 'bit')} inserted)"
+        )
+    if turned:
+        often = "once" if turned == 1 else f"{turned} times"
+        reasons.append(
+            f"the polarity turned over {often} in mid-stream, each counts as a slip, and {allowed}: every bit "
+            "behind it is the wrong one"
+        )
     return reasons
 
 

@@ -41,10 +41,14 @@ def outlook_of(acc: Accumulator, requirement: Requirement | None) -> Outlook:
     if plan is None or requirement is None:
         return Outlook()
     sums = acc.sums
-    lost = sum(int(e.data.get("bits", 0)) for e in acc.events if e.kind == "never_returned")
-    links_lost = sum(1 for e in acc.events if e.kind == "link_lost")
     evidence = Evidence(
-        sums, sums.bits_lost + lost, links_lost, clustered=False, too_few_events=False, objectives_met=None
+        sums,
+        sums.bits_lost + acc.never_returned,
+        acc.links_lost,
+        acc.inversions,
+        clustered=False,
+        too_few_events=False,
+        objectives_met=None,
     )
     return Outlook(
         accept_at=_accept_at(plan),

@@ -66,7 +66,7 @@ class Requirement(ProfileSection):
     producer_risk: Share = 0.05
     """sequential: the probability that a device at ber / margin gets FAIL."""
     max_slips: CountOrZero = 0
-    """PASS needs at most this many slips."""
+    """PASS needs at most this many slips; a polarity that turns over in mid-stream counts as one."""
     max_unaligned_ratio: ShareOrZero = 0.001
     """PASS needs (unaligned + lost) / (received + lost) bits at or under this."""
     lost_link: Literal["fail", "undecided"] = "fail"

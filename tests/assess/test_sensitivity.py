@@ -48,6 +48,7 @@ def sweep(record: Callable[..., Run], second: Callable[..., Second]) -> Callable
             unaligned = own.pop("unaligned", 0 if k is not None else BITS)
             tally = Tally(BITS, BITS - unaligned, unaligned, k or 0, k or 0, 0)
             stretches = tuple(s for s in ((BITS - unaligned, True), (unaligned, False)) if s[0])
+            turned = own.pop("inversions", 0) * (Event("inversion", 9, "polarity turned over", 0),)
             row = replace(
                 second(number, bits=BITS, first_bit=0),
                 point=number,
@@ -57,7 +58,7 @@ def sweep(record: Callable[..., Run], second: Callable[..., Second]) -> Callable
                 **own,
             )
             facts = {"units": {"att": unit}, "rate_bps": float(BITS)}
-            events = (Event("aligned", 0, "the pattern was found", 0),) if k is not None else ()
+            events = (Event("aligned", 0, "the pattern was found", 0), *turned) if k is not None else ()
             points.append(Point(number, {"att": value}, 0, 1, "seconds", (row,), events, facts=facts))
         return replace(
             record(),
@@ -142,6 +143,7 @@ def test_without_a_curve_what_is_sure_decides(sweep):
     ("more", "words"),
     [
         ({"slips": 1, "bits_lost": 8}, "1 slip, where at most 0 are allowed"),
+        ({"inversions": 1}, "1 inversion in mid-stream, each like a slip, where at most 0 are allowed"),
         ({"unaligned": 5000}, "0.5 % of the bits were unaligned or lost, where at most 0.1 % are allowed"),
     ],
 )

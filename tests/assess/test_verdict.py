@@ -59,6 +59,26 @@ def test_slips_beyond_those_allowed_fail(record, second, allowed, verdict):
     assert a.whole.slips == ({"bit": 25_000, "bits": -8, "modulo": None},)
 
 
+@pytest.mark.parametrize(("allowed", "verdict"), [(0, "FAIL"), (1, "FAIL"), (2, "PASS")])
+def test_a_polarity_that_turns_over_in_mid_stream_counts_as_a_slip(record, second, allowed, verdict):
+    turned = tuple(Event("inversion", bit, "polarity turned over", 2) for bit in (25_000, 45_000))
+    a = assess(record(seconds(second), turned, max_slips=allowed))
+    assert a.verdict == verdict
+    assert a.whole.slip_count == 0
+    if verdict == "FAIL":
+        assert a.reasons[0].startswith(
+            "the polarity turned over 2 times in mid-stream, each counts as a slip, and "
+        )
+
+
+@pytest.mark.parametrize("kind", ["link_lost", "never_returned", "inversion"])
+def test_what_rules_a_pass_out_counts_after_more_events_than_are_kept(record, second, kind):
+    many = tuple(Event("line", 10, "a line's state changed", 2) for _ in range(10_001))
+    last = Event(kind, 20_000, "", 2, {"bits": 8_000})
+    assert assess(record(seconds(second), many)).verdict == "PASS"
+    assert assess(record(seconds(second), (*many, last))).verdict == "FAIL"
+
+
 @pytest.mark.parametrize(("limit", "verdict"), [(0.001, "FAIL"), (0.5, "PASS")])
 def test_unaligned_bits_beyond_the_limit_fail(record, second, limit, verdict):
     rows = [second(0, unaligned=5_000)]

@@ -89,6 +89,7 @@ def _rules(material: Material) -> Iterator[str]:
     if r is None:
         return
     yield f"at most {count(r.max_slips, 'slip')}" if r.max_slips else "no slip"
+    yield "a polarity that turns over in mid-stream counts as a slip"
     yield f"at most {percent(r.max_unaligned_ratio)} of the bits unaligned or lost"
     outcome = "a fail" if r.lost_link == "fail" else "undecided"
     yield (
