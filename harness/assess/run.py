@@ -33,6 +33,8 @@ def assess(run: Run) -> Assessment:
     curves: list[Any] = []
     if several:
         verdict, reasons = _together(points)
+        if verdict is None and run.status == "completed" and (named := _named_at(run)):
+            verdict, reasons = "UNDECIDED", [f"the requirement holds at {named}, which was not measured"]
         whole = _summed(whole, points)
     if sweep and run.status != "running":
         from harness.assess.curve import curves_of
@@ -141,6 +143,12 @@ def _summed(first: PointAssessment, points: list[PointAssessment]) -> PointAsses
         clustering=None,
         remarks=(),
     )
+
+
+def _named_at(run: Run) -> str:
+    """Name the point at which the requirement holds; empty where it names none."""
+    at = (run.settings.get("requirement") or {}).get("at") or {}
+    return ", ".join(f"{name} {value:g}" for name, value in at.items())
 
 
 def _judges_nothing(run: Run) -> list[str]:

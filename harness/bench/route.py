@@ -116,12 +116,17 @@ class ListRoute(Route):
             self.words = AGAIN
         return visit
 
+    def _is_judged(self, visit: Visit) -> bool:
+        """Whether the requirement names it: it has to be measured, hopeless or not."""
+        at = self._profile.requirement.at if self._profile.requirement is not None else {}
+        return bool(at) and all(visit.values.get(name) == value for name, value in at.items())
+
     def _is_hopeless(self, visit: Visit, done: Sequence[PointAssessment]) -> bool:
         """Whether enough points that lie between it and every aligned one were never aligned themselves.
 
         A sweep that begins where there is no link has no aligned point yet and goes on.
         """
-        if not self._guard or visit.reference:
+        if not self._guard or visit.reference or self._is_judged(visit):
             return False
         rest = {name: value for name, value in visit.values.items() if name != self._axis}
         alike = [

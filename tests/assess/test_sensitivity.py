@@ -181,6 +181,15 @@ def test_one_difference_of_three_in_a_thousand_is_hysteresis_alone_and_chance_am
     assert remarks([30 + k / 4 for k in range(40)]) == []
 
 
+def test_a_point_that_the_requirement_names_and_nobody_measured_is_no_success(sweep):
+    run = sweep(counts_of(STEPS), at={"att": 45.0})
+    found = assess(run)
+    assert found.verdict == "UNDECIDED"
+    assert found.reasons == ["the requirement holds at att 45, which was not measured"]
+    assert assess(replace(run, status="interrupted")).verdict is None  # it goes on
+    assert assess(sweep(counts_of(STEPS), at={"att": 30.0}, accept_errors=9)).verdict in ("PASS", "FAIL")
+
+
 def test_a_requirement_that_stands_for_no_point_is_said_to_judge_nothing(sweep):
     found = assess(sweep(counts_of(STEPS)))
     assert found.verdict is None

@@ -86,6 +86,16 @@ def test_the_reference_is_always_visited_and_guard_0_leaves_out_nothing(measured
     assert visited == list(range(10, 21))
 
 
+def test_a_point_that_the_requirement_names_is_measured_however_hopeless_it_is(measured):
+    """Left out it would have no verdict, and a run without a verdict passes for one that went well."""
+    named = (
+        "values = { start = 10, stop = 20, step = 1 }\n[requirement]\nber = 1e-3\nat = { attenuator = 19 }\n"
+    )
+    visited, words = follow(sweep(named), measured, 14)
+    assert visited == [10, 11, 12, 13, 14, 15, 16, 19]
+    assert words[0].endswith("attenuator 17, 18, 20")
+
+
 def test_another_axis_is_another_climb(measured):
     profile = parse_profile(
         BENCH
