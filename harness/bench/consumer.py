@@ -10,7 +10,7 @@ from dataclasses import replace
 
 from harness.assess.words import count, duration, slip_words
 from harness.bench.arrivals import Arrivals
-from harness.bench.beyond import beyond_words, cut_off
+from harness.bench.beyond import beyond_words, bits_beyond, cut_off
 from harness.bench.book import Book
 from harness.bench.chronicle import Chronicle
 from harness.bench.missing import Missing
@@ -78,7 +78,6 @@ class Consumer(threading.Thread):
         self._sent_before = 0
         self._held: list[Segment] = []  # of a second whose positions were cut: one look at its end
         self._mark_bits: deque[int] = deque()
-        self._first_delay_bits: int | None = None
         self._ending = False  # nothing more will come
         self._excused_until_ns = 0
         self.tally = Tally()
@@ -145,9 +144,7 @@ class Consumer(threading.Thread):
         now = max(came_ns, self._boundary_ns - SECOND_NS)
         bit = self._counter.received
         if self.decision is not None:
-            usual = self._first_delay_bits or 0
-            if self._places is not None and self._places.least_out is not None:
-                usual = min(usual, self._places.least_out)
+            usual = 0 if self._places is None else self._places.usually_out
             self._missing.say_what_was_missing(usual, bit, now)
         else:
             self._missing.say_what_never_returned(bit, now, over=self.waited_for_the_rest)
@@ -237,9 +234,9 @@ class Consumer(threading.Thread):
 
     def _never_sent(self, segment: Segment) -> list[Segment]:
         """At the stream's end: the segment, with what came after the last bit sent cut off as inserted."""
-        sent_end = None if self._places is None or not self._ending else self._places.sent_end
-        extra = 0 if sent_end is None else min(segment.end - sent_end, self._missing.surplus())
-        if extra <= 0 or not segment.aligned or segment.known_bits < segment.tally.received - extra:
+        sent_end = None if self._places is None else self._places.sent_end
+        extra = bits_beyond(segment, sent_end, self._missing.surplus()) if self._ending else 0
+        if not extra:
             return [segment]
         bit = segment.end - extra
         at = self._arrived(bit)
@@ -356,8 +353,6 @@ class Consumer(threading.Thread):
         delay = self._places.aligned(bit, place, at, self._arrivals.came_with(bit))
         if delay is None:
             return
-        if self._first_delay_bits is None:
-            self._first_delay_bits = delay.bits
         seconds = "" if delay.seconds is None else f", {duration(delay.seconds)}"
         data = {"bits": delay.bits, "seconds": delay.seconds, "modulo": delay.modulo}
         text = f"loop delay {count(delay.bits, 'bit')}{seconds}"

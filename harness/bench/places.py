@@ -54,6 +54,7 @@ class Places:
         self.ahead: int | None = None  # sent bit minus received bit, for the stretch that is aligned
         self._least_out: int | None = None  # bits on their way when aligned bits came: least and most so far
         self._most_out = 0
+        self._first_delay: int | None = None  # bits
 
     def _window(self, received_bit: int, arrived_ns: int) -> tuple[int, int]:
         """Sent bits that the received bit can have been, [low, high)."""
@@ -94,7 +95,9 @@ class Places:
         seconds = None if sent_at is None else max(0.0, (arrived_ns - sent_at) / 1e9)
         if sent_by <= sent_bit:
             return None
-        return Delay(max(0, sent_by - sent_bit - 1), seconds, modulo)
+        delay = Delay(max(0, sent_by - sent_bit - 1), seconds, modulo)
+        self._first_delay = delay.bits if self._first_delay is None else self._first_delay
+        return delay
 
     @property
     def sent_end(self) -> int | None:
@@ -102,9 +105,10 @@ class Places:
         return None if self.ahead is None else self._traffic.sent_bits - self.ahead
 
     @property
-    def least_out(self) -> int | None:
-        """The fewest bits on their way when aligned bits came; None before any came."""
-        return self._least_out
+    def usually_out(self) -> int:
+        """Bits on their way as a matter of course: the fewest that were, when aligned bits came."""
+        first = self._first_delay or 0
+        return first if self._least_out is None else min(first, self._least_out)
 
     def follow(self, received_end: int, arrived_ns: int) -> None:
         """Take how many bits were on their way when aligned bits, up to `received_end`, came."""
