@@ -192,7 +192,7 @@ def test_a_resumed_run_does_not_meet_the_errors_of_its_beginning_again(bitassay,
 
 
 def test_a_computer_that_stood_still_is_not_a_lost_link(bitassay, tmp_path):
-    (tmp_path / "run.toml").write_text(RUN + "[stop]\nbits = 1_600_000\n")
+    (tmp_path / "run.toml").write_text(RUN + "[stop]\nbits = 4_000_000\n")
     process = start(tmp_path, "measure", "run.toml", "--json")
     assert wait_for_rows(tmp_path, 1, process)
     process.send_signal(signal.SIGSTOP)
@@ -202,7 +202,7 @@ def test_a_computer_that_stood_still_is_not_a_lost_link(bitassay, tmp_path):
     assert process.returncode == 0, err
     got = json.loads(out)
     assert got["links_lost"] == got["bits_lost"] == 0
-    assert got["bits_compared"] == 1_600_000
+    assert got["bits_compared"] == 4_000_000
     assert [event["kind"] for event in got["events"]].count("host_stalled") >= 1
     assert any("this computer stood still" in remark for remark in got["remarks"])
     assert got["availability"][0]["unavailable"] == 0

@@ -25,7 +25,7 @@ pace_bps = 48_000
 model = "independent"
 ber = 2e-4
 [stop]
-seconds = 12
+seconds = 16
 """
 
 
@@ -91,14 +91,14 @@ def test_benches_and_a_follower_outlive_a_server_that_is_stopped_and_started(
         assert numbers == list(range(len(numbers)))
         for what in ("bits_received", "bits_compared", "errors", "bits_sent"):
             assert sum(second[what] for second in exported["each_second"]) == stated[what]
-        assert stated["bits_compared"] >= 12 * 47_000
+        assert stated["bits_compared"] >= 16 * 47_000
         assert bitassay("verify", key, f"--store={server.address}").status == 0
         left = bitassay("runs", "--json", f"--store={tmp_path / serial / 'results' / 'handover.sqlite'}")
         assert left.json["runs"] == []
 
 
 JUDGED = (
-    PROFILE.replace("seconds = 12", "seconds = 1")
+    PROFILE.replace("seconds = 16", "seconds = 1")
     + """
 [requirement]
 ber = 1e-2
