@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import sys
+from collections.abc import Iterator
+from typing import TYPE_CHECKING
 
 from harness.assess.words import count, local_date
 from harness.cli.failure import FAULT
@@ -15,6 +17,10 @@ from harness.cli.output import (
     store_place,
     store_url,
 )
+
+if TYPE_CHECKING:
+    from harness.record import Run
+    from harness.store import RunLine
 
 
 def runs(store: str | None, limit: int | None, *, as_json: bool) -> int:
@@ -80,7 +86,8 @@ def verify(run: str, store: str | None, *, as_json: bool) -> int:
         key = opened.find(run)
         record = opened.load(key)
         digest = opened.digest(key)
-    found = differences(record)
+        listed = opened.listed(key)
+    found = [*differences(record), *_misfiled(record, listed)]
     if digest is not None and digest_of(record) != digest:
         found.append("the record's SHA-256 digest is not the one that was kept when the run ended")
     if as_json:
@@ -96,6 +103,18 @@ def verify(run: str, store: str | None, *, as_json: bool) -> int:
         if digest is not None:
             print(f"digest {digest}")
     return FAULT if found else 0
+
+
+def _misfiled(record: Run, line: RunLine) -> Iterator[str]:
+    """Name what the store's own list says otherwise: earlier tries of a unit are looked for there."""
+    required = record.settings.get("requirement") or {}
+    own = (record.device.get("serial_number"), record.device.get("model"), required.get("ber"))
+    listed = (line.serial_number, line.model, line.requirement_ber)
+    for name, in_record, in_list in zip(
+        ("serial_number", "model", "requirement.ber"), own, listed, strict=True
+    ):
+        if (in_record or None) != (in_list or None):
+            yield f"{name}: the record says {in_record}, the store's list {in_list}"
 
 
 def upgrade(store: str | None) -> int:

@@ -71,6 +71,13 @@ class Reading:
             query = query.limit(limit)
         return self._run_lines(query)
 
+    def listed(self, key: str) -> RunLine:
+        """Give a run as lists show it."""
+        lines = self._run_lines(_lines().where(t.run.c.key == key))
+        if not lines:
+            raise NoSuchRun(f'no run is named "{key}"', "`bitassay runs` lists them")
+        return lines[0]
+
     def in_lot(self, name: str) -> list[str]:
         """List the keys of the runs of a lot, by what ``device.lot`` says, oldest first."""
         return [key for key, lot in self._lots() if lot == name]
@@ -225,7 +232,7 @@ class Reading:
                 seconds = tuple(seconds_of(connection, run_id, point.index, spans.get(point.index)))
                 points.append(replace(point, seconds=seconds))
             events, seen = events_of(connection, run_id, after_events)
-        return replace(run, points=with_events(run, points, events)), seen
+            return replace(run, points=with_events(run, points, events)), seen
 
     @contextmanager
     def _reading(self) -> Iterator[Connection]:

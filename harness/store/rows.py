@@ -209,7 +209,10 @@ def with_events(
     first = points[0].index
     shared: dict[int, list[Event]] = {point.index: [] for point in points}
     for number, event in events:
-        shared[first if number is None else number].append(event)
+        at = first if number is None else number
+        if at not in shared:
+            raise ValueError(f"an event belongs to point {at}, which is not there")
+        shared[at].append(event)
     return tuple(replace(point, events=tuple(shared[point.index])) for point in points)
 
 

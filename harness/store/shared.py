@@ -274,6 +274,10 @@ class SharedStore(Store):
         """Give the digest that was stored when the run ended."""
         return super().digest(key) if self._has(key) else self._reached().digest(key)
 
+    def listed(self, key: str) -> RunLine:
+        """Give a run as lists show it."""
+        return super().listed(key) if self._has(key) else self._reached().listed(key)
+
     def earlier_runs(
         self, serial_number: str, before_key: str, requirement: Mapping[str, Any], model: str | None = None
     ) -> list[RunLine]:

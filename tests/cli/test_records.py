@@ -113,6 +113,27 @@ def test_a_changed_profile_is_found_by_the_digest(bitassay, measured, tmp_path):
     assert "SHA-256" in done.out
 
 
+@pytest.mark.parametrize("change", ["serial_number = '0032'", "model = 'W'", "requirement_ber = 2e-4"])
+def test_a_run_that_is_listed_as_another_units_is_found(bitassay, measured, tmp_path, change):
+    measured()  # its later tries are counted by these columns: a failed one could be hidden by them
+    with sqlite3.connect(tmp_path / "results" / "runs.sqlite") as db:
+        db.execute(f"update run set {change}")
+    done = bitassay("verify", "last")
+    assert done.status == 4
+    assert f"{change.split(' ')[0].replace('_ber', '.ber')}: the record says" in done.out
+
+
+@pytest.mark.parametrize("change", ["update point set number = 3", "update event set point = 3"])
+def test_what_belongs_to_a_point_that_is_not_there_is_a_damaged_record(bitassay, measured, tmp_path, change):
+    measured()
+    with sqlite3.connect(tmp_path / "results" / "runs.sqlite") as db:
+        db.execute(change)
+    for command in ("verify", "show", "export", "report"):
+        done = bitassay(command, "last")
+        assert done.status == 4, command
+        assert "cannot be read: an event belongs to point" in done.err
+
+
 def test_records_are_copied_once_however_often_it_is_said(bitassay, measured, tmp_path):
     run = measured()["run"]
     for words in ("1 new run", "0 new runs"):
