@@ -25,6 +25,7 @@ from harness.cli.output import (
     store_place,
     store_url,
 )
+from harness.cli.view.ink import writable
 
 if TYPE_CHECKING:
     from harness.bench.run import RunResult
@@ -259,7 +260,7 @@ def _in_a_line(a: Assessment) -> str:
     serial = a.device.get("serial_number")
     why = f": {'; '.join(a.reasons)}" if a.verdict in ("FAIL", "UNDECIDED") else ""
     words = f"{f'{serial} ' if serial else ''}{a.verdict or 'measured'}{why} (run {a.run})"
-    return "".join(c if c.isprintable() else "\ufffd" for c in words)
+    return writable(words, None if sys.stderr is None else sys.stderr.encoding)
 
 
 def _say_what_failed(result: RunResult, status: int) -> None:

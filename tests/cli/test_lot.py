@@ -120,6 +120,8 @@ def test_why_a_unit_did_not_pass_is_said_when_it_did_not(bitassay, tmp_path):
     done = bitassay("lot", "lot.toml", stdin=b"0031\n\n")
     assert done.status == 1
     assert re.search(r"0031 FAIL: not demonstrated: [\d\u202f]+ errors in .* \(run [0-9a-f-]{36}\)", done.err)
+    assert "194\u202f422 bits" in done.err  # what no terminal obeys stays as it is
+    assert "\ufffd" not in done.err
 
 
 def test_a_unit_that_could_not_be_measured_is_told_why_and_may_be_tried_again(bitassay, tmp_path):
