@@ -8,7 +8,7 @@ from typing import Any
 
 from harness.assess import tries
 from harness.assess.words import iso
-from harness.record import EndedBy, Event, Status, Tally, Verdict
+from harness.record import EndedBy, Event, Note, Status, Tally, Verdict
 from harness.statistics.availability import AvailabilityResult
 
 SCHEMA = 1
@@ -188,6 +188,7 @@ class Assessment:
     curves: Sequence[Any] = ()  # harness.assess.curve.Curve, one for each setting of a sweep's other axes
     more: Mapping[str, Any] = field(default_factory=dict)
     required_sensitivity: str = ""  # in words; not in JSON, whose `reasons` say it
+    notes: Sequence[Note] = ()  # added afterwards; in JSON they are part of `more`
 
     def to_json(self) -> dict[str, Any]:
         """JSON as `measure`, `examine`, `sweep` and `show` print it; never NaN."""

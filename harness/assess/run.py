@@ -68,6 +68,7 @@ def assess(run: Run) -> Assessment:
         curves=tuple(curves),
         more={**({"sensitivities": sensitivities} if len(sensitivities) > 1 else {}), **_notes(run)},
         required_sensitivity=required_sensitivity(run),
+        notes=tuple(run.notes),
     )
 
 
@@ -75,8 +76,12 @@ def _notes(run: Run) -> dict[str, Any]:
     """Give what was noted afterwards; nothing where nothing was, as when the numbers were stated."""
     if not run.notes:
         return {}
-    notes = [{"at": iso(n.at), "who": n.who, "text": n.text, "void": n.void} for n in run.notes]
-    return {"void": any(note.void for note in run.notes), "notes": notes}
+    return {"void": any(note.void for note in run.notes), "notes": notes_json(run)}
+
+
+def notes_json(run: Run) -> list[dict[str, Any]]:
+    """JSON of what was noted afterwards."""
+    return [{"at": iso(n.at), "who": n.who, "text": n.text, "void": n.void} for n in run.notes]
 
 
 def accumulate(run: Run, point: Point, requirement: Requirement | None) -> Accumulator:

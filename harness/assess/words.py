@@ -7,6 +7,7 @@ from collections.abc import Mapping
 from datetime import UTC, datetime
 from typing import Any
 
+from harness.record import Note
 from harness.statistics import notation
 
 ENDED_BY: Mapping[str, str] = {
@@ -116,6 +117,11 @@ def local_date(at_ns: int | None) -> str:
     if at_ns is None:
         return ""
     return datetime.fromtimestamp(at_ns / 1e9).astimezone().strftime("%Y-%m-%d %H:%M:%S %z")
+
+
+def note_words(note: Note) -> str:
+    """Say what was noted, who did it and when."""
+    return f"“{note.text}” — {note.who}, {local_date(note.at)}"
 
 
 def value_words(value: Any) -> str:

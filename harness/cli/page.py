@@ -126,7 +126,7 @@ def _numbers(p: PointAssessment, sheet: Sheet) -> Iterator[str]:
         after = p.after_decision
         words = f"{count(after.received, 'bit')} with {count(after.errors, 'error')} came after the decision"
         yield from _entry("afterwards", [f"{words} and are in no figure"])
-    yield from _entry("remarks", list(p.remarks))
+    yield from _entry("remarks", list(sheet.remarks))
 
 
 def _delay(p: PointAssessment) -> list[str]:

@@ -6,7 +6,7 @@ import sys
 from collections.abc import Iterator
 from typing import TYPE_CHECKING
 
-from harness.assess.words import count, local_date
+from harness.assess.words import count, local_date, note_words
 from harness.cli.failure import FAULT
 from harness.cli.output import (
     missing_default,
@@ -79,6 +79,7 @@ def show(run: str, store: str | None, *, as_json: bool) -> int:
 
 def verify(run: str, store: str | None, *, as_json: bool) -> int:
     """Derive every number again and compare."""
+    from harness.assess.run import notes_json
     from harness.assess.verify import differences
     from harness.store import digest_of
 
@@ -87,11 +88,13 @@ def verify(run: str, store: str | None, *, as_json: bool) -> int:
         record = opened.load(key)
         digest = opened.digest(key)
         listed = opened.listed(key)
+    void = [note for note in record.notes if note.void]
     found = [*differences(record), *_misfiled(record, listed)]
     if digest is not None and digest_of(record) != digest:
         found.append("the record's SHA-256 digest is not the one that was kept when the run ended")
     if as_json:
-        print_json({"schema": 1, "run": key, "holds": not found, "differences": found, "digest": digest})
+        document = {"schema": 1, "run": key, "holds": not found, "differences": found, "digest": digest}
+        print_json({**document, "void": bool(void), "notes": notes_json(record)})
     elif found:
         print(f"run {key} does NOT hold: {count(len(found), 'difference')}")
         for line in found:
@@ -102,6 +105,9 @@ def verify(run: str, store: str | None, *, as_json: bool) -> int:
         print(f"run {key} holds: every number follows from its {count(seconds, 'second')}")
         if digest is not None:
             print(f"digest {digest}")
+    if not as_json:
+        for note in void:
+            print(f"it is VOID: {note_words(note)}")
     return FAULT if found else 0
 
 

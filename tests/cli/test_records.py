@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import getpass
 import sqlite3
 
 import pytest
@@ -52,6 +53,23 @@ def test_a_second_test_of_the_same_unit_is_counted_and_named(bitassay, measured)
     other = measured(7, "2e-5", "--set", "device.serial_number=0032")
     assert other["earlier_tries"] == 0
     assert bitassay("verify", "last").status == 0
+
+
+def test_who_marked_a_run_void_and_why_stands_under_it_and_in_verify(bitassay, measured):
+    measured()
+    bitassay("note", "last", "byte lost: cable knocked", "--void")
+    bitassay("note", "last", "seen by the shift leader")
+    lines = bitassay("show", "last").out.splitlines()
+    void = next(number for number, line in enumerate(lines) if "VOID" in line)
+    words = f"“byte lost: cable knocked” — {getpass.getuser()}, 20"
+    assert words in lines[void + 1]
+    assert any("noted: “seen by the shift leader”" in line for line in lines)
+    verified = bitassay("verify", "last")
+    assert verified.status == 0
+    assert f"it is VOID: {words}" in verified.out
+    document = bitassay("verify", "last", "--json").json
+    assert (document["holds"], document["void"]) == (True, True)
+    assert document["notes"][0]["text"] == "byte lost: cable knocked"
 
 
 def test_a_run_in_which_not_a_bit_came_is_named_but_was_no_try(bitassay, measured, tmp_path):

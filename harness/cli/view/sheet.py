@@ -12,7 +12,7 @@ from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 from harness.assess.assessment import Assessment, PointAssessment
-from harness.assess.words import count, duration, how_it_ended, local_date, percent, rate
+from harness.assess.words import count, duration, how_it_ended, local_date, note_words, percent, rate
 from harness.cli.view.directions import on_one_page
 from harness.cli.view.entries import (
     ber_decided,
@@ -159,7 +159,7 @@ def sheet_of_assessment(a: Assessment, where: str = "") -> Sheet:
         verdict=_verdict(a),
         stamped=a.verdict is not None,
         against=a.verdict == "FAIL",
-        reasons=a.reasons,
+        reasons=[*(note_words(note) for note in a.notes if note.void), *a.reasons],
         ber=_labelled(ber_decided(p) if decided else ber_so_far(p), a.device),
         bars=[("", _bar(p, decided=decided))],
         path=path_words(p),
@@ -169,7 +169,7 @@ def sheet_of_assessment(a: Assessment, where: str = "") -> Sheet:
         strip_ends=_strip_ends(a),
         to_do_label="took",
         to_do=[_took(a)],
-        remarks=p.remarks,
+        remarks=[*p.remarks, *(f"noted: {note_words(note)}" for note in a.notes if not note.void)],
         events=p.events,
         foot=[f"run {a.run}" if a.run else "no record kept", *ended],
     )

@@ -6,7 +6,7 @@ from collections.abc import Iterator
 from itertools import pairwise
 
 from harness.assess.tries import UNKNOWN, unknown
-from harness.assess.words import STATUS, count, duration
+from harness.assess.words import STATUS, count, duration, note_words
 from harness.record import Event
 from harness.report.document import Block, Listing, Paragraph, Section
 from harness.report.material import Material
@@ -73,7 +73,7 @@ def _record(material: Material) -> Iterator[str]:
 def _notes(material: Material) -> Iterator[str]:
     for note in material.run.notes:
         mark = "marked VOID: " if note.void else ""
-        yield f"{mark}“{note.text}” — {note.who}, {moment(note.at)}"
+        yield f"{mark}{note_words(note)}"
 
 
 def _overrides(material: Material) -> Iterator[str]:
