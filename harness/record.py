@@ -57,7 +57,7 @@ class Event:
 
     Kinds from the counter: ``aligned``, ``alignment_lost``, ``slip``, ``inversion``, ``skipped``.
     Kinds from the bench: ``host_overrun``, ``host_stalled``, ``link_lost``, ``link_back``, ``line``, ``sequence_loss``
-    (O.150 section 4.2), ``delay``, ``never_returned``, ``decided``, ``closed``, ``fault``, ``stopped``,
+    (O.150 section 4.2), ``delay``, ``never_returned``, ``never_sent``, ``decided``, ``closed``, ``fault``, ``stopped``,
     ``resumed``, ``instrument``, ``positions_cut``.
     """
 

@@ -56,9 +56,8 @@ class Accumulator:
         self._tally = Tally()
         self._sent = self._duration_ns = self._seconds = 0
         self._slips = self._lost = self._inserted = 0
-        self.never_returned = self.links_lost = self.inversions = (
-            0  # of events, those no longer listed included
-        )
+        # Of events, those no longer listed included.
+        self.never_returned = self.links_lost = self.inversions = self.never_sent = 0
         self._positions: list[NDArray[np.int64]] = []
         self._kept = 0
         self._complete = True
@@ -89,6 +88,7 @@ class Accumulator:
         """Take an event."""
         if event.kind == "never_returned":
             self.never_returned += int(event.data.get("bits", 0))
+        self.never_sent += event.kind == "never_sent"
         self.links_lost += event.kind == "link_lost"
         self.inversions += event.kind == "inversion"
         if len(self.events) < EVENTS_KEPT:

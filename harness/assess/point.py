@@ -52,6 +52,7 @@ def assess_point(acc: Accumulator, about: Facts, *, quick: bool = False) -> Poin
             bits_lost,
             acc.links_lost,
             acc.inversions,
+            acc.never_sent,
             clustering is not None and bool(clustering.clustered),
             clustering is not None and clustering.too_few_events,
             availability[0].objectives_met if availability else None,

@@ -22,6 +22,7 @@ class Evidence:
     bits_lost: int  # by slips, and never returned
     links_lost: int
     inversions: int  # polarity turned over in mid-stream
+    never_sent: int  # times that more had come than was sent, and no slip shows it
     clustered: bool
     too_few_events: bool  # clustered, with under ten events: no bounds can be given
     objectives_met: bool | None
@@ -95,7 +96,7 @@ def _failures(
 def _out_of_place(requirement: Requirement, evidence: Evidence) -> list[str]:
     """Say what is wrong with slips and inversions: after either, every bit is wrong for who does not resynchronize."""
     sums, turned, most = evidence.sums, evidence.inversions, requirement.max_slips
-    if sums.slips + turned <= most:
+    if sums.slips + turned + evidence.never_sent <= most:
         return []
     allowed = "none is allowed" if most == 0 else f"at most {most} are allowed"
     reasons = []
@@ -110,6 +111,8 @@ def _out_of_place(requirement: Requirement, evidence: Evidence) -> list[str]:
             f"the polarity turned over {often} in mid-stream, each counts as a slip, and {allowed}: every bit "
             "behind it is the wrong one"
         )
+    if evidence.never_sent:
+        reasons.append(f"more bits came than were sent, which counts as a slip, and {allowed}")
     return reasons
 
 

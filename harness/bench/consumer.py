@@ -295,12 +295,15 @@ class Consumer(threading.Thread):
         )
         decision = self._rules.plan.advance(joined)
         if decision is not None:
+            if held[-1].aligned:
+                self._say_what_was_never_sent(held[-1].end)
             self._close_book(decision, held[-1].end)
 
     def _decided(self, decision: Decision, segment: Segment, compared_before: int) -> None:
         head, tail = segment.split(decision.compared_bits - compared_before)
         self._enter(head)
         self.after += tail.tally
+        self._say_what_was_never_sent(head.end)
         self._close_book(decision, head.end)
 
     def _close_book(self, decision: Decision, bit: int) -> None:
@@ -317,6 +320,16 @@ class Consumer(threading.Thread):
         self._book.cut(bit=bit, ends_ns=at, sent=max(0, self._traffic.sent_bits - self._sent_before))
         self._flush()
         self._ask_stop("plan")
+
+    def _say_what_was_never_sent(self, bit: int) -> None:
+        """Say at the decision that more had come than was sent, where no slip shows it."""
+        at = self._arrived(bit - 1)
+        made_up = 0 if self._places is None else self._places.never_sent(bit, at)
+        if made_up:
+            text = (
+                f"{count(made_up, 'bit')} came that were never sent: whole periods of the pattern came twice"
+            )
+            self._happened("never_sent", text, at, {"bits": made_up}, bit=bit)
 
     # -- events
 

@@ -46,6 +46,7 @@ def outlook_of(acc: Accumulator, requirement: Requirement | None) -> Outlook:
         sums.bits_lost + acc.never_returned,
         acc.links_lost,
         acc.inversions,
+        acc.never_sent,
         clustered=False,
         too_few_events=False,
         objectives_met=None,

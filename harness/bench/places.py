@@ -51,6 +51,7 @@ class Places:
         self._modulo = None if period is None else math.lcm(period, unit)
         self._most = most_in_flight
         self._first_place = first_place
+        self._sure = True  # the place that was taken was possible: bits of it had been sent
         self.ahead: int | None = None  # sent bit minus received bit, for the stretch that is aligned
         self._least_out: int | None = None  # bits on their way when aligned bits came: least and most so far
         self._most_out = 0
@@ -86,8 +87,9 @@ class Places:
             )
             near = bit + (offset - bit) % step
             options = [near + k * step for k in (-2, -1, 0, 1)]
-            inside = [o for o in options if low <= o < high] or [o for o in options if o >= 0]
-            sent_bit = min(inside, key=lambda o: (abs(o - bit), o))
+            inside = [o for o in options if low <= o < high]
+            self._sure = bool(inside)
+            sent_bit = min(inside or [o for o in options if o >= 0], key=lambda o: (abs(o - bit), o))
             alone = low > sent_bit - step and sent_bit + step >= high
             modulo = None if alone or sent_bit == bit else step
         self.ahead = sent_bit - bit
@@ -109,6 +111,24 @@ class Places:
         """Bits on their way as a matter of course: the fewest that were, when aligned bits came."""
         first = self._first_delay or 0
         return first if self._least_out is None else min(first, self._least_out)
+
+    def never_sent(self, received_end: int, arrived_ns: int) -> int:
+        """Count the bits that must have been made up without a trace, by what had come until a time.
+
+        Whole periods that come twice leave no slip in a periodic pattern; only the count of bits tells, once
+        more of them have come than can have been sent.
+
+        Parameters
+        ----------
+        received_end
+            Received bits; the last one is aligned.
+        arrived_ns
+            When that last one came.
+        """
+        if self.ahead is None or self._modulo is None or not self._sure:
+            return 0
+        over = received_end + self.ahead - self._traffic.perhaps_sent_by(arrived_ns)
+        return 0 if over <= 0 else -(-over // self._modulo) * self._modulo
 
     def follow(self, received_end: int, arrived_ns: int) -> None:
         """Take how many bits were on their way when aligned bits, up to `received_end`, came."""
@@ -136,6 +156,7 @@ class Places:
         options = [size + k * modulo for k in range(-span, 4)] if span < MOST_TURNS else [size]
         inside = [s for s in options if low <= bit + self.ahead - s < high]
         steady = [s for s in inside if self._continues(high - (bit + self.ahead - s), modulo)]
+        self._sure = self._sure and bool(inside)
         if len(steady) == 1:  # the loop delay says which
             size, modulo = steady[0], None
         elif inside:

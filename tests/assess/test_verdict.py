@@ -71,7 +71,7 @@ def test_a_polarity_that_turns_over_in_mid_stream_counts_as_a_slip(record, secon
         )
 
 
-@pytest.mark.parametrize("kind", ["link_lost", "never_returned", "inversion"])
+@pytest.mark.parametrize("kind", ["link_lost", "never_returned", "inversion", "never_sent"])
 def test_what_rules_a_pass_out_counts_after_more_events_than_are_kept(record, second, kind):
     many = tuple(Event("line", 10, "a line's state changed", 2) for _ in range(10_001))
     last = Event(kind, 20_000, "", 2, {"bits": 8_000})

@@ -52,6 +52,19 @@ def test_a_requirement_is_met_by_a_program_that_keeps_its_output(measure):
     assert got["bits_lost"] == 0
 
 
+@pytest.mark.parametrize(("allowed", "verdict"), [(0, "FAIL"), (1, "PASS")])
+def test_periods_that_come_twice_count_as_a_slip_once_more_has_come_than_was_sent(measure, allowed, verdict):
+    # PRBS9: eight of its periods are 511 bytes, and leave no trace in the pattern.
+    rest = f"[requirement]\nber = 2e-5\nmax_slips = {allowed}\n"
+    got = measure(rest, link="pace_bps = 400_000", pattern="PRBS9", twice=[12_000, 16 * 511])
+    assert (got["errors"], got["slips"]) == (0, [])
+    assert got["verdict"] == verdict
+    if verdict == "FAIL":
+        assert got["reasons"] == [
+            "more bits came than were sent, which counts as a slip, and none is allowed"
+        ]
+
+
 def test_a_program_that_answers_promptly_is_not_asked_for_its_last_words(measure):
     got = measure(farewell="4 800 bytes in, 4 800 bytes out\n", link="drain_s = 1")
     assert (got["bits_received"], got["errors"], got["slips"]) == (BITS, 0, [])

@@ -5,6 +5,7 @@ Options are one JSON object on the command line:
   linger_s     the last byte of what it was given comes so much later
   invent       [before, value]: before so many bytes a byte of this value is made up, again and again: a list
   lose         bytes that are swallowed, by number
+  twice        [n, m]: once n bytes have come, the last m of them are given out again
   append       once so many bytes have come, [n, hexadecimal] is given out too
   farewell     written when the input ends
   dies         exit status with which it ends then, with what it kept
@@ -24,6 +25,7 @@ class Device:
         self.options = options
         self.seen = 0
         self.kept = bytearray()
+        self.last = bytearray()
 
     def treat(self, data: bytes) -> bytes:
         o, out = self.options, bytearray()
@@ -36,6 +38,10 @@ class Device:
             if self.seen not in lost:
                 out.append(byte)
             self.seen += 1
+            if "twice" in o and self.seen <= o["twice"][0]:
+                self.last.append(byte)
+                if self.seen == o["twice"][0]:
+                    out += self.last[-o["twice"][1] :]
             if self.seen == end:
                 out += bytes.fromhex(more)
         return bytes(out)
