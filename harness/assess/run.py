@@ -15,7 +15,7 @@ from harness.assess.requirement import (
     requirement_at,
     requirement_of,
 )
-from harness.assess.words import iso
+from harness.assess.words import count, iso
 from harness.record import Event, Point, Run, Tally, Verdict
 
 
@@ -92,7 +92,7 @@ def accumulate(run: Run, point: Point, requirement: Requirement | None) -> Accum
     if run.status == "cut" and run.sittings and run.points and point.index == run.points[-1].index:
         undecided = run.sittings[-1].undecided_bits
         if undecided:
-            text = f"{undecided} bits had come and were not decided when the run was cut"
+            text = f"{count(undecided, 'bit')} had come and were not decided when the run was cut"
             acc.note(Event("undecided", None, text, data={"bits": undecided}))
     for second in sorted(point.seconds, key=lambda s: s.index):
         acc.add(second)

@@ -14,6 +14,7 @@ from harness.assess.assessment import PointAssessment
 from harness.assess.feed import PlanFeed
 from harness.assess.point import Facts
 from harness.assess.requirement import requirement_at, requirement_of
+from harness.assess.words import count
 from harness.bench.both import side_by_side, worst
 from harness.bench.conditions import Conditions
 from harness.bench.measurement import Measurement
@@ -257,8 +258,14 @@ class BenchRun:
     def _resumed(self, had: Had | None) -> list[Event]:
         if had is None:
             return []
-        missing = max(0, had.sent - had.received - had.lost)
-        text = f"the run goes on after it was cut; {missing} bits were on their way then and are not counted"
+        # In the data all that every cut so far has left out; in words what this one did.
+        missing = max(0, had.sent + had.inserted - had.received - had.lost)
+        earlier = [int(e.data.get("bits", 0)) for e in had.point.events if e.kind == "resumed"]
+        bits = max(0, missing - (earlier[-1] if earlier else 0))
+        stopped = self._cut.sittings[-1].status if self._cut and self._cut.sittings else "cut"
+        why = {"interrupted": "it was interrupted", "failed": "something failed"}.get(stopped, "it was cut")
+        on_the_way = f"{count(bits, 'bit')} on the way then" if bits else "no bit was on its way then"
+        text = f"the run goes on after {why}; {on_the_way}{', not counted' if bits else ''}"
         return [Event("resumed", had.received, text, time.time_ns(), {"bits": missing})]
 
     def _about(self, visit: Visit, way: int) -> Facts:

@@ -24,6 +24,7 @@ class Had:
     compared: int = 0
     errors: int = 0
     lost: int = 0
+    inserted: int = 0
     duration_s: float = 0.0
     plan: PlanFeed | None = None
 
@@ -68,6 +69,7 @@ def had_by(point: Point, requirement: Requirement | None) -> Had:
         compared=sums.tally.compared,
         errors=sums.tally.errors,
         lost=sums.bits_lost,
+        inserted=sums.bits_inserted,
         duration_s=sums.duration_ns / 1e9,
         plan=acc.feed,
     )

@@ -191,6 +191,26 @@ def test_a_resumed_run_does_not_meet_the_errors_of_its_beginning_again(bitassay,
     assert same < fewest / 10  # one in a thousand by chance
 
 
+def test_what_a_resumed_run_says_of_its_cut_names_how_it_stopped_and_what_was_out(bitassay, tmp_path):
+    (tmp_path / "run.toml").write_text(RUN + "[stop]\nbits = 2_400_000\n")
+    process = start(tmp_path, "measure", "run.toml", "--quiet")
+    assert wait_for_rows(tmp_path, 1, process)
+    process.send_signal(signal.SIGINT)
+    process.communicate()
+    assert bitassay("resume", "last").status == 0
+    got = bitassay("show", "last", "--json").json
+    (words,) = [e["text"] for e in got["events"] if e["kind"] == "resumed"]
+    assert words.startswith("the run goes on after it was interrupted; ")
+    out = got["bits_sent"] - got["bits_received"]
+    assert words.endswith(
+        f"{out:,} bits on the way then, not counted".replace(",", "\u202f", 1)
+        if out > 999
+        else f"{out} bits on the way then, not counted"
+        if out
+        else "no bit was on its way then"
+    )
+
+
 def test_a_computer_that_stood_still_is_not_a_lost_link(bitassay, tmp_path):
     (tmp_path / "run.toml").write_text(RUN + "[stop]\nbits = 4_000_000\n")
     process = start(tmp_path, "measure", "run.toml", "--json")

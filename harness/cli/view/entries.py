@@ -6,7 +6,7 @@ from collections.abc import Mapping
 from typing import Any
 
 from harness.assess.assessment import PointAssessment
-from harness.assess.later import came_later
+from harness.assess.later import balance_words
 from harness.assess.words import count, percent, rate, ratio
 
 PATHS = {
@@ -123,11 +123,7 @@ def detail_words(p: PointAssessment) -> list[str]:
         ones, zeros = count(t.ones_as_zeros, "ONE"), count(t.zeros_as_ones, "ZERO")
         lines.append(f"{ones} received as ZERO, {zeros} received as ONE")
     if t.received:
-        sent = f"{count(p.bits_sent, 'bit')} sent, " if p.bits_sent else ""
-        speed = f" at {rate(p.measured_bps)}" if p.measured_bps else ""
-        later = came_later(p)
-        rest = f"; the other {count(later, 'bit')} came after the decision" if later else ""
-        lines.append(f"{sent}{count(t.received, 'bit')} received{speed}{rest}")
+        lines.append(balance_words(p, f" at {rate(p.measured_bps)}" if p.measured_bps else ""))
     for a in p.availability:
         if a.seconds:
             lines.append(

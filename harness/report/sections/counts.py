@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 
-from harness.assess.later import came_later
+from harness.assess.later import balance_of
 from harness.assess.words import count, duration, iso, percent, ratio
 from harness.record import Event
 from harness.report.document import Block, Column, Entries, Entry, Listing, Paragraph, Section, Table
@@ -41,10 +41,13 @@ def counts_section(material: Material) -> Section:
 
 def _tallies(material: Material) -> Table:
     points = [m.assessed for m in material.points]
-    later = [came_later(p) for p in points]
+    balances = [balance_of(p) for p in points]
+    cut = [b.at_a_cut if b else 0 for b in balances]
+    later = [b.after_decision if b else 0 for b in balances]
     lines = (
         ("bits sent", [number(p.bits_sent) if p.bits_sent else "not sent here" for p in points]),
         ("bits received", [number(p.tally.received) for p in points]),
+        *([("on their way when the run was cut", [number(n) for n in cut])] if any(cut) else []),
         *([("sent before the decision, came after it", [number(n) for n in later])] if any(later) else []),
         ("bits compared", [number(p.tally.compared) for p in points]),
         ("bits unaligned", [number(p.tally.unaligned) for p in points]),
