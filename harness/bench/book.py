@@ -137,6 +137,11 @@ class Book:
                 self._complete.append(self._row(page))
         self._pages.clear()
 
+    @property
+    def entered_bit(self) -> int | None:
+        """Received bit of this sitting up to which seconds are complete; None: all are, the book is closed."""
+        return self._pages[0].first_bit if self._pages else None
+
     def take_complete(self) -> list[Second]:
         """Rows that are complete since the last call."""
         rows, self._complete = self._complete, []

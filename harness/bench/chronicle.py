@@ -10,6 +10,7 @@ from harness.assess.accumulate import EVENTS_KEPT
 from harness.record import Event
 
 COMMON = ("slip", "aligned", "alignment_lost", "delay")  # no longer listed once there are too many
+OF_BITS = (*COMMON, "inversion", "skipped")  # seen by the counter in the bits of a second
 
 
 class Chronicle:
@@ -27,6 +28,7 @@ class Chronicle:
         self._wall_ns = wall_ns
         self._base_bit = base_bit
         self._events: list[Event] = []
+        self._of_bits: list[Event] = []  # of seconds that may not be complete
         self._count = 0
         self._posted: deque[Event] = deque()
 
@@ -50,14 +52,26 @@ class Chronicle:
             event = replace(event, bit=event.bit + self._base_bit)
         self._count += 1
         if self._count <= EVENTS_KEPT or event.kind not in COMMON:
-            self._events.append(event)
+            (self._of_bits if event.kind in OF_BITS else self._events).append(event)
         if self._count == EVENTS_KEPT + 1:
             text = f"more than {EVENTS_KEPT} events: slips are still counted, no longer listed"
             self._events.append(replace(event, kind="events_cut", text=text, data={}))
 
-    def take(self) -> list[Event]:
-        """Give what is new since the last call."""
+    def take(self, entered_bit: int | None) -> list[Event]:
+        """Give what is new since the last call.
+
+        Parameters
+        ----------
+        entered_bit
+            The received bit, counted from this sitting's first, up to which seconds are complete; None: all are.
+            What the counter saw at later bits waits for its second: a run that is killed in between would have
+            a slip in its record, and not the second that it belongs to.
+        """
         while self._posted:
             self._events.append(self._posted.popleft())
-        events, self._events = self._events, []
+        limit = None if entered_bit is None else entered_bit + self._base_bit
+        waiting = [] if limit is None else [e for e in self._of_bits if e.bit is not None and e.bit >= limit]
+        ready = [e for e in self._of_bits if e not in waiting] if waiting else self._of_bits
+        self._of_bits = waiting
+        events, self._events = [*ready, *self._events], []
         return events

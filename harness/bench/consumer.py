@@ -406,4 +406,5 @@ class Consumer(threading.Thread):
     def _flush(self) -> None:
         self._missing.take_given_up()
         undecided = self._counter.received - self._counter.decided
-        self._commit(self._book.take_complete(), self._chronicle.take(), undecided)
+        seconds = self._book.take_complete()
+        self._commit(seconds, self._chronicle.take(self._book.entered_bit), undecided)

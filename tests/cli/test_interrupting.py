@@ -227,3 +227,18 @@ def test_a_computer_that_stood_still_is_not_a_lost_link(bitassay, tmp_path):
     assert any("this computer stood still" in remark for remark in got["remarks"])
     assert got["availability"][0]["unavailable"] == 0
     assert bitassay("verify", "last").status == 0
+
+
+def test_a_run_killed_amid_slips_keeps_none_without_its_second(bitassay, device, tmp_path):
+    (tmp_path / "run.toml").write_text(
+        f'[link]\ndriver = "tcp"\nhost = "127.0.0.1"\nport = {device(lose_every=503)}\n'
+        "rate_bps = 80_000\npace_bps = 80_000\n[stop]\nseconds = 60\n"
+    )
+    process = start(tmp_path, "measure", "run.toml", "--quiet")
+    assert wait_for_rows(tmp_path, 3, process)
+    process.kill()
+    process.communicate()
+    done = bitassay("verify", "last")
+    assert done.status == 0, done.err
+    shown = bitassay("show", "last", "--json").json
+    assert shown["bits_lost"] == 8 * len(shown["slips"]) > 0
