@@ -99,7 +99,7 @@ def assess_point(acc: Accumulator, about: Facts, *, quick: bool = False) -> Poin
         links_lost=acc.links_lost,
         inversions=acc.inversions,
         remarks=(
-            *(tries.remark(acc.plan.consumer_risk, about.facts) if acc.plan is not None else ()),
+            *_tries(acc, about),
             *about.facts.get("overdue", ()),
             *about.facts.get("moved", ()),
             *bounds.remarks,
@@ -108,6 +108,13 @@ def assess_point(acc: Accumulator, about: Facts, *, quick: bool = False) -> Poin
         recent=tuple(acc.recent),
         facts=about.facts,
     )
+
+
+def _tries(acc: Accumulator, about: Facts) -> Sequence[str]:
+    if acc.plan is None:
+        return ()
+    nothing_came = about.status != "running" and not acc.sums.tally.received
+    return tries.remark(acc.plan.consumer_risk, about.facts, without_a_bit=nothing_came)
 
 
 def _half_wrong(sums: Sums, bits_lost: int) -> float | None:

@@ -36,17 +36,30 @@ def result_of(run: Mapping[str, Any]) -> str:
     return f"{result}, not a single bit came" if run.get("without_a_bit") else result
 
 
-def remark(consumer_risk: float, facts: Mapping[str, Any]) -> Sequence[str]:
+def words_of(consumer_risk: float, facts: Mapping[str, Any], *, without_a_bit: bool) -> str:
+    """Say which try a run is, and what that does to the risk; empty for a first one.
+
+    Parameters
+    ----------
+    without_a_bit
+        Whether the run itself ended before a single bit came: it is no try then, and has no number.
+    """
+    from harness.statistics.retests import retest_words
+
+    if without_a_bit:
+        return "Not a single bit came, so this run is no try itself."
+    return retest_words(consumer_risk, 1 + count_of(facts))
+
+
+def remark(consumer_risk: float, facts: Mapping[str, Any], *, without_a_bit: bool = False) -> Sequence[str]:
     """Say beside the verdict that a unit was tested before, and what that does to the risk."""
     if unknown(facts):
         return (f"{UNKNOWN[0].upper()}{UNKNOWN[1:]}.",)
     runs = listed(facts)
     if not runs:
         return ()
-    from harness.statistics.retests import retest_words
-
     named = ", ".join(f"{str(run.get('run'))[-8:]} ({result_of(run)})" for run in runs)
-    words = [retest_words(consumer_risk, 1 + count_of(facts)), f"Earlier: {named}"]
+    words = [words_of(consumer_risk, facts, without_a_bit=without_a_bit), f"Earlier: {named}"]
     if any(run.get("without_a_bit") for run in runs):
         words.append(f"({NO_TRY})")
     return (" ".join(word for word in words if word),)

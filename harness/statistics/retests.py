@@ -49,7 +49,7 @@ def retest_words(consumer_risk: float, tries: int, units: str = "this unit") -> 
     return (
         f"This is test {tries} of {units} against this requirement: with a consumer's risk of "
         f"{_per_cent(consumer_risk)} each, a unit at the requirement passes at least one of them with "
-        f"{_per_cent(joint)}."
+        f"probability {_per_cent(joint)}."
     )
 
 

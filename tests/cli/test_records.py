@@ -49,7 +49,7 @@ def test_a_second_test_of_the_same_unit_is_counted_and_named(bitassay, measured)
     assert "VOID" in bitassay("show", first["run"]).out
     assert "VOID" in bitassay("runs").out
     assert bitassay("verify", first["run"]).status == 0
-    assert "9.75 %" in second["remarks"][0]
+    assert "with probability 9.75 %" in second["remarks"][0]
     other = measured(7, "2e-5", "--set", "device.serial_number=0032")
     assert other["earlier_tries"] == 0
     assert bitassay("verify", "last").status == 0
@@ -85,7 +85,14 @@ def test_a_run_in_which_not_a_bit_came_is_named_but_was_no_try(bitassay, measure
     third = measured()
     assert third["earlier_tries"] == 1
     assert "test 2 of this unit" in third["remarks"][0]
+    again = measured(7, "2e-5", dead)
+    assert again["remarks"][0].startswith("Not a single bit came, so this run is no try itself. Earlier: ")
+    assert "test 3" not in again["remarks"][0]
     text = " ".join(bitassay("report", "last", "--text").out.split())
+    assert "this run is no try itself" in text
+    assert "test 3" not in text
+    assert bitassay("verify", "last").status == 0
+    text = " ".join(bitassay("report", third["run"], "--text").out.split())
     assert "is no try" in text
     assert "UNDECIDED, not a single bit came" in text
     assert bitassay("verify", "last").status == 0

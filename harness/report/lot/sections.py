@@ -75,9 +75,9 @@ def _required(material: LotMaterial) -> Iterator[str]:
     plan = judged_point(material.pattern.assessment).plan
     if plan:
         yield (
-            f"risks, for each unit by itself: one with just the BER required passes with "
-            f"{percent(plan['consumer_risk'])}, one {plan['margin']:g} times better fails with "
-            f"{percent(plan['producer_risk'])}"
+            "risks, for each unit by itself: one with just the BER required passes with "
+            f"probability {percent(plan['consumer_risk'])}, one {plan['margin']:g} times better fails with "
+            f"probability {percent(plan['producer_risk'])}"
         )
 
 

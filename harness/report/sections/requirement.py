@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterator
 
 from harness.assess.requirement import requirement_of
-from harness.assess.tries import NO_TRY, UNKNOWN, count_of, result_of, unknown
+from harness.assess.tries import NO_TRY, UNKNOWN, count_of, result_of, unknown, words_of
 from harness.assess.tries import listed as listed_runs
 from harness.assess.words import count, duration, iso, percent
 from harness.report.document import Block, Column, Entries, Entry, Listing, Paragraph, Section, Table
@@ -243,10 +243,9 @@ def retest_section(material: Material) -> Section | None:
             else "The unit has no serial number, so whether it was tested before cannot be told."
         )
         return Section("Retests", (Paragraph(text),))
-    from harness.statistics.retests import retest_words
-
     rows = tuple((str(run.get("run", "")), result_of(run)) for run in listed)
-    words = retest_words(m.plan.consumer_risk, tries + 1)
+    nothing_came = m.assessed.status != "running" and not m.assessed.tally.received
+    words = words_of(m.plan.consumer_risk, m.facts, without_a_bit=nothing_came)
     blocks: list[Block] = [
         Paragraph(words, "against") if words else Paragraph("No earlier run of this unit could have passed."),
         Paragraph(f"Every earlier run counts, also void, interrupted and undecided ones; but {NO_TRY}."),

@@ -131,8 +131,8 @@ def _sure_of(material: Material, m: Measured) -> Iterator[str]:
         plan = p.plan
         yield (
             f"{named}risks fixed beforehand: a unit with just the BER required passes with "
-            f"{percent(plan['consumer_risk'])}, one {plan['margin']:g} times better fails with "
-            f"{percent(plan['producer_risk'])}"
+            f"probability {percent(plan['consumer_risk'])}, one {plan['margin']:g} times better fails with "
+            f"probability {percent(plan['producer_risk'])}"
         )
 
 
