@@ -8,6 +8,7 @@ from typing import TextIO
 
 from harness.assess.assessment import Assessment, PointAssessment
 from harness.assess.words import count, duration, local_date, local_time, percent, rate, ratio
+from harness.cli.view.happenings import bit_words, first_and_last, joined
 from harness.cli.view.ink import signs_for, writable
 from harness.cli.view.ruler import ruler
 from harness.cli.view.sheet import Sheet, sheet_of_assessment
@@ -74,11 +75,8 @@ def page(a: Assessment, where: str = "") -> Iterator[str]:
 
 def _told(events: Sequence[Event]) -> Iterator[str]:
     """Give what happened during a sweep; what there is no room for is counted."""
-    for number, event in enumerate(events[:EVENTS_SHOWN]):
-        yield f"{'meanwhile' if number == 0 else '':<{LABEL}}{local_time(event.at)}  {event.text}"
-    if len(events) > EVENTS_SHOWN:
-        more = count(len(events) - EVENTS_SHOWN, "further event")
-        yield f"{'':<{LABEL}}… {more}; `bitassay show --json` lists them"
+    lines = _lines_of(events, "", "")
+    yield from _entry("meanwhile", list(lines))
 
 
 def _entry(label: str, lines: Sequence[str]) -> Iterator[str]:
@@ -145,13 +143,17 @@ def _happened(p: PointAssessment) -> Iterator[str]:
         return
     yield ""
     yield "what happened"
-    skipped = len(p.events) - EVENTS_SHOWN
-    half = EVENTS_SHOWN // 2
-    for number, event in enumerate(p.events):
-        if skipped > 0 and number == half:
-            yield f"  … {count(skipped, 'further event')}; `bitassay show --json` lists them"
-        if skipped > 0 and half <= number < half + skipped:
+    yield from _lines_of(p.events, "  ", "        ")
+
+
+def _lines_of(events: Sequence[Event], lead: str, no_time: str) -> Iterator[str]:
+    """Give a line for each thing that happened; the grave ones are never among what is left out."""
+    for line in first_and_last(list(joined(events)), EVENTS_SHOWN):
+        if isinstance(line, int):
+            yield f"{lead}… {count(line, 'further event')}; `bitassay show --json` lists them"
             continue
-        at = local_time(event.at) or "        "
-        bit = "" if event.bit is None else f"  (bit {event.bit})"
-        yield f"  {at}  {event.text}{bit}"
+        event = line.event
+        at = local_time(event.at) or no_time
+        often = f" ({line.times} times in a row)" if line.times > 1 else ""
+        bit = "" if event.bit is None else f"  ({bit_words(event.bit)})"
+        yield f"{lead}{at}  {event.text}{often}{bit}"

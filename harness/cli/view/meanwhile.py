@@ -34,9 +34,14 @@ def _told(p: PointAssessment) -> Iterator[Event]:
     for event in p.events:
         if event.kind in ROUTINE or (event.kind in NO_LINK and not p.tally.compared):
             continue
-        if event.kind == "instrument" and any(words in event.text for words in _SET):
+        if routine_of_an_instrument(event):
             continue
         yield event
+
+
+def routine_of_an_instrument(event: Event) -> bool:
+    """Whether an event says no more than that an instrument was set, as it was meant to be."""
+    return event.kind == "instrument" and any(words in event.text for words in _SET)
 
 
 def _often(points: Sequence[PointAssessment]) -> Iterator[Event]:

@@ -2,23 +2,25 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
 from rich.cells import cell_len, set_cell_size
 from rich.text import Text
 
 from harness.assess.words import local_time
+from harness.cli.view.happenings import Told, bit_words, chosen, joined, wanted
 from harness.cli.view.ink import BOXED, PLAIN, RED, STRONG, Line, Signs, clean
 from harness.cli.view.ruler import Bar, ruler
 from harness.cli.view.sheet import Sheet
 from harness.cli.view.strip import strip, strip_width, strip_words
-from harness.record import Event
 
 _ALL = 1_000
 MARGIN = 8  # columns: a time of day
 CUT_SHORT = "(cut short; `bitassay show RUN | cat` has every word)"
+ALL_EVENTS = "`bitassay show RUN --json` has all"
 FEWEST_EVENTS = 2
+MOST_WANTED = 8  # events for which a page that stays does with less of all the rest
 FEW_POINTS = 4  # written out in words also where room is short
 ALARMS = frozenset(
     (
@@ -71,20 +73,22 @@ class Notebook:
 
     def draw(self, sheet: Sheet, *, whole: bool = False) -> list[Text]:
         """Draw a page of at most `height` lines; `whole`: a page that stays, as long as it needs to be."""
+        happened = list(joined(sheet.events))
+        needed = max(wanted(happened), min(FEWEST_EVENTS, len(happened))) if whole else 0
+        least = min(needed, MOST_WANTED) if whole else min(FEWEST_EVENTS, len(happened))
         for layout in (replace(LAYOUTS[0], points=_ALL), *LAYOUTS) if whole else LAYOUTS:
             if whole and sheet.weights and layout.points < _ALL:  # rather a point than an empty line
                 layout = replace(layout, gaps=False, details=False)
             if whole:  # of a page that stays no reason is cut, and no remark is left out
                 layout = replace(layout, reason_lines=_ALL, remarks=_ALL)
-            head, tail = self._head(sheet, layout), self._tail(sheet, layout)
-            wanted = min(FEWEST_EVENTS, len(sheet.events))
+            head, tail = self._head(sheet, layout), self._tail(sheet, layout, whole=whole)
             room = self.height - len(head) - len(tail)
-            if room >= wanted:
+            if room >= least:
                 break
-        if whole and sheet.weights and (spare := room - 1 - len(list(_grouped(sheet.events)))) > 0:
+        if whole and sheet.weights and (spare := room - 1 - len(happened)) > 0:
             head = self._head(sheet, replace(layout, points=layout.points + spare))
             room -= spare
-        events = self._events(sheet.events, max(room, wanted if whole else 0))
+        events = self._events(happened, max(room, needed))
         lines = [*head, *events, *tail]
         if whole or len(lines) <= self.height:
             return lines
@@ -124,9 +128,10 @@ class Notebook:
             lines += self._words("", [CUT_SHORT], 1)
         return lines
 
-    def _tail(self, sheet: Sheet, layout: Layout) -> list[Text]:
+    def _tail(self, sheet: Sheet, layout: Layout, *, whole: bool) -> list[Text]:
         gap = [self._entry("", ())] if layout.details else []
-        return gap + self._words("", sheet.foot, 2)
+        left_out = _left_out(sheet, layout) if whole else ""
+        return gap + self._words("", [left_out] if left_out else [], 2) + self._words("", sheet.foot, 2)
 
     def _heading(self, sheet: Sheet) -> Text:
         unit, title = self._fit_words(sheet.unit), self._fit_words(sheet.title)
@@ -167,27 +172,25 @@ class Notebook:
         lines.append(self._entry("", ((first + " " * max(1, between) + last, PLAIN),)))
         return lines + self._words("", [strip_words(sheet.recent, self.signs, behind_s=sheet.behind_s)], 1)
 
-    def _events(self, events: Sequence[Event], rows: int) -> list[Text]:
-        """Give the latest events, equal ones in a row joined, in as many rows as there are."""
-        groups = list(_grouped(events))
-        if rows <= 0 or not groups:
+    def _events(self, lines: Sequence[Told], rows: int) -> list[Text]:
+        """Give what happened in as many rows as there are; what is left out is counted."""
+        if rows <= 0 or not lines:
             return []
-        shown = groups[-rows:]
-        if len(shown) < len(groups) and rows > FEWEST_EVENTS:
-            shown = groups[-(rows - 1) :]
-            earlier = len(events) - sum(times for _event, times in shown)
-            lines = [self._entry("", ((self._letters(f"… {earlier} earlier"), PLAIN),))]
-        else:
-            lines = []
-        for event, times in shown:
+        choice = chosen(lines, rows)
+        drawn = []
+        if choice.left_out:
+            words = f"… {choice.left_out} {'earlier' if choice.only_earlier else 'more'}; {ALL_EVENTS}"
+            drawn.append(self._entry("", ((_shorten(words, self._room), PLAIN),)))
+        for line in choice.told:
+            event, times = line.event, line.times
             words = self._fit_words(event.text) + (f" ({times} times in a row)" if times > 1 else "")
-            bit = "" if event.bit is None else f"bit {event.bit:,}".replace(",", "\u202f")
+            bit = "" if event.bit is None else bit_words(event.bit)
             if cell_len(words) + len(bit) + 2 <= self._room:
                 pad = max(2, min(self._room, 76) - cell_len(words) - len(bit))
                 words = words + " " * pad + bit if bit else words
             ink = RED if event.kind in ALARMS else PLAIN
-            lines.append(self._entry(local_time(event.at), ((_shorten(words, self._room), ink),)))
-        return lines
+            drawn.append(self._entry(local_time(event.at), ((_shorten(words, self._room), ink),)))
+        return drawn
 
     # -- lines
 
@@ -215,27 +218,21 @@ class Notebook:
         return text.translate(_ASCII).encode("ascii", "replace").decode("ascii")
 
 
+def _left_out(sheet: Sheet, layout: Layout) -> str:
+    """Say what a page that stays has no room for; empty where it has all."""
+    if layout.details:
+        return ""
+    parts = (("risks", sheet.risks), ("link", sheet.path), ("bits sent and received", sheet.details))
+    names = ", ".join(name for name, there in parts if there)
+    return f"not shown: {names}; `bitassay show RUN | cat` has all" if names else ""
+
+
 def _kept(sheet: Sheet, points: int) -> Sequence[tuple[str, Bar]]:
     """Leave out the bars that tell least: the first ones, or those that weigh least."""
     if not sheet.weights:
         return sheet.bars[max(0, sheet.ahead - points) :]
     by_weight = sorted(range(len(sheet.bars)), key=lambda number: -sheet.weights[number])
     return [sheet.bars[number] for number in sorted(by_weight[: points + 1])]
-
-
-def _grouped(events: Sequence[Event]) -> Iterator[tuple[Event, int]]:
-    """Join events in a row that say the same; the first one's time stands for them."""
-    held: Event | None = None
-    times = 0
-    for event in events:
-        if held is not None and (event.kind, event.text) == (held.kind, held.text):
-            times += 1
-            continue
-        if held is not None:
-            yield held, times
-        held, times = event, 1
-    if held is not None:
-        yield held, times
 
 
 def wrap(text: str, width: int, most: int) -> list[str]:
