@@ -7,6 +7,7 @@ from dataclasses import replace
 
 import pytest
 
+from harness.assess.verify import differences
 from harness.record import Event, Note, Tally
 from harness.report import assemble, material_of
 from harness.report.document import Verdict
@@ -36,6 +37,27 @@ def test_overrides_are_quoted(records):
     assert "stop.seconds=3" in said(material)
     assert "requirement.ber=1e-2" in said(material)
     assert "2 things to know about this run" in to_text(assemble(material))
+
+
+def test_what_a_lot_sets_for_each_unit_is_no_deviation(records):
+    own = ["device.serial_number=0031", "device.lot=L7"]
+    material = records.make([[0, 1]], FIXED, overrides=["stop.seconds=3", *own])
+    material = replace(material, run=replace(material.run, device={"serial_number": "0031", "lot": "L7"}))
+    assert deviations(material) == [("Overrides of the profile", ("stop.seconds=3",))]
+    by_hand = records.make([[0, 1]], FIXED, overrides=own[:1])
+    assert "device.serial_number=0031" in said(by_hand)
+
+
+def test_an_interruption_is_told_once_and_named_on_the_first_page(records, point):
+    text = "the run goes on after it was cut; 4 000 bits on the way then, not counted"
+    began = records.make([[0, 1, 0, 1]], FIXED, sittings=2).run.sittings[1].started
+    events = [Event("resumed", 2, text, began + 1)]
+    material = records.make([point([0, 1, 0, 1], events=events)], FIXED, sittings=2)
+    (told,) = dict(deviations(material))["Interruptions"]
+    assert told.startswith("not measured for 20 s: ")
+    assert told.endswith("; 4 000 bits on the way then, not counted")
+    first = to_text(assemble(material)).partition("What deviates")[0]
+    assert "1 interruption, after which the run went on: not measured for 20 s" in " ".join(first.split())
 
 
 def test_a_gap_between_sittings_is_told_with_its_length(records):
@@ -169,3 +191,15 @@ def test_numbers_that_do_not_follow_from_the_record_are_named(records):
     run = replace(made.run, stated=stated)
     material = material_of(run, made.kept_digest, made.digest, written=0, program="bitassay")
     assert any("errors was stated as 3, and 4 follows" in what for what in material.broken)
+
+
+def test_a_record_that_contradicts_itself_does_not_hold_for_the_report_either(records):
+    made = records.make([[1, 0, 2, 0, 1]], FIXED)
+    (point,) = made.run.points
+    stray = Event("slip", 7, "one byte lost", point.started, {"bits": -8, "modulo": None})
+    run = replace(
+        made.run, points=(replace(point, events=(*point.events, stray)),), stated=None, status="cut"
+    )
+    material = material_of(run, None, digest_of(run), written=0, program="bitassay")
+    assert differences(run) == list(material.broken) == ["point 0: the seconds hold 0 slips, the events 1"]
+    assert "THE RECORD DOES NOT HOLD" in assemble(material).banners[0]

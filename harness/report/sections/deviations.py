@@ -77,21 +77,30 @@ def _notes(material: Material) -> Iterator[str]:
 
 
 def _overrides(material: Material) -> Iterator[str]:
-    yield from material.run.overrides
+    run = material.run
+    # `bitassay lot` gives each unit its serial number and its lot's name: in a lot that is no deviation.
+    of_lot = (
+        f"device.serial_number={run.device.get('serial_number')}",
+        f"device.lot={run.device.get('lot')}",
+    )
+    yield from run.overrides[:-2] if tuple(run.overrides[-2:]) == of_lot else run.overrides
 
 
 def _interruptions(material: Material) -> Iterator[str]:
     run = material.run
-    for before, after in pairwise(run.sittings):
+    ends = [*(s.started for s in run.sittings[2:]), None]
+    for (before, after), until in zip(pairwise(run.sittings), ends, strict=False):
+        out = _on_the_way(material, after.started, until)
         if before.ended is not None:
             gap = duration((after.started - before.ended) / 1e9)
             yield (
                 f"not measured for {gap}: sitting {before.index + 1} ended {moment(before.ended)} "
-                f"({before.status}), sitting {after.index + 1} began {moment(after.started)}"
+                f"({before.status}), sitting {after.index + 1} began {moment(after.started)}{out}"
             )
         else:
             yield (
-                f"sitting {before.index + 1} was cut; sitting {after.index + 1} began {moment(after.started)}"
+                f"sitting {before.index + 1} was cut; sitting {after.index + 1} began "
+                f"{moment(after.started)}{out}"
             )
         if before.host.get("name") != after.host.get("name"):
             yield (
@@ -105,10 +114,22 @@ def _interruptions(material: Material) -> Iterator[str]:
         ]
         if changed:
             yield f"versions changed before sitting {after.index + 1}: {', '.join(changed)}"
-    yield from _listed(_events(material, "resumed", "undecided"))
-    if run.status in ("interrupted", "failed"):
+    yield from _listed(_events(material, "undecided"))
+    faults = list(_events(material, "fault"))
+    if run.status == "interrupted" or (run.status == "failed" and not faults):
         yield STATUS[run.status]
-    yield from _listed(_events(material, "fault", "guard", "stopped"))
+    yield from _listed(iter(faults))
+    yield from _listed(_events(material, "guard", "stopped"))
+
+
+def _on_the_way(material: Material, began: int, until: int | None) -> str:
+    """Say what was out when the sitting before was stopped: the events of going on, in the sitting begun then."""
+    said = [
+        f"; {name}{event.text.partition('; ')[2]}"
+        for name, event in _events(material, "resumed")
+        if event.at is not None and event.at >= began and (until is None or event.at < until)
+    ]
+    return "".join(said)
 
 
 def _host(material: Material) -> Iterator[str]:

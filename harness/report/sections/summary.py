@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
+from itertools import pairwise
 
 from harness.assess.assessment import PointAssessment
 from harness.assess.words import STATUS, count, duration, how_it_ended, percent, ratio
@@ -33,7 +34,11 @@ def summary(material: Material) -> Section:
     lower = (
         Entry("how sure", tuple(_how_sure(material))),
         Entry("on how many bits", tuple(_bits(material))),
-        Entry("meanwhile", tuple(_meanwhile(material, found)), "against" if found else "plain"),
+        Entry(
+            "meanwhile",
+            tuple(_meanwhile(material, found)),
+            "against" if found or len(material.run.sittings) > 1 else "plain",
+        ),
     )
     blocks: list[Block] = [Entries(upper), _verdict(material), Entries(lower)]
     ruler = ruler_of(material)
@@ -156,9 +161,20 @@ def _meanwhile(material: Material, found: list[str]) -> Iterator[str]:
     yield span(a.started, a.ended) + (f"; {why}" if why else "") + (f": {fault}" if fault else "")
     if found or a.whole.tally.received:
         yield ", ".join(found) if found else "no slip, no unaligned bit, no lost link"
+    yield from _interruptions(material)
     said = sum(len(items) for _title, items in deviations(material))
     if said:
         yield f"{count(said, 'thing')} to know about this run: see “What deviates”"
+
+
+def _interruptions(material: Material) -> Iterator[str]:
+    """Say in a line how often the run stopped and went on later, and for how long where that is known."""
+    pairs = list(pairwise(material.run.sittings))
+    if not pairs:
+        return
+    known = [(after.started - before.ended) / 1e9 for before, after in pairs if before.ended is not None]
+    length = f": not measured for {duration(sum(known))}" if len(known) == len(pairs) else ""
+    yield f"{count(len(pairs), 'interruption')}, after which the run went on{length}"
 
 
 def _found(material: Material) -> list[str]:
