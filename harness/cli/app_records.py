@@ -34,6 +34,8 @@ def runs(
 def show(run: RunArgument = "last", store: StoreOption = None, json: JsonOption = False) -> int:
     """Show a run's assessment, derived from its record.
 
+    Ends with 0 when that worked, whatever the verdict.
+
     Example: bitassay show last
     """
     from harness.cli.records import show as carry_out
@@ -65,6 +67,8 @@ def report(
 
     An earlier report is replaced; any other file that stands there is left alone.
 
+    Ends with 0 when that worked, whatever the verdict.
+
     Example: bitassay report last --html report.html --pdf report.pdf
     """
     from harness.cli.report import Forms
@@ -92,6 +96,8 @@ def export(
 ) -> int:
     """Write a run's data: CSV, JSON, or JUnit XML.
 
+    Ends with 0 when that worked, whatever the verdict.
+
     Example: bitassay export last --format junit --output result.xml
     """
     from harness.cli.report import Export
@@ -105,6 +111,8 @@ def follow(run: RunArgument = "last", store: StoreOption = None, json: JsonOptio
     """Watch a run that is measured elsewhere, until it ends.
 
     It reads nothing but the store: from another terminal, or from another computer.
+
+    Ends with 0 when that worked, whatever the verdict.
 
     Example: bitassay follow last
     """

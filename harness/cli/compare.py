@@ -22,7 +22,10 @@ def compare(a: str, b: str, store: str | None, confidence: float, at: Sequence[s
         raise UserError(f"a confidence of {confidence:g} is outside 0 to 1", "give 0.95 for 95 %")
     setting = dict(_setting(given) for given in at)
     with open_reading(store) as opened:
-        first, second = opened.load(opened.find(a)), opened.load(opened.find(b))
+        keys = opened.find(a), opened.find(b)
+        if keys[0] == keys[1]:
+            raise UserError(f"{a} and {b} are the same run", "`bitassay runs` lists the others")
+        first, second = (opened.load(key) for key in keys)
     try:
         result = carry_out(first, second, confidence, setting)
     except NoCommonPoint as error:
@@ -105,14 +108,16 @@ def _points(result: SideBySide) -> Iterator[str]:
 
 
 def _row(pair: Pair) -> tuple[str, str, str, str, str, str]:
+    from harness.statistics.notation import multiple
+
     c = pair.errors
     bers = [ratio(p.ber) if p.tally.compared else "never aligned" for p in (pair.a, pair.b)]
     if c is None:
         return (_name(pair), *bers, "", "", "")  # type: ignore[return-value]
-    times = "-" if c.ratio is None else f"{c.ratio:.3g}"
-    upper = "any" if c.upper is None else f"{c.upper:.3g}"
+    times = "-" if c.ratio is None else multiple(c.ratio)
+    upper = "any" if c.upper is None else multiple(c.upper)
     way = "B is worse" if c.worse else "B is better" if c.better else ""
-    return (_name(pair), bers[0], bers[1], times, f"{c.lower:.3g} to {upper}", way)
+    return (_name(pair), bers[0], bers[1], times, f"{multiple(c.lower)} to {upper}", way)
 
 
 def _sensitivities(result: SideBySide) -> Iterator[str]:

@@ -143,6 +143,7 @@ def measure(profile: str, overrides: Sequence[str], manner: Manner) -> int:
         raise UserError(
             f"{profile} has a [{section}]: it is more than one point", "use `bitassay sweep` for it"
         )
+    _outside_its_lot(loaded)
     return carry_out(loaded, "measure", manner)
 
 
@@ -155,7 +156,16 @@ def sweep(profile: str, overrides: Sequence[str], manner: Manner) -> int:
         raise UserError(
             f"{profile} has no [sweep] and no [search]", "use `bitassay measure` for one point, or add one"
         )
+    _outside_its_lot(loaded)
     return carry_out(loaded, "sweep", manner)
+
+
+def _outside_its_lot(loaded: Profile) -> None:
+    """Say that a run is no part of the lot that its profile describes."""
+    if loaded.lot is None or loaded.device.get("lot"):
+        return
+    name = (loaded.lot.name or loaded.title).strip()
+    warn(f"this run is not part of lot {name}: `bitassay lot` measures its units")
 
 
 def resume(run: str, manner: Manner) -> int:
@@ -165,6 +175,7 @@ def resume(run: str, manner: Manner) -> int:
     with open_reading(manner.store) as opened:
         record = opened.load(opened.find(run))
         if record.status == "completed":
+            warn("this run is complete: there is nothing to go on with")
             return _print_again(record, manner)
         profile = prepare(record, lock_folder(store_url(manner.store)))
     return carry_out(profile, record.command, manner, cut=record)

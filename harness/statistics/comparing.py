@@ -12,6 +12,7 @@ from dataclasses import dataclass
 from scipy.special import betainc
 
 from harness.statistics.bounds import clopper_pearson, lower_bound, upper_bound
+from harness.statistics.notation import multiple
 
 
 @dataclass(frozen=True, slots=True)
@@ -151,17 +152,19 @@ def _words(
     confidence: float,
 ) -> str:
     level = f"{confidence * 100:g} %"
-    bounds = f"{lower:.3g} to {'any' if upper is None else format(upper, '.3g')}"
+    bounds = f"{multiple(lower)} to {'any' if upper is None else multiple(upper)}"
     times = (
         f"the ratio of the two lies at {bounds} ({level})"
         if ratio is None
-        else f"its {label} is {ratio:.3g} times A's, {bounds} ({level})"
+        else f"its {label} is {multiple(ratio)} times A's, {bounds} ({level})"
     )
     if worse or better:
         verdict = "worse" if worse else "better"
-        return f"B is {verdict} than A: {times}; chance alone {_chance(p_values[0 if worse else 1])}."
-    return f"No difference shown: {times}; B as bad as this or worse by chance alone {_chance(p_values[0])}."
+        return f"B is {verdict} than A: {times}; so much by chance alone ({_chance(p_values[0 if worse else 1])})."
+    return (
+        f"No difference shown: {times}; B as bad as this or worse by chance alone ({_chance(p_values[0])})."
+    )
 
 
 def _chance(p_value: float) -> str:
-    return "under 1e-12" if p_value < 1e-12 else f"{p_value:.2g}"
+    return "p under 1e-12" if p_value < 1e-12 else f"p = {p_value:.2g}"

@@ -24,3 +24,10 @@ def ratio(value: float, digits: int = 3) -> str:
     if "." in mantissa:
         mantissa = mantissa.rstrip("0").rstrip(".")
     return f"{mantissa}e{int(exponent)}"
+
+
+def multiple(value: float) -> str:
+    """Write how many times: ``0.52``, ``4``, ``1 080``; three digits that tell, large ones written out."""
+    if not 1000 <= value < 1e6:
+        return f"{value:.3g}"
+    return f"{int(float(f'{value:.3g}')):,}".replace(",", "\u202f")

@@ -67,3 +67,15 @@ def test_a_sweep_against_one_point_asks_for_the_setting(bitassay, tmp_path):
     assert done.status == 0
     assert "at attenuator 28: " in done.out
     assert bitassay("compare", a, p, "--at", "attenuator").status == 2
+
+
+def test_a_run_is_not_compared_with_itself(bitassay, tmp_path):
+    plain = PROFILE.format(values="[26]", seed=3).split("[instruments")[0] + "[stop]\nbits = 200_000\n"
+    (tmp_path / "p.toml").write_text(plain)
+    assert bitassay("measure", "p.toml", "--quiet").status == 0
+    done = bitassay("compare", "last", "last")
+    assert (done.status, done.out) == (2, "")
+    assert "the same run" in done.err
+    again = bitassay("resume", "last")
+    assert again.status == 0
+    assert "nothing to go on with" in again.err

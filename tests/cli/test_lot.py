@@ -163,3 +163,12 @@ def test_a_profile_without_a_lot_is_refused(bitassay, tmp_path):
     done = bitassay("lot", "one.toml", stdin=b"0031\n")
     assert done.status == 2
     assert "[lot]" in done.err
+
+
+def test_a_unit_measured_outside_of_its_lot_is_told_so(bitassay, tmp_path):
+    (tmp_path / "lot.toml").write_text(PROFILE)
+    done = bitassay("measure", "lot.toml", "--quiet")
+    assert done.status == 0
+    assert "not part of lot L7: `bitassay lot`" in done.err
+    inside = bitassay("lot", "lot.toml", stdin=b"0031\n\n")
+    assert "not part of" not in inside.err

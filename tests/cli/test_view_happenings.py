@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import pytest
 
 from harness.assess.requirement import Requirement
@@ -70,3 +72,13 @@ def test_equal_ones_are_joined_within_their_second_only(making):
     assert text.count("one byte lost (2 times in a row)") == 1
     assert "bit 1\u202f600\u202f000" in text
     assert "(bit 1\u202f600\u202f000)" in "\n".join(page(making.assessment([0] * 12, events, REQUIREMENT)))
+
+
+def test_a_run_that_was_cut_says_how_it_is_gone_on_with_and_nothing_against_it(making):
+    cut = making.assessment([0] * 3, [], REQUIREMENT, status="cut", ended_by=None)
+    assert f"`bitassay resume {cut.run[-12:]}` goes on with it" in drawn(cut, 60)
+    swept = replace(cut, points=[cut.whole] * 2, sweep=True)
+    text = drawn(swept, 60)
+    assert f"`bitassay resume {cut.run[-12:]}` goes on with it" in text
+    assert "nothing out of the ordinary" not in text
+    assert "nothing out of the ordinary" in drawn(replace(swept, status="completed"), 60)

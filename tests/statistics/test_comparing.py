@@ -87,7 +87,12 @@ def test_four_times_as_many_errors_are_found_worse():
     found = compare_counts(25, 10**9, 100, 10**9)
     assert found.worse
     assert found.words.startswith("B is worse than A: its BER is 4 times A's")
+    assert "by chance alone (p = " in found.words
     assert compare_counts(100, 10**9, 25, 10**9).better
+
+
+def test_large_ratios_are_written_out():
+    assert "1\u202f080 times A's" in compare_counts(1, 10**9, 1080, 10**9).words
 
 
 def test_without_errors_nothing_is_shown_and_nothing_is_infinite():

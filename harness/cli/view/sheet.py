@@ -39,6 +39,8 @@ if TYPE_CHECKING:
     from harness.bench.run import Progress
 
 SECOND_NS = 1_000_000_000
+QUIET = "nothing out of the ordinary happened meanwhile"
+KEY_END = 12  # characters of a run's key that tell it from any other
 
 
 @dataclass(frozen=True, slots=True)
@@ -168,7 +170,7 @@ def sheet_of_assessment(a: Assessment, where: str = "") -> Sheet:
         recent=p.recent,
         strip_ends=_strip_ends(a),
         to_do_label="took",
-        to_do=[_took(a)],
+        to_do=[_took(a), *_next_step(a)],
         remarks=[*p.remarks, *(f"noted: {note_words(note)}" for note in a.notes if not note.void)],
         events=p.events,
         foot=[f"run {a.run}" if a.run else "no record kept", *ended],
@@ -190,7 +192,7 @@ def sheet_of_assessment(a: Assessment, where: str = "") -> Sheet:
         details=(),
         recent=(),
         points=_points(a),
-        to_do=[_took_in_all(a), *([] if events else ["nothing out of the ordinary happened meanwhile"])],
+        to_do=[_took_in_all(a), *_next_step(a), *([] if events or a.status != "completed" else [QUIET])],
         events=events,
     )
 
@@ -320,6 +322,11 @@ def _took(a: Assessment) -> str:
     if a.ended is not None and a.command != "examine" and not played:
         words += f", until {local_date(a.ended)[11:19]}"
     return f"{words}; {_why(a)}" if _why(a) else words
+
+
+def _next_step(a: Assessment) -> list[str]:
+    """Say how a run that was cut is gone on with."""
+    return [f"`bitassay resume {a.run[-KEY_END:]}` goes on with it"] if a.status == "cut" and a.run else []
 
 
 def _why(a: Assessment) -> str:
