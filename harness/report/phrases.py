@@ -88,7 +88,17 @@ def deciding_words(p: PointAssessment) -> str:
         return ""
     b = p.bounds
     side = "at or under" if b.side == "upper" else "at or over"
-    return f"{side} {ratio(b.value)} at {percent(b.deciding_confidence)} confidence (one-sided)"
+    over = rejected_over(p)
+    held = f"; the plan rejects on a bound over {over}" if over else ""
+    return f"{side} {ratio(b.value)} at {percent(b.deciding_confidence)} confidence (one-sided){held}"
+
+
+def rejected_over(p: PointAssessment) -> str:
+    """Say what a rejecting plan's lower bound is held against: not the requirement, but that by the margin."""
+    if p.bounds is None or p.plan is None or p.bounds.side != "lower":
+        return ""
+    good = float(p.plan["ber"]) / float(p.plan["margin"])
+    return f"{ratio(good)} (the requirement by the margin)" if p.bounds.value >= good else ""
 
 
 def on_bits(p: PointAssessment) -> str:

@@ -10,6 +10,8 @@ from xml.etree import ElementTree as ET
 import numpy as np
 import pytest
 
+from harness.assess.words import ratio
+from harness.report import assemble
 from harness.report.document import Figure
 from harness.report.figures import scales
 from harness.report.figures.drawing import draw
@@ -28,6 +30,7 @@ from harness.report.figures.of_counts import ruler_of, stairs_of
 from harness.report.figures.of_spacing import bursts_of, gaps_of
 from harness.report.figures.of_sweep import curve_of
 from harness.report.figures.of_time import course_figures
+from harness.report.text import to_text
 
 FIXED = {"ber": 1e-4, "confidence": 0.95, "plan": "fixed", "accept_errors": 12}
 
@@ -45,6 +48,29 @@ def test_beside_a_fail_the_bar_is_against_the_unit_and_never_wholly_under_the_ma
     (bar,) = ruler.bars
     assert bar.against
     assert bar.upper > ruler.mark
+
+
+def test_a_sequential_fail_says_what_its_lower_bound_is_held_against(records):
+    material = records.make([[9, 9, 9, 9, 9, 9]], {"ber": 1e-4, "plan": "sequential", "margin": 2.0})
+    p = material.assessment.whole
+    assert (p.verdict, p.bounds.side) == ("FAIL", "lower")
+    assert p.bounds.value >= 5e-5
+    figure = ruler_of(material)
+    (bar,) = figure.drawing.bars
+    assert (bar.lower, bar.upper) == (p.bounds.value, p.bounds.upper)
+    assert "from the one-sided lower bound that decides (95 % confidence, over 5e-5" in figure.title
+    assert figure.words.endswith(f"BER {ratio(bar.lower)} to {ratio(bar.upper)}")
+    text = " ".join(to_text(assemble(material)).split())
+    assert "lower bound, one-sided, of the plan, over 5e-5 (the requirement by the margin): decides" in text
+    assert "the plan rejects on a bound over 5e-5 (the requirement by the margin)" in text
+
+
+def test_the_caption_names_the_bounds_that_the_bar_shows(cases):
+    assert ruler_of(cases["pass"]()).title.endswith(
+        "the one-sided upper bound that decides (95 % confidence)"
+    )
+    assert "two-sided" in ruler_of(cases["fail"]()).title
+    assert "two-sided" in ruler_of(cases["undecided"]()).title
 
 
 def test_undecided_the_bar_is_the_two_sided_interval(cases):

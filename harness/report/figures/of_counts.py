@@ -11,7 +11,7 @@ from harness.assess.words import count, percent, ratio
 from harness.report.document import Figure
 from harness.report.figures.drawings import Bar, Floats, Ruler, Stairs
 from harness.report.material import Material, Measured
-from harness.report.phrases import number, on_bits, point_label, point_name
+from harness.report.phrases import number, on_bits, point_label, point_name, rejected_over
 from harness.report.series import Ints, thinned
 from harness.statistics.plans import Plan
 
@@ -29,11 +29,10 @@ def ruler_of(material: Material) -> Figure | None:
     bars = tuple(
         _bar(m.assessed, point_label(m) if several else "", target, judged=not material.swept) for m in points
     )
-    words = (
-        f"{count(len(points), 'point')}, from {_words(points[0], several)}; to {_words(points[-1], several)}"
-    )
+    said = [_words(m, several, judged=not material.swept) for m in points]
+    words = f"{count(len(points), 'point')}, from {said[0]}; to {said[-1]}"
     if len(points) < 3:
-        words = "; ".join(_words(m, several) for m in points)
+        words = "; ".join(said)
     return Figure(_title(material, points), words, Ruler(bars, target, flag))
 
 
@@ -46,21 +45,44 @@ def _mark(material: Material) -> tuple[float | None, str]:
 
 
 def _title(material: Material, points: list[Measured]) -> str:
-    decided = not material.swept and all(m.assessed.verdict in ("PASS", "FAIL") for m in points)
-    b = next(m.assessed.bounds for m in points)
+    first = points[0].assessed
+    b = first.bounds
     if b is None:
         return "The BER and its bounds"
-    if decided:
-        return f"The BER measured, and the bound that decides ({percent(b.deciding_confidence)} confidence)"
+    drawn = {_drawn(m.assessed, judged=not material.swept) for m in points}
+    one_sided = percent(b.deciding_confidence)
+    if drawn == {"upper"}:
+        return f"The BER measured, and the one-sided upper bound that decides ({one_sided} confidence)"
+    if drawn == {"lower"}:
+        over = rejected_over(first)
+        return (
+            f"The BER measured, from the one-sided lower bound that decides ({one_sided} confidence"
+            f"{f', over {over}' if over else ''}) to the upper of its two-sided bounds "
+            f"({percent(b.confidence)} confidence)"
+        )
     return f"The BER measured, and its bounds (two-sided, {percent(b.confidence)} confidence)"
 
 
-def _words(m: Measured, several: bool) -> str:
+def _drawn(p: PointAssessment, *, judged: bool) -> Literal["upper", "lower", "both"]:
+    """Which bounds a point's bar shows: the one that decides, as far as it does, else both two-sided ones."""
+    b = p.bounds
+    if b is None or p.plan is None or not judged or p.verdict not in ("PASS", "FAIL"):
+        return "both"
+    if b.side == "lower":
+        return "lower"
+    return "upper" if b.value <= float(p.plan["ber"]) else "both"
+
+
+def _words(m: Measured, several: bool, *, judged: bool) -> str:
     p = m.assessed
     name = f"{point_name(m)}: " if several else ""
     if p.bounds is None:
         return f"{name}{on_bits(p)}"
-    return f"{name}{on_bits(p)}, BER {ratio(p.bounds.lower)} to {ratio(p.bounds.upper)}"
+    drawn, b = _drawn(p, judged=judged), p.bounds
+    if drawn == "upper":
+        return f"{name}{on_bits(p)}, BER at or under {ratio(b.value)}"
+    lower = b.value if drawn == "lower" else b.lower
+    return f"{name}{on_bits(p)}, BER {ratio(lower)} to {ratio(b.upper)}"
 
 
 def _bar(p: PointAssessment, label: str, target: float | None, *, judged: bool) -> Bar:
@@ -68,10 +90,10 @@ def _bar(p: PointAssessment, label: str, target: float | None, *, judged: bool) 
     if b is None:
         return Bar(label, 0.0, 1.0)
     lower, upper, fades = b.lower, b.upper, None
-    decided = judged and p.verdict in ("PASS", "FAIL")
-    if decided and b.side == "lower":
+    decided, drawn = judged and p.verdict in ("PASS", "FAIL"), _drawn(p, judged=judged)
+    if drawn == "lower":
         lower = b.value
-    elif decided and target is not None and b.value <= target:
+    elif drawn == "upper":
         # Demonstrated, whatever else may have failed: one-sided, nothing is said of how good the unit is.
         lower, upper, fades = 0.0, b.value, b.lower or b.value / 100
     against = decided and target is not None and upper > target

@@ -11,7 +11,7 @@ from harness.assess.words import count, duration, iso, percent
 from harness.report.document import Block, Column, Entries, Entry, Listing, Paragraph, Section, Table
 from harness.report.figures.of_counts import stairs_of
 from harness.report.material import Material, Measured
-from harness.report.phrases import ber_name, digits, number, point_name
+from harness.report.phrases import ber_name, digits, number, point_name, rejected_over
 from harness.statistics.objectives import Objectives
 from harness.statistics.plans import describe
 
@@ -194,7 +194,10 @@ def _bounds_of(material: Material, m: Measured) -> Table:
     b, t = p.bounds, p.tally
     assert b is not None
     name = ber_name(material)
-    decides = ": decides" if p.verdict in ("PASS", "FAIL") else ""
+    over = rejected_over(p)
+    decides = (
+        f"{f', of the plan, over {over}' if over else ''}: decides" if p.verdict in ("PASS", "FAIL") else ""
+    )
     rows = [
         (f"{name} measured", f"{digits(p.ber)}", f"{number(t.errors)} / {number(t.compared)} bits"),
         ("lower bound, two-sided", digits(b.lower), percent(b.confidence)),
