@@ -18,12 +18,17 @@ _LOOSE = 1e-9  # relative: a bound solved on another machine may differ in its l
 
 def differences(run: Run) -> list[str]:
     """Name what does not hold in a record: sums, positions, and the numbers stated at the run's end."""
-    found = [line for point in run.points for line in _point(point)]
+    found = contradictions(run)
     if run.stated is not None:
         found.extend(_against_stated(run, run.stated))
     elif run.status not in ("running", "cut"):
         found.append("the run has ended, but no numbers were stated at its end")
     return found[:_LISTED] + ([f"and {len(found) - _LISTED} more"] if len(found) > _LISTED else [])
+
+
+def contradictions(run: Run) -> list[str]:
+    """Name what does not add up within a record, whatever was stated at the run's end."""
+    return [line for point in run.points for line in _point(point)]
 
 
 def _against_stated(run: Run, stated: Mapping[str, Any]) -> Iterator[str]:

@@ -11,6 +11,7 @@ from typing import Any
 from harness.assess.assessment import Assessment, PointAssessment
 from harness.assess.requirement import Requirement, requirement_at, requirement_of, units_of
 from harness.assess.run import assess
+from harness.assess.verify import contradictions
 from harness.record import Note, Point, Run
 from harness.report.series import Series, series_of
 from harness.statistics.plans import Plan
@@ -87,6 +88,7 @@ class Material:
         if self.kept_digest is not None and self.digest is not None and self.kept_digest != self.digest:
             said.append("its SHA-256 digest is not the one that was kept when the run ended")
         said.extend(_differences(self.run, self.assessment))
+        said.extend(contradictions(self.run))
         return tuple(said)
 
 

@@ -65,10 +65,10 @@ def record_digest(material: Material) -> str:
 
 def digests_section(material: Material) -> Section:
     """Give the digests, how to check them, and the profile as given."""
-    if material.kept_digest is None:
-        state = "the run has not ended, so no digest was kept"
-    elif material.broken:
+    if material.broken:
         state = "THE RECORD DOES NOT HOLD: " + "; ".join(material.broken)
+    elif material.kept_digest is None:
+        state = "the run has not ended, so no digest was kept"
     else:
         state = "computed again when this report was written: it holds"
     entries = (
