@@ -317,3 +317,30 @@ def test_a_sweep_by_hand_cannot_be_left_alone(look, profile):
     report = look(profile("/dev/ttyWader9", rest="[stop]\nseconds = 5\n" + MANUAL))
     assert bad(report) == [("instruments", "manual")], "and the port was not opened"
     assert all(f.usage for f in report.findings if f.outcome == "bad")
+
+
+# -- a requirement that the path cannot meet
+
+
+@pytest.mark.parametrize(("ber", "said"), [(2e-3, True), (2e-6, False)])
+def test_a_path_that_is_worse_than_required_is_ready_and_told_to_expect_fail(look, tmp_path, ber, said):
+    path = tmp_path / "unit.toml"
+    path.write_text(
+        '[link]\ndriver = "loopback"\nrate_bps = 1_000_000\n'
+        f'[[link.channel]]\nmodel = "independent"\nber = {ber}\nseed = 3\n[requirement]\nber = 1e-4\n'
+    )
+    report = look(path)
+    words = [finding.text for finding in report.findings if finding.step == "requirement"]
+    assert report.ready
+    assert len(words) == said
+    if said:
+        assert words[0].startswith(
+            "the requirement allows a BER of 1e-4 and no slip; the path showed a BER of "
+        )
+        assert words[0].endswith(": expect FAIL")
+
+
+def test_a_lost_byte_where_no_slip_is_allowed_is_told(look, modem, profile):
+    rest = "[requirement]\nber = 1e-3\n[stop]\nseconds = 600\n"
+    report = look(profile(modem(delay_s=0.05, drop=[9_000]), rest=rest))
+    assert any("no slip; the path showed " in finding.text for finding in report.findings)

@@ -8,7 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from harness.assess.words import count, percent
+from harness.assess.words import count, ratio
 from harness.bench.check.findings import Finding
 from harness.record import BitOrder, Segment
 from harness.signal.counter import Counter
@@ -121,14 +121,12 @@ def _errors_at_their_places(stretch: Stretch, heard: bytes, segments: Sequence[S
     text = f"{came} known errors came back at their places"
     own = errors - found
     if own > 0:
-        text += (
-            f"; beside them {count(own, 'error')} of the path's own ({percent(own / compared)} of the bits)"
-        )
+        text += f"; beside them {count(own, 'error')} of the path's own (a BER of {ratio(own / compared)})"
     if lost:
         text += f"; {count(abs(lost), 'byte')} {'lost' if lost > 0 else 'too many'}"
     if any(s.inverted for s in segments if s.aligned):
         text += "; every bit comes back inverted, and is counted so"
-    return Finding(STEP, "good", text)
+    return Finding(STEP, "good", text, own=(max(0, own), compared, abs(lost)))
 
 
 def _found(stretch: Stretch, segments: Sequence[Segment]) -> int:

@@ -17,7 +17,7 @@ from harness.bench.check.beside import echo_on, listen_only, lost_at_most
 from harness.bench.check.findings import Finding, Outcome, Report
 from harness.bench.check.forecast import forecast, stop_problem
 from harness.bench.check.path import Line, PathCheck
-from harness.bench.check.points import of_the_points
+from harness.bench.check.points import of_the_points, of_the_requirement
 from harness.bench.conditions import Conditions, caution
 from harness.bench.session import Links, Way, ways_of
 from harness.bench.visits import visits_of
@@ -221,7 +221,9 @@ class Check:
                 "path", "note", f"probing takes {duration(line.takes_s)} or somewhat more at {rate_words}"
             )
         checking = PathCheck(line, self._cancel)
-        yield from checking.findings()
+        for finding in checking.findings():
+            yield finding
+            yield from of_the_requirement(self._profile, finding)
         self._delay_s = checking.delay_s if self._delay_s is None else self._delay_s
         if way.name and way.sending is not None and way.sending.traits.receives:
             yield echo_on(way.sending, self._cancel)

@@ -22,6 +22,8 @@ class Finding:
         ``other_generator`` ...; empty where nothing is wrong.
     usage
         Bad because of the profile, not of the path.
+    own
+        Errors of the path's own, the bits that they were among, and bytes lost or too many; None where not counted.
     """
 
     step: str
@@ -30,6 +32,7 @@ class Finding:
     advice: str = ""
     usage: bool = False
     cause: str = ""
+    own: tuple[int, int, int] | None = None
 
     def to_json(self) -> dict[str, Any]:
         """JSON as `check` prints it."""

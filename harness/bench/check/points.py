@@ -1,12 +1,16 @@
-"""What a sweep's points may leave out without anybody noticing: the end of a range, and the requirement."""
+"""What comes of it without anybody noticing: points that a sweep leaves out, a requirement that cannot be met."""
 
 from __future__ import annotations
 
 from collections.abc import Iterator
 
+from harness.assess.words import count, percent, ratio
 from harness.bench.check.findings import Finding
 from harness.profile import Profile
 from harness.profile.sweeps import Range
+from harness.statistics.bounds import lower_bound
+
+SURE = 0.95  # that the path's own errors are beyond what is required: a few may be chance
 
 
 def of_the_points(profile: Profile) -> Iterator[Finding]:
@@ -30,3 +34,29 @@ def of_the_points(profile: Profile) -> Iterator[Finding]:
             "the requirement names no point and no sensitivity: there will be no verdict",
             "add requirement.at = { instrument = value }, or requirement.sensitivity_at_least",
         )
+
+
+def of_the_requirement(profile: Profile, finding: Finding) -> Iterator[Finding]:
+    """Say that the path's own errors or slips are more than the requirement allows; the bench may still be ready."""
+    required = profile.requirement
+    if required is None or finding.own is None or profile.sweep is not None or profile.search is not None:
+        return
+    errors, bits, bytes_off = finding.own
+    too_many = bits > 0 and lower_bound(errors, bits, SURE) > required.ber
+    slips = bytes_off > 0 and required.max_slips == 0
+    if not too_many and not slips:
+        return
+    allowed = count(required.max_slips, "slip") if required.max_slips else "no slip"
+    came = (
+        [f"a BER of {ratio(errors / bits)} (with {percent(SURE)} confidence over {ratio(required.ber)})"]
+        if too_many
+        else []
+    )
+    came += [f"{count(bytes_off, 'byte')} lost or too many"] if slips else []
+    yield Finding(
+        "requirement",
+        "note",
+        f"the requirement allows a BER of {ratio(required.ber)} and {allowed}; the path showed {' and '.join(came)}: "
+        "expect FAIL",
+        "mend the path first, unless it is just this that is to be measured",
+    )
