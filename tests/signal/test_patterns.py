@@ -310,3 +310,12 @@ def test_a_bad_name_is_refused_with_what_to_write_instead(name, advice):
 def test_an_empty_file_is_no_pattern():
     with pytest.raises(PatternError, match="empty"):
         parse_pattern("file:x", read=lambda _: b"")
+
+
+@pytest.mark.parametrize(
+    ("given", "meant"), [("PRBS16", "PRBS15"), ("prbs24", "PRBS23"), ("PRBS32", "PRBS31")]
+)
+def test_a_number_that_is_none_is_answered_with_the_nearest(given, meant):
+    with pytest.raises(PatternError) as refused:
+        parse_pattern(given)
+    assert refused.value.advice == f"did you mean {meant}?"

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import difflib
 import math
+import re
 from collections.abc import Callable
 
 import numpy as np
@@ -18,6 +19,7 @@ from harness.signal.patterns.sources import BernoulliPattern
 from harness.signal.patterns.table import KnownPattern, known_patterns
 from harness.signal.registers import LONGEST_REGISTER, Register
 
+_NUMBERED = re.compile(r"([A-Za-z]+)([0-9]{1,4})")  # PRBS16
 _EXAMPLES = "PRBS15, PRBS9-reversed, QRSS, word:1010, word:0xA5, taps:18,23, bernoulli:0.4, file:PATH"
 _LONGEST_WORD = 1 << 16  # bits
 _SUFFIXES = ("-reversed", "-inverted")
@@ -97,9 +99,19 @@ def _unknown(text: str) -> PatternError:
     names = [stem + end for stem in stems for end in ("", "-reversed", "-inverted", "-reversed-inverted")]
     names += ["word:1010", "taps:18,23", "bernoulli:0.4", "file:PATH"]
     by_lower = {known.lower(): known for known in names}
+    if (numbered := _NUMBERED.fullmatch(text)) and (same := _numbers_of(stems, numbered[1])):
+        wanted = int(numbered[2])
+        number = min(same, key=lambda known: abs(known - wanted))
+        return PatternError(f"there is no pattern {text!r}", f"did you mean {same[number]}?")
     near = difflib.get_close_matches(text.lower(), list(by_lower), n=1, cutoff=0.5)
     advice = f"did you mean {by_lower[near[0]]}?" if near else f"patterns are written like {_EXAMPLES}"
     return PatternError(f"there is no pattern {text!r}", advice)
+
+
+def _numbers_of(stems: list[str], name: str) -> dict[int, str]:
+    """Give the known patterns of that name by their number, without those that have more to their name."""
+    found = [match for stem in stems if (match := _NUMBERED.fullmatch(stem))]
+    return {int(match[2]): match[0] for match in found if match[1].lower() == name.lower()}
 
 
 def _word(digits: str, suffixes: frozenset[str]) -> Pattern:
