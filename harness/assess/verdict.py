@@ -83,8 +83,8 @@ def _failures(
     share = unaligned_ratio(sums, evidence.bits_lost)
     if share is not None and share > requirement.max_unaligned_ratio:
         reasons.append(
-            f"{percent(share)} of the bits were unaligned or lost, where at most "
-            f"{percent(requirement.max_unaligned_ratio)} are allowed"
+            f"{percent(share, beside=requirement.max_unaligned_ratio)} of the bits were unaligned or lost, where "
+            f"at most {percent(requirement.max_unaligned_ratio)} are allowed"
         )
     if evidence.links_lost and requirement.lost_link == "fail":
         reasons.append(_links(evidence.links_lost))

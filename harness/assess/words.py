@@ -56,18 +56,30 @@ def ratio(value: float | None) -> str:
     return notation.ratio(value)
 
 
-def percent(value: float) -> str:
-    """Write a share as a percentage that never rounds to 0 or 100 what is not."""
+def percent(value: float, beside: float | None = None) -> str:
+    """Write a share as a percentage, to three digits, that never rounds to 0 or 100 what is not.
+
+    Parameters
+    ----------
+    beside
+        Another share that stands beside it: digits are added until the two do not read alike.
+
+    Examples
+    --------
+    >>> percent(0.05), percent(0.000899), percent(0.99996), percent(0.0010004, beside=0.001)
+    ('5 %', '0.0899 %', '99.996 %', '0.10004 %')
+    """
     share = 100 * value
     if 0 < share < 1e-3:
         return "under 0.001 %"
-    if share in (0, 100):
+    if share in (0, 100) or share > 1_000:
         return f"{share:.0f} %"
-    for digits in range(1, 9):
-        text = f"{share:.{digits}f}"
-        if float(text) not in (0.0, 100.0):
-            return f"{float(text):g} %" if digits < 3 else f"{text.rstrip('0')} %"
-    return f"{share:.3g} %"
+    apart_from = [0.0, 100.0] if beside is None or beside == value else [0.0, 100.0, 100 * beside]
+    for digits in range(3, 16):
+        text = f"{share:.{digits}g}"
+        if not any(math.isclose(float(text), other, rel_tol=1e-12) for other in apart_from):
+            return f"{text} %"
+    return f"{share:.16g} %"
 
 
 def duration(seconds: float) -> str:

@@ -251,7 +251,7 @@ def test_a_run_is_shown_as_a_page_on_a_terminal_and_in_lines_elsewhere(terminal,
     words = piped.stdout.decode()
     assert "\x1b" not in words
     assert "verdict     FAIL" in words
-    assert "required: under 1e-6" in words
+    assert "required: at most 1e-6" in words
 
 
 def test_without_colour_the_same_words_and_no_colour(terminal, bad_run):

@@ -45,7 +45,7 @@ def required_words(p: PointAssessment) -> list[str]:
         how = (
             f"a {plan['kind']} plan accepts at most {count(int(plan['accept_errors']), 'error')} in {longest}"
         )
-    return [f"BER under {ratio(plan['ber'])} with {percent(plan['confidence'])} confidence", how]
+    return [f"BER at most {ratio(plan['ber'])} with {percent(plan['confidence'])} confidence", how]
 
 
 def ber_so_far(p: PointAssessment) -> str:

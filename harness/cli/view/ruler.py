@@ -28,7 +28,7 @@ class Bar:
     measured: float | None = None
     required: float | None = None
     against: bool = False  # the bar speaks against the unit
-    flag: str = "required: under"
+    flag: str = "required: at most"
     fades_from: float | None = None  # an open side: where the bar need not be drawn full any more
 
 

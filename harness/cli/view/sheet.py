@@ -286,7 +286,7 @@ def _trouble(progress: Progress, now_ns: int) -> str:
 def _bar(p: PointAssessment, *, decided: bool, looked_for: float | None = None) -> Bar:
     """Make a point's bar; a sweep's mark is the ratio that its sensitivity is looked for at."""
     required = None if p.plan is None else float(p.plan["ber"])
-    flag = "required: under"
+    flag = "required: at most"
     if looked_for is not None:
         required, flag = looked_for, "looked for:"
     if p.bounds is None or not p.tally.compared:
