@@ -58,7 +58,7 @@ def test_a_sequential_fail_says_what_its_lower_bound_is_held_against(records):
     figure = ruler_of(material)
     (bar,) = figure.drawing.bars
     assert (bar.lower, bar.upper) == (p.bounds.value, p.bounds.upper)
-    assert "from the one-sided lower bound that decides (95 % confidence, over 5e-5" in figure.title
+    assert "from the one-sided lower bound that decides (95 % confidence), over 5e-5" in figure.title
     assert figure.words.endswith(f"BER {ratio(bar.lower)} to {ratio(bar.upper)}")
     text = " ".join(to_text(assemble(material)).split())
     assert "lower bound, one-sided, of the plan, over 5e-5 (the requirement by the margin): decides" in text

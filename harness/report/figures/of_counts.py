@@ -56,8 +56,8 @@ def _title(material: Material, points: list[Measured]) -> str:
     if drawn == {"lower"}:
         over = rejected_over(first)
         return (
-            f"The BER measured, from the one-sided lower bound that decides ({one_sided} confidence"
-            f"{f', over {over}' if over else ''}) to the upper of its two-sided bounds "
+            f"The BER measured, from the one-sided lower bound that decides ({one_sided} confidence)"
+            f"{f', over {over},' if over else ''} to the upper of its two-sided bounds "
             f"({percent(b.confidence)} confidence)"
         )
     return f"The BER measured, and its bounds (two-sided, {percent(b.confidence)} confidence)"
