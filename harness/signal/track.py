@@ -24,7 +24,7 @@ _FULL_GAIN = -rules.AGREES * rules.WORD_BITS  # of evidence, by a word without e
 _LOSS = rules.DIFFERS - rules.AGREES  # by an error in it
 _FIRST_SLAB_BYTES = 1 << 15  # at first, as there is often trouble again soon
 _ROW_WORDS = ROW_BYTES // _WORD_BYTES
-SLAB_BYTES = 1 << 21  # compared at once at most: what is done once a slab costs more than what the cache saves
+SLAB_BYTES = 1 << 21  # at most at once: calls a slab cost more than a smaller one gains in the cache
 
 
 @dataclass(frozen=True, slots=True)
