@@ -46,10 +46,14 @@ class Missing:
 
     def write_off(self, now_ns: int) -> None:
         """Give up what is out when nothing has come for the time that the profile allows."""
-        if not self.sends or self._traffic.in_flight() == 0:
+        out = self._traffic.in_flight()
+        if not self.sends or out == 0:
             return
+        # What was sent just now is not overdue, however long ago the last bits came: at a slow pace, or when a
+        # link has come back.
         first = self._traffic.first_sent_ns or now_ns
-        quiet_since = max(self._traffic.last_received_ns or first, first)
+        oldest = self._traffic.when_sent(self._traffic.sent_bits - out)
+        quiet_since = max(self._traffic.last_received_ns or first, oldest or first)
         if now_ns - quiet_since >= self._drain_ns:
             self._unexplained += self._traffic.write_off()
 

@@ -6,6 +6,8 @@ import random
 import threading
 import time
 
+from harness.bench.chronicle import Chronicle
+from harness.bench.missing import Missing
 from harness.bench.places import Places
 from harness.bench.ring import JOIN_NS, Ring
 from harness.bench.traffic import Traffic
@@ -169,3 +171,17 @@ def test_a_slip_is_taken_the_way_that_causality_allows():
     places.aligned(0, 0, now, 8)
     size, modulo = places.slipped(99_990, -16, 1016, now)
     assert size == 1000
+
+
+def test_what_was_sent_just_now_is_not_given_up_however_long_ago_the_last_bits_came():
+    second = 1_000_000_000
+    traffic = Traffic()
+    missing = Missing(traffic, Chronicle(0, 0), drain_ns=second)
+    traffic.sent(800, second)
+    traffic.received(800, second + 1)
+    traffic.sent(800, 10 * second)
+    missing.write_off(10 * second + 1)
+    assert traffic.in_flight() == 800
+    missing.write_off(11 * second)
+    assert traffic.in_flight() == 0
+    assert traffic.written_off_bits == 800
