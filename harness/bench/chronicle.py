@@ -70,8 +70,10 @@ class Chronicle:
         while self._posted:
             self._events.append(self._posted.popleft())
         limit = None if entered_bit is None else entered_bit + self._base_bit
-        waiting = [] if limit is None else [e for e in self._of_bits if e.bit is not None and e.bit >= limit]
-        ready = [e for e in self._of_bits if e not in waiting] if waiting else self._of_bits
-        self._of_bits = waiting
+        ready: list[Event] = []
+        seen, self._of_bits = self._of_bits, []
+        for event in seen:
+            waits = limit is not None and event.bit is not None and event.bit >= limit
+            (self._of_bits if waits else ready).append(event)
         events, self._events = [*ready, *self._events], []
         return events
